@@ -1,0 +1,88 @@
+/* Inside of a chain: the walk, the path's working vectors, what settling has gathered, the current point. */
+#ifndef FW_CHAIN_H
+#define FW_CHAIN_H
+
+#include "walk.h"
+
+#define FW_RING 64       /* gradients remembered for the median that turns bend into beta */
+
+/* Where candidates for the next draw wait. */
+typedef struct fw_candidate {
+    double *x, *g;
+    double value, energy;
+} fw_candidate;
+
+/* A finished piece of an orbit: whitened velocity at its first point, its last one (or momentum, see path_nouturn.c),
+ * and the sum of its momenta. */
+typedef struct fw_piece {
+    double *first, *first_p, *last, *rho;
+} fw_piece;
+
+/* Everything settling knows besides vectors; exported as it stands. */
+typedef struct fw_learn {
+    uint64_t least, most, tail; /* the plan: transitions in all, and in its last part */
+    uint64_t done;              /* settling transitions completed */
+    uint64_t tail_left;         /* > 0: the last part has begun; only the step size moves */
+    uint64_t window, in_window, windows;
+    uint64_t quiet;             /* windows in a row that moved the base metric little */
+    double change;
+    /* step size: dual averaging */
+    double log_step, log_average, shortfall, mu, count;
+    uint64_t search;            /* 1: look for a step size before the next path */
+    /* bend */
+    double bend, ceiling;
+    double epoch_log_step, whole_sum, half_sum;
+    uint64_t whole_count, half_count;
+    double ring[FW_RING];
+    uint64_t ring_count;
+    uint64_t settled;
+    uint64_t base_given;        /* 1: the base metric holds something better than ones */
+} fw_learn;
+
+typedef struct fw_path fw_path;
+
+struct fw_chain {
+    fw_walk walk;
+    fw_random random;
+    fw_settings settings;
+    const fw_path *path;
+    fw_point end[2];
+    double *x, *g, value;     /* the current point */
+    uint64_t started, transitions;
+    double step_size;         /* used once settled */
+    fw_learn learn;
+    double *mean_x, *squares_x, *mean_g, *squares_g;
+    fw_candidate fresh, held; /* no-U-turn path */
+    fw_piece carry, level[FW_MAX_DOUBLINGS + 1];
+    double *orbit_rho, *spare_rho, *seam;
+    size_t vectors, bytes;
+    double *block;
+};
+
+/* One transition's path: from end[0], begun; leaves the chosen point in x, g, value and fills the facts. */
+typedef struct fw_route {
+    double step_size;
+    int finer; /* twice as many steps allowed: settling compares step sizes over equal lengths */
+} fw_route;
+
+struct fw_path {
+    const char *name;
+    const char *source;
+    int (*travel)(fw_chain *chain, const fw_route *route, fw_facts *facts);
+};
+extern const fw_path fw_jittered;
+extern const fw_path fw_nouturn;
+const fw_path *fw_path_named(const char *name);
+
+/* settle.c */
+void fw_learn_first_scale(fw_chain *chain);
+void fw_learn_plan(fw_chain *chain, size_t least, size_t most);
+int fw_learn_route(fw_chain *chain, fw_route *route);
+void fw_learn_update(fw_chain *chain, const fw_route *route, const fw_facts *facts);
+void fw_learn_beta(fw_chain *chain);
+void fw_dual_average(fw_learn *learn, double target, double acceptance);
+
+/* chain.c */
+void fw_chain_take(fw_chain *chain, const double *x, const double *g, double value);
+
+#endif

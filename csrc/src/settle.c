@@ -1,0 +1,297 @@
+/* Settling: step size, scale, bend and the schedule that orders them.
+ *
+ * Lead: a few transitions that move the step size only. Windows: each gathers moments of draws and gradients, sets a
+ * new scale at its end and is half as long again as the one before. Tail: the step size alone, over the final base
+ * metric. Fixed plans fit the windows to the number asked for; open plans (least < most) go to the tail once two
+ * windows in a row have hardly moved the base metric.
+ */
+#include <float.h>
+#include <math.h>
+#include <string.h>
+
+#include "chain.h"
+#include "kernels.h"
+
+static const uint64_t lead = 10, first_window = 20;
+static const double quiet_change = 0.2; /* root mean square of log(new / old half-scale) */
+static const uint64_t epoch = 12;       /* transitions of either step size in one look at the acceptance ceiling */
+static const double least_bend = 0.02;  /* below it the bend costs and does nothing */
+
+static uint64_t tail_length(uint64_t most)
+{
+    uint64_t tail = most / 6;
+    if (tail < 50) tail = 50;
+    if (tail > 150) tail = 150;
+    return tail > most / 2 ? most / 2 : tail;
+}
+
+/* Length of the window that begins now; 0: no room for one, the tail begins. */
+static uint64_t next_window(const fw_learn *learn)
+{
+    const uint64_t before = learn->window ? learn->window + learn->window / 2 : first_window;
+    const uint64_t end = learn->most - learn->tail, begun = learn->done < lead ? lead : learn->done;
+    if (begun + before > end) return learn->window == 0 && end > begun + 4 ? end - begun : 0;
+    /* a last window that would be cut short by the tail is joined to this one */
+    return begun + before + before + before / 2 > end ? end - begun : before;
+}
+
+static void restart_average(fw_learn *learn, double reach)
+{
+    learn->mu = learn->log_step + log(reach);
+    learn->shortfall = learn->count = 0.0;
+    learn->log_average = learn->log_step;
+}
+
+/* Nesterov 2009; Hoffman & Gelman 2014 with their gamma = 0.05, t0 = 10, kappa = 0.75. */
+void fw_dual_average(fw_learn *learn, double target, double acceptance)
+{
+    const double t = learn->count += 1.0;
+    const double weight = 1.0 / (t + 10.0);
+    learn->shortfall = (1.0 - weight) * learn->shortfall + weight * (target - acceptance);
+    learn->log_step = learn->mu - sqrt(t) / 0.05 * learn->shortfall;
+    const double share = pow(t, -0.75);
+    learn->log_average = share * learn->log_step + (1.0 - share) * learn->log_average;
+}
+
+static void clear_window(fw_chain *chain)
+{
+    const size_t bytes = chain->walk.d * sizeof(double);
+    memset(chain->mean_x, 0, bytes);
+    memset(chain->squares_x, 0, bytes);
+    memset(chain->mean_g, 0, bytes);
+    memset(chain->squares_g, 0, bytes);
+    chain->learn.in_window = 0;
+}
+
+static void begin_tail(fw_learn *learn)
+{
+    learn->window = 0;
+    learn->tail_left = learn->tail > 0 ? learn->tail : 1;
+}
+
+static void finish(fw_chain *chain)
+{
+    chain->learn.settled = 1;
+    if (chain->settings.adapt_step) chain->step_size = exp(chain->learn.log_average);
+}
+
+void fw_learn_plan(fw_chain *chain, size_t least, size_t most)
+{
+    fw_learn *learn = &chain->learn;
+    learn->least = least;
+    learn->most = most;
+    learn->tail = tail_length(most);
+    learn->done = learn->windows = learn->quiet = learn->tail_left = learn->window = 0;
+    learn->whole_count = learn->half_count = 0;
+    learn->whole_sum = learn->half_sum = 0.0;
+    learn->settled = most == 0;
+    learn->search = chain->settings.adapt_step != 0;
+    learn->log_step = learn->epoch_log_step = log(chain->step_size > 0.0 ? chain->step_size : 1.0);
+    restart_average(learn, 10.0);
+    clear_window(chain);
+    if (most == 0) return;
+    learn->window = chain->settings.adapt_scale ? next_window(learn) : 0;
+    if (learn->window == 0) {
+        learn->tail = most;
+        begin_tail(learn);
+    }
+}
+
+/* ---- first guess of the step size --------------------------------------------------------------------------------- */
+
+/* log weight after one step from end[0]; a failed step weighs nothing. */
+static int one_step(fw_chain *chain, double step, double *log_weight)
+{
+    fw_point_copy(&chain->walk, &chain->end[0], &chain->end[1]);
+    const int status = fw_walk_step(&chain->walk, &chain->end[1], step);
+    *log_weight = status == FW_OK ? chain->end[0].energy - chain->end[1].energy + chain->end[1].log_jacobian : -INFINITY;
+    return status < 0 ? status : FW_OK;
+}
+
+/* Double or halve until the acceptance of one step crosses 1/2; the last step on the good side is taken. */
+static int search_step(fw_chain *chain)
+{
+    fw_learn *learn = &chain->learn;
+    fw_point *from = &chain->end[0];
+    fw_copy(chain->walk.d, chain->x, from->x);
+    fw_copy(chain->walk.d, chain->g, from->g);
+    from->value = chain->value;
+    int status = fw_walk_begin(&chain->walk, from, &chain->random);
+    if (status != FW_OK) return status < 0 ? status : FW_OK;
+    double step = exp(learn->log_step), weight;
+    status = one_step(chain, step, &weight);
+    if (status != FW_OK) return status;
+    const int good = weight > log(0.5);
+    for (int i = 0; i < 100; ++i) {
+        const double next = good ? 2.0 * step : 0.5 * step;
+        status = one_step(chain, next, &weight);
+        if (status != FW_OK) return status;
+        const int next_good = weight > log(0.5);
+        if (next_good || !good) step = next;
+        if (next_good != good) break;
+    }
+    learn->log_step = learn->epoch_log_step = log(step);
+    restart_average(learn, 10.0);
+    learn->search = 0;
+    return FW_OK;
+}
+
+/* ---- bend --------------------------------------------------------------------------------------------------------- */
+
+static int tunes_bend(const fw_chain *chain)
+{
+    return chain->walk.motion == &fw_lagrangian && chain->settings.beta < 0.0;
+}
+
+/* Only the surrogate field has a ceiling of acceptance below 1 as the step goes to 0. */
+static int has_ceiling(const fw_chain *chain)
+{
+    return tunes_bend(chain) && chain->walk.curvature == FW_SURROGATE && chain->settings.adapt_step &&
+           chain->learn.bend > 0.0;
+}
+
+/* beta = bend / median of c.c over recent draws: the median moves far less than the mean from window to window. */
+void fw_learn_beta(fw_chain *chain)
+{
+    fw_learn *learn = &chain->learn;
+    if (!tunes_bend(chain) || learn->ring_count == 0) return;
+    double sorted[FW_RING];
+    const size_t n = learn->ring_count < FW_RING ? (size_t)learn->ring_count : FW_RING;
+    for (size_t i = 0; i < n; ++i) {
+        size_t j = i;
+        for (; j > 0 && sorted[j - 1] > learn->ring[i]; --j) sorted[j] = sorted[j - 1];
+        sorted[j] = learn->ring[i];
+    }
+    const double median = 0.5 * (sorted[(n - 1) / 2] + sorted[n / 2]);
+    if (median > 0.0 && isfinite(learn->bend / median)) chain->walk.beta = learn->bend / median;
+}
+
+static void remember_gradient(fw_chain *chain)
+{
+    fw_learn *learn = &chain->learn;
+    double *c = chain->end[0].c;
+    fw_base_gradient(&chain->walk.base, chain->g, c);
+    learn->ring[learn->ring_count++ % FW_RING] = fw_dot(chain->walk.d, c, c);
+}
+
+/* Rejections at the step and at half of it, over equal lengths, give by extrapolation the rejection that no step can
+ * avoid (the rest falls as its square). More than half of what the target allows: the bend is too strong. */
+static void look_at_ceiling(fw_chain *chain, const fw_route *route, double acceptance)
+{
+    fw_learn *learn = &chain->learn;
+    if (route->finer) {
+        learn->half_sum += 1.0 - acceptance;
+        ++learn->half_count;
+    } else {
+        learn->whole_sum += 1.0 - acceptance;
+        ++learn->whole_count;
+    }
+    if (learn->whole_count < epoch || learn->half_count < epoch) return;
+    const double whole = learn->whole_sum / (double)learn->whole_count, half = learn->half_sum / (double)learn->half_count;
+    double floor_ = (4.0 * half - whole) / 3.0;
+    floor_ = floor_ < 0.0 ? 0.0 : floor_ > 1.0 ? 1.0 : floor_;
+    learn->ceiling = 1.0 - floor_;
+    if (floor_ > 0.5 * (1.0 - chain->settings.acceptance)) {
+        learn->bend *= 0.5;
+        if (learn->bend < least_bend) learn->bend = chain->walk.beta = 0.0;
+        if (learn->log_step < learn->epoch_log_step) learn->log_step = learn->epoch_log_step;
+        restart_average(learn, 2.0);
+    }
+    learn->whole_sum = learn->half_sum = 0.0;
+    learn->whole_count = learn->half_count = 0;
+    learn->epoch_log_step = learn->log_step;
+}
+
+/* ---- scale -------------------------------------------------------------------------------------------------------- */
+
+/* s = sqrt(var x / var g), the minimiser of the Fisher divergence over diagonal maps (Seyboldt, Carlson & Carpenter
+ * 2026); a coordinate that has not moved keeps its scale. Leaves the new scale in squares_x. */
+static void new_scale(fw_chain *chain)
+{
+    const size_t d = chain->walk.d;
+    double sum = 0.0;
+    for (size_t i = 0; i < d; ++i) {
+        const double old = chain->walk.base.r[i] * chain->walk.base.r[i];
+        double s = sqrt(chain->squares_x[i] / chain->squares_g[i]);
+        if (!(s > 1e-200 && s < 1e200)) s = old;
+        const double moved = 0.5 * log(s / old);
+        sum += moved * moved;
+        chain->squares_x[i] = s;
+    }
+    chain->learn.change = sqrt(sum / (double)d);
+}
+
+/* Before anything is known: one gradient suggests s = 1/g^2, held within 1e8 of the steepest coordinate's root. */
+void fw_learn_first_scale(fw_chain *chain)
+{
+    if (chain->learn.base_given || !chain->settings.adapt_scale) return;
+    const double *g = chain->g;
+    double steepest = 0.0;
+    double *scale = chain->end[0].w;
+    const size_t d = chain->walk.d;
+    for (size_t i = 0; i < d; ++i) steepest = fabs(g[i]) > steepest ? fabs(g[i]) : steepest;
+    for (size_t i = 0; i < d; ++i) {
+        double slope = fabs(g[i]) > 1e-8 * steepest ? fabs(g[i]) : 1e-8 * steepest;
+        slope = slope < 1e-100 ? 1.0 : slope > 1e100 ? 1e100 : slope;
+        scale[i] = 1.0 / (slope * slope);
+    }
+    fw_base_set(&chain->walk.base, scale, 0, NULL, NULL);
+    chain->learn.base_given = 1;
+}
+
+static void close_window(fw_chain *chain)
+{
+    fw_learn *learn = &chain->learn;
+    new_scale(chain);
+    fw_base_set(&chain->walk.base, chain->squares_x, 0, NULL, NULL);
+    clear_window(chain);
+    learn->ring_count = 0;
+    if (tunes_bend(chain)) remember_gradient(chain);
+    learn->search = chain->settings.adapt_step != 0;
+    ++learn->windows;
+    learn->quiet = learn->change < quiet_change ? learn->quiet + 1 : 0;
+    const int stable = learn->quiet >= 2 && learn->done + learn->tail >= learn->least && learn->least < learn->most;
+    learn->window = stable ? 0 : next_window(learn);
+    if (learn->window == 0) begin_tail(learn);
+}
+
+/* ---- one settling transition --------------------------------------------------------------------------------------- */
+
+int fw_learn_route(fw_chain *chain, fw_route *route)
+{
+    fw_learn *learn = &chain->learn;
+    route->finer = 0;
+    route->step_size = chain->step_size;
+    if (learn->settled || !chain->settings.adapt_step) return FW_OK;
+    if (learn->search) {
+        const int status = search_step(chain);
+        if (status != FW_OK) return status;
+    }
+    route->finer = has_ceiling(chain) && (learn->done & 1);
+    route->step_size = exp(learn->log_step) * (route->finer ? 0.5 : 1.0);
+    return FW_OK;
+}
+
+void fw_learn_update(fw_chain *chain, const fw_route *route, const fw_facts *facts)
+{
+    fw_learn *learn = &chain->learn;
+    ++learn->done;
+    if (chain->settings.adapt_step && !route->finer) {
+        fw_dual_average(learn, chain->settings.acceptance, facts->acceptance);
+        if (has_ceiling(chain) && learn->log_step < learn->epoch_log_step - log(4.0))
+            learn->log_step = learn->epoch_log_step - log(4.0);
+    }
+    if (has_ceiling(chain)) look_at_ceiling(chain, route, facts->acceptance);
+    if (tunes_bend(chain)) {
+        remember_gradient(chain);
+        fw_learn_beta(chain);
+    }
+    if (learn->tail_left > 0) {
+        if (--learn->tail_left == 0) finish(chain);
+    } else if (learn->done > lead) {
+        ++learn->in_window;
+        fw_moments(chain->walk.d, (double)learn->in_window, chain->x, chain->mean_x, chain->squares_x);
+        fw_moments(chain->walk.d, (double)learn->in_window, chain->g, chain->mean_g, chain->squares_g);
+        if (learn->in_window == learn->window) close_window(chain);
+    }
+}

@@ -1,0 +1,582 @@
+# cython: language_level=3, boundscheck=False, wraparound=False, embedsignature=True
+# cython: freethreading_compatible=True
+"""The thin binding: calls of the user's functions, random numbers, one compiled chain, the O(d) metric operations.
+
+Nothing here decides anything; the decisions are in the core below and in the Python modules above.
+"""
+import ctypes
+
+import numpy as np
+
+from cpython.pycapsule cimport PyCapsule_GetContext, PyCapsule_GetName, PyCapsule_GetPointer
+from cpython.ref cimport PyObject
+from libc.stdint cimport int32_t, int64_t, uint32_t, uint64_t
+from libc.string cimport memcpy
+from numpy.random cimport bitgen_t
+from numpy.random.c_distributions cimport random_standard_normal_fill
+
+from fellwalk.core cimport *
+
+from fellwalk.errors import ArgumentError, DensityError, ShapeError
+
+cdef extern from "Python.h":
+    Py_ssize_t Py_REFCNT(PyObject *o)
+    double PyFloat_AsDouble(object o) except? -1.0
+
+FACTS = np.dtype([
+    ("log_density", "<f8"), ("energy", "<f8"), ("log_weight_range", "<f8"), ("acceptance", "<f8"),
+    ("step_size", "<f8"), ("steps", "<i4"), ("gradients", "<i4"), ("products", "<i4"), ("failure", "<i4"),
+])
+if FACTS.itemsize != sizeof(fw_facts):
+    raise ImportError("fellwalk was built with another layout of its per-draw facts; build it again")
+
+MAX_DIRECTIONS = FW_MAX_DIRECTIONS
+MAX_DOUBLINGS = FW_MAX_DOUBLINGS
+MAX_HALVINGS = FW_MAX_HALVINGS
+
+cdef dict _schemes = {"split": FW_SPLIT, "semi-explicit": FW_SEMI_EXPLICIT}
+cdef dict _curvatures = {"surrogate": FW_SURROGATE, "difference": FW_DIFFERENCE, "product": FW_PRODUCT}
+cdef dict _turns = {"base": FW_TURN_BASE, "metric": FW_TURN_METRIC}
+
+
+def sentence(int status):
+    """The core's sentence for a status code."""
+    return fw_sentence(status).decode("ascii")
+
+
+SENTENCES = {code: sentence(code) for code in range(-11, 12)}
+
+
+# ---- compiled functions of the user ---------------------------------------------------------------------------------
+
+DENSITY_SIGNATURE = "int (size_t, const double *, double *, double *, void *)"
+PRODUCT_SIGNATURE = "int (size_t, const double *, const double *, double *, void *)"
+
+_WORDS = {"size_t", "unsigned long", "unsigned long long", "long", "long long", "ptrdiff_t", "Py_ssize_t", "ssize_t",
+          "intptr_t", "uintptr_t", "uint64_t", "int64_t", "long unsigned int", "unsigned long int", "long int",
+          "npy_intp", "npy_uintp"}
+_INTS = {"int", "int32_t", "npy_int32"}
+
+
+def normal_signature(str text):
+    """A C signature with `const` and spacing dropped and the pointer-sized integers spelled alike."""
+    head, _, tail = text.partition("(")
+    parts = [head] + tail.rpartition(")")[0].split(",")
+    seen = []
+    for part in parts:
+        stars = part.count("*")
+        words = " ".join(word for word in part.replace("*", " ").split() if word != "const")
+        if words in _WORDS:
+            words = "word"
+        elif words in _INTS:
+            words = "int"
+        seen.append(words + "*" * stars)
+    return f"{seen[0]} ({', '.join(seen[1:])})"
+
+
+cdef void *compiled_pointer(object function, str wanted, str what, void **context) except NULL:
+    """Pointer and user data of a scipy.LowLevelCallable, its signature checked."""
+    cdef object capsule = tuple.__getitem__(function, 0)
+    cdef const char *name = PyCapsule_GetName(capsule)
+    cdef str found = name.decode("ascii") if name != NULL else ""
+    if normal_signature(found) != normal_signature(wanted):
+        raise DensityError(
+            f"the compiled {what} has the signature {found!r}; fellwalk calls it as {wanted!r}. "
+            "Compile it with that signature, or give the signature when you make the LowLevelCallable")
+    context[0] = PyCapsule_GetContext(capsule)
+    return PyCapsule_GetPointer(capsule, name)
+
+
+# ---- Python functions of the user ------------------------------------------------------------------------------------
+
+cdef class Target:
+    """The functions of one chain, with the arrays that Python functions are called with.
+
+    error holds the exception that a Python function raised until the call that caused it takes it out.
+    """
+    cdef fw_target c
+    cdef object function, product
+    cdef object x, p, out
+    cdef object error
+    cdef readonly Py_ssize_t dimension
+    cdef readonly bint compiled
+
+    def __cinit__(self, function, Py_ssize_t dimension, *, bint in_place=False, product=None):
+        cdef void *context = NULL
+        self.dimension = dimension
+        self.c.dimension = <size_t>dimension
+        self.function = function
+        self.product = product
+        self.compiled = is_compiled(function)
+        self.x = np.empty(dimension)
+        self.p = np.empty(dimension)
+        self.out = np.empty(dimension)
+        if self.compiled:
+            self.c.density = <fw_density>compiled_pointer(function, DENSITY_SIGNATURE, "log density", &context)
+            self.c.density_context = context
+        else:
+            self.c.density = <fw_density>(call_in_place if in_place else call_pair)
+            self.c.density_context = <void *>self
+        if product is not None:
+            if is_compiled(product):
+                self.c.product = <fw_hessian_product>compiled_pointer(product, PRODUCT_SIGNATURE, "Hessian product",
+                                                                      &context)
+                self.c.product_context = context
+            else:
+                self.c.product = <fw_hessian_product>call_product
+                self.c.product_context = <void *>self
+
+    def evaluate(self, double[::1] x not None, double[::1] gradient not None):
+        """One bare call at x: (return code, value); the gradient is written into `gradient`."""
+        cdef double value = float("nan")
+        cdef int answer
+        with nogil:
+            answer = self.c.density(self.c.dimension, &x[0], &value, &gradient[0], self.c.density_context)
+        self.raise_error()
+        return answer, value
+
+    def multiply(self, double[::1] x not None, double[::1] p not None, double[::1] out not None):
+        """One bare Hessian product at x times p: the return code; the product is written into `out`."""
+        cdef int answer
+        if self.c.product == NULL:
+            raise DensityError("this density has no Hessian product")
+        with nogil:
+            answer = self.c.product(self.c.dimension, &x[0], &p[0], &out[0], self.c.product_context)
+        self.raise_error()
+        return answer
+
+    cdef raise_error(self):
+        cdef object error = self.error
+        if error is not None:
+            self.error = None
+            raise error
+
+
+def is_compiled(function):
+    """Is this a scipy.LowLevelCallable (without importing SciPy to ask)?"""
+    return isinstance(function, tuple) and type(function).__name__ == "LowLevelCallable"
+
+
+cdef object lend(object array, const double *data, Py_ssize_t d):
+    """The array to call a Python function with: the chain's own, or a new one when somebody kept the last."""
+    # one reference from the attribute, one from this argument
+    if Py_REFCNT(<PyObject *>array) > 3:
+        array = np.empty(d)
+    cdef double[::1] view = array
+    if data != NULL:
+        memcpy(&view[0], data, <size_t>d * sizeof(double))
+    return array
+
+
+cdef double number(object value) except? -1.0:
+    if isinstance(value, float):
+        return <double>value
+    try:
+        return PyFloat_AsDouble(value)
+    except TypeError:
+        raise DensityError(
+            f"the log density must be one real number; the function gave {type(value).__name__} {value!r:.60}") from None
+
+
+cdef int take_vector(object array, double *to, Py_ssize_t d, str what) except -1:
+    cdef const double[::1] view
+    if not (isinstance(array, np.ndarray) and array.dtype == np.float64 and array.ndim == 1 and array.flags.c_contiguous):
+        given = np.asarray(array)
+        if given.dtype.kind not in "fiub":
+            raise DensityError(f"the {what} must hold real numbers; the function gave an array of dtype {given.dtype}")
+        array = np.ascontiguousarray(given, dtype=np.float64)
+    if array.ndim != 1 or array.shape[0] != d:
+        raise DensityError(f"the {what} must have shape ({d},); the function gave shape {tuple(array.shape)}")
+    view = array
+    memcpy(to, &view[0], <size_t>d * sizeof(double))
+    return 0
+
+
+cdef int call_pair(size_t d, const double *x, double *value, double *gradient, void *context) noexcept with gil:
+    cdef Target self = <Target>context
+    try:
+        self.x = lend(self.x, x, <Py_ssize_t>d)
+        answer = self.function(self.x)
+        if not (isinstance(answer, tuple) and len(<tuple>answer) == 2):
+            raise DensityError(
+                f"the function must return (log density, gradient); it gave {type(answer).__name__} {answer!r:.60}")
+        value[0] = number((<tuple>answer)[0])
+        if value[0] - value[0] == 0.0:
+            take_vector((<tuple>answer)[1], gradient, <Py_ssize_t>d, "gradient")
+        return 0
+    except BaseException as error:
+        self.error = error
+        return -1
+
+
+cdef int call_in_place(size_t d, const double *x, double *value, double *gradient, void *context) noexcept with gil:
+    cdef Target self = <Target>context
+    cdef double[::1] view
+    try:
+        self.x = lend(self.x, x, <Py_ssize_t>d)
+        self.out = lend(self.out, gradient, <Py_ssize_t>d)
+        answer = self.function(self.x, self.out)
+        if answer is None:
+            raise DensityError("the in-place function must return the log density; it returned None")
+        value[0] = number(answer)
+        view = self.out
+        memcpy(gradient, &view[0], d * sizeof(double))
+        return 0
+    except BaseException as error:
+        self.error = error
+        return -1
+
+
+cdef int call_product(size_t d, const double *x, const double *p, double *product, void *context) noexcept with gil:
+    cdef Target self = <Target>context
+    try:
+        self.x = lend(self.x, x, <Py_ssize_t>d)
+        self.p = lend(self.p, p, <Py_ssize_t>d)
+        take_vector(self.product(self.x, self.p), product, <Py_ssize_t>d, "Hessian product")
+        return 0
+    except BaseException as error:
+        self.error = error
+        return -1
+
+
+# ---- random numbers --------------------------------------------------------------------------------------------------
+
+cdef struct counted:
+    bitgen_t outer
+    bitgen_t *inner
+    uint64_t used
+    uint64_t marked
+
+
+cdef uint64_t counted_uint64(void *state) noexcept nogil:
+    cdef counted *c = <counted *>state
+    c.used += 1
+    return c.inner.next_uint64(c.inner.state)
+
+
+cdef uint32_t counted_uint32(void *state) noexcept nogil:
+    return <uint32_t>(counted_uint64(state) >> 32)
+
+
+cdef double counted_double(void *state) noexcept nogil:
+    cdef counted *c = <counted *>state
+    c.used += 1
+    return c.inner.next_double(c.inner.state)
+
+
+cdef void stream_normals(void *state, size_t n, double *out) noexcept nogil:
+    random_standard_normal_fill(&(<counted *>state).outer, <Py_ssize_t>n, out)
+
+
+cdef double stream_uniform(void *state) noexcept nogil:
+    return counted_double(state)
+
+
+cdef void stream_mark(void *state) noexcept nogil:
+    cdef counted *c = <counted *>state
+    c.marked = c.used
+
+
+cdef class Stream:
+    """NumPy's PCG64DXSM, counted, so that it can go back to where a transition began."""
+    cdef object generator
+    cdef counted c
+
+    def __cinit__(self, seed_sequence):
+        cdef object lock
+        self.generator = np.random.PCG64DXSM(seed_sequence)
+        capsule = self.generator.capsule
+        self.c.inner = <bitgen_t *>PyCapsule_GetPointer(capsule, "BitGenerator")
+        self.c.outer.state = <void *>&self.c
+        self.c.outer.next_uint64 = counted_uint64
+        self.c.outer.next_uint32 = counted_uint32
+        self.c.outer.next_double = counted_double
+        self.c.outer.next_raw = counted_uint64
+
+    cdef fw_random random(self) noexcept:
+        cdef fw_random r
+        r.normals = stream_normals
+        r.uniform = stream_uniform
+        r.mark = stream_mark
+        r.state = <void *>&self.c
+        return r
+
+    def rewind(self):
+        """Back to the mark: the numbers of the abandoned transition come again."""
+        if self.c.used != self.c.marked:
+            self.generator.advance(-int(self.c.used - self.c.marked))
+            self.c.used = self.c.marked
+
+    @property
+    def state(self):
+        """32 bytes: the generator's state and increment, little-endian."""
+        inner = self.generator.state["state"]
+        return inner["state"].to_bytes(16, "little") + inner["inc"].to_bytes(16, "little")
+
+    @state.setter
+    def state(self, bytes given):
+        whole = self.generator.state
+        whole["state"] = {"state": int.from_bytes(given[:16], "little"), "inc": int.from_bytes(given[16:32], "little")}
+        whole["has_uint32"] = whole["uinteger"] = 0
+        self.generator.state = whole
+        self.c.used = self.c.marked = 0
+
+
+# ---- the chain -------------------------------------------------------------------------------------------------------
+
+cdef class Engine:
+    """One compiled chain. `settings` is a dict with the members of fw_settings by name; see fellwalk.h.
+
+    Calls return (status, ...) and raise only what the user's function raised; the modules above say it in words.
+    """
+    cdef fw_chain *chain
+    cdef Target target
+    cdef Stream stream
+    cdef int flag
+    cdef int busy
+    cdef readonly Py_ssize_t dimension
+
+    def __cinit__(self, Target target not None, Stream stream not None, dict settings not None):
+        cdef fw_settings s
+        cdef fw_random random = stream.random()
+        cdef bytes motion = settings["motion"].encode("ascii")
+        cdef bytes path = settings["path"].encode("ascii")
+        self.target = target
+        self.stream = stream
+        self.dimension = target.dimension
+        s.motion = motion
+        s.path = path
+        s.scheme = <fw_scheme><int>_schemes[settings["scheme"]]
+        s.curvature = <fw_curvature><int>_curvatures[settings["curvature"]]
+        s.turn = <fw_turn><int>_turns[settings["turn"]]
+        s.bend = settings["bend"]
+        s.beta = settings["beta"]
+        s.steps = settings["steps"]
+        s.doublings = settings["doublings"]
+        s.halvings = settings["halvings"]
+        s.halving_bound = settings["halving_bound"]
+        s.step_size = settings["step_size"]
+        s.acceptance = settings["acceptance"]
+        s.settle_least = settings["settle_least"]
+        s.settle_most = settings["settle_most"]
+        s.rank = settings["rank"]
+        s.rank_fixed = settings["rank_fixed"]
+        s.adapt_step = settings["adapt_step"]
+        s.adapt_scale = settings["adapt_scale"]
+        cdef int status = fw_chain_new(&target.c, &random, &s, &self.chain)
+        if status == FW_NO_MEMORY:
+            raise MemoryError(f"no memory for the workspace of a chain of {self.dimension} coordinates")
+        if status != FW_OK:
+            raise ArgumentError(f"a chain with these settings cannot be made: {sentence(status)} ({settings})")
+        fw_chain_watch(self.chain, &self.flag)
+
+    def __dealloc__(self):
+        fw_chain_free(self.chain)
+
+    cdef enter(self):
+        if self.busy:
+            from fellwalk.errors import BusyError
+            raise BusyError("this chain is already running in another call; use one chain per thread")
+        self.busy = 1
+
+    def interrupt(self):
+        """Ask a running call to stop inside the transition in hand; may be called from another thread."""
+        self.flag = 1
+
+    def set_base(self, const double[::1] scale not None, const double[:, ::1] directions=None,
+                 const double[::1] lambdas=None):
+        cdef size_t count = 0 if directions is None else <size_t>directions.shape[0]
+        return fw_chain_set_base(self.chain, &scale[0], count, &directions[0, 0] if count else NULL,
+                                 &lambdas[0] if count else NULL)
+
+    def base(self):
+        cdef double[::1] scale = np.empty(self.dimension)
+        cdef size_t k = fw_chain_base(self.chain, &scale[0], NULL, NULL)
+        directions, lambdas = np.empty((k, self.dimension)), np.empty(k)
+        cdef double[:, ::1] e = directions
+        cdef double[::1] l = lambdas
+        if k:
+            fw_chain_base(self.chain, NULL, &e[0, 0], &l[0])
+        return np.asarray(scale), directions, lambdas
+
+    def start(self, const double[::1] x not None):
+        cdef int status
+        self.enter()
+        self.flag = 0
+        try:
+            with nogil:
+                status = fw_chain_start(self.chain, &x[0])
+        finally:
+            self.busy = 0
+        self.target.raise_error()
+        return status
+
+    def settle(self, size_t least, size_t most):
+        return fw_chain_settle(self.chain, least, most)
+
+    def run(self, size_t n, double[:, ::1] draws=None, facts=None, double[:, ::1] gradients=None,
+            int64_t[::1] failure_index=None, int32_t[::1] failure_code=None, double[:, ::1] failure_position=None):
+        """(status, transitions done, failure rows used, the exception a Python function raised or None).
+
+        Arrays have n rows, or are None. Completed transitions stand whatever the status.
+        """
+        cdef fw_output out
+        cdef size_t done = 0
+        cdef int status
+        cdef char[::1] raw
+        out.draws = &draws[0, 0] if draws is not None and n else NULL
+        out.gradients = &gradients[0, 0] if gradients is not None and n else NULL
+        out.facts = NULL
+        if facts is not None and n:
+            raw = facts.view(np.int8)
+            out.facts = <fw_facts *>&raw[0]
+        out.failures_room = 0 if failure_index is None else <size_t>failure_index.shape[0]
+        out.failures = 0
+        out.failure_index = &failure_index[0] if out.failures_room else NULL
+        out.failure_code = &failure_code[0] if out.failures_room else NULL
+        out.failure_position = &failure_position[0, 0] if out.failures_room else NULL
+        self.enter()
+        self.flag = 0
+        try:
+            with nogil:
+                status = fw_chain_run(self.chain, n, &out, &done)
+            if status < 0:
+                self.stream.rewind()
+        finally:
+            self.busy = 0
+        error, self.target.error = self.target.error, None
+        return status, done, out.failures, error
+
+    def integrate(self, double[::1] x not None, double[::1] v not None, double step_size, size_t steps,
+                  double[:, ::1] trace_x=None, double[:, ::1] trace_v=None, double[:, ::1] trace_facts=None):
+        """(status, steps done, log density, log-Jacobian, log ratio, gradients, products); x and v become the end."""
+        cdef fw_path_out out
+        cdef int status
+        out.trace_x = &trace_x[0, 0] if trace_x is not None else NULL
+        out.trace_v = &trace_v[0, 0] if trace_v is not None else NULL
+        out.trace_facts = &trace_facts[0, 0] if trace_facts is not None else NULL
+        out.log_density = out.log_jacobian = out.log_ratio = float("nan")
+        self.enter()
+        self.flag = 0
+        try:
+            with nogil:
+                status = fw_chain_integrate(self.chain, &x[0], &v[0], step_size, steps, &out)
+        finally:
+            self.busy = 0
+        self.target.raise_error()
+        return status, out.steps_done, out.log_density, out.log_jacobian, out.log_ratio, out.gradients, out.products
+
+    def point(self):
+        """(position, gradient, log density), copies."""
+        x, g = np.empty(self.dimension), np.empty(self.dimension)
+        cdef double[::1] vx = x, vg = g
+        cdef double value = 0.0
+        fw_chain_point(self.chain, &vx[0], &vg[0], &value)
+        return x, g, value
+
+    def summary(self):
+        cdef fw_summary s
+        fw_chain_summary(self.chain, &s)
+        return {"gradients": s.gradients, "products": s.products, "transitions": s.transitions,
+                "settled_transitions": s.settled_transitions, "windows": s.windows, "step_size": s.step_size,
+                "beta": s.beta, "bend": s.bend, "ceiling": s.ceiling, "change": s.change, "directions": s.directions,
+                "workspace_vectors": s.workspace_vectors, "workspace_bytes": s.workspace_bytes,
+                "started": bool(s.started), "settled": bool(s.settled)}
+
+    def export_state(self):
+        cdef size_t size = fw_chain_state_bytes(self.chain)
+        out = bytearray(size)
+        cdef char[::1] view = out
+        fw_chain_export(self.chain, &view[0], size)
+        return bytes(out) + self.stream.state
+
+    def import_state(self, const unsigned char[::1] given not None):
+        cdef size_t size = <size_t>given.shape[0]
+        if size < 40:
+            return FW_BAD_STATE
+        cdef int status = fw_chain_import(self.chain, &given[0], size - 32)
+        if status == FW_OK:
+            self.stream.state = bytes(given[size - 32:])
+        return status
+
+
+# ---- the O(d) metric operations on arrays ----------------------------------------------------------------------------
+
+cdef object vector(object a, str name, Py_ssize_t d=-1):
+    try:
+        array = np.ascontiguousarray(a, dtype=np.float64)
+    except (TypeError, ValueError):
+        raise ShapeError(f"{name} must be an array of real numbers; it is {type(a).__name__}") from None
+    if array.ndim != 1 or array.shape[0] == 0 or (d >= 0 and array.shape[0] != d):
+        wanted = f"({d},)" if d >= 0 else "(d,) with d >= 1"
+        raise ShapeError(f"{name} must have shape {wanted}; it has shape {tuple(np.shape(a))}")
+    return array
+
+
+cdef object output(object out, Py_ssize_t d):
+    if out is None:
+        return np.empty(d)
+    if not (isinstance(out, np.ndarray) and out.dtype == np.float64 and out.shape == (d,) and out.flags.c_contiguous
+            and out.flags.writeable):
+        raise ShapeError(f"out must be a writable contiguous float64 array of shape ({d},)")
+    return out
+
+
+ctypedef int (*metric_operation)(size_t, const double *, const double *, int, const double *, double *) noexcept nogil
+
+
+cdef object operate(metric_operation operation, object diagonal, object u, object given, object sign, object out):
+    cdef const double[::1] delta = vector(diagonal, "diagonal")
+    cdef Py_ssize_t d = delta.shape[0]
+    cdef const double[::1] one = vector(u, "u", d)
+    cdef const double[::1] v = vector(given, "the vector", d)
+    if sign not in (1, -1):
+        raise ArgumentError(f"sign must be 1 or -1; it is {sign!r}")
+    result = output(out, d)
+    cdef double[::1] to = result
+    cdef int s = sign, status
+    with nogil:
+        status = operation(<size_t>d, &delta[0], &one[0], s, &v[0], &to[0])
+    if status != FW_OK:
+        raise not_positive(sign)
+    return result
+
+
+cdef object not_positive(sign):
+    from fellwalk.errors import MetricError
+    return MetricError("diag(diagonal) + sign u u' is not positive definite: every diagonal entry must be > 0 and finite"
+                       + (", and sum(u**2 / diagonal) must be below 1" if sign == -1 else ""))
+
+
+def apply(diagonal, u, v, *, sign=1, out=None):
+    """G v for the metric G = diag(diagonal) + sign u u'. Arrays of shape (d,); O(d)."""
+    return operate(fw_metric_apply, diagonal, u, v, sign, out)
+
+
+def solve(diagonal, u, p, *, sign=1, out=None):
+    """G^-1 p (Sherman & Morrison 1950). Arrays of shape (d,); O(d)."""
+    return operate(fw_metric_solve, diagonal, u, p, sign, out)
+
+
+def velocity(diagonal, u, z, *, sign=1, out=None):
+    """A velocity v ~ N(0, G^-1) made from z ~ N(0, I). Arrays of shape (d,); O(d)."""
+    return operate(fw_metric_velocity, diagonal, u, z, sign, out)
+
+
+def momentum(diagonal, u, z, *, sign=1, out=None):
+    """A momentum p ~ N(0, G) made from z ~ N(0, I). Arrays of shape (d,); O(d)."""
+    return operate(fw_metric_momentum, diagonal, u, z, sign, out)
+
+
+def log_determinant(diagonal, u, *, sign=1):
+    """log det G (matrix determinant lemma). Arrays of shape (d,); O(d)."""
+    cdef const double[::1] delta = vector(diagonal, "diagonal")
+    cdef Py_ssize_t d = delta.shape[0]
+    cdef const double[::1] one = vector(u, "u", d)
+    if sign not in (1, -1):
+        raise ArgumentError(f"sign must be 1 or -1; it is {sign!r}")
+    cdef double value = 0.0
+    cdef int s = sign
+    if fw_metric_log_determinant(<size_t>d, &delta[0], &one[0], s, &value) != FW_OK:
+        raise not_positive(sign)
+    return value

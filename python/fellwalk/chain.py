@@ -1,0 +1,325 @@
+"""One chain for use inside other programs: settle, advance, read, export, import."""
+
+import json
+import struct
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import ArrayLike, NDArray
+
+from fellwalk._core import FACTS, SENTENCES, Engine, Stream
+from fellwalk.density import Density, as_vector, brief
+from fellwalk.errors import (
+    ArgumentError,
+    CallbackStop,
+    FellwalkError,
+    InfiniteDensityError,
+    Interrupted,
+    NotWrittenError,
+    SettleError,
+    StartError,
+    StateError,
+)
+from fellwalk.motions import Leapfrog, Motion, NoUTurn, Path, whole
+from fellwalk.settings import Settings
+
+__all__ = ["Block", "Chain"]
+
+_STATE_MAGIC = b"fellwalk chain 1\n"
+_FAILURE_ROOM = 32  # positions of failed steps kept in one block; every failure is counted in the facts
+
+
+@dataclass(frozen=True)
+class Block:
+    """Transitions of one phase ("settle" or "keep") in the order they happened.
+
+    draws (n, dimension); gradients (n, dimension) or None, of the log density at the draws; facts (n,) of dtype
+    ``fellwalk.facts.FACTS``; failures: (index, code, position) of the first failed steps; error: the exception that
+    ended the block early, or None.
+    """
+
+    phase: str
+    draws: NDArray[np.float64]
+    gradients: NDArray[np.float64] | None
+    facts: NDArray
+    failures: tuple[NDArray[np.int64], NDArray[np.int32], NDArray[np.float64]]
+    error: BaseException | None = None
+
+    def __len__(self) -> int:
+        return len(self.facts)
+
+
+_STOPPED: dict[int, tuple[type[FellwalkError], str]] = {
+    -1: (CallbackStop, "it returned a negative code"),
+    -2: (NotWrittenError, "it returned 0 but did not write the log density and gradient; an exception inside compiled "
+                          "code is often lost this way: call the function once from Python at this position"),
+    -3: (InfiniteDensityError, "the log density is plus infinity there, so the function is not the logarithm of a "
+                               "density: look for a division by 0 or a logarithm of 0 with the wrong sign"),
+    -4: (Interrupted, "the transition in hand was abandoned; the chain is as it was before it"),
+}
+
+
+def stopped(status: int, where: str) -> FellwalkError:
+    """The exception that belongs to a status < 0 of the core."""
+    kind, why = _STOPPED.get(status, (FellwalkError, SENTENCES.get(status, f"status {status}")))
+    return kind(f"{where}: {why}")
+
+
+class Chain:
+    """A chain over a density. It prints nothing, starts no thread, installs no signal handler.
+
+    start: position of shape (dimension,), where log density and gradient are finite.
+    scale: optional variances of shape (dimension,) to start from, as the diagonal of the inverse base metric;
+        settling refines them, unless ``adapt_scale=False``.
+    Other arguments as in `run`. Errors: ArgumentError, ShapeError, StartError, and whatever the density raises.
+    """
+
+    def __init__(
+        self,
+        density: Density,
+        start: ArrayLike,
+        *,
+        motion: Motion | None = None,
+        path: Path | None = None,
+        seed: int | np.random.SeedSequence | None = None,
+        settle: int | str = 0,
+        acceptance: float = 0.8,
+        step_size: float | None = None,
+        scale: ArrayLike | None = None,
+        adapt_scale: bool = True,
+        beta: float | None = None,
+    ) -> None:
+        settings = Settings(motion=motion or Leapfrog(), path=path or NoUTurn(), settle=settle, acceptance=acceptance,
+                            step_size=step_size, adapt_scale=adapt_scale, beta=beta)
+        self._make(density, settings, seed)
+        if scale is not None:
+            self._set_scale(scale)
+        self._start(start)
+
+    def _make(self, density: Density, settings: Settings, seed: int | np.random.SeedSequence | None) -> None:
+        if not isinstance(density, Density):
+            raise ArgumentError(f"the first argument must be a fellwalk.Density; it is {type(density).__name__}: wrap "
+                                "your function as fellwalk.Density(function, dimension)")
+        if settings.motion.core()["curvature"] == "product" and density.hessian_product is None:
+            raise ArgumentError('curvature="product" needs a density with a Hessian product; give hessian_product= to '
+                                'Density, or choose curvature="surrogate" or "difference"')
+        self.density = density
+        self.settings = settings
+        sequence = seed if isinstance(seed, np.random.SeedSequence) else np.random.SeedSequence(seed)
+        self._engine = Engine(density.target(), Stream(sequence), settings.core())
+        self._told = (0, 0)
+
+    @classmethod
+    def _with_settings(
+        cls,
+        density: Density,
+        settings: Settings,
+        start: ArrayLike,
+        seed: np.random.SeedSequence,
+        scale: ArrayLike | None,
+    ) -> "Chain":
+        self = cls.__new__(cls)
+        self._make(density, settings, seed)
+        if scale is not None:
+            self._set_scale(scale)
+        self._start(start)
+        return self
+
+    def _set_scale(self, scale: ArrayLike) -> None:
+        values = as_vector(scale, self.density.dimension, "scale")
+        if self._engine.set_base(values) != 0:
+            raise ArgumentError("scale must hold finite numbers > 0 (variances, one a coordinate)")
+
+    def _start(self, start: ArrayLike) -> None:
+        x = as_vector(start, self.density.dimension, "the starting point")
+        if not np.all(np.isfinite(x)):
+            bad = int(np.flatnonzero(~np.isfinite(x))[0])
+            raise StartError(f"the starting point is {x[bad]} in {self.density.names[bad]}; start from finite numbers")
+        status = self._engine.start(x)
+        self._count()
+        if status == -7:
+            value, gradient = self.density(x)
+            what = f"the log density is {value}"
+            if np.isfinite(value):
+                bad = int(np.flatnonzero(~np.isfinite(gradient))[0])
+                what = f"the gradient is {gradient[bad]} in {self.density.names[bad]}"
+            raise StartError(f"{what} at the starting point {brief(x)}; start inside the support, where both are finite")
+        if status < 0:
+            raise stopped(status, f"evaluating the density at the starting point {brief(x)}")
+
+    def _count(self) -> None:
+        found = self._engine.summary()
+        now = (found["gradients"], found["products"])
+        self.density.gradients += now[0] - self._told[0]
+        self.density.products += now[1] - self._told[1]
+        self._told = now
+
+    # ---- moving -------------------------------------------------------------------------------------------------
+
+    def settle(self, transitions: int | str = "auto") -> Block:
+        """Settle from here: a new plan, whatever came before. Returns the transitions made."""
+        plan = Settings(settle=transitions)
+        self._engine.settle(*plan.settle_bounds())
+        return self._raised(self.block(2**62))
+
+    def advance(self, draws: int) -> Block:
+        """Make `draws` kept transitions. Raises what the density raises; the chain is then as before that transition.
+
+        Errors: SettleError before settling has ended; ArgumentError without a step size.
+        """
+        count = whole("draws", draws, 0, 2**40)
+        if not self.settled:
+            raise SettleError("this chain has not settled; call settle() first, or make it with settle=0 and a step_size")
+        if not self._engine.summary()["step_size"] > 0:
+            raise ArgumentError("this chain has no step size: call settle() first, or give step_size=")
+        return self._raised(self.block(count))
+
+    def _raised(self, block: Block) -> Block:
+        if block.error is not None:
+            raise block.error
+        return block
+
+    def block(self, most: int, *, draws: bool = True, gradients: bool = False) -> Block:
+        """Up to `most` transitions of the phase the chain is in; errors are returned in the block, not raised."""
+        phase = "keep" if self.settled else "settle"
+        parts = []
+        while most > 0 and self.phase == phase and not (parts and parts[-1].error is not None):
+            parts.append(self._piece(phase, min(most, 1024), draws, gradients))
+            most -= len(parts[-1])
+        return _joined(phase, parts, self.density.dimension)
+
+    def _piece(self, phase: str, n: int, want_draws: bool, want_gradients: bool) -> Block:
+        d = self.density.dimension
+        draws = np.empty((n if want_draws else 0, d))
+        gradients = np.empty((n, d)) if want_gradients else None
+        facts = np.zeros(n, dtype=FACTS)
+        room = min(n, _FAILURE_ROOM)
+        index, code, position = np.empty(room, np.int64), np.empty(room, np.int32), np.empty((room, d))
+        status, done, rows, error = self._engine.run(n, draws if want_draws else None, facts, gradients, index, code,
+                                                     position)
+        self._count()
+        if status < 0 and error is None:
+            where = "the compiled function" if status in (-1, -2, -3) else "the chain"
+            error = stopped(status, f"{where}, at transition {self._engine.summary()['transitions'] + 1}")
+        return Block(phase, draws[:done], None if gradients is None else gradients[:done], facts[:done],
+                     (index[:rows], code[:rows], position[:rows]), error)
+
+    def interrupt(self) -> None:
+        """Abandon the transition in hand; may be called from another thread."""
+        self._engine.interrupt()
+
+    # ---- reading ------------------------------------------------------------------------------------------------
+
+    @property
+    def settled(self) -> bool:
+        """Has the plan of settling ended?"""
+        return self._engine.summary()["settled"]
+
+    @property
+    def phase(self) -> str:
+        """"settle" or "keep"."""
+        return "keep" if self.settled else "settle"
+
+    @property
+    def position(self) -> NDArray[np.float64]:
+        """The current position, shape (dimension,); a copy."""
+        return self._engine.point()[0]
+
+    @property
+    def gradient(self) -> NDArray[np.float64]:
+        """The gradient at the current position, shape (dimension,); a copy."""
+        return self._engine.point()[1]
+
+    @property
+    def log_density(self) -> float:
+        """The log density at the current position."""
+        return self._engine.point()[2]
+
+    @property
+    def step_size(self) -> float:
+        """The step size in use, in units of the base metric."""
+        return self._engine.summary()["step_size"]
+
+    @property
+    def scale(self) -> NDArray[np.float64]:
+        """The learned variances of the base metric's diagonal part, shape (dimension,)."""
+        return self._engine.base()[0]
+
+    @property
+    def counts(self) -> dict[str, int]:
+        """Transitions, gradients and Hessian products so far."""
+        found = self._engine.summary()
+        return {key: found[key] for key in ("transitions", "gradients", "products")}
+
+    @property
+    def summary(self) -> dict[str, object]:
+        """What settling has found: step size, bend, beta, ceiling of acceptance, windows; and the workspace's size."""
+        return self._engine.summary()
+
+    # ---- state --------------------------------------------------------------------------------------------------
+
+    @property
+    def state(self) -> bytes:
+        """Everything the chain is, random stream included. `Chain.from_state` goes on from it with the same bits."""
+        head = json.dumps(self.settings.to_json()).encode()
+        return _STATE_MAGIC + struct.pack("<I", len(head)) + head + self._engine.export_state()
+
+    @state.setter
+    def state(self, given: bytes) -> None:
+        settings, core = _split_state(given)
+        if settings != self.settings:
+            raise StateError(f"the stored state belongs to a chain of other settings ({settings}); use Chain.from_state")
+        self._import(core)
+
+    @classmethod
+    def from_state(cls, density: Density, state: bytes) -> "Chain":
+        """The chain that `state` was taken from, over the same density. Errors: StateError."""
+        settings, core = _split_state(state)
+        self = cls.__new__(cls)
+        self._make(density, settings, 0)
+        self._import(core)
+        return self
+
+    def _import(self, core: bytes) -> None:
+        if self._engine.import_state(core) != 0:
+            raise StateError(f"the stored chain state is damaged, or belongs to a density of another dimension than "
+                             f"{self.density.dimension}")
+        found = self._engine.summary()
+        self._told = (found["gradients"], found["products"])
+
+    def __repr__(self) -> str:
+        found = self._engine.summary()
+        return f"<Chain of {self.density.dimension} coordinates, {found['transitions']} transitions, {self.phase}>"
+
+
+def _split_state(state: bytes) -> tuple[Settings, bytes]:
+    start = len(_STATE_MAGIC) + 4
+    if not isinstance(state, bytes) or state[: len(_STATE_MAGIC)] != _STATE_MAGIC or len(state) < start:
+        raise StateError("this is not a chain state of fellwalk: it does not begin as one")
+    (length,) = struct.unpack("<I", state[start - 4 : start])
+    try:
+        settings = Settings.from_json(json.loads(state[start : start + length]))
+    except (ValueError, KeyError, TypeError):
+        raise StateError("the stored chain state is damaged in its settings") from None
+    return settings, state[start + length :]
+
+
+def _joined(phase: str, parts: list[Block], dimension: int) -> Block:
+    if len(parts) == 1:
+        return parts[0]
+    if not parts:
+        return Block(phase, np.empty((0, dimension)), None, np.empty(0, FACTS),
+                     (np.empty(0, np.int64), np.empty(0, np.int32), np.empty((0, dimension))))
+    starts = np.cumsum([0, *(len(part) for part in parts[:-1])])
+    index = [part.failures[0] + start for part, start in zip(parts, starts, strict=True)]
+    gradients = None if parts[0].gradients is None else np.concatenate([part.gradients for part in parts])
+    return Block(
+        phase,
+        np.concatenate([part.draws for part in parts]),
+        gradients,
+        np.concatenate([part.facts for part in parts]),
+        (np.concatenate(index), *(np.concatenate([part.failures[i] for part in parts]) for i in (1, 2))),
+        parts[-1].error,
+    )
+
+

@@ -1,0 +1,121 @@
+"""The user's log density: what is called, how, and how often."""
+
+from collections.abc import Callable, Sequence
+
+import numpy as np
+from numpy.typing import ArrayLike, NDArray
+
+from fellwalk._core import Target, is_compiled
+from fellwalk.errors import ArgumentError, DensityError, ShapeError
+from fellwalk.motions import whole
+
+__all__ = ["Density"]
+
+
+def as_vector(value: ArrayLike, dimension: int, what: str) -> NDArray[np.float64]:
+    """A new contiguous float64 array of shape (dimension,), or a sentence."""
+    try:
+        array = np.array(value, dtype=np.float64)
+    except (TypeError, ValueError):
+        raise ShapeError(f"{what} must be an array of real numbers; it is {value!r:.60}") from None
+    if array.shape != (dimension,):
+        raise ShapeError(f"{what} must have shape ({dimension},); it has shape {array.shape}")
+    return array
+
+
+class Density:
+    """A log density (unnormalised) with its gradient, on R^dimension.
+
+    function: one of
+        ``f(x) -> (log density, gradient)``, x and gradient of shape (dimension,);
+        ``f(x, gradient) -> log density`` writing into gradient, with ``in_place=True``;
+        a ``scipy.LowLevelCallable`` with the signature
+        ``int (size_t, const double *, double *, double *, void *)``: dimension, x, value, gradient, user data;
+        it returns 0, or > 0 outside the support, or < 0 to stop.
+        Outside the support Python functions return ``-inf`` (the gradient is then not looked at).
+        x is lent for the call: its contents are undefined afterwards unless the function keeps the array.
+    hessian_product: optional ``f(x, p) -> H(x) p``, or a LowLevelCallable with the signature
+        ``int (size_t, const double *, const double *, double *, void *)``: dimension, x, p, product, user data.
+    names: one name a coordinate; ``x[0]``, ``x[1]``, ... when left out.
+
+    Attributes ``gradients`` and ``products`` count the calls made so far in this process.
+    """
+
+    def __init__(
+        self,
+        function: Callable[..., object],
+        dimension: int,
+        *,
+        in_place: bool = False,
+        hessian_product: Callable[..., object] | None = None,
+        names: Sequence[str] | None = None,
+    ) -> None:
+        if not callable(function) and not is_compiled(function):
+            raise ArgumentError(f"the log density must be a function or a scipy.LowLevelCallable; it is {function!r:.60}")
+        if hessian_product is not None and not callable(hessian_product) and not is_compiled(hessian_product):
+            raise ArgumentError(f"hessian_product must be a function or a scipy.LowLevelCallable; it is "
+                                f"{hessian_product!r:.60}")
+        self.function = function
+        self.dimension = whole("dimension", dimension, 1, 2**40)
+        self.in_place = bool(in_place)
+        self.hessian_product = hessian_product
+        self.names = _checked_names(names, self.dimension)
+        self.gradients = 0
+        self.products = 0
+        self.target()  # a wrong signature is said here, not at the first chain
+
+    def target(self) -> Target:
+        """A fresh set of call arrays around the functions; each chain needs its own."""
+        return Target(self.function, self.dimension, in_place=self.in_place, product=self.hessian_product)
+
+    @property
+    def compiled(self) -> bool:
+        """Is the log density called without Python?"""
+        return is_compiled(self.function)
+
+    def __call__(self, x: ArrayLike) -> tuple[float, NDArray[np.float64]]:
+        """(log density, gradient) at x, shape (dimension,); -inf outside the support. Counts as one gradient."""
+        point = as_vector(x, self.dimension, "the position")
+        gradient = np.full(self.dimension, np.nan)
+        self.gradients += 1
+        answer, value = self.target().evaluate(point, gradient)
+        if answer < 0:
+            raise DensityError(f"the compiled log density returned {answer} (it asked to stop) at {brief(point)}")
+        return (-np.inf if answer > 0 else value), gradient
+
+    def product(self, x: ArrayLike, p: ArrayLike) -> NDArray[np.float64]:
+        """H(x) p, shape (dimension,). Counts as one Hessian product."""
+        point, vector = as_vector(x, self.dimension, "the position"), as_vector(p, self.dimension, "p")
+        out = np.full(self.dimension, np.nan)
+        self.products += 1
+        answer = self.target().multiply(point, vector, out)
+        if answer:
+            raise DensityError(f"the compiled Hessian product returned {answer} at {brief(point)}")
+        return out
+
+    def __getstate__(self) -> dict[str, object]:
+        return {**self.__dict__, "gradients": 0, "products": 0}
+
+    def __repr__(self) -> str:
+        kind = "compiled" if self.compiled else "in place" if self.in_place else "(value, gradient)"
+        return f"<Density of {self.dimension} coordinates, {kind}{', Hessian product' if self.hessian_product else ''}>"
+
+
+def _checked_names(names: Sequence[str] | None, dimension: int) -> list[str]:
+    if names is None:
+        return [f"x[{i}]" for i in range(dimension)]
+    if isinstance(names, str):
+        raise ArgumentError(f"names must be a list of {dimension} names; it is one string, {names!r}")
+    found = [str(name) for name in names]
+    if len(found) != dimension:
+        raise ArgumentError(f"there are {len(found)} names for {dimension} coordinates; give one name a coordinate")
+    if len(set(found)) != dimension:
+        twice = next(name for name in found if found.count(name) > 1)
+        raise ArgumentError(f"the name {twice!r} stands more than once; names must differ")
+    return found
+
+
+def brief(x: NDArray[np.float64], most: int = 6) -> str:
+    """A position in one line: at most the first few coordinates."""
+    shown = ", ".join(f"{value:.6g}" for value in x[:most])
+    return f"[{shown}{', ...' if len(x) > most else ''}]"

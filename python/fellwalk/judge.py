@@ -1,0 +1,343 @@
+"""Judge draws: what they say about each parameter, how well, and whether they are fit for use.
+
+`judge` takes draws of any origin, `judge_function` a function of them. The numbers follow Vehtari, Gelman, Simpson,
+Carpenter & Buerkner (2021), Bayesian Analysis 16, with Geyer's (1992) initial monotone sequence, and Betancourt (2016)
+for the energies. This file checks the input and computes; `fellwalk.verdict` decides, `fellwalk.judgement` shows.
+"""
+
+from collections.abc import Callable, Mapping, Sequence
+from typing import Any
+
+import numpy as np
+from numpy.typing import ArrayLike
+
+from fellwalk import autocorrelation as ac
+from fellwalk import verdict as verdict_module
+from fellwalk.errors import ArgumentError
+from fellwalk.judgement import Judgement
+
+LEVELS = {"low": 0.05, "middle": 0.5, "high": 0.95}
+FEWEST_DRAWS = 4  # two in each half of a chain: below that a half has no variance
+SPENT = ("gradients", "products", "seconds")
+
+# Parameters are worked on in groups of about this many numbers, so that the transforms of 1e5 parameters never
+# stand in memory together.
+GROUP = 1 << 19
+
+
+def judge(
+    draws: ArrayLike,
+    names: Sequence[str] | None = None,
+    *,
+    facts: np.ndarray | None = None,
+    spent: Mapping[str, float] | None = None,
+) -> Judgement:
+    """Judge draws of one or more chains.
+
+    draws: (chains, draws, dimension), finite numbers, at least four draws a chain; draws before settling left out.
+        Boolean draws are events: their estimates are probabilities. Not copied: leave the array as it is afterwards.
+    names: one name for each parameter, all different; x[0], x[1], ... when left out.
+    facts: structured array (chains, draws) with fields "energy" and "failure", as a run keeps it.
+    spent: cost of the whole run, settling included: any of "gradients", "products", "seconds".
+
+    Raises ArgumentError, naming the place, for anything else. Chains are counted from 1 in everything that is printed.
+    """
+    raw, x = _checked_draws(draws)
+    chains, n, dimension = x.shape
+    names = _checked_names(names, dimension)
+    energies, failure = _checked_facts(facts, chains, n)
+    spent = _checked_spent(spent)
+    numbers = measure(x)
+    numbers["event"] = np.full(dimension, raw.dtype == np.bool_)
+    return _assemble(x, names, numbers, energies, failure, spent)
+
+
+def judge_function(
+    draws: ArrayLike,
+    f: Callable[[np.ndarray], Any],
+    names: Sequence[str] | None = None,
+    *,
+    facts: np.ndarray | None = None,
+    spent: Mapping[str, float] | None = None,
+) -> Judgement:
+    """Judge a function of the draws: what it is on average, how it spreads, and with what error.
+
+    f: called once for each draw with one read-only vector (dimension,); returns a number, a truth value (the estimate
+        is then its probability) or a short vector of either, of the same length every time.
+    names: one name for each number that f returns. draws, facts, spent: as for `judge`.
+
+    Raises ArgumentError when the values of f differ in shape, are not numbers or not finite; what f raises comes through.
+    """
+    if not callable(f):
+        raise ArgumentError(f"The function of the draws must be callable, not {type(f).__name__}.")
+    _, x = _checked_draws(draws)
+    chains, n, _ = x.shape
+    view = x.view()
+    view.flags.writeable = False
+    values: np.ndarray | None = None
+    is_scalar = False
+    for chain in range(chains):
+        for draw in range(n):
+            value = np.asarray(f(view[chain, draw]))
+            where = f"for draw {draw + 1} of chain {chain + 1}"
+            if value.ndim > 1 or value.size == 0 or value.dtype.kind not in "biuf":
+                raise ArgumentError(
+                    f"The function must return a real number, a truth value or a vector of them, but {where} it returned "
+                    f"{_describe(value)}."
+                )
+            if values is None:
+                is_scalar = value.ndim == 0
+                values = np.empty((chains, n, value.size), dtype=value.dtype)
+                shape = value.shape
+            if value.shape != shape:
+                raise ArgumentError(
+                    f"The function must return the same shape every time, but {where} it returned shape {value.shape} "
+                    f"after {shape}."
+                )
+            if value.dtype != values.dtype:
+                # A function that gives an integer for one draw and a float for another is a function of numbers.
+                values = values.astype(np.result_type(values, value))
+            values[chain, draw] = value
+    if names is None:
+        label = getattr(f, "__name__", "value")
+        label = label if label.isidentifier() else "value"
+        names = [label] if is_scalar else [f"{label}[{i}]" for i in range(values.shape[2])]
+    return judge(values, names, facts=facts, spent=spent)
+
+
+def _describe(value: np.ndarray) -> str:
+    return f"an array of shape {value.shape} and type {value.dtype}"
+
+
+# ---- what comes in --------------------------------------------------------------------------------------------------
+
+
+def _checked_draws(draws: ArrayLike) -> tuple[np.ndarray, np.ndarray]:
+    if np.ma.isMaskedArray(draws) and np.ma.is_masked(draws):
+        raise ArgumentError("The draws are a masked array with masked entries; leave those draws out first.")
+    try:
+        raw = np.asarray(draws)
+    except ValueError:
+        raise ArgumentError(
+            "The draws must form one array (chains, draws, parameters), but the lists given differ in length."
+        )
+    if raw.dtype.kind not in "biuf":
+        raise ArgumentError(f"The draws must be real numbers, but they have type {raw.dtype}.")
+    if raw.ndim != 3:
+        hint = "; for a single chain give draws[None]" if raw.ndim == 2 else ""
+        raise ArgumentError(
+            f"The draws must have shape (chains, draws, parameters), but they have shape {raw.shape}{hint}."
+        )
+    chains, n, dimension = raw.shape
+    if chains == 0 or dimension == 0:
+        lacking = "chain" if chains == 0 else "parameter"
+        raise ArgumentError(f"There is no {lacking} in draws of shape {raw.shape}; at least one is needed.")
+    if n < FEWEST_DRAWS:
+        raise ArgumentError(f"There are {n} draws a chain; at least {FEWEST_DRAWS} are needed to judge anything.")
+    with np.errstate(over="ignore"):
+        x = raw.astype(np.float64, copy=False)
+    finite = np.isfinite(x)
+    if not finite.all():
+        chain, draw, parameter = (int(i) for i in np.argwhere(~finite)[0])
+        raise ArgumentError(
+            f"Draw {draw + 1} of chain {chain + 1} (counted from 1) is {x[chain, draw, parameter]} in parameter "
+            f"x[{parameter}]; {int((~finite).sum())} of {x.size} numbers are not finite, and all must be."
+        )
+    return raw, x
+
+
+def _checked_names(names: Sequence[str] | None, dimension: int) -> list[str]:
+    if names is None:
+        return [f"x[{i}]" for i in range(dimension)]
+    if isinstance(names, str):
+        raise ArgumentError(f"The names must be a list of strings, not the single string {names!r}.")
+    try:
+        names = list(names)
+    except TypeError:
+        raise ArgumentError(f"The names must be a list of strings, not {type(names).__name__}.") from None
+    if len(names) != dimension:
+        raise ArgumentError(f"There are {len(names)} names for {dimension} parameters; one is needed for each.")
+    seen: dict[str, int] = {}
+    for i, name in enumerate(names):
+        if not isinstance(name, str) or not name.strip() or not name.isprintable():
+            raise ArgumentError(f"Name {i + 1} is {name!r}; a name must be a printable string that is not blank.")
+        if name in seen:
+            raise ArgumentError(
+                f"The name {name!r} stands for parameters {seen[name] + 1} and {i + 1}; names must differ."
+            )
+        seen[name] = i
+    return [str(name) for name in names]
+
+
+def _checked_facts(facts: np.ndarray | None, chains: int, n: int) -> tuple[np.ndarray | None, np.ndarray | None]:
+    if facts is None:
+        return None, None
+    fields = getattr(getattr(facts, "dtype", None), "names", None)
+    if fields is None or not {"energy", "failure"} <= set(fields):
+        raise ArgumentError('The facts must be a structured array with the fields "energy" and "failure".')
+    if facts.shape != (chains, n):
+        raise ArgumentError(
+            f"The facts must have shape {(chains, n)} like the draws, but they have shape {facts.shape}."
+        )
+    return np.asarray(facts["energy"], dtype=np.float64), np.asarray(facts["failure"])
+
+
+def _checked_spent(spent: Mapping[str, float] | None) -> dict[str, float]:
+    if spent is None:
+        return {}
+    if not isinstance(spent, Mapping) or not set(spent) <= set(SPENT):
+        raise ArgumentError(f"What was spent must be a dict with any of the keys {', '.join(SPENT)}.")
+    for key, value in spent.items():
+        if isinstance(value, bool) or not isinstance(value, int | float | np.number) or not 0 <= value < np.inf:
+            raise ArgumentError(f"What was spent in {key} must be a finite number, zero or more, not {value!r}.")
+    return {key: spent[key] for key in SPENT if key in spent}
+
+
+# ---- what is computed -----------------------------------------------------------------------------------------------
+
+
+def measure(x: np.ndarray) -> dict[str, np.ndarray]:
+    """All numbers for each parameter, from finite draws (chains, n, dimension).
+
+    Arrays (dimension,), and (dimension, chains) for "own_worth" (effective size of each chain taken alone) and
+    "stand" (longest run of equal successive draws). Constant parameters have NaN for what is then undefined.
+    """
+    chains, n, dimension = x.shape
+    step = max(1, GROUP // (chains * n))
+    with np.errstate(all="ignore"):
+        groups = [
+            _measure_group(np.ascontiguousarray(np.moveaxis(x[:, :, start : start + step], 2, 0)))
+            for start in range(0, dimension, step)
+        ]
+    return {key: np.concatenate([group[key] for group in groups]) for key in groups[0]}
+
+
+def standardise(x: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    """Draws (p, chains, n) less a common origin, over a power of two: (y, origin, exponent), x = origin + y 2^exponent.
+
+    No digit is lost to a large offset (the origin is a draw), and squares neither overflow nor vanish.
+    """
+    origin = x[:, 0, 0]
+    # Halved first, so that the distance between draws at both ends of the double range stays finite.
+    y = x / 2 - origin[:, None, None] / 2
+    lost = (np.abs(y).max(axis=(1, 2)) < 1e-290)[:, None, None]
+    y = np.where(lost, x - origin[:, None, None], y)
+    exponent = np.frexp(np.abs(y).max(axis=(1, 2)))[1]
+    y = np.ldexp(y, -exponent[:, None, None])
+    return y, origin, exponent + np.where(lost[:, 0, 0], 0, 1)
+
+
+def _measure_group(x: np.ndarray) -> dict[str, np.ndarray]:
+    p, _chains, _n = x.shape
+    y, origin, exponent = standardise(x)
+    flat = y.reshape(p, -1)
+    ordered = np.sort(flat, axis=-1)
+    halves = ac.split(y)
+    scores = ac.rank_normalise(halves)
+    constant = ordered[:, 0] == ordered[:, -1]
+    # Of an odd number of draws only the middle one may differ; what is left without it is then worth one draw.
+    worth = _known(ac.effective_size(scores), constant)
+    centre = ac.potential_scale_reduction(scores)
+    folded = ac.potential_scale_reduction(ac.rank_normalise(ac.fold(halves)))
+
+    mean = flat.mean(axis=-1)
+    deviation = y - mean[:, None, None]
+    spread = flat.std(axis=-1, ddof=1)
+    worth_mean = _known(ac.effective_size(halves), constant)
+    error = spread / np.sqrt(worth_mean)
+    # Delta method: the error of a standard deviation is that of the variance, over twice the standard deviation.
+    square = deviation**2
+    square_worth = ac.effective_size(ac.split(square))
+    square_spread = square.std(axis=(1, 2), ddof=1)
+    spread_error = np.where(
+        square_spread > 0, square_spread / np.sqrt(_known(square_worth, constant)) / (2 * spread), 0
+    )
+    numbers = {"worth": worth, "worth_mean": worth_mean, "agreement": np.fmax(centre, folded)}
+    tails = []
+    for name, level in LEVELS.items():
+        value, level_error, indicator_worth = _quantile(ordered, halves, level, worth)
+        numbers[name] = np.ldexp(value, exponent) + origin
+        numbers[name + "_error"] = np.ldexp(level_error, exponent)
+        if name != "middle":
+            tails.append(indicator_worth)
+    lower = np.fmin(*tails)
+    numbers["worth_tails"] = np.where(np.isnan(lower), worth, lower)
+    exact = {"estimate": np.ldexp(mean, exponent) + origin, "error": np.ldexp(error, exponent)}
+    exact |= {"spread": np.ldexp(spread, exponent), "spread_error": np.ldexp(spread_error, exponent)}
+    numbers |= exact
+    for key in ("error", "spread", "spread_error", "low_error", "middle_error", "high_error"):
+        numbers[key] = np.where(constant, 0.0, numbers[key])
+    whole = ac.rank_normalise(y)
+    numbers["own_worth"] = ac.effective_size(whole[:, :, None, :])
+    numbers["stand"] = ac.longest_stand(y)
+    numbers["distinct"] = 1 + np.sum(ordered[:, 1:] != ordered[:, :-1], axis=-1)
+    numbers["constant"] = constant
+    return numbers
+
+
+def _known(worth: np.ndarray, constant: np.ndarray) -> np.ndarray:
+    return np.where(np.isnan(worth) & ~constant, 1.0, worth)
+
+
+def energy_fractions(energies: np.ndarray) -> np.ndarray:
+    """Energy fraction of missing information of each chain, E[(E_n - E_(n-1))^2] / Var(E) (Betancourt 2016).
+
+    energies: (chains, n). Returns (chains,): 2 for independent draws, near 0 where each transition covers little of the
+    energy's range; NaN for energies that are constant or not finite.
+    """
+    with np.errstate(all="ignore"):
+        shifted = energies - energies[:, :1]
+        variance = shifted.var(axis=1)
+        steps = np.mean(np.diff(shifted, axis=1) ** 2, axis=1)
+        return np.where(variance > 0, steps / variance, np.nan)
+
+
+def _assemble(
+    x: np.ndarray,
+    names: list[str],
+    numbers: dict[str, np.ndarray],
+    energies: np.ndarray | None,
+    failure: np.ndarray | None,
+    spent: dict[str, float],
+) -> Judgement:
+    chains, n, _ = x.shape
+    fraction = None if energies is None else energy_fractions(energies)
+    verdict = verdict_module.decide(x, names, numbers, fraction, failure)
+    shown = {key: value for key, value in numbers.items() if key in Judgement.NUMBERS}
+    failures: dict[int, int] = {}
+    if failure is not None:
+        codes, counts = np.unique(failure[failure != 0], return_counts=True)
+        failures = {int(code): int(count) for code, count in zip(codes, counts, strict=True)}
+    return Judgement(
+        names=tuple(names), chains=chains, draws_per_chain=n, energy_fraction=fraction, failures=failures,
+        judged_facts=failure is not None, spent=spent, verdict=verdict, draws=x, **shown,
+    )  # fmt: skip
+
+
+def quantiles(x: np.ndarray, level: float, worth: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    """The quantile at a level and its error for draws (chains, n, dimension), both (dimension,).
+
+    worth: (dimension,) effective size in the centre, used where no draw of the halves lies beyond the quantile.
+    """
+    chains, n, dimension = x.shape
+    values, errors = np.empty(dimension), np.empty(dimension)
+    step = max(1, GROUP // (chains * n))
+    with np.errstate(all="ignore"):
+        for start in range(0, dimension, step):
+            part = slice(start, start + step)
+            y, origin, exponent = standardise(np.ascontiguousarray(np.moveaxis(x[:, :, part], 2, 0)))
+            ordered = np.sort(y.reshape(len(y), -1), axis=-1)
+            value, error, _ = _quantile(ordered, ac.split(y), level, worth[part])
+            values[part] = np.ldexp(value, exponent) + origin
+            errors[part] = np.ldexp(error, exponent)
+    return values, errors
+
+
+def _quantile(
+    ordered: np.ndarray, halves: np.ndarray, level: float, worth: np.ndarray
+) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    """Quantile, error and effective size of the indicator (NaN where that never varies) of standardised draws."""
+    value = np.quantile(ordered, level, axis=-1)
+    indicator = ac.effective_size((halves <= value[:, None, None]).astype(np.float64))
+    effective = np.nan_to_num(np.where(np.isnan(indicator), worth, indicator), nan=1.0)
+    return value, ac.quantile_error(ordered, level, effective), indicator

@@ -1,0 +1,131 @@
+"""Motions and paths as plain data: what moves a point, and how far."""
+
+from dataclasses import dataclass
+
+from fellwalk._core import MAX_DOUBLINGS, MAX_HALVINGS
+from fellwalk.errors import ArgumentError
+
+__all__ = ["Jittered", "Lagrangian", "Leapfrog", "NoUTurn"]
+
+
+def whole(name: str, value: object, least: int, most: int) -> int:
+    """`value` as an int inside [least, most], or a sentence."""
+    if isinstance(value, bool) or not hasattr(value, "__index__"):
+        raise ArgumentError(f"{name} must be a whole number; it is {value!r}")
+    number = value.__index__()
+    if not least <= number <= most:
+        raise ArgumentError(f"{name} must be from {least} to {most}; it is {number}")
+    return number
+
+
+def real(name: str, value: object, above: float, most: float, *, include: bool = False) -> float:
+    """`value` as a float in (above, most], or [above, most] with include; or a sentence."""
+    try:
+        number = float(value)  # type: ignore[arg-type]
+    except (TypeError, ValueError):
+        raise ArgumentError(f"{name} must be a number; it is {value!r}") from None
+    if not (above < number <= most or (include and number == above)):
+        bound = "at least" if include else "above"
+        raise ArgumentError(f"{name} must be {bound} {above:g} and at most {most:g}; it is {number!r}")
+    return number
+
+
+def chosen(name: str, value: object, choices: tuple[str, ...]) -> str:
+    """`value` when it is one of the choices, or a sentence."""
+    if value not in choices:
+        raise ArgumentError(f"{name} must be one of {', '.join(map(repr, choices))}; it is {value!r}")
+    return str(value)
+
+
+@dataclass(frozen=True)
+class Leapfrog:
+    """Leapfrog steps over the learned base metric (Duane et al. 1987; Neal 2011).
+
+    halvings: a step may be done as up to 2**halvings smaller ones where the energy swings (0: never).
+    """
+
+    halvings: int = 0
+
+    name = "leapfrog"
+
+    def __post_init__(self) -> None:
+        whole("halvings", self.halvings, 0, MAX_HALVINGS)
+
+    def core(self) -> dict[str, object]:
+        """The members of the core's settings that this motion fixes."""
+        return {"motion": self.name, "scheme": "split", "curvature": "surrogate", "bend": 0.0, "halvings": self.halvings}
+
+
+@dataclass(frozen=True)
+class Lagrangian:
+    """Lagrangian motion on the Monge metric G = G0 + beta g g' (Lan et al. 2015; G0: the learned base metric).
+
+    bend: how strongly the metric bends, as the typical g'G0^-1 g beta = L - 1 in the bulk of the target; settling
+        turns it into beta, and lowers it when it caps the acceptance rate. 0 is the leapfrog motion.
+    curvature: "surrogate" replaces the Hessian by -G0 (one gradient a step, exact target, never an exact flow),
+        "difference" takes Hessian products from gradient differences, "product" from the density's own function.
+    scheme: "split" solves the Christoffel part exactly (2 products a step); "semi-explicit" is the published
+        integrator of Lan et al. (3 products a step).
+    halvings: as for Leapfrog.
+    """
+
+    bend: float = 1.0
+    curvature: str = "surrogate"
+    scheme: str = "split"
+    halvings: int = 0
+
+    name = "lagrangian"
+
+    def __post_init__(self) -> None:
+        real("bend", self.bend, 0.0, 1e6, include=True)
+        chosen("curvature", self.curvature, ("surrogate", "difference", "product"))
+        chosen("scheme", self.scheme, ("split", "semi-explicit"))
+        whole("halvings", self.halvings, 0, MAX_HALVINGS)
+
+    def core(self) -> dict[str, object]:
+        """The members of the core's settings that this motion fixes."""
+        return {"motion": self.name, "scheme": self.scheme, "curvature": self.curvature, "bend": float(self.bend),
+                "halvings": self.halvings}
+
+
+@dataclass(frozen=True)
+class Jittered:
+    """A number of steps drawn uniformly from 1..steps, then one accept test (Mackenze 1989; Neal 2011)."""
+
+    steps: int = 16
+
+    name = "jittered"
+
+    def __post_init__(self) -> None:
+        whole("steps", self.steps, 1, 2**31 - 1)
+
+    def core(self) -> dict[str, object]:
+        """The members of the core's settings that this path fixes."""
+        return {"path": self.name, "steps": self.steps, "doublings": 10, "turn": "base"}
+
+
+@dataclass(frozen=True)
+class NoUTurn:
+    """Doubling until the orbit turns back (Hoffman & Gelman 2014; Betancourt 2017), at most 2**doublings steps.
+
+    turn: "base" tests with the momentum of the base metric G0 v, "metric" with that of the full metric G v.
+    """
+
+    doublings: int = 10
+    turn: str = "base"
+
+    name = "no-u-turn"
+
+    def __post_init__(self) -> None:
+        whole("doublings", self.doublings, 1, MAX_DOUBLINGS - 1)
+        chosen("turn", self.turn, ("base", "metric"))
+
+    def core(self) -> dict[str, object]:
+        """The members of the core's settings that this path fixes."""
+        return {"path": self.name, "steps": 1, "doublings": self.doublings, "turn": self.turn}
+
+
+Motion = Leapfrog | Lagrangian
+Path = Jittered | NoUTurn
+MOTIONS = {kind.name: kind for kind in (Leapfrog, Lagrangian)}
+PATHS = {kind.name: kind for kind in (Jittered, NoUTurn)}
