@@ -1,8 +1,47 @@
 """Draws from a density given by its logarithm and gradient, along explicit geometric flows."""
 
+from importlib.metadata import version
+from pathlib import Path
+
 from fellwalk import errors, kernels
 from fellwalk.chain import Block, Chain
 from fellwalk.density import Density
 from fellwalk.errors import FellwalkError
+from fellwalk.judge import judge
+from fellwalk.judgement import Judgement
 from fellwalk.motions import Jittered, Lagrangian, Leapfrog, NoUTurn
 from fellwalk.paths import Trajectory, integrate
+from fellwalk.result import Result, load
+from fellwalk.run import resume, run
+
+__version__ = version("fellwalk")
+
+__all__ = [
+    "Block",
+    "Chain",
+    "Density",
+    "FellwalkError",
+    "Jittered",
+    "Judgement",
+    "Lagrangian",
+    "Leapfrog",
+    "NoUTurn",
+    "Result",
+    "Trajectory",
+    "errors",
+    "get_include",
+    "integrate",
+    "judge",
+    "kernels",
+    "load",
+    "resume",
+    "run",
+]
+
+
+def get_include() -> str:
+    """The folder that holds fellwalk.h, for compiling against the core."""
+    installed = Path(__file__).parent / "include"
+    if installed.is_dir():
+        return str(installed)
+    return str(Path(__file__).resolve().parents[2] / "csrc" / "include")

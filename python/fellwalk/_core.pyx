@@ -379,8 +379,13 @@ cdef class Engine:
             raise BusyError("this chain is already running in another call; use one chain per thread")
         self.busy = 1
 
+    cdef leave(self, int status):
+        self.busy = 0
+        if status == FW_INTERRUPTED:
+            self.flag = 0
+
     def interrupt(self):
-        """Ask a running call to stop inside the transition in hand; may be called from another thread."""
+        """Ask the running call, or else the next one, to stop inside the transition in hand; from any thread."""
         self.flag = 1
 
     def set_base(self, const double[::1] scale not None, const double[:, ::1] directions=None,
@@ -400,14 +405,13 @@ cdef class Engine:
         return np.asarray(scale), directions, lambdas
 
     def start(self, const double[::1] x not None):
-        cdef int status
+        cdef int status = FW_OK
         self.enter()
-        self.flag = 0
         try:
             with nogil:
                 status = fw_chain_start(self.chain, &x[0])
         finally:
-            self.busy = 0
+            self.leave(status)
         self.target.raise_error()
         return status
 
@@ -422,7 +426,7 @@ cdef class Engine:
         """
         cdef fw_output out
         cdef size_t done = 0
-        cdef int status
+        cdef int status = FW_OK
         cdef char[::1] raw
         out.draws = &draws[0, 0] if draws is not None and n else NULL
         out.gradients = &gradients[0, 0] if gradients is not None and n else NULL
@@ -436,14 +440,13 @@ cdef class Engine:
         out.failure_code = &failure_code[0] if out.failures_room else NULL
         out.failure_position = &failure_position[0, 0] if out.failures_room else NULL
         self.enter()
-        self.flag = 0
         try:
             with nogil:
                 status = fw_chain_run(self.chain, n, &out, &done)
             if status < 0:
                 self.stream.rewind()
         finally:
-            self.busy = 0
+            self.leave(status)
         error, self.target.error = self.target.error, None
         return status, done, out.failures, error
 
@@ -451,18 +454,17 @@ cdef class Engine:
                   double[:, ::1] trace_x=None, double[:, ::1] trace_v=None, double[:, ::1] trace_facts=None):
         """(status, steps done, log density, log-Jacobian, log ratio, gradients, products); x and v become the end."""
         cdef fw_path_out out
-        cdef int status
+        cdef int status = FW_OK
         out.trace_x = &trace_x[0, 0] if trace_x is not None else NULL
         out.trace_v = &trace_v[0, 0] if trace_v is not None else NULL
         out.trace_facts = &trace_facts[0, 0] if trace_facts is not None else NULL
         out.log_density = out.log_jacobian = out.log_ratio = float("nan")
         self.enter()
-        self.flag = 0
         try:
             with nogil:
                 status = fw_chain_integrate(self.chain, &x[0], &v[0], step_size, steps, &out)
         finally:
-            self.busy = 0
+            self.leave(status)
         self.target.raise_error()
         return status, out.steps_done, out.log_density, out.log_jacobian, out.log_ratio, out.gradients, out.products
 

@@ -45,9 +45,8 @@ def effective_size(x: Array, largest_gain: float = LARGEST_GAIN) -> Array:
     chains, n = x.shape[-2:]
     covariance = autocovariance(x).mean(axis=-2) * (n / (n - 1))
     within = covariance[..., 0]
-    total = within * ((n - 1) / n)
-    if chains > 1:
-        total = total + _chain_means(x).var(axis=-1, ddof=1)
+    # A single chain has nothing between chains to add, and its correlations are its own.
+    total = within * ((n - 1) / n) + _chain_means(x).var(axis=-1, ddof=1) if chains > 1 else within
     known = total > 0
     rho = 1 - (within[..., None] - covariance) / np.where(known, total, 1)[..., None]
     even = 2 * (n // 2)
@@ -59,7 +58,7 @@ def effective_size(x: Array, largest_gain: float = LARGEST_GAIN) -> Array:
 
 
 def potential_scale_reduction(x: Array) -> Array:
-    """R-hat of the chains as they are (not split, not ranked): NaN where nothing moves, infinite where only chains differ.
+    """R-hat of the chains as they are, not split, not ranked. NaN if nothing moves, infinite if only chains differ.
 
     x: (..., chains, n) with at least two chains. Returns (...). Gelman & Rubin (1992), Statistical Science 7, without
     the degrees-of-freedom factor, as in Vehtari et al. (2021).
@@ -113,7 +112,7 @@ def fold(x: Array) -> Array:
     flat = np.sort(x.reshape(*x.shape[:-2], -1), axis=-1)
     size = flat.shape[-1]
     lower, upper = flat[..., (size - 1) // 2, None, None], flat[..., size // 2, None, None]
-    # |x - (lower + upper) / 2| in a form that keeps the two middle draws of an even number exactly level with each other.
+    # |x - (lower + upper) / 2|, in a form that keeps the two middle draws of an even number exactly level.
     return np.maximum(x - lower, upper - x) - (upper - lower) / 2
 
 

@@ -37,6 +37,7 @@ class Density:
     hessian_product: optional ``f(x, p) -> H(x) p``, or a LowLevelCallable with the signature
         ``int (size_t, const double *, const double *, double *, void *)``: dimension, x, p, product, user data.
     names: one name a coordinate; ``x[0]``, ``x[1]``, ... when left out.
+    start: a position (dimension,) inside the support, for runs that are given none.
 
     Attributes ``gradients`` and ``products`` count the calls made so far in this process.
     """
@@ -49,6 +50,7 @@ class Density:
         in_place: bool = False,
         hessian_product: Callable[..., object] | None = None,
         names: Sequence[str] | None = None,
+        start: ArrayLike | None = None,
     ) -> None:
         if not callable(function) and not is_compiled(function):
             raise ArgumentError(f"the log density must be a function or a scipy.LowLevelCallable; it is {function!r:.60}")
@@ -60,6 +62,8 @@ class Density:
         self.in_place = bool(in_place)
         self.hessian_product = hessian_product
         self.names = _checked_names(names, self.dimension)
+        self.start = None if start is None else as_vector(start, self.dimension, "start")
+        self.model: str | None = None  # where the command found it, so that a record can name it
         self.gradients = 0
         self.products = 0
         self.target()  # a wrong signature is said here, not at the first chain

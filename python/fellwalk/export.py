@@ -30,15 +30,15 @@ def save_npz(path: str | os.PathLike[str], draws: np.ndarray, names: Sequence[st
              attributes: Mapping[str, Any] | None = None) -> None:
     """Write a .npz file that numpy.load reads without pickle.
 
-    It holds `draws` (chains, n, dimension), `names` (dimension,), `facts` (chains, n) when given, and `attributes`, JSON
-    text of provenance such as the seed and versions. Raises ArgumentError, or RecordError when the disk refuses.
+    It holds `draws` (chains, n, dimension), `names` (dimension,), `facts` (chains, n) when given, and `attributes`,
+    JSON text of provenance such as the seed and versions. Raises ArgumentError, or RecordError when the disk refuses.
     """
     draws, names, facts = _checked(draws, names, facts)
     arrays = {"draws": draws, "names": np.array(names, dtype=str), "attributes": np.array(_json(attributes or {}))}
     if facts is not None:
         arrays["facts"] = facts
     with _whole_file(path) as file:
-        np.savez(file, allow_pickle=False, **arrays)
+        np.savez(file, **arrays)
 
 
 def save_csv(path: str | os.PathLike[str], draws: np.ndarray, names: Sequence[str], *,
@@ -46,14 +46,14 @@ def save_csv(path: str | os.PathLike[str], draws: np.ndarray, names: Sequence[st
     """Write UTF-8 CSV: a header, then one row a draw with chain, draw (both from 0) and every parameter.
 
     `draws` has shape (chains, n, dimension). Each number has the fewest digits, at most 17, that give it back exactly.
-    With `facts` (chains, n) their fields follow, in columns named facts.FIELD. Raises ArgumentError, or RecordError when
-    the disk refuses.
+    With `facts` (chains, n) their fields follow, in columns named facts.FIELD. Raises ArgumentError, or RecordError
+    when the disk refuses.
     """
     draws, names, facts = _checked(draws, names, facts)
     fields = [] if facts is None else list(facts.dtype.names)
     header = ["chain", "draw", *names, *(f"facts.{field}" for field in fields)]
     if len(set(header)) != len(header):
-        raise ArgumentError("a parameter is named chain, draw or facts.SOMETHING, which the CSV file uses itself: rename it")
+        raise ArgumentError("a parameter is named chain, draw or facts.FIELD, as columns of the file are: rename it")
     with _whole_file(path) as file:
         text = io.TextIOWrapper(file, encoding="utf-8", newline="")
         rows = csv.writer(text, lineterminator="\n")
@@ -74,8 +74,8 @@ def save_netcdf(path: str | os.PathLike[str], draws: np.ndarray, names: Sequence
 
     Dimensions chain and draw; one double variable (chain, draw) for each parameter of `draws` (chains, n, dimension),
     named with letters, digits and underscores, its own name in the attribute long_name; each field of `facts`
-    (chains, n) as facts_FIELD. `attributes` become global attributes (text, real numbers, 32-bit whole numbers; all else
-    as JSON text) beside title and history. Raises ArgumentError, or RecordError when the disk refuses.
+    (chains, n) as facts_FIELD. `attributes` become global attributes (text, real numbers, 32-bit whole numbers; all
+    else as JSON text) beside title and history. Raises ArgumentError, or RecordError when the disk refuses.
     """
     from scipy.io import netcdf_file  # slow to import, and the only use of it
 
@@ -84,7 +84,8 @@ def save_netcdf(path: str | os.PathLike[str], draws: np.ndarray, names: Sequence
     if chains == 0 or count == 0:
         raise ArgumentError("there are no draws to write: a classic netCDF file cannot hold an empty dimension")
     if chains * count * 8 > NETCDF_BYTES:
-        raise ArgumentError(f"{chains} x {count} draws are too many for classic netCDF (2 GB a parameter): write a .npz file")
+        raise ArgumentError(f"{chains} x {count} draws are too many for classic netCDF (2 GB a parameter): write "
+                            "a .npz file")
     columns: dict[str, tuple[np.ndarray, str]] = {}
     fields = () if facts is None else facts.dtype.names
     taken = {"chain", "draw", *(f"facts_{field}" for field in fields)}
@@ -92,10 +93,10 @@ def save_netcdf(path: str | os.PathLike[str], draws: np.ndarray, names: Sequence
         columns[_safe(name, taken)] = (draws[:, :, column], name)
     columns |= {f"facts_{field}": (facts[field], field) for field in fields}
     with _whole_file(path) as file:
-        # In memory first: the writer must seek in its file and would close it. A file object of our own outlives it.
         out = netcdf_file(_Kept(file), "w", version=2)
-        out.title, out.history = _text(title), _text(f"{datetime.now(UTC).isoformat(timespec='seconds')} written by fellwalk")
-        used = {"title", "history"}
+        out.title = _text(title)
+        out.history = _text(f"{datetime.now(UTC).isoformat(timespec='seconds')} written by fellwalk")
+        used = {"title", "history", *dir(out)}  # attributes share a name space with the methods of SciPy's object
         for name, value in (attributes or {}).items():
             setattr(out, _safe(name, used), _attribute(value))
         for dimension, size in (("chain", chains), ("draw", count)):
@@ -111,7 +112,8 @@ def save_netcdf(path: str | os.PathLike[str], draws: np.ndarray, names: Sequence
 def _checked(draws: Any, names: Iterable[str], facts: Any) -> tuple[np.ndarray, list[str], np.ndarray | None]:
     draws = np.asarray(draws)
     if draws.ndim != 3 or draws.dtype != np.float64:
-        raise ArgumentError(f"draws must be float64 of shape (chains, n, dimension), not {draws.dtype} of shape {draws.shape}")
+        raise ArgumentError("draws must be float64 of shape (chains, n, dimension), not "
+                            f"{draws.dtype} of shape {draws.shape}")
     names = [names] if isinstance(names, str) else list(names)
     if len(names) != draws.shape[2] or not all(isinstance(name, str) and name for name in names):
         raise ArgumentError(f"names must be {draws.shape[2]} texts, one a parameter; got {len(names)}: {names!r:.80}")
@@ -120,8 +122,9 @@ def _checked(draws: Any, names: Iterable[str], facts: Any) -> tuple[np.ndarray, 
         raise ArgumentError(f"two parameters are named {twice!r}: give every parameter a name of its own")
     if facts is not None:
         facts = np.asarray(facts)
-        if facts.dtype.names is None or facts.shape != draws.shape[:2]:
-            raise ArgumentError(f"facts must be a structured array of shape {draws.shape[:2]}, not {facts.dtype} of shape {facts.shape}")
+        if facts.dtype.names is None or facts.dtype.hasobject or facts.shape != draws.shape[:2]:
+            raise ArgumentError(f"facts must be a structured array of numbers of shape {draws.shape[:2]}, not "
+                                f"{facts.dtype} of shape {facts.shape}")
     return draws, names, facts
 
 
@@ -150,7 +153,7 @@ def _attribute(value: Any) -> Any:
 
 
 def _safe(name: str, taken: set[str]) -> str:
-    """A name of letters, digits and underscores that starts with a letter and is not in `taken`, to which it is added."""
+    """A name of letters, digits and underscores, first a letter, that is not yet in `taken`, to which it is added."""
     plain = unicodedata.normalize("NFKD", name).encode("ascii", "ignore").decode()
     plain = re.sub(r"[^A-Za-z0-9]+", "_", plain).strip("_")
     plain = plain if plain[:1].isalpha() else f"x_{plain}".rstrip("_")
@@ -163,13 +166,18 @@ def _safe(name: str, taken: set[str]) -> str:
 
 
 class _Kept:
-    """A file that does not close when the netCDF writer closes it: it must still be synced and renamed."""
+    """A file that stays open when the netCDF writer closes it: it must still be synced and renamed."""
 
     def __init__(self, file: IO[bytes]) -> None:
+        self._file, self._done = file, False
         self.seek, self.tell, self.write, self.flush = file.seek, file.tell, file.write, file.flush
 
+    @property
+    def closed(self) -> bool:
+        return self._done or self._file.closed
+
     def close(self) -> None:
-        self.flush()
+        self._done = True
 
 
 @contextlib.contextmanager
@@ -189,6 +197,6 @@ def _whole_file(path: str | os.PathLike[str]) -> Iterator[IO[bytes]]:
         with contextlib.suppress(OSError):
             os.unlink(partial)
         if isinstance(error, OSError):
-            raise RecordError(f"{full}: could not be written ({error.strerror}). An earlier file of this name is as it was. "
-                              "Check the folder, its rights and the free space.") from error
+            raise RecordError(f"{full}: could not be written ({error.strerror}). An earlier file of this name is as it "
+                              "was. Check the folder, its rights and the free space.") from error
         raise

@@ -66,7 +66,7 @@ def judge_function(
         is then its probability) or a short vector of either, of the same length every time.
     names: one name for each number that f returns. draws, facts, spent: as for `judge`.
 
-    Raises ArgumentError when the values of f differ in shape, are not numbers or not finite; what f raises comes through.
+    Raises ArgumentError when values of f differ in shape, are not numbers or not finite; what f raises comes through.
     """
     if not callable(f):
         raise ArgumentError(f"The function of the draws must be callable, not {type(f).__name__}.")
@@ -82,8 +82,8 @@ def judge_function(
             where = f"for draw {draw + 1} of chain {chain + 1}"
             if value.ndim > 1 or value.size == 0 or value.dtype.kind not in "biuf":
                 raise ArgumentError(
-                    f"The function must return a real number, a truth value or a vector of them, but {where} it returned "
-                    f"{_describe(value)}."
+                    "The function must return a real number, a truth value or a vector of them, but "
+                    f"{where} it returned {_describe(value)}."
                 )
             if values is None:
                 is_scalar = value.ndim == 0
@@ -117,10 +117,10 @@ def _checked_draws(draws: ArrayLike) -> tuple[np.ndarray, np.ndarray]:
         raise ArgumentError("The draws are a masked array with masked entries; leave those draws out first.")
     try:
         raw = np.asarray(draws)
-    except ValueError:
+    except (ValueError, TypeError):
         raise ArgumentError(
             "The draws must form one array (chains, draws, parameters), but the lists given differ in length."
-        )
+        ) from None
     if raw.dtype.kind not in "biuf":
         raise ArgumentError(f"The draws must be real numbers, but they have type {raw.dtype}.")
     if raw.ndim != 3:
@@ -200,7 +200,8 @@ def measure(x: np.ndarray) -> dict[str, np.ndarray]:
     """All numbers for each parameter, from finite draws (chains, n, dimension).
 
     Arrays (dimension,), and (dimension, chains) for "own_worth" (effective size of each chain taken alone) and
-    "stand" (longest run of equal successive draws). Constant parameters have NaN for what is then undefined.
+    "stand" (longest run of equal successive draws). "heaviest" is the largest draw's share of all squared deviations.
+    Constant parameters have NaN for what is then undefined.
     """
     chains, n, dimension = x.shape
     step = max(1, GROUP // (chains * n))
@@ -272,6 +273,7 @@ def _measure_group(x: np.ndarray) -> dict[str, np.ndarray]:
     numbers["stand"] = ac.longest_stand(y)
     numbers["distinct"] = 1 + np.sum(ordered[:, 1:] != ordered[:, :-1], axis=-1)
     numbers["constant"] = constant
+    numbers["heaviest"] = square.max(axis=(1, 2)) / square.sum(axis=(1, 2))
     return numbers
 
 

@@ -33,8 +33,8 @@ class Judgement:
     """
 
     NUMBERS: ClassVar[tuple[str, ...]] = (
-        "estimate", "error", "spread", "spread_error", "low", "low_error", "middle", "middle_error", "high", "high_error",
-        "worth", "worth_tails", "worth_mean", "agreement", "constant", "event",
+        "estimate", "error", "spread", "spread_error", "low", "low_error", "middle", "middle_error", "high",
+        "high_error", "worth", "worth_tails", "worth_mean", "agreement", "constant", "event",
     )  # fmt: skip
 
     names: tuple[str, ...]
@@ -109,7 +109,7 @@ class Judgement:
         return "\n".join([self.table(), "", *table.verdict_lines(self)])
 
     def to_dict(self) -> dict[str, Any]:
-        """Everything but the draws as plain Python objects that any JSON writer takes; what is not finite becomes None."""
+        """All but the draws as plain Python objects that any JSON writer takes; what is not finite becomes None."""
         parameters = [
             {"name": name} | {key: _plain(getattr(self, key)[i]) for key in self.NUMBERS}
             for i, name in enumerate(self.names)

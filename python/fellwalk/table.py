@@ -12,7 +12,7 @@ if TYPE_CHECKING:
 
 WIDTH = 80
 ROWS = 24  # about one screen; more parameters are shown worst first, up to this many
-WIDEST_NUMBER = 9  # columns; a longer number is written less a common offset or in another unit
+WIDEST_NUMBER = 8  # columns; a longer number is written less a common offset or in another unit
 HEADINGS = ("parameter", "estimate", "error", "spread", "low", "middle", "high", "worth", "agreement")
 TEXTBOOK = (
     "Textbook names: posterior mean, its Monte Carlo standard error, posterior standard deviation, 5%, 50% and 95% "
@@ -50,7 +50,7 @@ class Row:
         self.exponent, self.offset = 0, 0.0
         if not self.is_constant and max(map(len, self._cells())) > WIDEST_NUMBER:
             self._shorten()
-        self.worth = "-" if self.is_constant else f"{j.worth[i]:.0f}"
+        self.worth = "-" if self.is_constant else _worth(float(j.worth[i]))
         agreement = float(j.agreement[i])
         self.agreement = "constant" if self.is_constant else _agreement(agreement)
 
@@ -97,6 +97,10 @@ class Row:
         return [*self._cells(), self.worth, self.agreement]
 
 
+def _worth(value: float) -> str:
+    return f"{value:.0f}" if value < 999_999 else f"{value:.2g}"
+
+
 def _agreement(value: float) -> str:
     if math.isnan(value):
         return "unknown"
@@ -124,8 +128,10 @@ def _fit(text: str, width: int, from_end: bool = False) -> str:
 
 
 def shorten_names(names: list[str], width: int) -> list[str]:
-    """Names of at most `width` (>= 8) columns, all different if they were: the middle of a long one gives way to an ellipsis,
-    and where two then look alike, their ends to a running number."""
+    """Names of at most `width` (>= 8) columns, all different if they were.
+
+    The middle of a long one gives way to an ellipsis; where two then look alike, their ends give way to a number.
+    """
     short = []
     for name in names:
         if columns(name) > width:
@@ -185,11 +191,11 @@ def parameters(judgement: "Judgement", all_rows: bool = False) -> str:
     lines = [draws, "", line(HEADINGS[0][:room], HEADINGS[1:])]
     lines += [line(name, cells) for name, cells in zip(short, body, strict=True)]
     if hidden:
-        lines += _wrap(f"The {ROWS} that need attention most, worst first; {hidden} more with .table(all=True).")
-    lines += _wrap(TEXTBOOK)
+        lines += wrap(f"The {ROWS} that need attention most, worst first; {hidden} more with .table(all=True).")
+    lines += wrap(TEXTBOOK)
     lines += _unit_notes(rows, short)
     if any(row.is_event for row in rows):
-        lines += _wrap("The estimate of a truth value is its probability.")
+        lines += wrap("The estimate of a truth value is its probability.")
     return "\n".join(lines)
 
 
@@ -201,9 +207,10 @@ def _unit_notes(rows: list[Row], names: list[str]) -> list[str]:
             alike.setdefault((row.exponent, row.offset), []).append(name)
     lines = []
     for (exponent, offset), members in alike.items():
-        unit = f"shown in units of 1e{exponent:d}" if exponent else ""
-        less = f"estimate, low, middle and high shown less {offset:.15g}" if offset else ""
-        lines += _wrap(f"{', '.join(members)}: {' and '.join(filter(None, [less, unit]))}.")
+        steps = [f"multiply by 1e{exponent:d}"] if exponent else []
+        if offset:
+            steps.append(f"add {offset:.15g} to estimate, low, middle and high")
+        lines += wrap(f"{', '.join(members)}: {', then '.join(steps)}.")
     return lines
 
 
@@ -213,15 +220,15 @@ def _unit_notes(rows: list[Row], names: list[str]) -> list[str]:
 def verdict_lines(judgement: "Judgement") -> list[str]:
     """Verdict, reasons, notes, failures, cost and the caution, wrapped."""
     verdict = judgement.verdict
-    lines = _wrap(f"Verdict: {verdict.kind}.")
+    lines = wrap(f"Verdict: {verdict.kind}.")
     for reason in verdict.reasons:
-        lines += _wrap(reason, "- ", "  ")
+        lines += wrap(reason, "- ", "  ")
     if verdict.draws_needed is not None:
-        lines += _wrap(f"About {verdict.draws_needed:,} kept draws a chain in total should do.")
+        lines += wrap(f"About {verdict.draws_needed:,} kept draws a chain in total should do.")
     for note in verdict.notes:
-        lines += _wrap(note)
+        lines += wrap(note)
     lines += _failure_lines(judgement) + _energy_lines(judgement) + _cost_lines(judgement)
-    return [*lines, *_wrap(verdict.caution)]
+    return [*lines, *wrap(verdict.caution)]
 
 
 def _failure_lines(judgement: "Judgement") -> list[str]:
@@ -230,11 +237,11 @@ def _failure_lines(judgement: "Judgement") -> list[str]:
     total = judgement.chains * judgement.draws_per_chain
     count = sum(judgement.failures.values())
     if not count:
-        return _wrap(f"Failed steps: none in {total:,} transitions.")
-    lines = _wrap(f"Failed steps: in {count:,} of {total:,} transitions ({100 * count / total:.2g}%):")
+        return wrap(f"Failed steps: none in {total:,} transitions.")
+    lines = wrap(f"Failed steps: in {count:,} of {total:,} transitions ({100 * count / total:.2g}%):")
     sentences = failure_sentences()
     for code, times in sorted(judgement.failures.items(), key=lambda item: -item[1]):
-        lines += _wrap(f"{times:,} times {sentences.get(code, f'failure code {code}')}", "- ", "  ")
+        lines += wrap(f"{times:,} {_plural('time', times)} {sentences.get(code, f'failure code {code}')}", "- ", "  ")
     return lines
 
 
@@ -251,7 +258,7 @@ def _energy_lines(judgement: "Judgement") -> list[str]:
     fraction = judgement.energy_fraction
     if fraction is None or not np.isfinite(fraction).any():
         return []
-    return _wrap(f"Energy fraction (of missing information): {np.nanmin(fraction):.2g} in the lowest chain.")
+    return wrap(f"Energy fraction (of missing information): {np.nanmin(fraction):.2g} in the lowest chain.")
 
 
 def _cost_lines(judgement: "Judgement") -> list[str]:
@@ -267,12 +274,13 @@ def _cost_lines(judgement: "Judgement") -> list[str]:
     text = f"Cost of the whole run: {', '.join(whole)}"
     if least is not None:
         text += f"; for one effective draw of {judgement.names[least]}, worth least: {', '.join(each)}"
-    return _wrap(text + ".")
+    return wrap(text + ".")
 
 
 def _plural(word: str, count: int) -> str:
     return word if count == 1 else word + "s"
 
 
-def _wrap(text: str, first: str = "", rest: str = "") -> list[str]:
+def wrap(text: str, first: str = "", rest: str = "") -> list[str]:
+    """Lines of at most WIDTH columns; `first` and `rest` are the indents of the first line and of the others."""
     return textwrap.wrap(text, WIDTH, initial_indent=first, subsequent_indent=rest, break_on_hyphens=False)

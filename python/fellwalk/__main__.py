@@ -1,0 +1,7 @@
+"""python -m fellwalk"""
+
+import sys
+
+from fellwalk.cli import main
+
+sys.exit(main())
