@@ -208,7 +208,7 @@ typedef struct fw_summary {
     uint64_t settled_transitions; /* completed while settling, in the current plan */
     uint64_t windows;             /* windows finished in the current plan */
     double step_size, beta, bend, ceiling;
-    double change; /* how far the last window moved the base metric, root mean square of log half-scale */
+    double change; /* |log ratio| of standard deviations by which the last window moved the base metric */
     size_t directions;
     size_t workspace_vectors; /* vectors of d numbers in the workspace */
     size_t workspace_bytes;

@@ -52,6 +52,14 @@ static void lay_out_orbit(purse *from, fw_chain *chain)
     }
 }
 
+/* More rows see directions sooner; their number falls where they would be most of the memory and time of a window. */
+static size_t rows_of(const fw_chain *chain)
+{
+    if (!chain->settings.adapt_scale) return 0;
+    if (chain->settings.rank == 0) return FW_CLIMB_ROWS;
+    return chain->walk.d <= 2000 ? FW_WINDOW_ROWS : chain->walk.d <= 20000 ? 40 : 24;
+}
+
 static void lay_out(purse *from, fw_chain *chain)
 {
     fw_walk *walk = &chain->walk;
@@ -71,6 +79,11 @@ static void lay_out(purse *from, fw_chain *chain)
     chain->squares_x = vectors(from, 1);
     chain->mean_g = vectors(from, 1);
     chain->squares_g = vectors(from, 1);
+    chain->rows = rows_of(chain);
+    chain->rows_x = vectors(from, chain->rows);
+    chain->rows_g = vectors(from, chain->rows);
+    chain->found = vectors(from, chain->rows ? chain->settings.rank : 0);
+    chain->known = vectors(from, chain->rows ? chain->settings.rank : 0);
     if (chain->path == &fw_nouturn) lay_out_orbit(from, chain);
 }
 
@@ -150,7 +163,7 @@ int fw_chain_set_base(fw_chain *chain, const double *scale, size_t count, const 
         (count > 0 && (!fw_all_positive(count, lambda) || !fw_all_finite(count * chain->walk.d, directions))))
         return FW_BAD_ARGUMENT;
     fw_base_set(&chain->walk.base, scale, count, directions, lambda);
-    chain->learn.base_given = 1;
+    chain->learn.base_given = chain->learn.scale_kept = 1;
     return FW_OK;
 }
 
@@ -206,6 +219,7 @@ static int attempt(fw_chain *chain, fw_route *route, fw_facts *facts)
 {
     fw_walk *walk = &chain->walk;
     fw_point *p = &chain->end[0];
+    if (chain->learn.climbing) return fw_climb(chain, facts);
     int status = fw_learn_route(chain, route);
     if (status != FW_OK) return status;
     facts->step_size = route->step_size;
@@ -227,7 +241,7 @@ static int transition(fw_chain *chain, fw_facts *facts)
 {
     fw_walk *walk = &chain->walk;
     const uint64_t gradients = walk->gradients, products = walk->products, halved = walk->halved;
-    const int settling = !chain->learn.settled;
+    const int settling = !chain->learn.settled, climbing = chain->learn.climbing != 0;
     fw_learn before;
     if (settling) before = chain->learn;
     if (chain->random.mark) chain->random.mark(chain->random.state);
@@ -245,7 +259,7 @@ static int transition(fw_chain *chain, fw_facts *facts)
     facts->products = (int32_t)(walk->products - products);
     facts->log_density = chain->value;
     ++chain->transitions;
-    if (settling) fw_learn_update(chain, &route, facts);
+    if (settling && !climbing) fw_learn_update(chain, &route, facts);
     return FW_OK;
 }
 

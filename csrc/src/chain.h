@@ -4,6 +4,8 @@
 
 #include "walk.h"
 
+#define FW_WINDOW_ROWS 64 /* most draws and gradients of a window kept for learning directions */
+#define FW_CLIMB_ROWS 8   /* points that the climb remembers */
 #define FW_RING 64       /* gradients remembered for the median that turns bend into beta */
 
 /* Where candidates for the next draw wait. */
@@ -23,7 +25,7 @@ typedef struct fw_learn {
     uint64_t least, most, tail; /* the plan: transitions in all, and in its last part */
     uint64_t done;              /* settling transitions completed */
     uint64_t tail_left;         /* > 0: the last part has begun; only the step size moves */
-    uint64_t window, in_window, windows;
+    uint64_t window, in_window, windows, rows;
     uint64_t quiet;             /* windows in a row that moved the base metric little */
     double change;
     /* step size: dual averaging */
@@ -37,6 +39,10 @@ typedef struct fw_learn {
     uint64_t ring_count;
     uint64_t settled;
     uint64_t base_given;        /* 1: the base metric holds something better than ones */
+    uint64_t scale_kept;        /* 1: the caller gave it, so the climb leaves it */
+    /* the climb from a far start */
+    uint64_t climbing, climbed;
+    double climb_value[FW_CLIMB_ROWS];
 } fw_learn;
 
 typedef struct fw_path fw_path;
@@ -52,9 +58,12 @@ struct fw_chain {
     double step_size;         /* used once settled */
     fw_learn learn;
     double *mean_x, *squares_x, *mean_g, *squares_g;
+    double *rows_x, *rows_g;  /* points and gradients: of the climb, then of the window (chain->rows of each); NULL when nothing is learned */
+    double *found, *known;    /* directions just found, while the old ones are still in use; those as rows */
     fw_candidate fresh, held; /* no-U-turn path */
     fw_piece carry, level[FW_MAX_DOUBLINGS + 1];
     double *orbit_rho, *spare_rho, *seam;
+    size_t rows;
     size_t vectors, bytes;
     double *block;
 };
@@ -63,6 +72,7 @@ struct fw_chain {
 typedef struct fw_route {
     double step_size;
     int finer; /* twice as many steps allowed: settling compares step sizes over equal lengths */
+    unsigned doublings; /* no-U-turn path: at most so many in this transition, finer not counted */
 } fw_route;
 
 struct fw_path {
@@ -73,6 +83,13 @@ struct fw_path {
 extern const fw_path fw_jittered;
 extern const fw_path fw_nouturn;
 const fw_path *fw_path_named(const char *name);
+
+/* climb.c: one iteration in the place of a transition, while learn.climbing. */
+int fw_climb(fw_chain *chain, fw_facts *facts);
+
+/* directions.c: from the rows of the window to directions (count x d) and their lambda, scale improved on the way;
+ * returns the count. Uses the end points as scratch. */
+size_t fw_find_directions(fw_chain *chain, double *scale, double *directions, double *lambda);
 
 /* settle.c */
 void fw_learn_first_scale(fw_chain *chain);

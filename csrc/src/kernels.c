@@ -86,6 +86,35 @@ FW_CLONES void fw_drift(size_t n, double k, const double *restrict r, const doub
     for (size_t i = 0; i < n; ++i) x[i] += k * (r[i] * w[i]);
 }
 
+FW_CLONES void fw_scale(size_t n, double k, double *y)
+{
+    for (size_t i = 0; i < n; ++i) y[i] *= k;
+}
+
+FW_CLONES void fw_difference(size_t n, const double *a, const double *b, double *out)
+{
+    for (size_t i = 0; i < n; ++i) out[i] = a[i] - b[i];
+}
+
+FW_CLONES void fw_add_squares(size_t n, const double *restrict a, double *restrict sum)
+{
+    for (size_t i = 0; i < n; ++i) sum[i] += a[i] * a[i];
+}
+
+/* Blocks of columns stay in the first-level cache while every pair of rows passes over them. */
+void fw_gram(size_t n, size_t rows, const double *const *vectors, double *out)
+{
+    const size_t block = 256;
+    for (size_t i = 0; i < rows * rows; ++i) out[i] = 0.0;
+    for (size_t at = 0; at < n; at += block) {
+        const size_t width = n - at < block ? n - at : block;
+        for (size_t a = 0; a < rows; ++a)
+            for (size_t b = a; b < rows; ++b) out[a * rows + b] += fw_dot(width, vectors[a] + at, vectors[b] + at);
+    }
+    for (size_t a = 0; a < rows; ++a)
+        for (size_t b = 0; b < a; ++b) out[a * rows + b] = out[b * rows + a];
+}
+
 FW_CLONES void fw_kick_drift(size_t n, double kick, const double *restrict c, double step, const double *restrict r,
                              double *restrict w, double *restrict x)
 {

@@ -28,6 +28,12 @@ void fw_divide_by(size_t n, const double *a, const double *b, double *out);  /* 
 void fw_axpy(size_t n, double k, const double *a, double *y);                /* y += k a */
 void fw_drift(size_t n, double k, const double *r, const double *w, double *x); /* x += k r*w */
 
+void fw_scale(size_t n, double k, double *y);                                /* y *= k */
+void fw_difference(size_t n, const double *a, const double *b, double *out); /* out = a - b */
+void fw_add_squares(size_t n, const double *a, double *sum);                  /* sum += a*a */
+/* Gram matrix (rows x rows, symmetric, row-major) of vectors of n numbers. */
+void fw_gram(size_t n, size_t rows, const double *const *vectors, double *out);
+
 /* w += kick c; x += step r*w */
 void fw_kick_drift(size_t n, double kick, const double *c, double step, const double *r, double *w, double *x);
 /* c = r*g; w += kick c; sums: w.w, w.c, c.c with the new w */

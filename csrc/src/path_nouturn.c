@@ -168,7 +168,7 @@ static int orbit_goes_on(fw_chain *chain, const fw_point *outer, const fw_point 
 static int travel(fw_chain *chain, const fw_route *route, fw_facts *facts)
 {
     fw_walk *walk = &chain->walk;
-    const unsigned most = chain->settings.doublings + (route->finer ? 1u : 0u);
+    const unsigned most = route->doublings + (route->finer ? 1u : 0u);
     orbit o = {.start = chain->end[0].energy, .held_sum = 1.0};
     fw_point_copy(walk, &chain->end[0], &chain->end[1]);
     momentum(walk, &chain->end[0], chain->orbit_rho);

@@ -1,7 +1,7 @@
 /* Settling: step size, scale, bend and the schedule that orders them.
  *
  * Lead: a few transitions that move the step size only. Windows: each gathers moments of draws and gradients, sets a
- * new scale at its end and is half as long again as the one before. Tail: the step size alone, over the final base
+ * new scale and new directions at its end and is half as long again as the one before. Tail: the step size alone, over the final base
  * metric. Fixed plans fit the windows to the number asked for; open plans (least < most) go to the tail once two
  * windows in a row have hardly moved the base metric.
  */
@@ -60,7 +60,7 @@ static void clear_window(fw_chain *chain)
     memset(chain->squares_x, 0, bytes);
     memset(chain->mean_g, 0, bytes);
     memset(chain->squares_g, 0, bytes);
-    chain->learn.in_window = 0;
+    chain->learn.in_window = chain->learn.rows = 0;
 }
 
 static void begin_tail(fw_learn *learn)
@@ -85,6 +85,7 @@ void fw_learn_plan(fw_chain *chain, size_t least, size_t most)
     learn->whole_count = learn->half_count = 0;
     learn->whole_sum = learn->half_sum = 0.0;
     learn->settled = most == 0;
+    learn->climbing = most > 0 && chain->rows_x && learn->climbed == 0;
     learn->search = chain->settings.adapt_step != 0;
     learn->log_step = learn->epoch_log_step = log(chain->step_size > 0.0 ? chain->step_size : 1.0);
     restart_average(learn, 10.0);
@@ -205,23 +206,38 @@ static void look_at_ceiling(fw_chain *chain, const fw_route *route, double accep
 /* ---- scale -------------------------------------------------------------------------------------------------------- */
 
 /* s = sqrt(var x / var g), the minimiser of the Fisher divergence over diagonal maps (Seyboldt, Carlson & Carpenter
- * 2026); a coordinate that has not moved keeps its scale. Leaves the new scale in squares_x. */
-static void new_scale(fw_chain *chain)
+ * 2026); a coordinate that has not moved keeps its scale. */
+static void new_scale(const fw_chain *chain, double *scale)
 {
-    const size_t d = chain->walk.d;
-    double sum = 0.0;
-    for (size_t i = 0; i < d; ++i) {
-        const double old = chain->walk.base.r[i] * chain->walk.base.r[i];
-        double s = sqrt(chain->squares_x[i] / chain->squares_g[i]);
-        if (!(s > 1e-200 && s < 1e200)) s = old;
-        const double moved = 0.5 * log(s / old);
-        sum += moved * moved;
-        chain->squares_x[i] = s;
+    for (size_t i = 0; i < chain->walk.d; ++i) {
+        const double s = sqrt(chain->squares_x[i] / chain->squares_g[i]), r = chain->walk.base.r[i];
+        scale[i] = s > 1e-200 && s < 1e200 ? s : r * r;
     }
-    chain->learn.change = sqrt(sum / (double)d);
 }
 
-/* Before anything is known: one gradient suggests s = 1/g^2, held within 1e8 of the steepest coordinate's root. */
+/* Root mean square of log(new / old standard deviation) of the coordinates, as the base metrics see them. */
+static double coordinates_moved(const fw_chain *chain, const double *scale, size_t k, const double *directions,
+                                const double *lambda)
+{
+    const fw_base *base = &chain->walk.base;
+    const size_t d = base->d;
+    double sum = 0.0;
+    for (size_t i = 0; i < d; ++i) {
+        double before = 1.0, after = 1.0;
+        for (size_t j = 0; j < base->k; ++j) {
+            const double e = base->directions[j * d + i];
+            before += e * e * (base->lambda[j] - 1.0);
+        }
+        for (size_t j = 0; j < k; ++j) {
+            const double e = directions[j * d + i];
+            after += e * e * (lambda[j] - 1.0);
+        }
+        const double moved = 0.5 * log(scale[i] / base->r[i] / base->r[i] * (after / before));
+        sum += moved * moved;
+    }
+    return sqrt(sum / (double)d);
+}
+
 void fw_learn_first_scale(fw_chain *chain)
 {
     if (chain->learn.base_given || !chain->settings.adapt_scale) return;
@@ -239,11 +255,40 @@ void fw_learn_first_scale(fw_chain *chain)
     chain->learn.base_given = 1;
 }
 
+/* The largest |log(new / old standard deviation)| along the new directions: coordinates may not show it. */
+static double directions_moved(const fw_chain *chain, const double *scale, size_t k, const double *directions,
+                               const double *lambda)
+{
+    double largest = 0.0, *p = chain->end[0].x, *c = chain->end[0].c;
+    for (size_t j = 0; j < k; ++j) {
+        for (size_t i = 0; i < chain->walk.d; ++i) p[i] = directions[j * chain->walk.d + i] / sqrt(scale[i]);
+        fw_base_gradient(&chain->walk.base, p, c);
+        const double moved = fabs(0.5 * log(lambda[j] / fw_dot(chain->walk.d, c, c)));
+        if (moved > largest) largest = moved;
+    }
+    return largest;
+}
+
+static void remember_row(fw_chain *chain)
+{
+    fw_learn *learn = &chain->learn;
+    const uint64_t stride = (learn->window + chain->rows - 1) / chain->rows;
+    if (chain->settings.rank == 0 || learn->in_window % stride != 0) return;
+    fw_copy(chain->walk.d, chain->x, chain->rows_x + learn->rows * chain->walk.d);
+    fw_copy(chain->walk.d, chain->g, chain->rows_g + learn->rows * chain->walk.d);
+    ++learn->rows;
+}
+
 static void close_window(fw_chain *chain)
 {
     fw_learn *learn = &chain->learn;
-    new_scale(chain);
-    fw_base_set(&chain->walk.base, chain->squares_x, 0, NULL, NULL);
+    double lambda[FW_MAX_DIRECTIONS], *scale = chain->end[1].c;
+    new_scale(chain, scale);
+    const size_t k = chain->settings.rank ? fw_find_directions(chain, scale, chain->found, lambda) : 0;
+    const double of_coordinates = coordinates_moved(chain, scale, k, chain->found, lambda);
+    const double of_directions = directions_moved(chain, scale, k, chain->found, lambda);
+    learn->change = of_coordinates > of_directions ? of_coordinates : of_directions;
+    fw_base_set(&chain->walk.base, scale, k, chain->found, lambda);
     clear_window(chain);
     learn->ring_count = 0;
     if (tunes_bend(chain)) remember_gradient(chain);
@@ -257,11 +302,21 @@ static void close_window(fw_chain *chain)
 
 /* ---- one settling transition --------------------------------------------------------------------------------------- */
 
+/* Long paths over a base metric that is still wrong buy little: window j allows 2^(3 + j/2) steps, the tail all. */
+static unsigned allowed_doublings(const fw_chain *chain)
+{
+    const unsigned most = chain->settings.doublings;
+    const uint64_t early = 3 + chain->learn.windows / 2;
+    if (chain->learn.settled || chain->learn.tail_left > 0 || early >= most) return most;
+    return (unsigned)early;
+}
+
 int fw_learn_route(fw_chain *chain, fw_route *route)
 {
     fw_learn *learn = &chain->learn;
     route->finer = 0;
     route->step_size = chain->step_size;
+    route->doublings = allowed_doublings(chain);
     if (learn->settled || !chain->settings.adapt_step) return FW_OK;
     if (learn->search) {
         const int status = search_step(chain);
@@ -289,6 +344,7 @@ void fw_learn_update(fw_chain *chain, const fw_route *route, const fw_facts *fac
     if (learn->tail_left > 0) {
         if (--learn->tail_left == 0) finish(chain);
     } else if (learn->done > lead) {
+        remember_row(chain);
         ++learn->in_window;
         fw_moments(chain->walk.d, (double)learn->in_window, chain->x, chain->mean_x, chain->squares_x);
         fw_moments(chain->walk.d, (double)learn->in_window, chain->g, chain->mean_g, chain->squares_g);

@@ -101,6 +101,9 @@ static void visit_state(cursor *c, fw_chain *chain)
     visit(c, chain->squares_x, d);
     visit(c, chain->mean_g, d);
     visit(c, chain->squares_g, d);
+    if (!chain->rows_x) return;
+    visit(c, chain->rows_x, chain->learn.rows * d);
+    visit(c, chain->rows_g, chain->learn.rows * d);
 }
 
 static uint64_t checksum(const unsigned char *bytes, size_t size)
@@ -131,25 +134,29 @@ int fw_chain_export(const fw_chain *chain, void *bytes, size_t size)
     return FW_OK;
 }
 
+/* Size of the state that these bytes, whose settings agree, say they hold: settling decides what is there. */
+static size_t expected_size(const fw_chain *chain, const unsigned char *bytes, size_t settings)
+{
+    const size_t at = settings + 8 * 9;
+    fw_chain copy = *chain;
+    memcpy(&copy.learn, bytes + at, sizeof copy.learn);
+    if (copy.learn.rows > FW_WINDOW_ROWS) return 0;
+    return fw_chain_state_bytes(&copy);
+}
+
 int fw_chain_import(fw_chain *chain, const void *bytes, size_t size)
 {
     /* every check comes before the first word of the chain changes */
     uint64_t sum;
     cursor measure = {MEASURE, NULL, 0, 0}, compare = {READ, (unsigned char *)bytes, 0, 0};
     visit_settings(&measure, chain);
-    if (size < measure.at + 8 || size % 8 != 0) return FW_BAD_STATE;
+    if (size < measure.at + 8 * 10 + sizeof(fw_learn) || size % 8 != 0) return FW_BAD_STATE;
     memcpy(&sum, (const unsigned char *)bytes + size - 8, 8);
     if (sum != checksum(bytes, size - 8)) return FW_BAD_STATE;
     visit_settings(&compare, chain);
     if (compare.mismatch) return FW_BAD_STATE;
     cursor read = {READ, (unsigned char *)bytes, 0, 0};
-    const uint64_t settled = chain->learn.settled;
-    chain->learn.settled = 1;
-    const size_t least = fw_chain_state_bytes(chain);
-    chain->learn.settled = 0;
-    const size_t whole = fw_chain_state_bytes(chain);
-    chain->learn.settled = settled;
-    if (size != least && size != whole) return FW_BAD_STATE;
+    if (size != expected_size(chain, bytes, measure.at)) return FW_BAD_STATE;
     visit_state(&read, chain);
     return read.at + 8 == size ? FW_OK : FW_BAD_STATE;
 }

@@ -68,7 +68,9 @@ def stopped(status: int, where: str) -> FellwalkError:
 class Chain:
     """A chain over a density. It prints nothing, starts no thread, installs no signal handler.
 
-    start: position of shape (dimension,), where log density and gradient are finite.
+    start: position of shape (dimension,), where log density and gradient are finite; with `fellwalk.Parameters` in
+        natural values, flat or a dict, while positions and draws of the chain are in free coordinates
+        (``density.parameters.natural(block.draws)`` maps them).
     scale: optional variances of shape (dimension,) to start from, as the diagonal of the inverse base metric;
         settling refines them, unless ``adapt_scale=False``.
     Other arguments as in `run`. Errors: ArgumentError, ShapeError, StartError, and whatever the density raises.
@@ -88,13 +90,14 @@ class Chain:
         scale: ArrayLike | None = None,
         adapt_scale: bool = True,
         beta: float | None = None,
+        rank: int | str = "auto",
     ) -> None:
         settings = Settings(motion=motion or Leapfrog(), path=path or NoUTurn(), settle=settle, acceptance=acceptance,
-                            step_size=step_size, adapt_scale=adapt_scale, beta=beta)
+                            step_size=step_size, adapt_scale=adapt_scale, beta=beta, rank=rank)
         self._make(density, settings, seed)
         if scale is not None:
             self._set_scale(scale)
-        self._start(start)
+        self._start(start if density.parameters is None else density.parameters.free(start))
 
     def _make(self, density: Density, settings: Settings, seed: int | np.random.SeedSequence | None) -> None:
         if not isinstance(density, Density):
@@ -134,7 +137,7 @@ class Chain:
         x = as_vector(start, self.density.dimension, "the starting point")
         if not np.all(np.isfinite(x)):
             bad = int(np.flatnonzero(~np.isfinite(x))[0])
-            raise StartError(f"the starting point is {x[bad]} in {self.density.names[bad]}; start from finite numbers")
+            raise StartError(f"the starting point is {x[bad]} in {self.density.coordinates[bad]}; start from finite numbers")
         status = self._engine.start(x)
         self._count()
         if status == -7:
@@ -142,7 +145,7 @@ class Chain:
             what = f"the log density is {value}"
             if np.isfinite(value):
                 bad = int(np.flatnonzero(~np.isfinite(gradient))[0])
-                what = f"the gradient is {gradient[bad]} in {self.density.names[bad]}"
+                what = f"the gradient is {gradient[bad]} in {self.density.coordinates[bad]}"
             raise StartError(f"{what} at the starting point {brief(x)}; start inside the support, where both are finite")
         if status < 0:
             raise stopped(status, f"evaluating the density at the starting point {brief(x)}")

@@ -2,6 +2,7 @@
 
 from dataclasses import asdict, dataclass, field
 
+from fellwalk._core import MAX_DIRECTIONS
 from fellwalk.errors import ArgumentError
 from fellwalk.motions import MOTIONS, PATHS, Leapfrog, Motion, NoUTurn, Path, real, whole
 
@@ -14,7 +15,10 @@ AUTO_SETTLE = (150, 1500)
 
 @dataclass(frozen=True)
 class Settings:
-    """How a chain moves and settles. settle: transitions, or "auto"."""
+    """How a chain moves and settles.
+
+    settle: transitions, or "auto". rank: directions of the base metric, or "auto": those that stand out, at most 16.
+    """
 
     motion: Motion = field(default_factory=Leapfrog)
     path: Path = field(default_factory=NoUTurn)
@@ -23,6 +27,7 @@ class Settings:
     step_size: float | None = None
     adapt_scale: bool = True
     beta: float | None = None
+    rank: int | str = "auto"
 
     def __post_init__(self) -> None:
         if not isinstance(self.motion, tuple(MOTIONS.values())):
@@ -33,6 +38,10 @@ class Settings:
         real("acceptance", self.acceptance, 0.0, 0.9999)
         if self.step_size is not None:
             real("step_size", self.step_size, 0.0, 1e300)
+        if self.rank != "auto":
+            if isinstance(self.rank, str):
+                raise ArgumentError(f'rank must be a number of directions or "auto"; it is {self.rank!r}')
+            whole("rank", self.rank, 0, MAX_DIRECTIONS)
         if self.beta is not None:
             real("beta", self.beta, 0.0, 1e300, include=True)
 
@@ -57,8 +66,8 @@ class Settings:
             "acceptance": float(self.acceptance),
             "settle_least": least,
             "settle_most": most,
-            "rank": 0,
-            "rank_fixed": 0,
+            "rank": MAX_DIRECTIONS if self.rank == "auto" else int(self.rank),
+            "rank_fixed": int(self.rank != "auto"),
             "adapt_step": 1,
             "adapt_scale": int(self.adapt_scale),
         }

@@ -1,0 +1,32 @@
+/* Inside of the maps of bounded parameters: one block for each map, and the arithmetic of the joint kinds. */
+#ifndef FW_MAPS_H
+#define FW_MAPS_H
+
+#include "fellwalk.h"
+
+typedef struct fw_block {
+    fw_map_kind kind;
+    size_t size;            /* as in fw_map */
+    size_t free, natural;   /* coordinates and values of this block */
+    size_t free_at, natural_at;
+    double low, high;       /* FW_INCREASING */
+    double *scratch;        /* joint kinds: what apply leaves for the others */
+} fw_block;
+
+/* The joint kinds (shares, increasing, correlation): arrays are those of the block alone. maps_joint.c */
+size_t fw_joint_scratch(const fw_block *block);
+double fw_joint_apply(const fw_block *block, const double *y, double *x);
+void fw_joint_pull(const fw_block *block, const double *g, int with_jacobian, double *out);
+void fw_joint_push(const fw_block *block, const double *p, double *out);
+void fw_joint_bend(const fw_block *block, const double *g, const double *p, double *out);
+void fw_joint_invert(const fw_block *block, const double *x, double *y);
+
+/* maps_correlation.c */
+size_t fw_correlation_scratch(size_t n);
+double fw_correlation_apply(size_t n, double *scratch, const double *y, double *x);
+void fw_correlation_pull(size_t n, double *scratch, const double *g, int with_jacobian, double *out);
+void fw_correlation_push(size_t n, double *scratch, const double *p, double *out);
+void fw_correlation_bend(size_t n, double *scratch, const double *g, const double *p, double *out);
+void fw_correlation_invert(size_t n, double *scratch, const double *x, double *y);
+
+#endif
