@@ -78,12 +78,12 @@ int curved_product(size_t d, const double *x, const double *v, double *product, 
     return 0;
 }
 
-/* A standard normal that from the call `fail_at` on waits, up to 20 s, until another thread opens the gate. */
+/* A standard normal that from the call `fail_at` (0: never) on waits, at most 20 s, until the gate is opened. */
 int waiting(size_t d, const double *x, double *value, double *gradient, void *context)
 {
     plan *p = context;
     const struct timespec pause = {0, 1000000};
-    if (++p->calls >= p->fail_at) {
+    if (++p->calls >= p->fail_at && p->fail_at > 0) {
         p->entered = 1;
         for (int i = 0; i < 20000 && !p->gate; ++i) nanosleep(&pause, NULL);
         if (!p->gate) return -1;
@@ -161,7 +161,7 @@ PRODUCT_TYPES = (ctypes.c_size_t, *[ctypes.POINTER(ctypes.c_double)] * 3, ctypes
 
 
 def ctypes_function(name: str, plan: Plan | None = None, signature: str | None = None) -> LowLevelCallable:
-    """The C function `name`, through ctypes, with `plan` as its context; SciPy spells the signature if none is given."""
+    """The C function `name`, through ctypes, with `plan` as context; SciPy spells the signature if none is given."""
     function = getattr(library(), name)
     function.restype = ctypes.c_int
     function.argtypes = PRODUCT_TYPES if name.endswith("_product") else DENSITY_TYPES

@@ -46,11 +46,11 @@ def level(delta: Array, u: Array, sign: int) -> tuple[float, float]:
         return float(q), float(1 + sign * q)
 
 
-# ---- Monge metric and any field in the place of the Hessian ------------------------------------------------------------
+# ---- Monge metric and any field in the place of the Hessian ---------------------------------------------------------
 
 
 class Monge:
-    """G(x) = diag(delta) + beta g g^T over a target, dense; `field(x)` stands for the Hessian (default: the exact one)."""
+    """G(x) = diag(delta) + beta g g^T over a target, dense; `field(x)` stands for the Hessian (default: itself)."""
 
     def __init__(self, target, delta: Array, beta: float, field: Callable[[Array], Array] | None = None) -> None:
         self.target, self.delta, self.beta = target, np.asarray(delta, dtype=float), beta
@@ -139,11 +139,11 @@ class Monge:
         return done.y[:d, -1], linalg.solve(self.metric(done.y[:d, -1]), done.y[d:, -1])
 
 
-# ---- derivatives of whole maps ------------------------------------------------------------------------------------------
+# ---- derivatives of whole maps --------------------------------------------------------------------------------------
 
 
 def jacobian(walk: Callable[[Array], Array], state: Array, unit: Array, h: float) -> Array:
-    """Jacobian of `walk` in units `unit`: central differences at h, h/2, h/4, extrapolated to error O(h^6) (Richardson)."""
+    """Jacobian of `walk` in units `unit`: central differences at h, h/2, h/4, extrapolated to O(h^6) (Richardson)."""
     rows = []
     for i in range(len(state)):
         found = []
@@ -156,13 +156,13 @@ def jacobian(walk: Callable[[Array], Array], state: Array, unit: Array, h: float
     return np.array(rows).T
 
 
-# ---- halved steps, from their definition ----------------------------------------------------------------------------------
+# ---- halved steps, from their definition ----------------------------------------------------------------------------
 
 
 def halved_step(micro: Callable, x: Array, v: Array, step: float, most: int, bound: float) -> tuple:
     """(status, x, v, gradients, halvings) of one macro step, by the rule of Bou-Rabee, Carpenter, Kleppe & Liu (2025).
 
-    micro(x, v, step, n) -> (levels, end, calls): the log weights of the start and of each of the n steps that succeeded,
+    micro(x, v, step, n) -> (levels, end, calls): the log weights of the start and of each of the n steps that worked,
     the end (x, v) or None after a failed step, and calls[i], the gradients that the first i steps cost. Status 10: no
     number of halvings fits; 11: the far end would have chosen fewer.
     """

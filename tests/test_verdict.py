@@ -224,7 +224,7 @@ def test_estimates_that_hang_on_one_draw_are_noted():
 
 
 def test_one_short_visit_far_away_shows_in_the_mean():
-    # 15 of 3200 draws, too few for ranks and tails to notice, but they hold two thirds of the variance (0.99 without them, 2.82 with).
+    # 15 of 3200 draws, too few for ranks and tails to notice, but two thirds of the variance (0.99 without, 2.82 with).
     x = draws(seed=0, parameters=1)
     x[2, 300:315] += 20
     verdict = judge(x, ["a"]).verdict

@@ -222,6 +222,73 @@ FW_API size_t fw_chain_state_bytes(const fw_chain *chain);
 FW_API int fw_chain_export(const fw_chain *chain, void *bytes, size_t size);
 FW_API int fw_chain_import(fw_chain *chain, const void *bytes, size_t size);
 
+/* ---- bounded parameters ------------------------------------------------------------------------------------------
+ * Chains move in free coordinates, all of R^d; the caller's functions see natural values, inside their bounds. A list
+ * of maps, one after the other, takes the free coordinates y to the natural values x:
+ *
+ *   kind            free    natural  map                                                   log |dx/dy|
+ *   FW_FREE         n       n        x = y                                                 0
+ *   FW_ABOVE        n       n        x = low + exp(y)                                      sum y
+ *   FW_BELOW        n       n        x = high - exp(y)                                     sum y
+ *   FW_BETWEEN      n       n        x = low + (high - low) / (1 + exp(-y))                sum log(high - low) - |y|
+ *                                                                                            - 2 log(1 + exp(-|y|))
+ *   FW_SHARES       n - 1   n        x = softmax(V y), V an orthonormal basis of the       sum log x + log(n) / 2
+ *                                    vectors of sum 0 (Egozcue et al. 2003)                (of the first n - 1 shares)
+ *   FW_INCREASING   n       n        x[k] = x[k-1] + exp(y[k]), x[0] = y[0], or            sum of those y that are
+ *                                    low + exp(y[0]); only high: the same from above;      exponents; as FW_SHARES
+ *                                    both: the gaps are n + 1 shares of high - low         plus n log(high - low)
+ *   FW_CORRELATION  n(n-1)/2 same    the entries below the diagonal, row by row, of        sum over i > k >= 0 of
+ *                                    R = L L^T; tanh(y) are the canonical partial          (n - k) log sech(y[i,k])
+ *                                    correlations (Lewandowski, Kurowicka & Joe 2009)
+ *
+ * Natural values never leave their bounds: where rounding would put one on a bound it is the nearest number inside
+ * (when no number lies between two bounds: one of the bounds). A fw_maps has its own scratch, allocated once, and
+ * serves one thread at a time. */
+typedef enum fw_map_kind {
+    FW_FREE = 0,
+    FW_ABOVE = 1,
+    FW_BELOW = 2,
+    FW_BETWEEN = 3,
+    FW_SHARES = 4,
+    FW_INCREASING = 5,
+    FW_CORRELATION = 6
+} fw_map_kind;
+
+typedef struct fw_map {
+    fw_map_kind kind;
+    size_t size;        /* elementwise kinds, increasing: values; shares: shares, >= 2; correlation: rows, >= 2 */
+    const double *low;  /* FW_ABOVE, FW_BETWEEN: `size` numbers; FW_INCREASING: one, -infinity for none; else unused */
+    const double *high; /* FW_BELOW, FW_BETWEEN: `size` numbers; FW_INCREASING: one, infinity for none; else unused */
+} fw_map;
+
+typedef struct fw_maps fw_maps;
+
+/* Sets *maps; the arrays of bounds are copied. FW_BAD_ARGUMENT: a size, a bound, or low >= high. */
+FW_API int fw_maps_new(size_t count, const fw_map *list, fw_maps **maps);
+FW_API void fw_maps_free(fw_maps *maps);
+FW_API size_t fw_maps_dimension(const fw_maps *maps); /* free coordinates */
+FW_API size_t fw_maps_natural(const fw_maps *maps);   /* natural values */
+
+/* x = natural values of y; returns log |dx/dy|. What follows is about the y of the latest apply. */
+FW_API double fw_maps_apply(fw_maps *maps, const double *y, double *x);
+/* out = J^T g, J = dx/dy; with_jacobian: plus the gradient of log |dx/dy|. */
+FW_API void fw_maps_pull(fw_maps *maps, const double *g, int with_jacobian, double *out);
+/* out = J p */
+FW_API void fw_maps_push(fw_maps *maps, const double *p, double *out);
+/* out += (sum_k g_k Hessian of x_k + Hessian of log |dx/dy|) p; exact, for correlations by central differences of pull. */
+FW_API void fw_maps_bend(fw_maps *maps, const double *g, const double *p, double *out);
+/* y of x; an entry is not finite where x is not inside its bounds. Independent of apply. */
+FW_API void fw_maps_invert(fw_maps *maps, const double *x, double *y);
+
+/* The caller's functions of natural values (natural->dimension of them), seen from free coordinates: the log density
+ * plus log |dx/dy|, its gradient, its Hessian product. fw_maps_target gives a target for fw_chain_new whose contexts
+ * are the maps. A product at another position than the latest density costs one more call of the density, unless all
+ * is FW_FREE; fw_maps_extra counts these. */
+FW_API int fw_maps_target(fw_maps *maps, const fw_target *natural, fw_target *target);
+FW_API int fw_mapped_density(size_t d, const double *y, double *value, double *gradient, void *maps);
+FW_API int fw_mapped_product(size_t d, const double *y, const double *p, double *product, void *maps);
+FW_API uint64_t fw_maps_extra(const fw_maps *maps);
+
 #ifdef __cplusplus
 }
 #endif

@@ -10,6 +10,8 @@ from fellwalk.errors import FellwalkError
 from fellwalk.judge import judge
 from fellwalk.judgement import Judgement
 from fellwalk.motions import Jittered, Lagrangian, Leapfrog, NoUTurn
+from fellwalk.parameter_kinds import between, correlation, free, increasing, positive, shares
+from fellwalk.parameters import Parameters
 from fellwalk.paths import Trajectory, integrate
 from fellwalk.result import Result, load
 from fellwalk.run import resume, run
@@ -26,16 +28,23 @@ __all__ = [
     "Lagrangian",
     "Leapfrog",
     "NoUTurn",
+    "Parameters",
     "Result",
     "Trajectory",
+    "between",
+    "correlation",
     "errors",
+    "free",
     "get_include",
+    "increasing",
     "integrate",
     "judge",
     "kernels",
     "load",
+    "positive",
     "resume",
     "run",
+    "shares",
 ]
 
 

@@ -8,10 +8,11 @@ import ctypes
 
 import numpy as np
 
+from cpython.mem cimport PyMem_Free, PyMem_Malloc
 from cpython.pycapsule cimport PyCapsule_GetContext, PyCapsule_GetName, PyCapsule_GetPointer
 from cpython.ref cimport PyObject
 from libc.stdint cimport int32_t, int64_t, uint32_t, uint64_t
-from libc.string cimport memcpy
+from libc.string cimport memcmp, memcpy
 from numpy.random cimport bitgen_t
 from numpy.random.c_distributions cimport random_standard_normal_fill
 
@@ -582,3 +583,129 @@ def log_determinant(diagonal, u, *, sign=1):
     if fw_metric_log_determinant(<size_t>d, &delta[0], &one[0], s, &value) != FW_OK:
         raise not_positive(sign)
     return value
+
+
+# ---- bounded parameters ----------------------------------------------------------------------------------------------
+
+cdef class Maps:
+    """The compiled maps of a list of (kind, size, low, high), bounds being float64 arrays or None; see fellwalk.h.
+
+    One thread at a time. Arrays are contiguous float64; several points are rows.
+    """
+    cdef fw_maps *maps
+    cdef readonly Py_ssize_t dimension, natural_size
+
+    def __cinit__(self, list given):
+        cdef size_t count = <size_t>len(given), k
+        cdef double[::1] low, high
+        cdef fw_map *plan = <fw_map *>PyMem_Malloc(max(count, 1) * sizeof(fw_map))
+        cdef int status
+        held = []
+        if plan == NULL:
+            raise MemoryError()
+        try:
+            for k in range(count):
+                kind, size, lows, highs = given[k]
+                plan[k].kind = <fw_map_kind><int>kind
+                plan[k].size = <size_t>size
+                plan[k].low = plan[k].high = NULL
+                if lows is not None:
+                    low = lows
+                    plan[k].low = &low[0]
+                    held.append(low)
+                if highs is not None:
+                    high = highs
+                    plan[k].high = &high[0]
+                    held.append(high)
+            status = fw_maps_new(count, plan, &self.maps)
+        finally:
+            PyMem_Free(plan)
+        if status == FW_NO_MEMORY:
+            raise MemoryError("no memory for the maps of these parameters")
+        if status != FW_OK:
+            raise ArgumentError("these parameters cannot be mapped: a size is too small or too large, or a bound is not "
+                                "a finite number below its partner")
+        self.dimension = <Py_ssize_t>fw_maps_dimension(self.maps)
+        self.natural_size = <Py_ssize_t>fw_maps_natural(self.maps)
+
+    def __dealloc__(self):
+        fw_maps_free(self.maps)
+
+    def apply(self, const double[:, ::1] y not None):
+        """(natural values (n, natural_size), log-Jacobians (n,)) of free coordinates (n, dimension)."""
+        x, log_jacobian = np.empty((y.shape[0], self.natural_size)), np.empty(y.shape[0])
+        cdef double[:, ::1] to = x
+        cdef double[::1] logs = log_jacobian
+        cdef Py_ssize_t i
+        for i in range(y.shape[0]):
+            logs[i] = fw_maps_apply(self.maps, &y[i, 0], &to[i, 0])
+        return x, log_jacobian
+
+    def invert(self, const double[:, ::1] x not None):
+        """Free coordinates (n, dimension) of natural values; not finite where a value is not inside its bounds."""
+        y = np.empty((x.shape[0], self.dimension))
+        cdef double[:, ::1] to = y
+        cdef Py_ssize_t i
+        for i in range(x.shape[0]):
+            fw_maps_invert(self.maps, &x[i, 0], &to[i, 0])
+        return y
+
+    def pull(self, const double[::1] y not None, const double[::1] g not None, bint with_jacobian):
+        """J^T g at y, plus the gradient of the log-Jacobian if asked for."""
+        x, out = np.empty(self.natural_size), np.empty(self.dimension)
+        cdef double[::1] at = x, to = out
+        fw_maps_apply(self.maps, &y[0], &at[0])
+        fw_maps_pull(self.maps, &g[0], with_jacobian, &to[0])
+        return out
+
+    def push(self, const double[::1] y not None, const double[::1] p not None):
+        """J p at y."""
+        x, out = np.empty(self.natural_size), np.empty(self.natural_size)
+        cdef double[::1] at = x, to = out
+        fw_maps_apply(self.maps, &y[0], &at[0])
+        fw_maps_push(self.maps, &p[0], &to[0])
+        return out
+
+    def bend(self, const double[::1] y not None, const double[::1] g not None, const double[::1] p not None):
+        """What the curvature of the maps adds to a Hessian product along p, given the natural gradient g."""
+        x, out = np.empty(self.natural_size), np.zeros(self.dimension)
+        cdef double[::1] at = x, to = out
+        fw_maps_apply(self.maps, &y[0], &at[0])
+        fw_maps_bend(self.maps, &g[0], &p[0], &to[0])
+        return out
+
+
+cdef class MappedTarget(Target):
+    """A Target of natural values that, once `see_through` has been called, is a target of free coordinates."""
+    cdef Maps maps
+
+    def see_through(self, Maps maps not None):
+        cdef fw_target natural = self.c
+        if fw_maps_target(maps.maps, &natural, &self.c) != FW_OK:
+            raise ArgumentError("the maps do not belong to a density of this dimension")
+        self.maps = maps
+        self.dimension = maps.dimension
+        return self
+
+    @property
+    def extra(self):
+        """Calls of the density that Hessian products needed beyond those the chain counts."""
+        return fw_maps_extra(self.maps.maps)
+
+
+def count_disagreements(Target target not None, const double[:, ::1] points not None, const double[::1] values not None,
+                        const double[:, ::1] gradients not None, Py_ssize_t rounds):
+    """Evaluate the points in turn, `rounds` times over, without the GIL: how often value or gradient has other bits."""
+    cdef Py_ssize_t r, i, m = points.shape[0], d = points.shape[1]
+    cdef double value = 0.0
+    cdef double[::1] gradient = np.zeros(d)
+    cdef Py_ssize_t wrong = 0
+    with nogil:
+        for r in range(rounds):
+            for i in range(m):
+                target.c.density(<size_t>d, &points[i, 0], &value, &gradient[0], target.c.density_context)
+                if (memcmp(&value, &values[i], sizeof(double)) != 0
+                        or memcmp(&gradient[0], &gradients[i, 0], <size_t>d * sizeof(double)) != 0):
+                    wrong += 1
+    target.raise_error()
+    return wrong

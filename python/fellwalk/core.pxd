@@ -162,3 +162,35 @@ cdef extern from "fellwalk.h" nogil:
     size_t fw_chain_state_bytes(const fw_chain *chain)
     int fw_chain_export(const fw_chain *chain, void *bytes, size_t size)
     int fw_chain_import(fw_chain *chain, const void *bytes, size_t size)
+
+    ctypedef enum fw_map_kind:
+        FW_FREE
+        FW_ABOVE
+        FW_BELOW
+        FW_BETWEEN
+        FW_SHARES
+        FW_INCREASING
+        FW_CORRELATION
+
+    ctypedef struct fw_map:
+        fw_map_kind kind
+        size_t size
+        const double *low
+        const double *high
+
+    ctypedef struct fw_maps:
+        pass
+
+    int fw_maps_new(size_t count, const fw_map *list_, fw_maps **maps)
+    void fw_maps_free(fw_maps *maps)
+    size_t fw_maps_dimension(const fw_maps *maps)
+    size_t fw_maps_natural(const fw_maps *maps)
+    double fw_maps_apply(fw_maps *maps, const double *y, double *x)
+    void fw_maps_pull(fw_maps *maps, const double *g, int with_jacobian, double *out)
+    void fw_maps_push(fw_maps *maps, const double *p, double *out)
+    void fw_maps_bend(fw_maps *maps, const double *g, const double *p, double *out)
+    void fw_maps_invert(fw_maps *maps, const double *x, double *y)
+    int fw_maps_target(fw_maps *maps, const fw_target *natural, fw_target *target)
+    int fw_mapped_density(size_t d, const double *y, double *value, double *gradient, void *maps) noexcept
+    int fw_mapped_product(size_t d, const double *y, const double *p, double *product, void *maps) noexcept
+    uint64_t fw_maps_extra(const fw_maps *maps)

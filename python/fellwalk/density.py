@@ -1,13 +1,14 @@
 """The user's log density: what is called, how, and how often."""
 
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Mapping, Sequence
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
-from fellwalk._core import Target, is_compiled
+from fellwalk._core import MappedTarget, Target, is_compiled
 from fellwalk.errors import ArgumentError, DensityError, ShapeError
 from fellwalk.motions import whole
+from fellwalk.parameters import ByName, Parameters
 
 __all__ = ["Density"]
 
@@ -39,18 +40,26 @@ class Density:
     names: one name a coordinate; ``x[0]``, ``x[1]``, ... when left out.
     start: a position (dimension,) inside the support, for runs that are given none.
 
+    In place of the dimension, `fellwalk.Parameters`: all functions then see natural values, flat and inside their
+    bounds, and give the log density of these (no log-Jacobian: it is added here) and its gradient with respect to
+    these; ``start`` is natural too, flat or a dict. The density itself, its chains and its positions live in the free
+    coordinates (dimension,) of the parameters; ``names`` are those of the natural values, ``coordinates`` those of the
+    free ones. With ``by_name=True`` Python functions see and give dicts of shaped arrays: f(values) -> (log density,
+    gradients), in place f(values, gradients) -> log density, and hessian_product(values, directions) -> products.
+
     Attributes ``gradients`` and ``products`` count the calls made so far in this process.
     """
 
     def __init__(
         self,
         function: Callable[..., object],
-        dimension: int,
+        dimension: int | Parameters,
         *,
         in_place: bool = False,
         hessian_product: Callable[..., object] | None = None,
         names: Sequence[str] | None = None,
-        start: ArrayLike | None = None,
+        start: ArrayLike | Mapping[str, ArrayLike] | None = None,
+        by_name: bool = False,
     ) -> None:
         if not callable(function) and not is_compiled(function):
             raise ArgumentError(f"the log density must be a function or a scipy.LowLevelCallable; it is {function!r:.60}")
@@ -58,19 +67,64 @@ class Density:
             raise ArgumentError(f"hessian_product must be a function or a scipy.LowLevelCallable; it is "
                                 f"{hessian_product!r:.60}")
         self.function = function
-        self.dimension = whole("dimension", dimension, 1, 2**40)
         self.in_place = bool(in_place)
         self.hessian_product = hessian_product
-        self.names = _checked_names(names, self.dimension)
-        self.start = None if start is None else as_vector(start, self.dimension, "start")
+        self.parameters = dimension if isinstance(dimension, Parameters) else None
+        if self.parameters is None:
+            self.dimension = self.natural_size = whole("dimension", dimension, 1, 2**40)
+            self.names = self.coordinates = _checked_names(names, self.dimension)
+        else:
+            self.dimension, self.natural_size = self.parameters.dimension, self.parameters.size
+            self.names, self.coordinates = self.parameters.names, self.parameters.coordinates
+            if names is not None:
+                raise ArgumentError("Parameters bring their own names; leave names= out")
+            start = self.parameters.join(start) if isinstance(start, Mapping) else start
+        self.start = None if start is None else as_vector(start, self.natural_size, "start")
+        if self.parameters is not None and self.start is not None:
+            self.parameters.free(self.start)  # a start on a bound is said here
+        if by_name:
+            self._see_by_name()
         self.model: str | None = None  # where the command found it, so that a record can name it
+        self.made_by: tuple[Callable[..., object], tuple[object, ...]] | None = None
         self.gradients = 0
         self.products = 0
         self.target()  # a wrong signature is said here, not at the first chain
 
+    @classmethod
+    def factory(cls, function: Callable[..., "Density"], *args: object) -> "Density":
+        """The density that ``function(*args)`` makes, sent to worker processes as that call.
+
+        Every worker makes the call once for itself; so compiled functions, open files and data too large to send can
+        be used there. The function and its arguments must be picklable; it is called here as well.
+        Errors: ArgumentError when it does not give a Density; and whatever it raises.
+        """
+        if not callable(function):
+            raise ArgumentError(f"factory needs a function that makes a fellwalk.Density; it was given {function!r:.60}")
+        made = function(*args)
+        if not isinstance(made, Density):
+            raise ArgumentError(f"the function given to factory must return a fellwalk.Density; it returned "
+                                f"{type(made).__name__}")
+        made.made_by = function, args
+        module, name = getattr(function, "__module__", None), getattr(function, "__qualname__", "<>")
+        if made.model is None and not args and module not in (None, "__main__") and "<" not in name:
+            made.model = f"{module}:{name}"
+        return made
+
+    def _see_by_name(self) -> None:
+        if self.parameters is None:
+            raise ArgumentError("by_name=True needs Parameters in place of the dimension")
+        if is_compiled(self.function) or (self.hessian_product is not None and is_compiled(self.hessian_product)):
+            raise ArgumentError("by_name=True is for Python functions; a compiled one sees the flat natural values")
+        self.function = ByName(self.function, self.parameters, "fill" if self.in_place else "call")
+        if self.hessian_product is not None:
+            self.hessian_product = ByName(self.hessian_product, self.parameters, "multiply")
+
     def target(self) -> Target:
         """A fresh set of call arrays around the functions; each chain needs its own."""
-        return Target(self.function, self.dimension, in_place=self.in_place, product=self.hessian_product)
+        if self.parameters is None:
+            return Target(self.function, self.dimension, in_place=self.in_place, product=self.hessian_product)
+        natural = MappedTarget(self.function, self.natural_size, in_place=self.in_place, product=self.hessian_product)
+        return natural.see_through(self.parameters.maps())
 
     @property
     def compiled(self) -> bool:
@@ -96,6 +150,12 @@ class Density:
         if answer:
             raise DensityError(f"the compiled Hessian product returned {answer} at {brief(point)}")
         return out
+
+    def __reduce_ex__(self, protocol: int) -> object:
+        if self.made_by is not None:
+            function, args = self.made_by
+            return Density.factory, (function, *args)
+        return super().__reduce_ex__(protocol)
 
     def __getstate__(self) -> dict[str, object]:
         return {**self.__dict__, "gradients": 0, "products": 0}

@@ -71,3 +71,11 @@ class BusyError(FellwalkError):
 
 class SettleError(FellwalkError):
     """A chain that has not settled was asked for draws, or the other way round."""
+
+
+class WorkerError(FellwalkError):
+    """Workers died, cannot run the density, or run another one; what was written before is safe."""
+
+
+class RemoteError(FellwalkError):
+    """The density raised, in another process, an exception that cannot be brought home as it was."""

@@ -2,8 +2,14 @@
 
 import importlib
 import importlib.util
+import inspect
+import os
 import sys
+from collections.abc import Callable
 from pathlib import Path
+from types import ModuleType
+
+import cloudpickle
 
 from fellwalk.density import Density
 from fellwalk.errors import ArgumentError
@@ -29,7 +35,7 @@ def find_model(name: str) -> Density:
                                 else ", nor any other fellwalk.Density"))
         found = getattr(found, part)
     if not isinstance(found, Density) and callable(found):
-        found = found()
+        found = _made(name, found)
     if not isinstance(found, Density):
         raise ArgumentError(f"{name} is a {type(found).__name__}; it must be a fellwalk.Density, or a function without "
                             "arguments that makes one")
@@ -37,7 +43,22 @@ def find_model(name: str) -> Density:
     return found
 
 
-def _from_file(path: Path):
+def _made(name: str, function: Callable[..., object]) -> object:
+    try:
+        inspect.signature(function).bind()
+    except TypeError:
+        raise ArgumentError(f"{name} needs arguments, so it is not a model: that is a fellwalk.Density (for example "
+                            "density = fellwalk.Density(f, dimension), with a start), or a function without arguments "
+                            "that makes one") from None
+    except ValueError:
+        pass  # some compiled functions have no signature to look at
+    made = function()
+    if isinstance(made, Density) and made.made_by is None:
+        made.made_by = function, ()  # as Density.factory does: workers make it for themselves
+    return made
+
+
+def _from_file(path: Path) -> ModuleType:
     if not path.is_file():
         raise ArgumentError(f"there is no file {path}")
     name = f"_fellwalk_model_{path.stem}"
@@ -46,16 +67,24 @@ def _from_file(path: Path):
         raise ArgumentError(f"{path} cannot be loaded as a Python file")
     module = importlib.util.module_from_spec(spec)
     sys.modules[name] = module
-    sys.path.insert(0, str(path.resolve().parent))
+    # as with `python file.py`: its neighbours can be imported, now and later
+    _on_path(str(path.resolve().parent))
     try:
         spec.loader.exec_module(module)
-    finally:
-        sys.path.pop(0)
+    except BaseException:
+        del sys.modules[name]
+        raise
+    cloudpickle.register_pickle_by_value(module)  # workers cannot import it by this name
     return module
 
 
-def _from_module(place: str):
-    sys.path.insert(0, "")
+def _on_path(folder: str) -> None:
+    if folder not in sys.path:
+        sys.path.insert(0, folder)
+
+
+def _from_module(place: str) -> ModuleType:
+    _on_path(os.getcwd())
     try:
         return importlib.import_module(place)
     except ModuleNotFoundError as error:
@@ -63,5 +92,3 @@ def _from_module(place: str):
             raise ArgumentError(f"there is no module {place!r} here or on the Python path; for a file write "
                                 f"{place}.py:object") from None
         raise
-    finally:
-        sys.path.pop(0)

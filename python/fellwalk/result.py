@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import os
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass, field
 from functools import cached_property
 from typing import Any
 
@@ -16,33 +15,21 @@ from fellwalk.errors import ArgumentError
 from fellwalk.facts import FACTS
 from fellwalk.judge import judge, judge_function
 from fellwalk.judgement import Judgement
+from fellwalk.parameters import Parameters
 from fellwalk.record import Record
+from fellwalk.run_record import ChainResult, plan_of, read_parts
 from fellwalk.table import wrap
 
-__all__ = ["ChainResult", "Result", "load"]
-
-
-@dataclass
-class ChainResult:
-    """What one chain has given: parts of blocks, joined when asked for."""
-
-    draws: list[NDArray[np.float64]] = field(default_factory=list)
-    gradients: list[NDArray[np.float64]] = field(default_factory=list)
-    facts: dict[str, list[NDArray]] = field(default_factory=lambda: {"settle": [], "keep": []})
-    failures: list[tuple[NDArray, NDArray, NDArray]] = field(default_factory=list)
-    seconds: float = 0.0
-    summary: dict[str, Any] = field(default_factory=dict)
-
-    def count(self, phase: str) -> int:
-        """Transitions finished in a phase."""
-        return sum(len(part) for part in self.facts[phase])
+__all__ = ["Result", "load"]
 
 
 class Result:
     """Draws with the record of how they were made. Print it for the table and the verdict.
 
-    draws: (chains, draws, dimension), as many as the shortest chain has. gradients: the same shape, of the log density
-    at the draws, or None when they were not kept. facts: (chains, draws) of dtype ``fellwalk.facts.FACTS``.
+    draws: (chains, draws, parameters) in natural values, as many as the shortest chain has; ``result["name"]`` is one
+    parameter in its own shape. free_draws: (chains, draws, dimension), the same in the coordinates that the chains moved
+    in (`fellwalk.Parameters`; else the same array). gradients: like free_draws, of the log density there, or None when
+    they were not kept. facts: (chains, draws) of dtype ``fellwalk.facts.FACTS``.
     settling: the facts of settling, one array a chain. failures: (chain, draw, code, position) arrays of the failed
     steps whose position was kept, while keeping. names, seed, settings: as the run was given them. chains: what each
     chain found while settling (step size, bend, ...). spent: gradients, products and seconds, settling included.
@@ -52,6 +39,7 @@ class Result:
     def __init__(self, plan: dict[str, Any], parts: Sequence[ChainResult], *, ended: str = "", path: str = "") -> None:
         self.plan = plan
         self.names: list[str] = plan["names"]
+        self.parameters = Parameters.from_json(plan["parameters"]) if plan.get("parameters") else None
         self.settings: dict[str, Any] = plan["settings"]
         self.seed = plan["seed"]
         self.path = path
@@ -72,16 +60,30 @@ class Result:
         return out
 
     @cached_property
+    def free_draws(self) -> NDArray[np.float64]:
+        """(chains, draws, dimension): the draws in the coordinates that the chains moved in."""
+        return self._stack(lambda part: part.draws, (self.plan["dimension"],), np.float64)
+
+    @cached_property
     def draws(self) -> NDArray[np.float64]:
-        """(chains, draws, dimension)."""
-        return self._stack(lambda part: part.draws, (len(self.names),), np.float64)
+        """(chains, draws, parameters), in natural values; without `fellwalk.Parameters` these are `free_draws`."""
+        return self.free_draws if self.parameters is None else self.parameters.natural(self.free_draws)
+
+    def __getitem__(self, name: str) -> NDArray[np.float64]:
+        """Natural draws of one parameter, (chains, draws, *its shape). Errors: ArgumentError for an unknown name."""
+        if self.parameters is not None and name in self.parameters.kinds:
+            return self.parameters.pick(name, self.draws)
+        if name in self.names:
+            return self.draws[..., self.names.index(name)]
+        known = self.names if self.parameters is None else self.parameters.kinds
+        raise ArgumentError(f"there is no parameter {name!r}; there are {', '.join(list(known)[:20])}")
 
     @cached_property
     def gradients(self) -> NDArray[np.float64] | None:
         """(chains, draws, dimension), or None when the run did not keep them."""
         if not self.plan["gradients"]:
             return None
-        return self._stack(lambda part: part.gradients, (len(self.names),), np.float64)
+        return self._stack(lambda part: part.gradients, (self.plan["dimension"],), np.float64)
 
     @cached_property
     def facts(self) -> NDArray:
@@ -99,7 +101,7 @@ class Result:
         rows = [(np.full(len(draw), c), draw, code, position)
                 for c, part in enumerate(self._parts) for draw, code, position in part.failures]
         if not rows:
-            rows = [(np.empty(0, int), np.empty(0, int), np.empty(0, int), np.empty((0, len(self.names))))]
+            rows = [(np.empty(0, int), np.empty(0, int), np.empty(0, int), np.empty((0, self.plan["dimension"])))]
         chain, draw, code, position = (np.concatenate(column) for column in zip(*rows, strict=True))
         return chain, draw, code, position
 
@@ -120,6 +122,11 @@ class Result:
             total["seconds"] += part.seconds
         return total
 
+    @property
+    def judged(self) -> bool:
+        """Are there draws enough to judge?"""
+        return self._shortest >= 4
+
     @cached_property
     def judgement(self) -> Judgement:
         """What `judge` says of the draws. Errors: ArgumentError with fewer than four draws a chain."""
@@ -127,7 +134,7 @@ class Result:
         return judge(self.draws, self.names, facts=self.facts, spent=self.spent)
 
     def _enough(self) -> None:
-        if self._shortest < 4:
+        if not self.judged:
             raise ArgumentError(f"there are {self._shortest} kept draws a chain, too few to judge; let the run go on"
                                 + (f": fellwalk.resume({self.path!r}, density)" if self.path else ""))
 
@@ -166,7 +173,7 @@ class Result:
         return text
 
     def __str__(self) -> str:
-        if self._shortest < 4:
+        if not self.judged:
             return self.heading()
         return f"{self.heading()}\n\n{self.judgement}"
 
@@ -197,33 +204,15 @@ def _range(values: Sequence[float], form: str) -> str:
     return low if low == high else f"{low} to {high}"
 
 
-def read_parts(record: Record) -> list[ChainResult]:
-    """The parts of every chain of a record."""
-    plan = record.settings
-    parts = []
-    for chain in range(plan["chains"]):
-        part = ChainResult()
-        for phase in ("settle", "keep"):
-            if record.count(chain, phase):
-                part.facts[phase].append(record.facts(chain, phase))
-            for note in record.notes(chain, phase):
-                part.seconds += note["seconds"]
-                part.summary = note["summary"]
-        if record.count(chain, "keep"):
-            part.draws.append(record.chain_draws(chain))
-            gradients = record.gradients(chain)
-            part.gradients.extend([] if gradients is None else [gradients])
-            part.failures.append(tuple(record.failures(chain)))
-        parts.append(part)
-    return parts
-
-
 def load(path: str | os.PathLike[str], *, salvage: bool = False) -> Result:
     """The result that a record holds so far; also while the run goes on. Errors: RecordError and its kinds.
 
     salvage: of a damaged record, what stands before the damage.
     """
     with Record.open(path, salvage=salvage) as record:
-        events = [event for event in record.events() if event.kind in ("stopped", "finished")]
-        ended = events[-1].details.get("why", "") if events else "the run was killed or is still going on"
-        return Result(record.settings, read_parts(record), ended=ended, path=record.path)
+        plan = plan_of(record)
+        last = [event for event in record.events() if event.kind in ("stopped", "finished", "resumed")][-1:]
+        ended = last[0].details.get("why", "") if last else ""
+        if not last or last[0].kind == "resumed":
+            ended = "the run was killed or is still going on"
+        return Result(plan, read_parts(record), ended=ended, path=record.path)

@@ -1,27 +1,37 @@
 """Starting points: one for every chain, inside the support."""
 
+from collections.abc import Mapping
+
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
 from fellwalk.density import Density, as_vector, brief
 from fellwalk.errors import ShapeError, StartError
+from fellwalk.parameters import Parameters
 
 __all__ = ["starting_points"]
 
-_TRIES = 30
+_HALVINGS = 60
 
 
 def starting_points(
     density: Density, starts: ArrayLike, chains: int, rng: np.random.Generator
 ) -> NDArray[np.float64]:
-    """(chains, dimension) starting points from one point (dimension,) or from one point a chain (chains, dimension).
+    """(chains, dimension) starting points, in the coordinates the chains move in, from one point (dimension,) or from one point a chain (chains, dimension).
 
-    The rule for one point: the first chain starts there; the others are drawn normal around it with standard
-    deviation 1/|gradient| in each coordinate (1 where the gradient is 0), the deviation being halved until the log
-    density and gradient are finite and the log density is not more than 10 + 2 dimension below the given point's;
-    after 30 halvings a StartError says so. Points given one a chain are taken as they are.
+    The rule for one point: the first chain starts there; the others are drawn normal around it, with standard
+    deviation 1/|gradient| in each coordinate, but at most 1 or the coordinate's own size (near a mode the gradient says
+    nothing of the width). The deviations are halved until the log density and gradient are finite and the log density
+    is not more than 10 + 2 dimension below the given point's; after 60 halvings a StartError says so. Points given one
+    a chain are taken as they are.
     """
-    given = np.asarray(starts, dtype=np.float64) if not isinstance(starts, np.ndarray) else starts
+    if density.parameters is not None:
+        starts = free_starts(density, starts, chains, rng)
+    try:
+        given = np.asarray(starts, dtype=np.float64)
+    except (TypeError, ValueError):
+        raise ShapeError(f"starts must be numbers, one point (dimension,) or one a chain (chains, dimension); they are "
+                         f"{starts!r:.60}") from None
     if given.ndim == 2:
         if given.shape != (chains, density.dimension):
             raise ShapeError(f"starting points one a chain must have shape ({chains}, {density.dimension}); they have "
@@ -33,8 +43,8 @@ def starting_points(
     if not (np.isfinite(value) and np.all(np.isfinite(gradient))):
         raise StartError(f"the log density or its gradient is not finite at the starting point {brief(first)} (log "
                          f"density {value}); start inside the support, where both are finite")
-    slope = np.abs(gradient)
-    spread = np.where(slope > 0, 1 / np.where(slope > 0, slope, 1.0), 1.0)
+    with np.errstate(divide="ignore", over="ignore"):
+        spread = np.minimum(1 / np.abs(gradient), np.maximum(1.0, np.abs(first)))
     return np.array([first] + [_near(density, first, value, spread, rng) for _ in range(chains - 1)])
 
 
@@ -42,12 +52,47 @@ def _near(density: Density, first: NDArray[np.float64], value: float, spread: ND
           rng: np.random.Generator) -> NDArray[np.float64]:
     direction = rng.standard_normal(len(first))
     lowest = value - 10 - 2 * len(first)
-    for halvings in range(_TRIES):
+    for halvings in range(_HALVINGS):
         x = first + spread * direction / 2.0**halvings
         if not np.all(np.isfinite(x)):
             continue
         found, gradient = density(x)
         if np.isfinite(found) and found >= lowest and np.all(np.isfinite(gradient)):
             return x
-    raise StartError(f"no second starting point was found near {brief(first)}: {_TRIES} points on a line towards it "
-                     "were outside the support or far below it in log density; give one starting point a chain")
+    raise StartError(f"no second starting point was found near {brief(first)}: {_HALVINGS} points on a line towards "
+                     "it were outside the support or far below it in log density; give one starting point a chain")
+
+
+def free_starts(density: Density, starts: object, chains: int, rng: np.random.Generator) -> NDArray[np.float64]:
+    """Free coordinates of starts given in natural values: flat, a dict of shaped values, one of these a chain, or a
+    function ``starts(rng)`` that draws one (from the prior, say). None: drawn normal in the free coordinates, with
+    standard deviation 1, then 1/2, 1/4, ... until log density and gradient are finite.
+    """
+    parameters = density.parameters
+    if callable(starts):
+        return np.array([_free_point(parameters, starts(rng), f" that starts drew for chain {c + 1}")
+                         for c in range(chains)])
+    if starts is None:
+        return np.array([_drawn(density, rng) for _ in range(chains)])
+    if isinstance(starts, list | tuple) and len(starts) == chains and all(isinstance(one, Mapping) for one in starts):
+        return np.array([_free_point(parameters, one, f" of chain {c + 1}") for c, one in enumerate(starts)])
+    if np.ndim(starts) == 2:
+        return np.array([_free_point(parameters, one, f" of chain {c + 1}") for c, one in enumerate(starts)])
+    return _free_point(parameters, starts, "")
+
+
+def _free_point(parameters: Parameters, natural: object, whose: str) -> NDArray[np.float64]:
+    try:
+        return parameters.free(natural)
+    except StartError as error:
+        raise StartError(f"the starting point{whose}: {error}") from None
+
+
+def _drawn(density: Density, rng: np.random.Generator) -> NDArray[np.float64]:
+    for halvings in range(_HALVINGS):
+        x = rng.standard_normal(density.dimension) / 2.0**halvings
+        value, gradient = density(x)
+        if np.isfinite(value) and np.all(np.isfinite(gradient)):
+            return x
+    raise StartError(f"no starting point was found: {_HALVINGS} points drawn in the free coordinates have a log density "
+                     "or gradient that is not finite; give starts in natural values")

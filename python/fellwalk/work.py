@@ -1,30 +1,42 @@
-"""One block of transitions as a pure function of density, chain state and length; and who executes it."""
+"""One block of transitions as a pure function of density, chain state and length; in this process or in another."""
+
+from __future__ import annotations
 
 import contextlib
-import hashlib
 import os
+import pickle
+import signal
+import socket
 import threading
 import time
-from concurrent.futures import Executor, Future, ThreadPoolExecutor
-from dataclasses import dataclass, field
+import traceback
+from collections.abc import Iterator
+from dataclasses import dataclass, field, replace
+from typing import Any
 
 import cloudpickle
+import numpy as np
+from numpy.typing import NDArray
 
-from fellwalk.chain import Block, Chain
-from fellwalk.density import Density
-from fellwalk.errors import ArgumentError
+from fellwalk.chain import Block, Chain, _joined
+from fellwalk.density import Density, brief
+from fellwalk.errors import BusyError, RemoteError, WorkerError
 
-__all__ = ["Done", "Here", "Job", "Live", "Sender", "choose_executor"]
+__all__ = ["Check", "Done", "Job", "Live", "Parcel", "Reply", "make_block", "make_block_elsewhere"]
 
 
 @dataclass(frozen=True)
 class Job:
-    """A block to be made: the next `most` transitions, or fewer when settling ends first."""
+    """A block to be made: at most `most` transitions and about `seconds` of work, all of one phase.
+
+    The clock decides only where a block ends, never what is drawn.
+    """
 
     chain: int
     state: bytes
     most: int
     gradients: bool
+    seconds: float = 0.5
 
 
 @dataclass(frozen=True)
@@ -35,7 +47,7 @@ class Done:
     block: Block
     state: bytes
     seconds: float
-    summary: dict[str, object]
+    summary: dict[str, Any]
 
 
 @dataclass
@@ -44,20 +56,31 @@ class Live:
 
     stopped: bool = False
     chains: set[Chain] = field(default_factory=set)
-    guard: threading.Lock = field(default_factory=threading.Lock)
+    guard: threading.RLock = field(default_factory=threading.RLock)  # a signal may come while this thread holds it
 
     def interrupt(self) -> None:
-        """Abandon every transition in hand, and those of blocks that have not begun."""
+        """Abandon every transition in hand, and the blocks that have not begun."""
         with self.guard:
             self.stopped = True
-            for chain in self.chains:
+            for chain in list(self.chains):
                 chain.interrupt()
 
+    def inside_density(self) -> bool:
+        """Is a chain inside a call of the user's function? (For a signal handler, which runs between Python lines.)"""
+        for chain in list(self.chains):
+            try:
+                chain._engine.run(0)
+            except BusyError:
+                return True
+        return False
+
     @contextlib.contextmanager
-    def holding(self, chain: Chain):
+    def holding(self, chain: Chain) -> Iterator[None]:
         """The chain can be interrupted inside this context."""
         with self.guard:
             self.chains.add(chain)
+            if self.stopped:
+                chain.interrupt()
         try:
             yield
         finally:
@@ -67,69 +90,158 @@ class Live:
 
 def make_block(density: Density, job: Job, live: Live | None = None) -> Done:
     """Make the block of a job. Exceptions of the density are carried in the block, after what was finished."""
+    live = live or Live()
     begun = time.perf_counter()
     chain = Chain.from_state(density, job.state)
-    keeping = chain.settled
-    with live.holding(chain) if live else contextlib.nullcontext():
-        most = 0 if live and live.stopped else job.most
-        block = chain.block(most, draws=keeping, gradients=keeping and job.gradients)
+    keeping, phase = chain.settled, chain.phase
+    parts: list[Block] = []
+    done, size, elapsed = 0, 4, 0.0
+    with live.holding(chain):
+        while done < job.most and elapsed < job.seconds and chain.settled == keeping and not live.stopped:
+            parts.append(chain.block(min(size, job.most - done), draws=keeping, gradients=keeping and job.gradients))
+            done += len(parts[-1])
+            if parts[-1].error is not None:
+                break
+            elapsed = time.perf_counter() - begun
+            size = max(1, min(8 * size, int(done * (job.seconds / elapsed - 1))))
+    block = _joined(phase, parts, density.dimension)
     return Done(job.chain, block, chain.state, time.perf_counter() - begun, chain.summary)
 
 
-_densities: dict[str, Density] = {}
+# ---- in another process ---------------------------------------------------------------------------------------------
 
 
-def make_block_elsewhere(name: str, packed: bytes, job: Job) -> Done:
-    """`make_block` in another process: the density comes as bytes and is unpacked once per worker."""
-    if name not in _densities:
-        _densities.clear()
-        _densities[name] = cloudpickle.loads(packed)
-    return make_block(_densities[name], job)
+@dataclass(frozen=True)
+class Check:
+    """What the density gives at one point, to compare another process, machine or day with."""
+
+    position: NDArray[np.float64]
+    log_density: float
+    gradient: NDArray[np.float64]
+
+    @classmethod
+    def of(cls, density: Density, position: NDArray[np.float64]) -> Check:
+        """Evaluate `density` at `position`."""
+        return cls(position, *density(position))
+
+    def same(self, other: Check) -> bool:
+        """Do log density and gradient agree bit for bit?"""
+        mine, others = (np.append(c.gradient, c.log_density).tobytes() for c in (self, other))
+        return mine == others
+
+    def near(self, other: Check) -> bool:
+        """Do they agree but for rounding?"""
+        most = float(np.max(np.abs(self.gradient)))
+        return bool(np.isclose(self.log_density, other.log_density, rtol=1e-9, atol=1e-9) and
+                    np.allclose(self.gradient, other.gradient, rtol=1e-6, atol=1e-9 * most))
 
 
-class Here(Executor):
-    """Runs each task at once, in the thread that submits it."""
+@dataclass(frozen=True)
+class Parcel:
+    """A density on its way to workers: its name, its bytes (left out once a worker may be thought to have it), the
+    process it comes from, and what it gives there."""
 
-    def submit(self, function, /, *args, **kwargs) -> Future:
-        """Run now; the future that comes back is finished."""
-        future: Future = Future()
+    name: str
+    packed: bytes | None
+    home: tuple[str, int]
+    check: Check
+
+    def light(self) -> Parcel:
+        """Without the density itself, where that is large: a worker that lacks it says so."""
+        return replace(self, packed=None) if self.packed is not None and len(self.packed) > 32_768 else self
+
+
+@dataclass(frozen=True)
+class Reply:
+    """What a worker answers: the block, with its exception apart (packed, as text with the traceback); or that it lacks
+    the density; and a remark when it calculates differently."""
+
+    done: Done | None
+    error: tuple[bytes, str] | None = None
+    lacking: bool = False
+    remark: str = ""
+
+    def opened(self) -> Done:
+        """The block with its exception, which has the traceback of the worker as its cause."""
+        assert self.done is not None
+        if self.error is None:
+            return self.done
+        packed, text = self.error
         try:
-            future.set_result(function(*args, **kwargs))
-        except BaseException as error:
-            future.set_exception(error)
-        return future
+            error = cloudpickle.loads(packed)
+        except Exception:
+            error = RemoteError(text.splitlines()[-1])
+        error.__cause__ = RemoteError(f"in a worker:\n\n{text}")
+        return replace(self.done, block=replace(self.done.block, error=error))
 
 
-def choose_executor(given: object, density: Density, chains: int) -> tuple[Executor, bool]:
-    """(executor, is it ours to shut down). Compiled densities run on threads, Python ones here."""
-    if isinstance(given, Executor):
-        return given, False
-    if given not in (None, "here", "threads"):
-        raise ArgumentError('executor must be a concurrent.futures.Executor, "here", "threads" or None; it is '
-                            f"{given!r:.60}")
-    if given == "threads" or (given is None and density.compiled):
-        return ThreadPoolExecutor(max(1, min(chains, os.cpu_count() or 1)), thread_name_prefix="fellwalk"), True
-    return Here(), True
+_guard = threading.Lock()
+_unpacked: dict[str, Density] = {}
 
 
-class Sender:
-    """Submits jobs to an executor, in the form that suits where it runs."""
+def here() -> tuple[str, int]:
+    """(machine, process)."""
+    return socket.gethostname(), os.getpid()
 
-    def __init__(self, executor: Executor, density: Density, live: Live) -> None:
-        self.executor = executor
-        self.density = density
-        self.live = live
-        self.local = isinstance(executor, Here | ThreadPoolExecutor)
-        if not self.local:
-            try:
-                self.packed = cloudpickle.dumps(density)
-            except Exception as error:
-                raise ArgumentError(f"this density cannot be sent to another process ({error}); use threads, or a "
-                                    "Python function that can be pickled") from error
-            self.name = hashlib.blake2b(self.packed, digest_size=16).hexdigest()
 
-    def submit(self, job: Job) -> Future:
-        """A future of `Done`."""
-        if self.local:
-            return self.executor.submit(make_block, self.density, job, self.live)
-        return self.executor.submit(make_block_elsewhere, self.name, self.packed, job)
+def make_block_elsewhere(parcel: Parcel, job: Job | None) -> Reply:
+    """`make_block` in another process, which unpacks the density once. Without a job: only see whether it can."""
+    remark = ""
+    with _guard:
+        if parcel.name not in _unpacked:
+            if parcel.packed is None:
+                return Reply(None, lacking=True)
+            remark = _unpack(parcel)
+        density = _unpacked[parcel.name]
+    if job is None:
+        return Reply(None, remark=remark)
+    done = make_block(density, job)
+    error = done.block.error
+    if error is None:
+        return Reply(done, remark=remark)
+    return Reply(replace(done, block=replace(done.block, error=None)), _packed(error), remark=remark)
+
+
+def _unpack(parcel: Parcel) -> str:
+    elsewhere = here() != parcel.home
+    if elsewhere:
+        behave_as_worker()
+    try:
+        density = pickle.loads(parcel.packed)
+        found = Check.of(density, parcel.check.position)
+    except Exception as error:
+        raise WorkerError(f"the density cannot be used in worker process {os.getpid()} on {socket.gethostname()}: "
+                          f"{type(error).__name__}: {error}") from error
+    where = f"worker process {os.getpid()} on {socket.gethostname()}"
+    values = f"{found.log_density!r} there, {parcel.check.log_density!r} here, at {brief(parcel.check.position)}"
+    if not found.near(parcel.check):
+        raise WorkerError(f"{where} does not calculate this density: its log density is {values} (or its gradient "
+                          "differs). Either the function does not give the same twice, or it uses other data there")
+    while len(_unpacked) > 1:
+        _unpacked.pop(next(iter(_unpacked)))
+    _unpacked[parcel.name] = density
+    if found.same(parcel.check):
+        return ""
+    return (f"{where} rounds this density differently: log density {values}. Draws will not be the same bits as in one "
+            "process (other libraries, another kind of CPU, or BLAS with another number of threads)")
+
+
+def behave_as_worker() -> None:
+    """Ctrl-C is for the driver, and one thread of BLAS in each worker: more only get into each other's way."""
+    if threading.current_thread() is threading.main_thread():
+        signal.signal(signal.SIGINT, signal.SIG_IGN)
+    with contextlib.suppress(ImportError):
+        import threadpoolctl
+
+        threadpoolctl.threadpool_limits(1)
+
+
+def _packed(error: BaseException) -> tuple[bytes, str]:
+    """The exception itself where it survives the way home, else one that tells of it; and its traceback as text."""
+    text = "".join(traceback.format_exception(error)).rstrip()
+    try:
+        packed = cloudpickle.dumps(error)
+        cloudpickle.loads(packed)
+    except Exception:
+        packed = cloudpickle.dumps(RemoteError(f"{type(error).__name__}: {error}"))
+    return packed, text
