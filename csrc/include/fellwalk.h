@@ -271,6 +271,9 @@ FW_API size_t fw_maps_natural(const fw_maps *maps);   /* natural values */
 
 /* x = natural values of y; returns log |dx/dy|. What follows is about the y of the latest apply. */
 FW_API double fw_maps_apply(fw_maps *maps, const double *y, double *x);
+/* 1 where the caller's functions are not called: a log |dx/dy| that is not finite, or a correlation matrix so near
+ * to singular (1 / |L^-1|^2 below 64 n epsilon) that its entries, rounded, may not be positive definite any more. */
+FW_API int fw_maps_outside(const fw_maps *maps);
 /* out = J^T g, J = dx/dy; with_jacobian: plus the gradient of log |dx/dy|. */
 FW_API void fw_maps_pull(fw_maps *maps, const double *g, int with_jacobian, double *out);
 /* out = J p */
@@ -280,7 +283,7 @@ FW_API void fw_maps_bend(fw_maps *maps, const double *g, const double *p, double
 /* y of x; an entry is not finite where x is not inside its bounds. Independent of apply. */
 FW_API void fw_maps_invert(fw_maps *maps, const double *x, double *y);
 
-/* The caller's functions of natural values (natural->dimension of them), seen from free coordinates: the log density
+/* The caller's functions of natural values (natural->dimension of them; FW_OUTSIDE where fw_maps_outside), seen from free coordinates: the log density
  * plus log |dx/dy|, its gradient, its Hessian product. fw_maps_target gives a target for fw_chain_new whose contexts
  * are the maps. A product at another position than the latest density costs one more call of the density, unless all
  * is FW_FREE; fw_maps_extra counts these. */

@@ -49,6 +49,7 @@ static void lay_out_orbit(purse *from, fw_chain *chain)
         piece->rho = vectors(from, 1);
         piece->last = vectors(from, i > 0 ? 1 : 0);
         piece->first_p = vectors(from, metric ? 1 : 0);
+        piece->edge = vectors(from, chain->walk.halvings > 0 && !metric ? 1 : 0);
     }
 }
 
@@ -72,13 +73,14 @@ static void lay_out(purse *from, fw_chain *chain)
     for (size_t i = 0; i < 2; ++i) lay_out_point(from, &chain->end[i], curved);
     if (walk->halvings > 0)
         for (size_t i = 0; i < 2; ++i) lay_out_point(from, &walk->spare[i], curved);
+    walk->edge = vectors(from, walk->halvings > 0 ? 1 : 0);
     walk->natural = vectors(from, curved ? 1 : 0);
     walk->product = vectors(from, curved ? 1 : 0);
     walk->probe = vectors(from, curved ? 1 : 0);
     chain->mean_x = vectors(from, 1);
-    chain->squares_x = vectors(from, 1);
+    chain->roots_x = vectors(from, 1);
     chain->mean_g = vectors(from, 1);
-    chain->squares_g = vectors(from, 1);
+    chain->roots_g = vectors(from, 1);
     chain->rows = rows_of(chain);
     chain->rows_x = vectors(from, chain->rows);
     chain->rows_g = vectors(from, chain->rows);

@@ -18,6 +18,7 @@ typedef struct fw_candidate {
  * and the sum of its momenta. */
 typedef struct fw_piece {
     double *first, *first_p, *last, *rho;
+    double *edge; /* halved steps: mean velocity of the step that led to its first point */
 } fw_piece;
 
 /* Everything settling knows besides vectors; exported as it stands. */
@@ -57,7 +58,7 @@ struct fw_chain {
     uint64_t started, transitions;
     double step_size;         /* used once settled */
     fw_learn learn;
-    double *mean_x, *squares_x, *mean_g, *squares_g;
+    double *mean_x, *roots_x, *mean_g, *roots_g;
     double *rows_x, *rows_g;  /* points and gradients: of the climb, then of the window (chain->rows of each); NULL when nothing is learned */
     double *found, *known;    /* directions just found, while the old ones are still in use; those as rows */
     fw_candidate fresh, held; /* no-U-turn path */

@@ -279,10 +279,11 @@ static void rescale(fw_chain *chain, const window *win, size_t k, const double *
             fw_copy(d, row(chain, win->m, i + part * win->m), left);
             for (size_t j = 0; j < k; ++j)
                 fw_axpy(d, -fw_dot(d, directions + j * d, left), directions + j * d, left);
-            fw_moments(d, (double)(i + 1), left, part ? mean_c : mean_y, part ? left_c : left_y);
+            fw_gather(d, (double)(i + 1), left, part ? mean_c : mean_y, part ? left_c : left_y);
         }
     for (size_t i = 0; i < d; ++i) {
-        double factor = sqrt(left_y[i] / left_c[i]);
+        const double root = left_y[i] / left_c[i];
+        double factor = root * root;
         if (!(factor > 1e-6 && factor < 1e6)) factor = 1.0;
         scale[i] *= factor;
         left[i] = sqrt(factor);

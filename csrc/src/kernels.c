@@ -212,13 +212,13 @@ FW_CLONES void fw_momentum_out(size_t n, const double *delta, const double *z, d
     }
 }
 
-FW_CLONES void fw_moments(size_t n, double count, const double *restrict a, double *restrict mean,
-                          double *restrict squares)
+FW_CLONES void fw_gather(size_t n, double count, const double *restrict a, double *restrict mean, double *restrict roots)
 {
+    const double counts = count > 1.0 ? 1.0 : 0.0;
     for (size_t i = 0; i < n; ++i) {
-        const double before = a[i] - mean[i];
-        mean[i] += before / count;
-        squares[i] += before * (a[i] - mean[i]);
+        const double away = a[i] - mean[i];
+        roots[i] += counts * sqrt(fabs(away));
+        mean[i] += away / count;
     }
 }
 
@@ -239,6 +239,24 @@ FW_CLONES void fw_seam(size_t n, const double *restrict fa, const double *restri
     SWEEP(n, const double rho = ra[i] + rb[i]; const double near_b = ra[i] + pb[i]; const double near_a = rb[i] + pa[i];
           s0[j] += fa[i] * rho; s1[j] += lb[i] * rho; s2[j] += fa[i] * near_b; s3[j] += fb[i] * near_b;
           s4[j] += la[i] * near_a; s5[j] += lb[i] * near_a; out[i] = rho;);
+    sums[0] = fold(s0);
+    sums[1] = fold(s1);
+    sums[2] = fold(s2);
+    sums[3] = fold(s3);
+    sums[4] = fold(s4);
+    sums[5] = fold(s5);
+}
+
+FW_CLONES void fw_seam_steps(size_t n, const double *restrict fa, const double *restrict la, const double *restrict ra,
+                             const double *restrict edge, const double *restrict fb, const double *restrict lb,
+                             const double *restrict rb, double *restrict out, double sums[6])
+{
+    double s0[LANES] = {0}, s1[LANES] = {0}, s2[LANES] = {0}, s3[LANES] = {0}, s4[LANES] = {0}, s5[LANES] = {0};
+    SWEEP(n, const double inside = ra[i] + rb[i] + edge[i]; const double rho = inside + 0.5 * (fa[i] + lb[i]);
+          const double near_b = ra[i] + edge[i] + 0.5 * (fa[i] + fb[i]);
+          const double near_a = rb[i] + edge[i] + 0.5 * (la[i] + lb[i]); s0[j] += fa[i] * rho; s1[j] += lb[i] * rho;
+          s2[j] += fa[i] * near_b; s3[j] += fb[i] * near_b; s4[j] += la[i] * near_a; s5[j] += lb[i] * near_a;
+          out[i] = inside;);
     sums[0] = fold(s0);
     sums[1] = fold(s1);
     sums[2] = fold(s2);

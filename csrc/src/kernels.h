@@ -55,8 +55,8 @@ double fw_root_ratio_dot(size_t n, const double *u, const double *z, const doubl
 void fw_velocity_out(size_t n, const double *delta, const double *z, double k, const double *u, double *out);
 void fw_momentum_out(size_t n, const double *delta, const double *z, double k, const double *u, double *out);
 
-/* running moments: mean and sum of squared deviations of the count-th value (count >= 1) */
-void fw_moments(size_t n, double count, const double *a, double *mean, double *squares);
+/* A value more: roots += sqrt|a - mean| (from the second value on), then mean takes it in. count: values with this. */
+void fw_gather(size_t n, double count, const double *a, double *mean, double *roots);
 
 /* out = a + b; sums: a.b, a.a */
 void fw_add_pair(size_t n, const double *a, const double *b, double *out, double sums[2]);
@@ -65,5 +65,10 @@ void fw_add_pair(size_t n, const double *a, const double *b, double *out, double
  * sums: fa.rho, lb.rho, fa.(ra+pb), fb.(ra+pb), la.(rb+pa), lb.(rb+pa) */
 void fw_seam(size_t n, const double *fa, const double *la, const double *pa, const double *ra, const double *fb,
              const double *lb, const double *pb, const double *rb, double *out, double sums[6]);
+
+/* The same where ra, rb and out sum the mean velocities of the steps inside a piece, and edge is that of the step across
+ * the seam; the momenta of a piece are then (steps inside) + (first + last) / 2. */
+void fw_seam_steps(size_t n, const double *fa, const double *la, const double *ra, const double *edge, const double *fb,
+                   const double *lb, const double *rb, double *out, double sums[6]);
 
 #endif

@@ -13,6 +13,7 @@ struct fw_maps {
     fw_block *blocks;
     double constant;       /* sum of log(high - low) */
     int bent;              /* is any map not FW_FREE? */
+    int outside;           /* of the latest apply */
     /* per free coordinate, for the elementwise kinds */
     double *low, *high;
     double *width, *twice; /* high - low = twice * width; twice = 2 only where the difference overflows */
@@ -214,7 +215,7 @@ static double between(const fw_maps *maps, size_t n, size_t at, const double *y,
 double fw_maps_apply(fw_maps *maps, const double *y, double *x)
 {
     double total = maps->constant;
-    maps->known = 0;
+    maps->known = maps->outside = 0;
     for (size_t k = 0; k < maps->count; ++k) {
         const fw_block *b = &maps->blocks[k];
         const size_t at = b->free_at;
@@ -228,10 +229,18 @@ double fw_maps_apply(fw_maps *maps, const double *y, double *x)
             total += one_sided(b->size, -1.0, y + at, maps->high + at, to, maps->slope + at, maps->turn + at);
             break;
         case FW_BETWEEN: total += between(maps, b->size, at, y + at, to); break;
-        default: total += fw_joint_apply(b, y + at, to);
+        default:
+            total += fw_joint_apply(b, y + at, to);
+            if (b->kind == FW_CORRELATION && fw_correlation_singular(b->size, b->scratch)) maps->outside = 1;
         }
     }
+    if (!finite(total)) maps->outside = 1;
     return total;
+}
+
+int fw_maps_outside(const fw_maps *maps)
+{
+    return maps->outside;
 }
 
 void fw_maps_pull(fw_maps *maps, const double *g, int with_jacobian, double *out)
@@ -285,14 +294,16 @@ void fw_maps_bend(fw_maps *maps, const double *g, const double *p, double *out)
     }
 }
 
-/* log((x - low) / (high - x)); through log1p in the middle, where the logarithm of a ratio near 1 loses digits. */
+/* log((x - low) / (high - x)); through log1p in the middle, where the logarithm of a ratio near 1 loses digits, and as
+ * a difference of logarithms only where the ratio would leave the range of doubles. */
 static double between_inverse(double x, double low, double high, double twice)
 {
     if (!(x > low && x < high)) return NAN;
     const double u = twice > 1.0 ? 0.5 * x - 0.5 * low : x - low;
     const double v = twice > 1.0 ? 0.5 * high - 0.5 * x : high - x;
     if (u > 0.5 * v && u < 2.0 * v) return log1p((u - v) / v);
-    return log(u) - log(v);
+    const double ratio = u / v;
+    return ratio > 1e-290 && ratio < 1e290 ? log(ratio) : log(u) - log(v);
 }
 
 void fw_maps_invert(fw_maps *maps, const double *x, double *y)
@@ -339,7 +350,7 @@ int fw_mapped_density(size_t d, const double *y, double *value, double *gradient
     const size_t last = maps->natural - 1;
     const double mark = *value;
     const double log_jacobian = fw_maps_apply(maps, y, maps->x);
-    if (!finite(log_jacobian)) return FW_OUTSIDE;
+    if (maps->outside) return FW_OUTSIDE;
     maps->g[0] = maps->g[last] = mark;
     const int answer = maps->target.density(maps->natural, maps->x, value, maps->g, maps->target.density_context);
     if (answer != 0 || !finite(*value)) return answer;
@@ -356,8 +367,8 @@ int fw_mapped_product(size_t d, const double *y, const double *p, double *produc
 {
     fw_maps *maps = context;
     if (!maps->known || memcmp(maps->at, y, d * sizeof *y) != 0) {
-        const double log_jacobian = fw_maps_apply(maps, y, maps->x);
-        if (!finite(log_jacobian)) return FW_OUTSIDE;
+        fw_maps_apply(maps, y, maps->x);
+        if (maps->outside) return FW_OUTSIDE;
         if (maps->bent) {
             double value = NAN;
             ++maps->extra;

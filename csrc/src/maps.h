@@ -24,6 +24,7 @@ void fw_joint_invert(const fw_block *block, const double *x, double *y);
 /* maps_correlation.c */
 size_t fw_correlation_scratch(size_t n);
 double fw_correlation_apply(size_t n, double *scratch, const double *y, double *x);
+int fw_correlation_singular(size_t n, double *scratch); /* after apply: too near to singular for doubles? */
 void fw_correlation_pull(size_t n, double *scratch, const double *g, int with_jacobian, double *out);
 void fw_correlation_push(size_t n, double *scratch, const double *p, double *out);
 void fw_correlation_bend(size_t n, double *scratch, const double *g, const double *p, double *out);

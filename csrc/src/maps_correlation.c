@@ -62,6 +62,25 @@ double fw_correlation_apply(size_t n, double *scratch, const double *y, double *
     return total;
 }
 
+/* Rounding moves R by n epsilon at most, so its smallest eigenvalue must be well above that. It is at least det R / e
+ * (the others have a product of at most (n / (n - 1))^(n - 1)), and at least 1 / |L^-1|^2 in the Frobenius norm. */
+int fw_correlation_singular(size_t n, double *scratch)
+{
+    const double *L = scratch + 3 * pairs(n), least = 64.0 * (double)n * DBL_EPSILON;
+    double *column = scratch + 2 * half_scratch(n), det = 1.0, sum = 0.0;
+    for (size_t i = 1; i < n; ++i) det *= ROW(L, i)[i] * ROW(L, i)[i];
+    if (det >= 2.8 * least) return 0;
+    for (size_t j = 0; j < n; ++j)
+        for (size_t i = j; i < n; ++i) {
+            const double *row = ROW(L, i);
+            double t = i == j ? 1.0 : 0.0;
+            for (size_t k = j; k < i; ++k) t -= row[k] * column[k];
+            column[i] = t / row[i];
+            sum += column[i] * column[i];
+        }
+    return !(1.0 >= least * sum);
+}
+
 /* Lbar = (S L) for S symmetric with g below and above its diagonal of zeros; then backwards through each row. */
 void fw_correlation_pull(size_t n, double *scratch, const double *g, int with_jacobian, double *out)
 {

@@ -10,6 +10,9 @@
  * are those of v with p = G0 v. With FW_TURN_METRIC momenta are those of the full metric, p = G v; then the tests
  * at the inner ends of a seam are left out on both sides, which keeps the rule the same from either end and the
  * memory at four vectors a level.
+ *
+ * Halved steps may span many turns of the fast coordinates, of which the velocities at their ends are no sample; then
+ * the base test sums the mean velocities of the steps inside a piece, plus half of either end, in the place of momenta.
  */
 #include <math.h>
 #include <string.h>
@@ -66,32 +69,43 @@ static int weigh(fw_chain *chain, orbit *o, const fw_point *p, int first)
     return FW_OK;
 }
 
-static void momentum(const fw_walk *walk, const fw_point *p, double *out)
+/* Pieces are summed by the mean velocities of steps (see above). */
+static int by_steps(const fw_chain *chain) { return chain->carry.edge != NULL; }
+
+static int by_metric(const fw_chain *chain) { return chain->settings.turn == FW_TURN_METRIC; }
+
+/* What stands for the momentum of a state in the turn test: the same rule for every state of an orbit. */
+static void tested_momentum(const fw_chain *chain, const fw_point *p, double *out)
 {
+    const fw_walk *walk = &chain->walk;
     fw_copy(walk->d, p->w, out);
-    fw_axpy(walk->d, walk->motion->momentum(walk, p), p->c, out);
+    if (by_metric(chain)) fw_axpy(walk->d, walk->motion->momentum(walk, p), p->c, out);
 }
 
 static int onward(const fw_chain *chain, const double sums[6])
 {
     if (!(sums[0] > 0.0 && sums[1] > 0.0 && sums[2] > 0.0 && sums[5] > 0.0)) return 0;
-    return chain->settings.turn == FW_TURN_METRIC || (sums[3] > 0.0 && sums[4] > 0.0);
+    return by_metric(chain) || (sums[3] > 0.0 && sums[4] > 0.0);
 }
 
 /* Join the piece waiting at `level` (A) with the carried one (B, which ends at p). 0: the joined piece turns. */
 static int join(fw_chain *chain, unsigned level, const fw_point *p)
 {
     const size_t d = chain->walk.d;
-    const int metric = chain->settings.turn == FW_TURN_METRIC;
+    const int metric = by_metric(chain);
     fw_piece *a = &chain->level[level], *b = &chain->carry;
     double sums[6];
-    if (!metric && level == 0) { /* two single states: one product of velocities decides every test */
+    if (by_steps(chain)) {
+        fw_seam_steps(d, a->first, a->last, a->rho, b->edge, b->first, p->w, b->rho, chain->spare_rho, sums);
+        swap(&b->edge, &a->edge);
+    } else if (!metric && level == 0) { /* two single states: one product of velocities decides every test */
         fw_add_pair(d, a->first, p->w, b->rho, sums);
         swap(&a->first, &b->first);
         return sums[1] + sums[0] > 0.0 && p->ww + sums[0] > 0.0;
+    } else {
+        const double *first_p = metric ? b->first_p : b->first;
+        fw_seam(d, a->first, a->last, a->last, a->rho, b->first, p->w, first_p, b->rho, chain->spare_rho, sums);
     }
-    const double *first_p = metric ? b->first_p : b->first;
-    fw_seam(d, a->first, a->last, a->last, a->rho, b->first, p->w, first_p, b->rho, chain->spare_rho, sums);
     swap(&b->rho, &chain->spare_rho);
     swap(&a->first, &b->first);
     if (metric) swap(&a->first_p, &b->first_p);
@@ -101,45 +115,46 @@ static int join(fw_chain *chain, unsigned level, const fw_point *p)
 /* The carried piece, which ends at p, waits at `level`. */
 static void wait_at(fw_chain *chain, unsigned level, const fw_point *p)
 {
-    const size_t d = chain->walk.d;
     fw_piece *a = &chain->level[level], *b = &chain->carry;
-    if (chain->settings.turn == FW_TURN_METRIC) {
-        swap(&a->first, &b->first);
-        swap(&a->first_p, &b->first_p);
-        swap(&a->rho, &b->rho);
-        momentum(&chain->walk, p, a->last);
-    } else if (level == 0) {
-        fw_copy(d, p->w, a->first);
-    } else {
-        swap(&a->first, &b->first);
-        swap(&a->rho, &b->rho);
-        fw_copy(d, p->w, a->last);
+    if (!by_metric(chain) && !by_steps(chain) && level == 0) {
+        fw_copy(chain->walk.d, p->w, a->first);
+        return;
     }
+    swap(&a->first, &b->first);
+    swap(&a->rho, &b->rho);
+    if (by_steps(chain)) swap(&a->edge, &b->edge);
+    if (by_metric(chain)) swap(&a->first_p, &b->first_p);
+    tested_momentum(chain, p, a->last);
 }
 
-/* A single state as the carried piece; the base turn test reads level 0 straight from the point. */
+/* A single state as the carried piece. The plain base test needs none: it reads level 0 straight from the point. */
 static void carry_state(fw_chain *chain, const fw_point *p)
 {
+    const size_t d = chain->walk.d;
     fw_piece *b = &chain->carry;
-    if (chain->settings.turn == FW_TURN_METRIC) {
-        momentum(&chain->walk, p, b->first_p);
-        fw_copy(chain->walk.d, b->first_p, b->rho);
+    if (by_steps(chain)) {
+        fw_copy(d, chain->walk.edge, b->edge);
+        memset(b->rho, 0, d * sizeof(double));
+    } else if (by_metric(chain)) {
+        tested_momentum(chain, p, b->first_p);
+        fw_copy(d, b->first_p, b->rho);
+    } else {
+        return;
     }
-    fw_copy(chain->walk.d, p->w, b->first);
+    fw_copy(d, p->w, b->first);
 }
 
 /* 2^depth new states beyond end p. FW_OK with *turned, or the status of a failed step. */
 static int extend(fw_chain *chain, orbit *o, fw_point *p, double step, unsigned depth, fw_facts *facts, int *turned)
 {
     const size_t count = (size_t)1 << depth;
-    const int metric = chain->settings.turn == FW_TURN_METRIC;
     o->fresh_sum = 0.0;
     for (size_t i = 0; i < count; ++i) {
         ++facts->steps;
         int status = fw_walk_step(&chain->walk, p, step);
         if (status == FW_OK) status = weigh(chain, o, p, i == 0);
         if (status != FW_OK) return status;
-        if (metric) carry_state(chain, p);
+        carry_state(chain, p);
         unsigned level = 0;
         for (size_t bits = i; bits & 1; bits >>= 1, ++level)
             if (!join(chain, level, p)) {
@@ -155,12 +170,17 @@ static int extend(fw_chain *chain, orbit *o, fw_point *p, double step, unsigned 
 static int orbit_goes_on(fw_chain *chain, const fw_point *outer, const fw_point *p, unsigned depth)
 {
     const size_t d = chain->walk.d;
-    const int metric = chain->settings.turn == FW_TURN_METRIC;
-    fw_piece *b = &chain->carry;
+    const fw_piece *b = &chain->carry;
     double sums[6];
-    const double *first = b->first, *first_p = metric ? b->first_p : b->first, *rho = b->rho;
-    if (depth == 0 && !metric) first = first_p = rho = p->w;
-    fw_seam(d, outer->w, chain->seam, chain->seam, chain->orbit_rho, first, p->w, first_p, rho, chain->spare_rho, sums);
+    if (by_steps(chain)) {
+        fw_seam_steps(d, outer->w, chain->seam, chain->orbit_rho, b->edge, b->first, p->w, b->rho, chain->spare_rho, sums);
+    } else {
+        const int single = depth == 0 && !by_metric(chain);
+        const double *first = single ? p->w : b->first, *rho = single ? p->w : b->rho;
+        const double *first_p = by_metric(chain) ? b->first_p : first;
+        fw_seam(d, outer->w, chain->seam, chain->seam, chain->orbit_rho, first, p->w, first_p, rho, chain->spare_rho,
+                sums);
+    }
     swap(&chain->orbit_rho, &chain->spare_rho);
     return onward(chain, sums);
 }
@@ -171,14 +191,17 @@ static int travel(fw_chain *chain, const fw_route *route, fw_facts *facts)
     const unsigned most = route->doublings + (route->finer ? 1u : 0u);
     orbit o = {.start = chain->end[0].energy, .held_sum = 1.0};
     fw_point_copy(walk, &chain->end[0], &chain->end[1]);
-    momentum(walk, &chain->end[0], chain->orbit_rho);
+    if (by_steps(chain))
+        memset(chain->orbit_rho, 0, walk->d * sizeof(double));
+    else
+        tested_momentum(chain, &chain->end[0], chain->orbit_rho);
     facts->energy = o.start;
     for (unsigned depth = 0; depth < most; ++depth) {
         const int forward = chain->random.uniform(chain->random.state) < 0.5;
         fw_point *p = &chain->end[forward];
         const double step = forward ? route->step_size : -route->step_size;
         int turned = 0;
-        momentum(walk, p, chain->seam);
+        tested_momentum(chain, p, chain->seam);
         const int status = extend(chain, &o, p, step, depth, facts, &turned);
         if (status < 0) return status;
         facts->failure = status;

@@ -57,9 +57,9 @@ static void clear_window(fw_chain *chain)
 {
     const size_t bytes = chain->walk.d * sizeof(double);
     memset(chain->mean_x, 0, bytes);
-    memset(chain->squares_x, 0, bytes);
+    memset(chain->roots_x, 0, bytes);
     memset(chain->mean_g, 0, bytes);
-    memset(chain->squares_g, 0, bytes);
+    memset(chain->roots_g, 0, bytes);
     chain->learn.in_window = chain->learn.rows = 0;
 }
 
@@ -205,13 +205,21 @@ static void look_at_ceiling(fw_chain *chain, const fw_route *route, double accep
 
 /* ---- scale -------------------------------------------------------------------------------------------------------- */
 
-/* s = sqrt(var x / var g), the minimiser of the Fisher divergence over diagonal maps (Seyboldt, Carlson & Carpenter
- * 2026); a coordinate that has not moved keeps its scale. */
+/* s = (mean sqrt|x - center| / mean sqrt|g - center|)^2. For normal targets that is sqrt(var x / var g), the minimiser
+ * of the Fisher divergence over diagonal maps (Seyboldt, Carlson & Carpenter 2026), exact from a few draws where the
+ * coordinates are independent; half powers keep it steady where variances hang on single draws. A coordinate that has
+ * not moved keeps its scale. */
+static double scale_ratio(double roots_x, double roots_g, double otherwise)
+{
+    const double root = roots_x / roots_g, s = root * root;
+    return s > 1e-200 && s < 1e200 ? s : otherwise;
+}
+
 static void new_scale(const fw_chain *chain, double *scale)
 {
     for (size_t i = 0; i < chain->walk.d; ++i) {
-        const double s = sqrt(chain->squares_x[i] / chain->squares_g[i]), r = chain->walk.base.r[i];
-        scale[i] = s > 1e-200 && s < 1e200 ? s : r * r;
+        const double r = chain->walk.base.r[i];
+        scale[i] = scale_ratio(chain->roots_x[i], chain->roots_g[i], r * r);
     }
 }
 
@@ -346,8 +354,8 @@ void fw_learn_update(fw_chain *chain, const fw_route *route, const fw_facts *fac
     } else if (learn->done > lead) {
         remember_row(chain);
         ++learn->in_window;
-        fw_moments(chain->walk.d, (double)learn->in_window, chain->x, chain->mean_x, chain->squares_x);
-        fw_moments(chain->walk.d, (double)learn->in_window, chain->g, chain->mean_g, chain->squares_g);
+        fw_gather(chain->walk.d, (double)learn->in_window, chain->x, chain->mean_x, chain->roots_x);
+        fw_gather(chain->walk.d, (double)learn->in_window, chain->g, chain->mean_g, chain->roots_g);
         if (learn->in_window == learn->window) close_window(chain);
     }
 }

@@ -98,9 +98,9 @@ static void visit_state(cursor *c, fw_chain *chain)
     if (chain->settings.rank) visit(c, walk->base.directions, chain->settings.rank * d);
     if (chain->learn.settled) return;
     visit(c, chain->mean_x, d);
-    visit(c, chain->squares_x, d);
+    visit(c, chain->roots_x, d);
     visit(c, chain->mean_g, d);
-    visit(c, chain->squares_g, d);
+    visit(c, chain->roots_g, d);
     if (!chain->rows_x) return;
     visit(c, chain->rows_x, chain->learn.rows * d);
     visit(c, chain->rows_g, chain->learn.rows * d);

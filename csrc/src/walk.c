@@ -91,6 +91,9 @@ static int halved_step(fw_walk *walk, fw_point *p, double step)
         }
     }
     walk->halved += ((uint64_t)1 << k) - 1;
+    fw_difference(walk->d, walk->spare[0].x, p->x, walk->edge);
+    fw_base_whiten_velocity(&walk->base, walk->edge, walk->edge);
+    fw_scale(walk->d, 1.0 / step, walk->edge);
     fw_point_copy(walk, &walk->spare[0], p);
     return FW_OK;
 }

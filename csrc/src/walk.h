@@ -65,6 +65,7 @@ typedef struct fw_walk {
     double *failed_at;        /* position of the last failed evaluation or step */
     double *natural, *product, *probe; /* scratch of curvature products; NULL when the curvature is the surrogate */
     fw_point spare[2];        /* scratch of halving; NULL arrays without it */
+    double *edge;             /* with halving: whitened mean velocity of the last step */
 } fw_walk;
 
 /* density.c: one checked evaluation; value and g are set on FW_OK only. */
