@@ -246,7 +246,6 @@ static int transition(fw_chain *chain, fw_facts *facts)
     const int settling = !chain->learn.settled, climbing = chain->learn.climbing != 0;
     fw_learn before;
     if (settling) before = chain->learn;
-    if (chain->random.mark) chain->random.mark(chain->random.state);
     memset(facts, 0, sizeof *facts);
     fw_route route;
     const int status = attempt(chain, &route, facts);
@@ -261,7 +260,8 @@ static int transition(fw_chain *chain, fw_facts *facts)
     facts->products = (int32_t)(walk->products - products);
     facts->log_density = chain->value;
     ++chain->transitions;
-    if (settling && !climbing) fw_learn_update(chain, &route, facts);
+    if (climbing) fw_learn_climbed(chain);
+    else if (settling) fw_learn_update(chain, &route, facts);
     return FW_OK;
 }
 
@@ -285,13 +285,14 @@ int fw_chain_run(fw_chain *chain, size_t n, fw_output *output, size_t *done)
     *done = 0;
     if (!chain->started) return FW_NOT_STARTED;
     const uint64_t settled = chain->learn.settled;
+    if (chain->random.mark) chain->random.mark(chain->random.state);
     for (size_t i = 0; i < n && chain->learn.settled == settled; ++i) {
         fw_facts facts;
-        if (chain->walk.watch && *chain->walk.watch) return FW_INTERRUPTED;
-        const int status = transition(chain, &facts);
+        const int status = chain->walk.watch && *chain->walk.watch ? FW_INTERRUPTED : transition(chain, &facts);
         if (status < 0) return status;
         if (output) write_out(chain, i, &facts, output);
         ++*done;
+        if (chain->random.mark) chain->random.mark(chain->random.state);
     }
     return FW_OK;
 }

@@ -24,6 +24,7 @@ typedef struct fw_piece {
 /* Everything settling knows besides vectors; exported as it stands. */
 typedef struct fw_learn {
     uint64_t least, most, tail; /* the plan: transitions in all, and in its last part */
+    uint64_t lead;              /* windows begin after so many */
     uint64_t done;              /* settling transitions completed */
     uint64_t tail_left;         /* > 0: the last part has begun; only the step size moves */
     uint64_t window, in_window, windows, rows;
@@ -34,7 +35,7 @@ typedef struct fw_learn {
     uint64_t search;            /* 1: look for a step size before the next path */
     /* bend */
     double bend, ceiling;
-    double epoch_log_step, whole_sum, half_sum;
+    double epoch_log_step, whole_sum, half_sum, whole_squares, half_squares; /* of rejections */
     uint64_t whole_count, half_count;
     double ring[FW_RING];
     uint64_t ring_count;
@@ -87,6 +88,7 @@ const fw_path *fw_path_named(const char *name);
 
 /* climb.c: one iteration in the place of a transition, while learn.climbing. */
 int fw_climb(fw_chain *chain, fw_facts *facts);
+void fw_climb_stop(fw_chain *chain);
 
 /* directions.c: from the rows of the window to directions (count x d) and their lambda, scale improved on the way;
  * returns the count. Uses the end points as scratch. */
@@ -97,6 +99,7 @@ void fw_learn_first_scale(fw_chain *chain);
 void fw_learn_plan(fw_chain *chain, size_t least, size_t most);
 int fw_learn_route(fw_chain *chain, fw_route *route);
 void fw_learn_update(fw_chain *chain, const fw_route *route, const fw_facts *facts);
+void fw_learn_climbed(fw_chain *chain);
 void fw_learn_beta(fw_chain *chain);
 void fw_dual_average(fw_learn *learn, double target, double acceptance);
 

@@ -88,60 +88,102 @@ static void scale_from_climb(fw_chain *chain)
     fw_base_set(&chain->walk.base, step, 0, NULL, NULL);
 }
 
-static void stop_climbing(fw_chain *chain)
+void fw_climb_stop(fw_chain *chain)
 {
     chain->learn.climbing = 0;
     if (chain->settings.adapt_scale && !chain->learn.scale_kept) scale_from_climb(chain);
     chain->learn.rows = 0;
+    if (chain->learn.climbed == 0) chain->learn.climbed = 1; /* once is enough */
 }
 
-/* Back to the point before the last look. */
-static void undo(fw_chain *chain)
+/* The climb goes on while the iterations since the last look have gained enough; those that have not are undone. */
+static int worth_it(fw_chain *chain)
 {
     fw_learn *learn = &chain->learn;
-    const uint64_t back = learn->climbed % look == 0 ? look : learn->climbed % look;
-    const uint64_t to = learn->climbed - (back < learn->climbed ? back : learn->climbed);
-    fw_chain_take(chain, row_x(chain, to), row_g(chain, to), learn->climb_value[to % MEMORY]);
+    const uint64_t since = learn->climbed % look == 0 && learn->climbed > 0 ? look : learn->climbed % look;
+    const uint64_t back = learn->climbed - since;
+    if (chain->value - learn->climb_value[back % MEMORY] > least_gain(chain)) return 1;
+    fw_chain_take(chain, row_x(chain, back), row_g(chain, back), learn->climb_value[back % MEMORY]);
+    return 0;
 }
 
-/* One iteration: a backtracking search along the direction, one gradient a trial. */
+/* Is x + step p a place to go to? Evaluates it into end[1]. */
+static int better(fw_chain *chain, const double *p, double step, double least, fw_facts *facts, int *yes)
+{
+    const size_t d = chain->walk.d;
+    fw_point *to = &chain->end[1];
+    fw_copy(d, chain->x, to->x);
+    fw_axpy(d, step, p, to->x);
+    ++facts->steps;
+    const int status = fw_evaluate(&chain->walk, to->x, &to->value, to->g);
+    *yes = status == FW_OK && to->value > least && fw_all_finite(d, to->g);
+    return status < 0 ? status : FW_OK;
+}
+
+/* 1, or what moves the coordinate that moves most by some spacings of its numbers. */
+static double first_length(const fw_chain *chain, const double *p)
+{
+    double most = 0.0;
+    for (size_t i = 0; i < chain->walk.d; ++i) {
+        const double moves = fabs(p[i]) / (fabs(chain->x[i]) + 1e-300);
+        if (moves > most) most = moves;
+    }
+    return most < 0x1p-40 && most > 0.0 ? 0x1p-40 / most : 1.0;
+}
+
+/* A search along p, one gradient a trial: shorter until the value rises by a part of what the slope promises. While
+ * nothing is known of the curvature the first trial says little of the length, so there the step also grows. */
+static int search(fw_chain *chain, const double *p, double slope, fw_facts *facts, int *found)
+{
+    double step = first_length(chain, p);
+    const double whole = step;
+    int status;
+    *found = 0;
+    for (int trial = 0; trial < 30 && !*found; ++trial, step *= 0.25) {
+        status = better(chain, p, step, chain->value + 1e-4 * step * slope, facts, found);
+        if (status < 0) return status;
+    }
+    if (!*found || chain->learn.climbed > 0 || step < 0.25 * whole) return FW_OK;
+    fw_candidate best = {.x = chain->end[0].w, .g = chain->end[0].c};
+    int grows = 1;
+    for (step = 4.0 * whole; grows && step < 1e30 * whole; step *= 4.0) {
+        fw_copy(chain->walk.d, chain->end[1].x, best.x);
+        fw_copy(chain->walk.d, chain->end[1].g, best.g);
+        best.value = chain->end[1].value;
+        status = better(chain, p, step, best.value, facts, &grows);
+        if (status < 0) return status;
+    }
+    fw_copy(chain->walk.d, best.x, chain->end[1].x);
+    fw_copy(chain->walk.d, best.g, chain->end[1].g);
+    chain->end[1].value = best.value;
+    return FW_OK;
+}
+
 int fw_climb(fw_chain *chain, fw_facts *facts)
 {
-    fw_walk *walk = &chain->walk;
     fw_learn *learn = &chain->learn;
-    fw_point *to = &chain->end[1];
+    const fw_point *to = &chain->end[1];
     double *p = chain->end[0].x;
-    const size_t d = walk->d;
+    int found = 0;
     if (learn->climbed == 0) remember(chain);
     learn->rows = learn->climbed + 1 < MEMORY ? learn->climbed + 1 : MEMORY;
     direction(chain, p, chain->end[0].w, chain->end[0].c);
-    const double slope = fw_dot(d, p, chain->g);
-    double step = 1.0;
-    int found = 0;
-    for (int trial = 0; trial < 30 && slope > 0.0 && isfinite(slope) && !found; ++trial, step *= 0.25) {
-        fw_copy(d, chain->x, to->x);
-        fw_axpy(d, step, p, to->x);
-        ++facts->steps;
-        const int status = fw_evaluate(walk, to->x, &to->value, to->g);
-        if (status < 0) return status;
-        found = status == FW_OK && to->value > chain->value + 1e-4 * step * slope && fw_all_finite(d, to->g);
-    }
+    const double slope = fw_dot(chain->walk.d, p, chain->g);
     facts->acceptance = 1.0;
     facts->energy = -chain->value;
+    if (slope > 0.0 && isfinite(slope)) {
+        const int status = search(chain, p, slope, facts, &found);
+        if (status < 0) return status;
+    }
     if (!found) {
-        undo(chain);
-        stop_climbing(chain);
+        worth_it(chain);
+        fw_climb_stop(chain);
         return FW_OK;
     }
     fw_chain_take(chain, to->x, to->g, to->value);
     ++learn->climbed;
     remember(chain);
     learn->rows = learn->climbed + 1 < MEMORY ? learn->climbed + 1 : MEMORY;
-    if (learn->climbed % look == 0) {
-        const double before = learn->climb_value[(learn->climbed - look) % MEMORY];
-        const int slow = !(chain->value - before > least_gain(chain));
-        if (slow) undo(chain);
-        if (slow || learn->climbed >= most_iterations) stop_climbing(chain);
-    }
+    if (learn->climbed % look == 0 && (!worth_it(chain) || learn->climbed >= most_iterations)) fw_climb_stop(chain);
     return FW_OK;
 }

@@ -29,7 +29,7 @@ static uint64_t tail_length(uint64_t most)
 static uint64_t next_window(const fw_learn *learn)
 {
     const uint64_t before = learn->window ? learn->window + learn->window / 2 : first_window;
-    const uint64_t end = learn->most - learn->tail, begun = learn->done < lead ? lead : learn->done;
+    const uint64_t end = learn->most - learn->tail, begun = learn->done < learn->lead ? learn->lead : learn->done;
     if (begun + before > end) return learn->window == 0 && end > begun + 4 ? end - begun : 0;
     /* a last window that would be cut short by the tail is joined to this one */
     return begun + before + before + before / 2 > end ? end - begun : before;
@@ -53,6 +53,13 @@ void fw_dual_average(fw_learn *learn, double target, double acceptance)
     learn->log_average = share * learn->log_step + (1.0 - share) * learn->log_average;
 }
 
+static void forget_epoch(fw_learn *learn)
+{
+    learn->whole_sum = learn->half_sum = learn->whole_squares = learn->half_squares = 0.0;
+    learn->whole_count = learn->half_count = 0;
+    learn->epoch_log_step = learn->log_step;
+}
+
 static void clear_window(fw_chain *chain)
 {
     const size_t bytes = chain->walk.d * sizeof(double);
@@ -63,10 +70,13 @@ static void clear_window(fw_chain *chain)
     chain->learn.in_window = chain->learn.rows = 0;
 }
 
+/* A plan that fixes the number of transitions is kept to it; an open one ends a tail from now. */
 static void begin_tail(fw_learn *learn)
 {
+    const uint64_t left = learn->most - learn->done;
     learn->window = 0;
-    learn->tail_left = learn->tail > 0 ? learn->tail : 1;
+    learn->tail_left = learn->least == learn->most || left < learn->tail ? left : learn->tail;
+    if (learn->tail_left == 0) learn->tail_left = 1;
 }
 
 static void finish(fw_chain *chain)
@@ -81,13 +91,13 @@ void fw_learn_plan(fw_chain *chain, size_t least, size_t most)
     learn->least = least;
     learn->most = most;
     learn->tail = tail_length(most);
+    learn->lead = lead;
     learn->done = learn->windows = learn->quiet = learn->tail_left = learn->window = 0;
-    learn->whole_count = learn->half_count = 0;
-    learn->whole_sum = learn->half_sum = 0.0;
     learn->settled = most == 0;
-    learn->climbing = most > 0 && chain->rows_x && learn->climbed == 0;
+    learn->climbing = most > 1 && chain->rows_x && learn->climbed == 0;
     learn->search = chain->settings.adapt_step != 0;
-    learn->log_step = learn->epoch_log_step = log(chain->step_size > 0.0 ? chain->step_size : 1.0);
+    learn->log_step = log(chain->step_size > 0.0 ? chain->step_size : 1.0);
+    forget_epoch(learn);
     restart_average(learn, 10.0);
     clear_window(chain);
     if (most == 0) return;
@@ -175,32 +185,38 @@ static void remember_gradient(fw_chain *chain)
     learn->ring[learn->ring_count++ % FW_RING] = fw_dot(chain->walk.d, c, c);
 }
 
+static double mean_and_error(double sum, double squares, uint64_t count, double *variance)
+{
+    const double n = (double)count, mean = sum / n;
+    *variance = (squares / n - mean * mean) / (n - 1.0);
+    return mean;
+}
+
 /* Rejections at the step and at half of it, over equal lengths, give by extrapolation the rejection that no step can
- * avoid (the rest falls as its square). More than half of what the target allows: the bend is too strong. */
+ * avoid (the rest falls as its square). More than half of what the target allows: the bend is too strong. The look goes
+ * on until it is clear on which side of that it stands, by 1.5 standard errors, or long enough to say. */
 static void look_at_ceiling(fw_chain *chain, const fw_route *route, double acceptance)
 {
     fw_learn *learn = &chain->learn;
-    if (route->finer) {
-        learn->half_sum += 1.0 - acceptance;
-        ++learn->half_count;
-    } else {
-        learn->whole_sum += 1.0 - acceptance;
-        ++learn->whole_count;
-    }
-    if (learn->whole_count < epoch || learn->half_count < epoch) return;
-    const double whole = learn->whole_sum / (double)learn->whole_count, half = learn->half_sum / (double)learn->half_count;
-    double floor_ = (4.0 * half - whole) / 3.0;
-    floor_ = floor_ < 0.0 ? 0.0 : floor_ > 1.0 ? 1.0 : floor_;
-    learn->ceiling = 1.0 - floor_;
-    if (floor_ > 0.5 * (1.0 - chain->settings.acceptance)) {
+    const double rejection = 1.0 - acceptance;
+    *(route->finer ? &learn->half_sum : &learn->whole_sum) += rejection;
+    *(route->finer ? &learn->half_squares : &learn->whole_squares) += rejection * rejection;
+    ++*(route->finer ? &learn->half_count : &learn->whole_count);
+    if (learn->whole_count < epoch || learn->half_count < epoch || learn->whole_count % epoch != 0) return;
+    double of_whole, of_half;
+    const double whole = mean_and_error(learn->whole_sum, learn->whole_squares, learn->whole_count, &of_whole);
+    const double half = mean_and_error(learn->half_sum, learn->half_squares, learn->half_count, &of_half);
+    const double least = (4.0 * half - whole) / 3.0, error = sqrt((16.0 * of_half + of_whole) / 9.0);
+    const double allowed = 0.5 * (1.0 - chain->settings.acceptance);
+    if (fabs(least - allowed) < 1.5 * error && learn->whole_count < 8 * epoch) return;
+    learn->ceiling = 1.0 - (least < 0.0 ? 0.0 : least > 1.0 ? 1.0 : least);
+    if (least > allowed) {
         learn->bend *= 0.5;
         if (learn->bend < least_bend) learn->bend = chain->walk.beta = 0.0;
         if (learn->log_step < learn->epoch_log_step) learn->log_step = learn->epoch_log_step;
         restart_average(learn, 2.0);
     }
-    learn->whole_sum = learn->half_sum = 0.0;
-    learn->whole_count = learn->half_count = 0;
-    learn->epoch_log_step = learn->log_step;
+    forget_epoch(learn);
 }
 
 /* ---- scale -------------------------------------------------------------------------------------------------------- */
@@ -208,18 +224,29 @@ static void look_at_ceiling(fw_chain *chain, const fw_route *route, double accep
 /* s = (mean sqrt|x - center| / mean sqrt|g - center|)^2. For normal targets that is sqrt(var x / var g), the minimiser
  * of the Fisher divergence over diagonal maps (Seyboldt, Carlson & Carpenter 2026), exact from a few draws where the
  * coordinates are independent; half powers keep it steady where variances hang on single draws. A coordinate that has
- * not moved keeps its scale. */
+ * moved but felt no gradient keeps its scale. */
 static double scale_ratio(double roots_x, double roots_g, double otherwise)
 {
     const double root = roots_x / roots_g, s = root * root;
     return s > 1e-200 && s < 1e200 ? s : otherwise;
 }
 
+/* A coordinate that stood while others moved had steps below the spacing of its numbers. */
+static double freed(double r, double x)
+{
+    const double wider = fabs(x) * 0x1p-30 > 1e3 * r ? fabs(x) * 0x1p-30 : 1e3 * r;
+    return wider * wider;
+}
+
 static void new_scale(const fw_chain *chain, double *scale)
 {
-    for (size_t i = 0; i < chain->walk.d; ++i) {
+    const size_t d = chain->walk.d;
+    int moved = 0;
+    for (size_t i = 0; i < d && !moved; ++i) moved = chain->roots_x[i] > 0.0;
+    for (size_t i = 0; i < d; ++i) {
         const double r = chain->walk.base.r[i];
-        scale[i] = scale_ratio(chain->roots_x[i], chain->roots_g[i], r * r);
+        const int stood = moved && !(chain->roots_x[i] > 0.0);
+        scale[i] = stood ? freed(r, chain->x[i]) : scale_ratio(chain->roots_x[i], chain->roots_g[i], r * r);
     }
 }
 
@@ -299,12 +326,26 @@ static void close_window(fw_chain *chain)
     fw_base_set(&chain->walk.base, scale, k, chain->found, lambda);
     clear_window(chain);
     learn->ring_count = 0;
+    forget_epoch(learn);
     if (tunes_bend(chain)) remember_gradient(chain);
     learn->search = chain->settings.adapt_step != 0;
     ++learn->windows;
     learn->quiet = learn->change < quiet_change ? learn->quiet + 1 : 0;
     const int stable = learn->quiet >= 2 && learn->done + learn->tail >= learn->least && learn->least < learn->most;
     learn->window = stable ? 0 : next_window(learn);
+    if (learn->window == 0) begin_tail(learn);
+}
+
+/* An iteration of the climb counts as a transition; it may take half of the plan, and the windows begin when it ends. */
+void fw_learn_climbed(fw_chain *chain)
+{
+    fw_learn *learn = &chain->learn;
+    ++learn->done;
+    if (learn->climbing && learn->done >= learn->most / 2) fw_climb_stop(chain);
+    if (learn->climbing) return;
+    learn->lead = learn->done + lead;
+    learn->window = 0;
+    if (learn->tail_left == 0) learn->window = next_window(learn);
     if (learn->window == 0) begin_tail(learn);
 }
 
@@ -351,7 +392,7 @@ void fw_learn_update(fw_chain *chain, const fw_route *route, const fw_facts *fac
     }
     if (learn->tail_left > 0) {
         if (--learn->tail_left == 0) finish(chain);
-    } else if (learn->done > lead) {
+    } else if (learn->done > learn->lead) {
         remember_row(chain);
         ++learn->in_window;
         fw_gather(chain->walk.d, (double)learn->in_window, chain->x, chain->mean_x, chain->roots_x);

@@ -4,6 +4,7 @@ from importlib.metadata import version
 from pathlib import Path
 
 from fellwalk import errors, kernels
+from fellwalk.audit import Audit, audit
 from fellwalk.chain import Block, Chain
 from fellwalk.density import Density
 from fellwalk.errors import FellwalkError
@@ -19,6 +20,7 @@ from fellwalk.run import resume, run
 __version__ = version("fellwalk")
 
 __all__ = [
+    "Audit",
     "Block",
     "Chain",
     "Density",
@@ -31,6 +33,7 @@ __all__ = [
     "Parameters",
     "Result",
     "Trajectory",
+    "audit",
     "between",
     "correlation",
     "errors",

@@ -55,7 +55,7 @@ PRODUCT_SIGNATURE = "int (size_t, const double *, const double *, double *, void
 
 _WORDS = {"size_t", "unsigned long", "unsigned long long", "long", "long long", "ptrdiff_t", "Py_ssize_t", "ssize_t",
           "intptr_t", "uintptr_t", "uint64_t", "int64_t", "long unsigned int", "unsigned long int", "long int",
-          "npy_intp", "npy_uintp"}
+          "npy_intp", "npy_uintp", "ulong", "ulonglong", "longlong"}
 _INTS = {"int", "int32_t", "npy_int32"}
 
 
@@ -640,6 +640,13 @@ cdef class Maps:
         for i in range(y.shape[0]):
             logs[i] = fw_maps_apply(self.maps, &y[i, 0], &to[i, 0])
         return x, log_jacobian
+
+    def outside(self, const double[::1] y not None):
+        """Is y where the user's functions are not called (see fw_maps_outside)?"""
+        x = np.empty(self.natural_size)
+        cdef double[::1] to = x
+        fw_maps_apply(self.maps, &y[0], &to[0])
+        return bool(fw_maps_outside(self.maps))
 
     def invert(self, const double[:, ::1] x not None):
         """Free coordinates (n, dimension) of natural values; not finite where a value is not inside its bounds."""

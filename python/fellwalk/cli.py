@@ -1,4 +1,4 @@
-"""The command: demo, run, resume, report."""
+"""The command: demo, audit, run, resume, report."""
 
 import argparse
 import os
@@ -9,6 +9,7 @@ from collections.abc import Callable, Sequence
 import numpy as np
 
 from fellwalk import __version__
+from fellwalk.audit import audit
 from fellwalk.demo.show import show
 from fellwalk.errors import ArgumentError, FellwalkError
 from fellwalk.interrupts import watching
@@ -90,6 +91,7 @@ def _parser() -> argparse.ArgumentParser:
                                       "out: the model's own start")
     make.add_argument("--chains", type=_whole(1), metavar="N", default=4, help="chains, each from its own start")
     make.add_argument("--keep", type=_whole(1), metavar="N", default=1000, help="draws kept in each chain")
+    make.add_argument("--no-audit", action="store_true", help="do not look at the gradient first")
     make.add_argument("--settle", type=_settle, metavar="N", default="auto", help='settling transitions, or "auto"')
     make.add_argument("--seed", type=_whole(0), metavar="N", help="a whole number; left out: one is drawn and recorded")
     make.add_argument("--motion", choices=sorted(MOTIONS), default="leapfrog", help="what moves a point")
@@ -116,13 +118,21 @@ def _parser() -> argparse.ArgumentParser:
     _common(again)
     again.set_defaults(action=_resume)
 
+    look = commands.add_parser("audit", help="look for mistakes in a model before it runs", allow_abbrev=False,
+                               description="Compare gradient and Hessian product with differences, see what happens far "
+                                           "out, time the calls. The exit status is 1 when a mistake is found.")
+    look.add_argument("model", metavar="MODEL", help="as for run")
+    look.add_argument("--start", help="numbers separated by commas: the point to look at; left out: the model's own start")
+    look.add_argument("--seed", type=_whole(0), metavar="N", default=0, help="of the other points, which are random")
+    look.set_defaults(action=_audit)
+
     report = commands.add_parser("report", help="print the table and the verdict of a record", allow_abbrev=False,
                                  description="Print the table and the verdict of a record, also while it is written.")
     report.add_argument("record", metavar="FILE", help="the record of a run")
     report.add_argument("--all", action="store_true", help="every parameter, however many there are")
     report.add_argument("--salvage", action="store_true", help="of a damaged record, what stands before the damage")
     report.set_defaults(action=_report)
-    for command in (demo, make, again, report):
+    for command in (demo, make, again, look, report):
         command.add_argument("--debug", action="store_true", help="show the Python traceback of an error")
     return parser
 
@@ -180,7 +190,7 @@ def _run(options: argparse.Namespace) -> int:
         find_model(options.model), _start(options.start), motion=_motion(options), path=_path(options), settle=options.settle,
         keep=options.keep, chains=options.chains, seed=options.seed, acceptance=options.acceptance,
         step_size=options.step_size, executor=options.executor, record=options.record, replace=options.replace,
-        progress=options.progress or True, seconds=options.seconds)
+        progress=options.progress or True, seconds=options.seconds, audit=not options.no_audit)
     return _finish(result, options.record)
 
 
@@ -201,6 +211,12 @@ def _finish(result: Result, record: str) -> int:
     else:
         print(f"\nNext: fellwalk report {record}, or fellwalk.load({record!r}) in Python")
     return {"Ctrl-C": 130, "SIGTERM": 143}.get(result.ended, 0)
+
+
+def _audit(options: argparse.Namespace) -> int:
+    found = audit(find_model(options.model), _start(options.start), seed=options.seed)
+    print(found)
+    return 0 if found.ok else 1
 
 
 def _report(options: argparse.Namespace) -> int:

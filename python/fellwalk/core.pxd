@@ -186,6 +186,7 @@ cdef extern from "fellwalk.h" nogil:
     size_t fw_maps_dimension(const fw_maps *maps)
     size_t fw_maps_natural(const fw_maps *maps)
     double fw_maps_apply(fw_maps *maps, const double *y, double *x)
+    int fw_maps_outside(const fw_maps *maps)
     void fw_maps_pull(fw_maps *maps, const double *g, int with_jacobian, double *out)
     void fw_maps_push(fw_maps *maps, const double *p, double *out)
     void fw_maps_bend(fw_maps *maps, const double *g, const double *p, double *out)

@@ -79,3 +79,7 @@ class WorkerError(FellwalkError):
 
 class RemoteError(FellwalkError):
     """The density raised, in another process, an exception that cannot be brought home as it was."""
+
+
+class AuditError(FellwalkError, ValueError):
+    """The density is wrong where a run was to start: its gradient, or something that a run cannot stand."""

@@ -9,6 +9,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import ArrayLike
 
+from fellwalk.audit import glance, glance_at_start
 from fellwalk.chain import Chain
 from fellwalk.density import Density, brief
 from fellwalk.driver import Driver
@@ -50,6 +51,7 @@ def run(
     replace: bool = False,
     progress: object = None,
     seconds: float | None = None,
+    audit: bool = True,
 ) -> Result:
     """Settle `chains` chains, keep `keep` draws of each, and judge them.
 
@@ -66,11 +68,12 @@ def run(
         given is never shut down; its worker processes ignore Ctrl-C from then on, as the run answers to it.
     record: file to write every finished block to, so that nothing finished is lost; `replace` overwrites an old one.
     progress: "bars", "lines", "off" or None (bars when a person watches). seconds: stop at a block edge after so long.
+    audit: look at the gradient at the last starting point first (ten gradients or so), and refuse one that is wrong.
 
     The first Ctrl-C ends the run at the next block edge and returns what there is; a second one abandons the
     transitions in hand and raises KeyboardInterrupt. An exception of the density comes out as it was raised, after
     finished blocks are safe; `resume` goes on either way, with the bits of an undisturbed run.
-    Errors: ArgumentError, ShapeError, StartError, RecordError, WorkerError, and whatever the density raises.
+    Errors: ArgumentError, ShapeError, StartError, AuditError, RecordError, WorkerError, and whatever the density raises.
     """
     if not isinstance(density, Density):
         raise ArgumentError(f"the first argument must be a fellwalk.Density; it is {type(density).__name__}: wrap your "
@@ -92,8 +95,16 @@ def run(
     }
     if starts is None and density.start is None and density.parameters is None:
         raise ArgumentError("this density has no start of its own; give starts, one point (dimension,) inside the support")
-    points = starting_points(density, density.start if starts is None else starts, chains, np.random.default_rng([seed, 1]))
+    try:
+        points = starting_points(density, density.start if starts is None else starts, chains,
+                                 np.random.default_rng([seed, 1]))
+    except StartError:
+        if audit and density.start is not None:
+            glance_at_start(density)
+        raise
     states = _first_states(density, settings, points, seed, scale)
+    if audit:
+        glance(density, points[-1])
     parts = [ChainResult() for _ in states]
     check = Check.of(density, points[0])
     transitions = chains * (keep + min(_SETTLE, settings.settle_bounds()[1]))

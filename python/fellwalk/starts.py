@@ -22,7 +22,8 @@ def starting_points(
     The rule for one point: the first chain starts there; the others are drawn normal around it, with standard
     deviation 1/|gradient| in each coordinate, but at most 1 or the coordinate's own size (near a mode the gradient says
     nothing of the width). The deviations are halved until the log density and gradient are finite and the log density
-    is not more than 10 + 2 dimension below the given point's; after 60 halvings a StartError says so. Points given one
+    is not more than 10 + 2 dimension below the given point's; after 60 halvings, or when nothing is left of them, a StartError
+    says so. Points given one
     a chain are taken as they are.
     """
     if density.parameters is not None:
@@ -56,11 +57,13 @@ def _near(density: Density, first: NDArray[np.float64], value: float, spread: ND
         x = first + spread * direction / 2.0**halvings
         if not np.all(np.isfinite(x)):
             continue
+        if np.array_equal(x, first):
+            break  # a chain that begins where another does tells nothing new
         found, gradient = density(x)
         if np.isfinite(found) and found >= lowest and np.all(np.isfinite(gradient)):
             return x
-    raise StartError(f"no second starting point was found near {brief(first)}: {_HALVINGS} points on a line towards "
-                     "it were outside the support or far below it in log density; give one starting point a chain")
+    raise StartError(f"no second starting point was found near {brief(first)}: all points tried on a "
+                     "line towards it were outside the support or far below it in log density; give one starting point a chain")
 
 
 def free_starts(density: Density, starts: object, chains: int, rng: np.random.Generator) -> NDArray[np.float64]:

@@ -1,0 +1,227 @@
+"""The driver of a run: keeps blocks in flight, writes each finished block before it asks for that chain's next one."""
+
+from __future__ import annotations
+
+import contextlib
+import time
+from collections import deque
+from concurrent.futures import Executor, Future
+from queue import Empty, SimpleQueue
+from typing import Any
+
+from fellwalk.errors import Interrupted, RecordError, WorkerError
+from fellwalk.interrupts import Interrupts
+from fellwalk.pools import Workers
+from fellwalk.progress import Progress
+from fellwalk.record import Record
+from fellwalk.result import Result
+from fellwalk.run_record import ChainResult, record_block
+from fellwalk.settings import Settings
+from fellwalk.work import Done, Job
+
+__all__ = ["Driver"]
+
+_BLOCK_SECONDS = 0.5
+_BLOCK_BYTES = 32_000_000
+_COMMIT_SHARE = 20  # commits are grouped so that they take at most one part in so many of the driver's time
+
+
+class Driver:
+    """One run from where its chains stand until all draws are made, or until it is stopped.
+
+    plan: as the record keeps it. states, parts: of every chain, so far. seconds: stop at a block edge after so long.
+    Attributes for measurements: `blocks` finished, and seconds `waited` for workers.
+    """
+
+    def __init__(self, plan: dict[str, Any], states: list[bytes], parts: list[ChainResult], workers: Workers,
+                 record: Record | None, progress: Progress, seconds: float | None) -> None:
+        self.plan, self.states, self.parts = plan, states, parts
+        self.workers, self.record, self.progress = workers, record, progress
+        self.settle_most = Settings.from_json(plan["settings"]).settle_bounds()[1]
+        self.limit = None if seconds is None else time.monotonic() + seconds
+        self.ready = deque(chain for chain in range(len(states)) if self._left(chain))
+        self.flying: dict[Future, tuple[Job, Executor]] = {}
+        self.arrived: SimpleQueue[Future | None] = SimpleQueue()
+        self.finished: list[Done] = []
+        self.written, self.writing = float("-inf"), 0.0  # when the last commit ended, how long it took
+        self.errors: list[tuple[int, str, BaseException]] = []
+        self.interrupts = Interrupts(workers.live, progress.say, lambda: self.arrived.put(None), workers.here)
+        self.blocks, self.waited = 0, 0.0
+
+    def go(self) -> Result:
+        """Run. Raises what the density raised, KeyboardInterrupt after a second Ctrl-C, RecordError, WorkerError."""
+        try:
+            with self.interrupts.installed():
+                self._drive()
+        except BaseException:
+            self.workers.live.interrupt()
+            raise
+        finally:
+            for future in self.flying:
+                future.cancel()
+            self.progress.close()
+        return self._end()
+
+    # ---- the loop ----------------------------------------------------------------------------------------------
+
+    def _drive(self) -> None:
+        while True:
+            if self._stopping():
+                self.interrupts.announce()
+                self.ready.clear()
+                self._call_back()
+            while self.ready and len(self.flying) < self.workers.room:
+                self._submit(self.ready.popleft())
+            if self.finished and self._due():
+                self._write()
+            elif not self.flying:
+                return
+            elif self.interrupts.count > 1 and not self.workers.local:
+                self._write()
+                return
+            else:
+                self._collect()
+
+    def _stopping(self) -> bool:
+        late = self.limit is not None and time.monotonic() >= self.limit
+        return self.interrupts.count > 0 or bool(self.errors) or late
+
+    def _call_back(self) -> None:
+        """Take back the blocks that no worker has begun."""
+        for future in list(self.flying):
+            if future.cancel():
+                del self.flying[future]
+
+    def _left(self, chain: int) -> int:
+        return self.plan["keep"] - self.parts[chain].count("keep")
+
+    def _job(self, chain: int) -> Job:
+        keeping = self.parts[chain].summary.get("settled", self.settle_most == 0)
+        seconds = _BLOCK_SECONDS
+        if self.limit is not None:
+            seconds = min(seconds, max(0.01, 0.5 * (self.limit - time.monotonic())))
+        most = min(self._left(chain), self._most(chain)) if keeping else self._most(chain)
+        return Job(chain, self.states[chain], most, self.plan["gradients"], seconds)
+
+    def _most(self, chain: int) -> int:
+        """Transitions in a block, for memory's sake; but of draws at least as many bytes as the state has."""
+        return max(_BLOCK_BYTES, len(self.states[chain])) // (16 * self.plan["dimension"]) + 1
+
+    def _submit(self, chain: int, again: Job | None = None) -> None:
+        """Send the next block of a chain, or one `again`, to a worker that lacked the density."""
+        job = again or self._job(chain)
+        try:
+            future = self.workers.submit(job, whole=again is not None)
+        except Exception as error:
+            self._missed(job, error, self.workers.executor)
+            return
+        self.flying[future] = (job, self.workers.executor)
+        future.add_done_callback(self.arrived.put)
+
+    def _collect(self) -> None:
+        """Wait until a block arrives, or something else is to be done; take what has arrived."""
+        until = [time.monotonic() + 1.0]
+        if self.finished:
+            until.append(self.written + _COMMIT_SHARE * self.writing)
+        if self.limit is not None:
+            until.append(self.limit)
+        before = time.monotonic()
+        try:
+            arrived = [self.arrived.get(timeout=max(0.001, min(until) - before))]
+        except Empty:
+            arrived = []
+        self.waited += time.monotonic() - before
+        while not self.arrived.empty():
+            arrived.append(self.arrived.get())
+        for future in arrived:
+            if future in self.flying:  # and was not called back; None only wakes
+                self._take(future, *self.flying.pop(future))
+
+    def _take(self, future: Future, job: Job, executor: Executor) -> None:
+        try:
+            done = self.workers.opened(future.result())
+        except BaseException as error:
+            self._missed(job, error, executor)
+            return
+        if done is None:
+            self._submit(job.chain, job)
+            return
+        for remark in self.workers.remarks:
+            self.progress.say(remark)
+            if self.record:
+                self.record.append_event("rounding", {"remark": remark})
+        self.workers.remarks.clear()
+        self.finished.append(done)
+
+    def _missed(self, job: Job, error: BaseException, executor: Executor) -> None:
+        """A block did not come back: ask again, if the executor is our own, or else stop."""
+        if self._stopping():
+            return  # after a Ctrl-C workers may die of it, too; the block is made again when the run goes on
+        if self.workers.local and not isinstance(error, RuntimeError):
+            self.errors.append((job.chain, "", error))
+        elif executor is not self.workers.executor or self.workers.rebuild(error):
+            self.ready.appendleft(job.chain)
+        else:
+            self.errors.append((job.chain, "", self.workers.lost(error)))
+
+    # ---- finished blocks ---------------------------------------------------------------------------------------
+
+    def _due(self) -> bool:
+        """Is it time for a commit? Not while every worker has work and the last one was a short time ago."""
+        busy = len(self.flying) >= self.workers.count and not self._stopping()
+        return not (self.record and busy) or time.monotonic() >= self.written + _COMMIT_SHARE * self.writing
+
+    def _write(self) -> None:
+        done, self.finished = self.finished, []
+        full = [d for d in done if len(d.block)]
+        if self.record and full:
+            begun = time.monotonic()
+            self.record.append_blocks([record_block(d, self.parts[d.chain]) for d in full])
+            self.written = time.monotonic()
+            self.writing = self.written - begun
+        self.blocks += len(full)
+        for d in done:
+            part, phase, error = self.parts[d.chain], d.block.phase, d.block.error
+            if len(d.block):
+                part.add(d)
+                self.states[d.chain] = d.state
+                self.progress.update(d.chain, phase, part.count(phase), d.block.facts)
+            if error is not None:
+                self.errors.append((d.chain, phase, error))
+            elif self._left(d.chain):
+                self.ready.append(d.chain)
+
+    # ---- the end -----------------------------------------------------------------------------------------------
+
+    def _end(self) -> Result:
+        done = not any(self._left(chain) for chain in range(len(self.states)))
+        abandoned = self.interrupts.count > 1
+        real = [e for e in self.errors if not (abandoned and isinstance(e[2], Interrupted | KeyboardInterrupt))]
+        why = "" if done else "an exception" if real else self.interrupts.name or "the time given had passed"
+        result = Result(self.plan, self.parts, ended=why, path=self.record.path if self.record else "")
+        error = self._explained(real, result) if real else KeyboardInterrupt() if abandoned and not done else None
+        if self.record:
+            # a full disk must not hide what happened before
+            with contextlib.suppress(*([RecordError] if error else [])):
+                self.record.append_event("stopped" if why else "finished", {"why": why} if why else {})
+        if error is not None:
+            with contextlib.suppress(AttributeError):
+                error.fellwalk_result = result  # type: ignore[attr-defined]
+            raise error
+        return result
+
+    def _explained(self, errors: list[tuple[int, str, BaseException]], result: Result) -> BaseException:
+        chain, phase, error = errors[0]
+        kept = (f"the record {result.path} holds every finished block; fellwalk.resume goes on from it" if result.path
+                else "this exception's fellwalk_result holds the draws finished before it")
+        if isinstance(error, WorkerError):
+            error.add_note(f"fellwalk: the block in hand of chain {chain + 1} is lost; {kept}.")
+            return error
+        place = f"chain {chain + 1}"
+        if phase:
+            doing = "keeping draws" if phase == "keep" else "settling"
+            place += f", {doing}, at transition {self.parts[chain].count(phase) + 1}"
+        others = sorted({number + 1 for number, *_ in errors} - {chain + 1})
+        more = f" (and another in chain {', '.join(map(str, others))})" if others else ""
+        error.add_note(f"fellwalk: raised in {place}{more}; {kept}.")
+        return error

@@ -1,0 +1,132 @@
+"""What a run writes into its record, and how it is read back."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from fellwalk.errors import RecordError
+from fellwalk.record import Block as RecordBlock
+from fellwalk.record import Record
+from fellwalk.settings import Settings
+from fellwalk.work import Check, Done
+
+__all__ = ["ChainResult", "begin", "plan_of", "read_check", "read_parts", "read_states", "record_block"]
+
+_PLAN = {"settings", "names", "dimension", "chains", "keep", "seed", "gradients", "model"}
+
+
+@dataclass
+class ChainResult:
+    """What one chain has given: parts of blocks, joined when asked for."""
+
+    draws: list[NDArray[np.float64]] = field(default_factory=list)
+    gradients: list[NDArray[np.float64]] = field(default_factory=list)
+    facts: dict[str, list[NDArray]] = field(default_factory=lambda: {"settle": [], "keep": []})
+    failures: list[tuple[NDArray, NDArray, NDArray]] = field(default_factory=list)
+    seconds: float = 0.0
+    summary: dict[str, Any] = field(default_factory=dict)
+    counts: dict[str, int] = field(default_factory=lambda: {"settle": 0, "keep": 0})
+
+    def count(self, phase: str) -> int:
+        """Transitions finished in a phase."""
+        return self.counts[phase]
+
+    def add(self, done: Done) -> None:
+        """Add a finished block."""
+        block = done.block
+        start = self.counts[block.phase]
+        self.add_facts(block.phase, block.facts)
+        self.seconds += done.seconds
+        self.summary = done.summary
+        if block.phase == "keep":
+            self.draws.append(block.draws)
+            self.gradients.extend([] if block.gradients is None else [block.gradients])
+            self.failures.append((block.failures[0] + start, *block.failures[1:]))
+
+    def add_facts(self, phase: str, facts: NDArray) -> None:
+        """Add the facts of finished transitions, and count them."""
+        self.facts[phase].append(facts)
+        self.counts[phase] += len(facts)
+
+
+def begin(record: Record, states: list[bytes], check: Check) -> None:
+    """Write what a run needs to go on from nothing: the first states of all chains, and what the density gives."""
+    record.set_entry("beginning", {
+        "states": record.put_part(b"".join(states)),
+        "sizes": [len(state) for state in states],
+        "check": record.put_part(np.concatenate([check.position, check.gradient, [check.log_density]])
+                                 .astype("<f8").tobytes()),
+    })
+
+
+def record_block(done: Done, part: ChainResult) -> RecordBlock:
+    """A finished block in the form that the record takes; `part`: what stands before it."""
+    block = done.block
+    keeping = block.phase == "keep"
+    return RecordBlock(done.chain, block.phase, part.count(block.phase), block.facts, done.state,
+                       draws=block.draws if keeping else None, failures=block.failures,
+                       gradients=block.gradients if keeping else None,
+                       note={"seconds": done.seconds, "summary": done.summary})
+
+
+def plan_of(record: Record) -> dict[str, Any]:
+    """The plan of the run that the record keeps. Errors: RecordError when it is not of a run of this version."""
+    plan = record.settings
+    if not (isinstance(plan, dict) and plan.keys() >= _PLAN):
+        raise RecordError(f"{record.path}: this record was not made by fellwalk.run, so there is no run in it")
+    try:
+        Settings.from_json(plan["settings"])
+    except (KeyError, TypeError, ValueError) as error:
+        raise RecordError(f"{record.path}: this run was made with settings that this version of fellwalk does not know "
+                          f"({error}); use the version that made it, {record.versions.get('fellwalk')}") from error
+    return plan
+
+
+def _beginning(record: Record) -> dict[str, Any]:
+    found = record.get_entry("beginning")
+    if found is None:
+        raise RecordError(f"{record.path}: the run was killed before its first block, so there is nothing to go on from. "
+                          "Start it again with replace=True (in the command: --replace)")
+    return found
+
+
+def read_states(record: Record) -> list[bytes]:
+    """The latest state of every chain, or its first one."""
+    found = _beginning(record)
+    whole = record.part(found["states"])
+    ends = np.cumsum(found["sizes"]).tolist()
+    states = [whole[end - size : end] for size, end in zip(found["sizes"], ends, strict=True)]
+    for chain, (_, _, state) in record.states().items():
+        states[chain] = state
+    return states
+
+
+def read_check(record: Record, dimension: int) -> Check:
+    """What the density of the run gave at its first starting point."""
+    numbers = np.frombuffer(record.part(_beginning(record)["check"]), "<f8").astype(np.float64)
+    return Check(numbers[:dimension], float(numbers[-1]), numbers[dimension:-1])
+
+
+def read_parts(record: Record) -> list[ChainResult]:
+    """What every chain has given so far."""
+    parts = []
+    counts = record.counts()
+    for chain in range(plan_of(record)["chains"]):
+        part = ChainResult()
+        for phase in ("settle", "keep"):
+            if counts.get(chain, {}).get(phase):
+                part.add_facts(phase, record.facts(chain, phase))
+            for note in record.notes(chain, phase):
+                part.seconds += note["seconds"]
+                part.summary = note["summary"]
+        if part.count("keep"):
+            part.draws.append(record.chain_draws(chain))
+            gradients = record.gradients(chain)
+            part.gradients.extend([] if gradients is None else [gradients])
+            part.failures.append(tuple(record.failures(chain)))
+        parts.append(part)
+    return parts

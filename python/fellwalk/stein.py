@@ -1,0 +1,122 @@
+"""Terms with mean zero, made from draws and the gradients at them: Stein's identity in coordinates.
+
+For a density that vanishes fast enough far out, with gradient g of its logarithm, and a polynomial P of the draws:
+E[ lap P + grad P . g ] = 0 (Assaraf & Caffarel 1999, Physical Review Letters 83; Mira, Solgi & Imparato 2013, Statistics
+and Computing 23; both from memory). Degree 1 gives the coordinates of g, degree 2 the products x_i g_j + x_j g_i, plus 2
+where i = j. This file makes such terms and finds those whose variance the draws do not vouch for.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+from itertools import combinations_with_replacement
+
+import numpy as np
+from numpy.typing import NDArray
+
+Array = NDArray[np.float64]
+
+# Terms are taken in coordinates that have been made uncorrelated when the correlation matrix is worse conditioned than
+# this: a term of degree 2 squares the condition number. Below it coordinates stay themselves, so that one with heavy
+# tails does not spoil the terms of the others.
+CORRELATED = 100.0
+
+# A term is used only where the tail index of its draws, as the extreme value index, is below this: 1/2 is where the
+# variance ends to be finite. Share of 400 runs of 4000 independent draws above 0.4 at the largest 5%: Student t with 2
+# degrees of freedom 99%, with 3 2%, with 4 and 5 none; exponential, and square and cube of a normal, none.
+HEAVY = 0.4
+TAIL_SHARE, TAIL_LEAST, TAIL_MOST = 0.05, 20, 500
+
+
+def tail_index(values: Array) -> Array:
+    """Extreme value index of |values| along the last axis: 1 / (tail exponent) where tails are powers, else about 0.
+
+    values: (..., N), N >= 40. Returns (...); -inf for a constant. Moment estimator of Dekkers, Einmahl & de Haan (1989),
+    Annals of Statistics 17 (from memory), over the largest 5% of the draws.
+    """
+    size = np.abs(values)
+    count = size.shape[-1]
+    k = min(int(np.clip(TAIL_SHARE * count, TAIL_LEAST, TAIL_MOST)), count - 1)
+    top = np.partition(size, count - k - 1, axis=-1)[..., count - k - 1 :]
+    least = top[..., :1]
+    with np.errstate(all="ignore"):
+        logs = np.log(top[..., 1:] / least)
+        first, second = logs.mean(axis=-1), (logs**2).mean(axis=-1)
+        index = first + 1 - 0.5 / (1 - first**2 / second)
+    # Nothing beyond the threshold but copies of it: bounded. A threshold of zero: all weight on few draws, as heavy as can be.
+    return np.where(second == 0, -np.inf, np.where(np.isfinite(index), index, np.inf))
+
+
+class Frame:
+    """Draws and gradients in coordinates of mean 0 and sd 1, uncorrelated where that is needed.
+
+    x, g: (N, dimension) draws and gradients. y, gy: (coordinates, N), the gradient with respect to y in gy. kept: which
+    of the dimension's coordinates vary and so are there; centre, scale: (coordinates,). mixed: are they combinations?
+    """
+
+    def __init__(self, x: Array, g: Array, *, mix: bool) -> None:
+        centre = x[0] + np.mean(x - x[0], axis=0)
+        scale = np.std(x - centre, axis=0)
+        self.kept = np.flatnonzero((scale > 0) & np.isfinite(scale) & np.isfinite(g).all(axis=0))
+        self.centre, self.scale = centre[self.kept], scale[self.kept]
+        self.y = np.ascontiguousarray(((x[:, self.kept] - self.centre) / self.scale).T)
+        self.gy = np.ascontiguousarray((g[:, self.kept] * self.scale).T)
+        self.mixed = False
+        if mix and 1 < len(self.kept):
+            self._uncorrelate()
+
+    def _uncorrelate(self) -> None:
+        values, vectors = np.linalg.eigh(self.y @ self.y.T / self.y.shape[1])
+        if not values[0] > 1e-12 * values[-1] or values[-1] <= CORRELATED * values[0]:
+            return
+        root = np.sqrt(values)
+        self.y = (vectors / root).T @ self.y
+        self.gy = (vectors * root).T @ self.gy
+        self.mixed = True
+
+    def __len__(self) -> int:
+        return len(self.kept)
+
+    def squares(self) -> Array:
+        """(coordinates, N): y_i gy_i + 1, the terms of degree 2 with both indices equal."""
+        return self.y * self.gy + 1
+
+    def linear(self, chosen: Array | None = None) -> Array:
+        """(coordinates, N): the terms of degree 1."""
+        return self.gy if chosen is None else self.gy[chosen]
+
+    def pairs(self, chosen: Array | None = None) -> Array:
+        """The terms of degree 2 over all pairs of the chosen coordinates, (m (m + 1) / 2, N)."""
+        at = range(len(self)) if chosen is None else chosen
+        rows = np.empty((len(at) * (len(at) + 1) // 2, self.y.shape[1]))
+        for row, (i, j) in zip(rows, combinations_with_replacement(at, 2), strict=True):
+            np.multiply(self.y[i], self.gy[j], out=row)
+            if i == j:
+                row += 1
+            else:
+                row += self.y[j] * self.gy[i]
+        return rows
+
+    def triples(self) -> Array:
+        """The terms of degree 3 in all coordinates, (m (m + 1) (m + 2) / 6, N)."""
+        return np.array([self._of(powers) for powers in cubic_powers(len(self))])
+
+    def _of(self, powers: tuple[int, ...]) -> Array:
+        total = np.zeros(self.y.shape[1])
+        for i, a in enumerate(powers):
+            if a == 0:
+                continue
+            rest = np.ones_like(total)
+            for j, b in enumerate(powers):
+                if j != i:
+                    rest = rest * self.y[j] ** b
+            total += rest * a * self.y[i] ** (a - 1) * self.gy[i]
+            if a > 1:
+                total += rest * (a * (a - 1)) * self.y[i] ** (a - 2)
+        return total
+
+
+def cubic_powers(count: int) -> Iterator[tuple[int, ...]]:
+    """The exponents of all monomials of degree 3 in so many variables."""
+    for triple in combinations_with_replacement(range(count), 3):
+        yield tuple(triple.count(i) for i in range(count))
