@@ -201,6 +201,8 @@ FW_API int fw_chain_integrate(fw_chain *chain, double *x, double *v, double step
 
 /* Read access; NULL pointers are skipped. */
 FW_API void fw_chain_point(const fw_chain *chain, double *x, double *gradient, double *log_density);
+/* Where the caller's function was called when it ended the latest call with a status from -1 to -3. */
+FW_API void fw_chain_failed_at(const fw_chain *chain, double *x);
 
 typedef struct fw_summary {
     uint64_t gradients, products; /* calls so far, all phases */

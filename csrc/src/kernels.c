@@ -6,52 +6,106 @@
 
 #define LANES 8
 
-/* The body runs once for each element i, in lane j = i mod LANES. */
+/* A kernel is written once: SWEEP runs its body for every half group of four elements, GET and PUT move one, SUM, ADD
+ * and FOLD keep a sum in eight lanes. Where the compiler has vectors a half group is one vector (an incomplete one is
+ * padded with zeros); elsewhere the body runs element by element in the same order of operations. */
+#if defined(__GNUC__) && !defined(FW_NO_VECTORS)
+#pragma GCC diagnostic ignored "-Wpsabi" /* vectors cross only inlined calls */
+typedef double group __attribute__((vector_size(32), aligned(8), may_alias));
+
+static inline group get(const double *a, size_t m)
+{
+    group x = {0};
+    if (m == 4) return *(const group *)a;
+    for (size_t j = 0; j < m; ++j) x[j] = a[j];
+    return x;
+}
+
+static inline void put(double *a, group x, size_t m)
+{
+    if (m == 4)
+        *(group *)a = x;
+    else
+        for (size_t j = 0; j < m; ++j) a[j] = x[j];
+}
+
+#define HALF(at, half, count, BODY)                                                                                    \
+    {                                                                                                                  \
+        const size_t i = (at), m = (count);                                                                            \
+        enum { h = (half) };                                                                                           \
+        BODY                                                                                                           \
+    }
 #define SWEEP(n, BODY)                                                                                                 \
     do {                                                                                                               \
-        size_t base_ = 0;                                                                                              \
-        for (; base_ + LANES <= (n); base_ += LANES)                                                                   \
-            for (size_t j = 0; j < LANES; ++j) {                                                                       \
-                const size_t i = base_ + j;                                                                            \
-                BODY                                                                                                   \
-            }                                                                                                          \
-        for (size_t j = 0; base_ + j < (n); ++j) {                                                                     \
-            const size_t i = base_ + j;                                                                                \
+        size_t at_ = 0;                                                                                                \
+        for (; at_ + LANES <= (n); at_ += LANES) {                                                                     \
+            HALF(at_, 0, 4, BODY)                                                                                      \
+            HALF(at_ + 4, 1, 4, BODY)                                                                                  \
+        }                                                                                                              \
+        if (at_ + 4 <= (n)) {                                                                                          \
+            HALF(at_, 0, 4, BODY)                                                                                      \
+            if (at_ + 4 < (n)) HALF(at_ + 4, 1, (n) - (at_ + 4), BODY)                                                 \
+        } else if (at_ < (n)) {                                                                                        \
+            HALF(at_, 0, (n)-at_, BODY)                                                                                \
+        }                                                                                                              \
+    } while (0)
+#define GET(a) get((a) + i, m)
+#define PUT(a, x) put((a) + i, x, m)
+#define SUM(s) group s[2] = {{0}}
+#define ADD(s, x) (s)[h] += (x)
+#define LANE(s, j) (s)[(j) / 4][(j) % 4]
+#else
+typedef double group;
+
+#define SWEEP(n, BODY)                                                                                                 \
+    do {                                                                                                               \
+        for (size_t i = 0; i < (n); ++i) {                                                                             \
+            const size_t j = i % LANES;                                                                                \
+            (void)j;                                                                                                   \
             BODY                                                                                                       \
         }                                                                                                              \
     } while (0)
+#define GET(a) (a)[i]
+#define PUT(a, x) (a)[i] = (x)
+#define SUM(s) double s[LANES] = {0}
+#define ADD(s, x) (s)[j] += (x)
+#define LANE(s, j) (s)[j]
+#endif
+#define FOLD(s)                                                                                                        \
+    (((LANE(s, 0) + LANE(s, 4)) + (LANE(s, 2) + LANE(s, 6))) + ((LANE(s, 1) + LANE(s, 5)) + (LANE(s, 3) + LANE(s, 7))))
 
-static inline double fold(const double a[LANES])
+static double fold(const double s[LANES])
 {
-    return ((a[0] + a[4]) + (a[2] + a[6])) + ((a[1] + a[5]) + (a[3] + a[7]));
+    return ((s[0] + s[4]) + (s[2] + s[6])) + ((s[1] + s[5]) + (s[3] + s[7]));
 }
 
 FW_CLONES double fw_dot(size_t n, const double *restrict a, const double *restrict b)
 {
-    double s[LANES] = {0};
-    SWEEP(n, s[j] += a[i] * b[i];);
-    return fold(s);
+    SUM(s);
+    SWEEP(n, ADD(s, GET(a) * GET(b)););
+    return FOLD(s);
 }
 
 FW_CLONES double fw_sum_square_ratio(size_t n, const double *restrict a, const double *restrict b)
 {
+    /* a group beyond the end is 0/0: the last elements go by themselves, in their lanes */
     double s[LANES] = {0};
-    SWEEP(n, s[j] += a[i] / b[i] * a[i];);
+    for (size_t i = 0; i < n; ++i) s[i % LANES] += a[i] / b[i] * a[i];
     return fold(s);
 }
 
 double fw_sum_log(size_t n, const double *restrict a)
 {
     double s[LANES] = {0};
-    SWEEP(n, s[j] += log(a[i]););
+    for (size_t i = 0; i < n; ++i) s[i % LANES] += log(a[i]);
     return fold(s);
 }
 
 int fw_all_finite(size_t n, const double *restrict a)
 {
-    double s[LANES] = {0};
-    SWEEP(n, s[j] += a[i] * 0.0;);
-    return fold(s) == 0.0;
+    SUM(s);
+    SWEEP(n, ADD(s, GET(a) * 0.0););
+    return FOLD(s) == 0.0;
 }
 
 int fw_all_positive(size_t n, const double *restrict a)
@@ -128,40 +182,47 @@ FW_CLONES void fw_kick_drift(size_t n, double kick, const double *restrict c, do
 FW_CLONES void fw_whiten_kick(size_t n, double kick, const double *restrict r, const double *restrict g,
                               double *restrict c, double *restrict w, double sums[3])
 {
-    double ww[LANES] = {0}, wc[LANES] = {0}, cc[LANES] = {0};
-    SWEEP(n, const double e = r[i] * g[i]; const double t = w[i] + kick * e; c[i] = e; w[i] = t; ww[j] += t * t;
-          wc[j] += t * e; cc[j] += e * e;);
-    sums[0] = fold(ww);
-    sums[1] = fold(wc);
-    sums[2] = fold(cc);
+    SUM(ww);
+    SUM(wc);
+    SUM(cc);
+    SWEEP(n, const group e = GET(r) * GET(g); const group t = GET(w) + kick * e; PUT(c, e); PUT(w, t); ADD(ww, t * t);
+          ADD(wc, t * e); ADD(cc, e * e););
+    sums[0] = FOLD(ww);
+    sums[1] = FOLD(wc);
+    sums[2] = FOLD(cc);
 }
 
 FW_CLONES void fw_whiten(size_t n, const double *restrict r, const double *restrict g, double *restrict c,
                          const double *restrict w, double sums[3])
 {
-    double ww[LANES] = {0}, wc[LANES] = {0}, cc[LANES] = {0};
-    SWEEP(n, const double e = r[i] * g[i]; const double t = w[i]; c[i] = e; ww[j] += t * t; wc[j] += t * e;
-          cc[j] += e * e;);
-    sums[0] = fold(ww);
-    sums[1] = fold(wc);
-    sums[2] = fold(cc);
+    SUM(ww);
+    SUM(wc);
+    SUM(cc);
+    SWEEP(n, const group e = GET(r) * GET(g); const group t = GET(w); PUT(c, e); ADD(ww, t * t); ADD(wc, t * e);
+          ADD(cc, e * e););
+    sums[0] = FOLD(ww);
+    sums[1] = FOLD(wc);
+    sums[2] = FOLD(cc);
 }
 
 FW_CLONES void fw_kick(size_t n, double kick, const double *restrict c, double *restrict w, double sums[2])
 {
-    double ww[LANES] = {0}, wc[LANES] = {0};
-    SWEEP(n, const double t = w[i] + kick * c[i]; w[i] = t; ww[j] += t * t; wc[j] += t * c[i];);
-    sums[0] = fold(ww);
-    sums[1] = fold(wc);
+    SUM(ww);
+    SUM(wc);
+    SWEEP(n, const group e = GET(c); const group t = GET(w) + kick * e; PUT(w, t); ADD(ww, t * t); ADD(wc, t * e););
+    sums[0] = FOLD(ww);
+    sums[1] = FOLD(wc);
 }
 
 FW_CLONES void fw_gram2(size_t n, const double *restrict w, const double *restrict c, double sums[3])
 {
-    double ww[LANES] = {0}, wc[LANES] = {0}, cc[LANES] = {0};
-    SWEEP(n, ww[j] += w[i] * w[i]; wc[j] += w[i] * c[i]; cc[j] += c[i] * c[i];);
-    sums[0] = fold(ww);
-    sums[1] = fold(wc);
-    sums[2] = fold(cc);
+    SUM(ww);
+    SUM(wc);
+    SUM(cc);
+    SWEEP(n, const group t = GET(w); const group e = GET(c); ADD(ww, t * t); ADD(wc, t * e); ADD(cc, e * e););
+    sums[0] = FOLD(ww);
+    sums[1] = FOLD(wc);
+    sums[2] = FOLD(cc);
 }
 
 FW_CLONES void fw_kick2(size_t n, double kc, const double *restrict c, double kh, const double *restrict h,
@@ -174,7 +235,7 @@ FW_CLONES double fw_ratio_dot(size_t n, const double *restrict a, const double *
                               const double *restrict delta)
 {
     double s[LANES] = {0};
-    SWEEP(n, s[j] += a[i] * (b[i] / delta[i]););
+    for (size_t i = 0; i < n; ++i) s[i % LANES] += a[i] * (b[i] / delta[i]);
     return fold(s);
 }
 
@@ -192,7 +253,7 @@ FW_CLONES double fw_root_ratio_dot(size_t n, const double *restrict u, const dou
                                    const double *restrict delta)
 {
     double s[LANES] = {0};
-    SWEEP(n, s[j] += u[i] / sqrt(delta[i]) * z[i];);
+    for (size_t i = 0; i < n; ++i) s[i % LANES] += u[i] / sqrt(delta[i]) * z[i];
     return fold(s);
 }
 
@@ -225,42 +286,55 @@ FW_CLONES void fw_gather(size_t n, double count, const double *restrict a, doubl
 FW_CLONES void fw_add_pair(size_t n, const double *restrict a, const double *restrict b, double *restrict out,
                            double sums[2])
 {
-    double ab[LANES] = {0}, aa[LANES] = {0};
-    SWEEP(n, ab[j] += a[i] * b[i]; aa[j] += a[i] * a[i]; out[i] = a[i] + b[i];);
-    sums[0] = fold(ab);
-    sums[1] = fold(aa);
+    SUM(ab);
+    SUM(aa);
+    SWEEP(n, const group x = GET(a); const group y = GET(b); ADD(ab, x * y); ADD(aa, x * x); PUT(out, x + y););
+    sums[0] = FOLD(ab);
+    sums[1] = FOLD(aa);
 }
 
 FW_CLONES void fw_seam(size_t n, const double *restrict fa, const double *restrict la, const double *restrict pa, const double *restrict ra,
                        const double *restrict fb, const double *restrict lb, const double *restrict pb, const double *restrict rb, double *restrict out,
                        double sums[6])
 {
-    double s0[LANES] = {0}, s1[LANES] = {0}, s2[LANES] = {0}, s3[LANES] = {0}, s4[LANES] = {0}, s5[LANES] = {0};
-    SWEEP(n, const double rho = ra[i] + rb[i]; const double near_b = ra[i] + pb[i]; const double near_a = rb[i] + pa[i];
-          s0[j] += fa[i] * rho; s1[j] += lb[i] * rho; s2[j] += fa[i] * near_b; s3[j] += fb[i] * near_b;
-          s4[j] += la[i] * near_a; s5[j] += lb[i] * near_a; out[i] = rho;);
-    sums[0] = fold(s0);
-    sums[1] = fold(s1);
-    sums[2] = fold(s2);
-    sums[3] = fold(s3);
-    sums[4] = fold(s4);
-    sums[5] = fold(s5);
+    SUM(s0);
+    SUM(s1);
+    SUM(s2);
+    SUM(s3);
+    SUM(s4);
+    SUM(s5);
+    SWEEP(n, const group f_a = GET(fa); const group l_b = GET(lb); const group r_a = GET(ra); const group r_b = GET(rb);
+          const group rho = r_a + r_b; const group near_b = r_a + GET(pb); const group near_a = r_b + GET(pa);
+          ADD(s0, f_a * rho); ADD(s1, l_b * rho); ADD(s2, f_a * near_b); ADD(s3, GET(fb) * near_b);
+          ADD(s4, GET(la) * near_a); ADD(s5, l_b * near_a); PUT(out, rho););
+    sums[0] = FOLD(s0);
+    sums[1] = FOLD(s1);
+    sums[2] = FOLD(s2);
+    sums[3] = FOLD(s3);
+    sums[4] = FOLD(s4);
+    sums[5] = FOLD(s5);
 }
 
 FW_CLONES void fw_seam_steps(size_t n, const double *restrict fa, const double *restrict la, const double *restrict ra,
                              const double *restrict edge, const double *restrict fb, const double *restrict lb,
                              const double *restrict rb, double *restrict out, double sums[6])
 {
-    double s0[LANES] = {0}, s1[LANES] = {0}, s2[LANES] = {0}, s3[LANES] = {0}, s4[LANES] = {0}, s5[LANES] = {0};
-    SWEEP(n, const double inside = ra[i] + rb[i] + edge[i]; const double rho = inside + 0.5 * (fa[i] + lb[i]);
-          const double near_b = ra[i] + edge[i] + 0.5 * (fa[i] + fb[i]);
-          const double near_a = rb[i] + edge[i] + 0.5 * (la[i] + lb[i]); s0[j] += fa[i] * rho; s1[j] += lb[i] * rho;
-          s2[j] += fa[i] * near_b; s3[j] += fb[i] * near_b; s4[j] += la[i] * near_a; s5[j] += lb[i] * near_a;
-          out[i] = inside;);
-    sums[0] = fold(s0);
-    sums[1] = fold(s1);
-    sums[2] = fold(s2);
-    sums[3] = fold(s3);
-    sums[4] = fold(s4);
-    sums[5] = fold(s5);
+    SUM(s0);
+    SUM(s1);
+    SUM(s2);
+    SUM(s3);
+    SUM(s4);
+    SUM(s5);
+    SWEEP(n, const group f_a = GET(fa); const group l_b = GET(lb); const group f_b = GET(fb); const group l_a = GET(la);
+          const group r_a = GET(ra) + GET(edge); const group r_b = GET(rb); const group inside = r_a + r_b;
+          const group rho = inside + 0.5 * (f_a + l_b); const group near_b = r_a + 0.5 * (f_a + f_b);
+          const group near_a = r_b + GET(edge) + 0.5 * (l_a + l_b); ADD(s0, f_a * rho); ADD(s1, l_b * rho);
+          ADD(s2, f_a * near_b); ADD(s3, f_b * near_b); ADD(s4, l_a * near_a); ADD(s5, l_b * near_a);
+          PUT(out, inside););
+    sums[0] = FOLD(s0);
+    sums[1] = FOLD(s1);
+    sums[2] = FOLD(s2);
+    sums[3] = FOLD(s3);
+    sums[4] = FOLD(s4);
+    sums[5] = FOLD(s5);
 }

@@ -4,9 +4,25 @@
 #include <stdlib.h>
 #include <string.h>
 
+#include "kernels.h"
 #include "maps.h"
 
 #define LANES 8
+
+/* The body runs once for each element i, in lane j = i mod LANES, as in kernels.c. */
+#define SWEEP(n, ...)                                                                                                  \
+    do {                                                                                                               \
+        size_t base_ = 0;                                                                                              \
+        for (; base_ + LANES <= (n); base_ += LANES)                                                                   \
+            for (size_t j = 0; j < LANES; ++j) {                                                                       \
+                const size_t i = base_ + j;                                                                            \
+                __VA_ARGS__                                                                                            \
+            }                                                                                                          \
+        for (size_t j = 0; base_ + j < (n); ++j) {                                                                     \
+            const size_t i = base_ + j;                                                                                \
+            __VA_ARGS__                                                                                                \
+        }                                                                                                              \
+    } while (0)
 
 struct fw_maps {
     size_t count, free, natural;
@@ -41,7 +57,7 @@ static size_t free_of(const fw_map *map)
     return map->size;
 }
 
-static int finite(double a)
+static int is_finite(double a)
 {
     return fabs(a) <= DBL_MAX;
 }
@@ -56,7 +72,7 @@ static int sound(const fw_map *map)
     const int high = map->kind == FW_BELOW || map->kind == FW_BETWEEN;
     if ((low && !map->low) || (high && !map->high)) return 0;
     for (size_t i = 0; i < map->size && (low || high); ++i)
-        if ((low && !finite(map->low[i])) || (high && !finite(map->high[i])) ||
+        if ((low && !is_finite(map->low[i])) || (high && !is_finite(map->high[i])) ||
             (low && high && !(map->low[i] < map->high[i])))
             return 0;
     if (map->kind == FW_INCREASING && map->low && map->high && !(*map->low < *map->high)) return 0;
@@ -97,13 +113,13 @@ static void set_bounds(fw_maps *maps, size_t count, const fw_map *list)
     for (size_t k = 0; k < count; ++k) {
         const fw_map *map = &list[k];
         for (size_t i = 0; i < map->size && elementwise(map->kind); ++i) {
-            double *slope = &maps->slope[at + i];
-            *slope = 1.0;
+            maps->slope[at + i] = 1.0;
+            maps->turn[at + i] = map->kind == FW_FREE ? 0.0 : 1.0; /* of FW_BETWEEN: set by apply */
             if (map->kind == FW_ABOVE || map->kind == FW_BETWEEN) maps->low[at + i] = map->low[i];
             if (map->kind == FW_BELOW || map->kind == FW_BETWEEN) maps->high[at + i] = map->high[i];
             if (map->kind != FW_BETWEEN) continue;
             double width = map->high[i] - map->low[i], twice = 1.0;
-            if (!finite(width)) {
+            if (!is_finite(width)) {
                 width = 0.5 * map->high[i] - 0.5 * map->low[i];
                 twice = 2.0;
             }
@@ -178,38 +194,74 @@ static double fold(const double a[LANES])
     return ((a[0] + a[4]) + (a[2] + a[6])) + ((a[1] + a[5]) + (a[3] + a[7]));
 }
 
-/* x = bound + sign exp(y), sign +1 (FW_ABOVE) or -1 (FW_BELOW). */
-static double one_sided(size_t n, double sign, const double *y, const double *bound, double *x, double *slope,
-                        double *turn)
+/* x = bound + sign e, slope = sign e, e in slope on entry. Returns the sum of y; *odd: is some x on its bound, or not
+ * finite? */
+FW_CLONES static double finish_one_sided(size_t n, double sign, const double *restrict y,
+                                         const double *restrict bound, double *restrict x, double *restrict slope,
+                                         int *odd)
 {
-    double sums[LANES] = {0};
-    for (size_t i = 0; i < n; ++i) {
-        const double e = exp(y[i]), t = bound[i] + sign * e;
-        x[i] = t == bound[i] ? nextafter(t, sign * INFINITY) : fabs(t) <= DBL_MAX ? t : sign * DBL_MAX;
-        slope[i] = sign * e;
-        turn[i] = 1.0;
-        sums[i % LANES] += y[i];
-    }
+    double sums[LANES] = {0}, nearest[LANES], farthest[LANES] = {0};
+    for (size_t j = 0; j < LANES; ++j) nearest[j] = INFINITY;
+    SWEEP(n, const double e = sign * slope[i], t = bound[i] + e, off = fabs(t - bound[i]); x[i] = t; slope[i] = e;
+          sums[j] += y[i]; nearest[j] = off < nearest[j] ? off : nearest[j];
+          farthest[j] = off > farthest[j] ? off : farthest[j];);
+    *odd = 0;
+    for (size_t j = 0; j < LANES; ++j)
+        if (!(nearest[j] > 0.0) || farthest[j] > DBL_MAX) *odd = 1;
     return fold(sums);
 }
 
-/* From the nearer bound, so that a value keeps its digits beside either of them. */
-static double between(const fw_maps *maps, size_t n, size_t at, const double *y, double *x)
+/* x = bound + sign exp(y), sign +1 (FW_ABOVE) or -1 (FW_BELOW). */
+static double one_sided(size_t n, double sign, const double *y, const double *bound, double *x, double *slope)
 {
-    double sums[LANES] = {0};
-    for (size_t i = 0; i < n; ++i) {
-        const double low = maps->low[at + i], high = maps->high[at + i];
-        const double width = maps->width[at + i], twice = maps->twice[at + i];
-        const double size = fabs(y[i]), t = exp(-size), share = t / (1.0 + t);
-        double value = y[i] < 0.0 ? low + twice * (width * share) : high - twice * (width * share);
-        if (!(value > low)) value = nextafter(low, INFINITY);
-        if (!(value < high)) value = nextafter(high, -INFINITY);
-        x[i] = value;
-        maps->slope[at + i] = twice * (width * (share / (1.0 + t)));
-        maps->turn[at + i] = (y[i] < 0.0 ? 1.0 : -1.0) * ((1.0 - t) / (1.0 + t));
-        sums[i % LANES] -= size + 2.0 * log1p(t);
+    int odd;
+    for (size_t i = 0; i < n; ++i) slope[i] = exp(y[i]);
+    const double sum = finish_one_sided(n, sign, y, bound, x, slope, &odd);
+    for (size_t i = 0; odd && i < n; ++i) {
+        if (x[i] == bound[i]) x[i] = nextafter(x[i], sign * INFINITY);
+        else if (fabs(x[i]) > DBL_MAX) x[i] = sign * DBL_MAX;
     }
-    return fold(sums);
+    return sum;
+}
+
+/* From the nearer bound, so that a value keeps its digits beside either of them. e = exp(-|y|) in slope on entry. The
+ * logarithms of 1 + e, at most log 2 each, are taken of products of up to LANES * 100 of them. */
+FW_CLONES static double finish_between(size_t n, const double *restrict y, const double *restrict low,
+                                       const double *restrict high, const double *restrict width,
+                                       const double *restrict twice, double *restrict x, double *restrict slope,
+                                       double *restrict turn)
+{
+    double sums[LANES] = {0}, total = 0.0;
+    for (size_t begin = 0; begin < n; begin += LANES * 100) {
+        const size_t end = n - begin < LANES * 100 ? n : begin + LANES * 100;
+        double products[LANES] = {1.0, 1.0, 1.0, 1.0, 1.0, 1.0, 1.0, 1.0};
+        for (size_t i = begin; i < end; ++i) {
+            const double e = slope[i], whole = 1.0 + e, share = e / whole, off = twice[i] * (width[i] * share);
+            double value = y[i] < 0.0 ? low[i] + off : high[i] - off;
+            value = value > low[i] ? value : nextafter(low[i], INFINITY);
+            x[i] = value < high[i] ? value : nextafter(high[i], -INFINITY);
+            slope[i] = twice[i] * (width[i] * (share / whole));
+            turn[i] = (y[i] < 0.0 ? 1.0 : -1.0) * ((1.0 - e) / whole);
+            sums[i % LANES] -= fabs(y[i]);
+            products[i % LANES] *= whole;
+        }
+        total -= 2.0 * log(((products[0] * products[4]) * (products[2] * products[6])) *
+                           ((products[1] * products[5]) * (products[3] * products[7])));
+    }
+    return total + fold(sums);
+}
+
+static double between(fw_maps *maps, size_t n, size_t at, const double *y, double *x)
+{
+    for (size_t i = 0; i < n; ++i) maps->slope[at + i] = exp(-fabs(y[i]));
+    return finish_between(n, y, maps->low + at, maps->high + at, maps->width + at, maps->twice + at, x,
+                          maps->slope + at, maps->turn + at);
+}
+
+FW_CLONES static void pull_with_turn(size_t n, const double *restrict g, const double *restrict slope,
+                                     const double *restrict turn, double *restrict out)
+{
+    for (size_t i = 0; i < n; ++i) out[i] = g[i] * slope[i] + turn[i];
 }
 
 double fw_maps_apply(fw_maps *maps, const double *y, double *x)
@@ -223,10 +275,10 @@ double fw_maps_apply(fw_maps *maps, const double *y, double *x)
         switch (b->kind) {
         case FW_FREE: memcpy(to, y + at, b->size * sizeof *x); break;
         case FW_ABOVE:
-            total += one_sided(b->size, 1.0, y + at, maps->low + at, to, maps->slope + at, maps->turn + at);
+            total += one_sided(b->size, 1.0, y + at, maps->low + at, to, maps->slope + at);
             break;
         case FW_BELOW:
-            total += one_sided(b->size, -1.0, y + at, maps->high + at, to, maps->slope + at, maps->turn + at);
+            total += one_sided(b->size, -1.0, y + at, maps->high + at, to, maps->slope + at);
             break;
         case FW_BETWEEN: total += between(maps, b->size, at, y + at, to); break;
         default:
@@ -234,7 +286,7 @@ double fw_maps_apply(fw_maps *maps, const double *y, double *x)
             if (b->kind == FW_CORRELATION && fw_correlation_singular(b->size, b->scratch)) maps->outside = 1;
         }
     }
-    if (!finite(total)) maps->outside = 1;
+    if (!is_finite(total)) maps->outside = 1;
     return total;
 }
 
@@ -254,7 +306,7 @@ void fw_maps_pull(fw_maps *maps, const double *g, int with_jacobian, double *out
         } else if (!elementwise(b->kind)) {
             fw_joint_pull(b, from, with_jacobian, to);
         } else if (with_jacobian) {
-            for (size_t i = 0; i < b->size; ++i) to[i] = from[i] * slope[i] + turn[i];
+            pull_with_turn(b->size, from, slope, turn, to);
         } else {
             for (size_t i = 0; i < b->size; ++i) to[i] = from[i] * slope[i];
         }
@@ -353,7 +405,7 @@ int fw_mapped_density(size_t d, const double *y, double *value, double *gradient
     if (maps->outside) return FW_OUTSIDE;
     maps->g[0] = maps->g[last] = mark;
     const int answer = maps->target.density(maps->natural, maps->x, value, maps->g, maps->target.density_context);
-    if (answer != 0 || !finite(*value)) return answer;
+    if (answer != 0 || !is_finite(*value)) return answer;
     if (isnan(mark) && (same_bits(&maps->g[0], &mark) || same_bits(&maps->g[last], &mark))) return 0;
     *value += log_jacobian;
     fw_maps_pull(maps, maps->g, 1, gradient);
@@ -375,7 +427,7 @@ int fw_mapped_product(size_t d, const double *y, const double *p, double *produc
             const int answer =
                 maps->target.density(maps->natural, maps->x, &value, maps->g, maps->target.density_context);
             if (answer != 0) return answer;
-            if (!finite(value)) return FW_OUTSIDE;
+            if (!is_finite(value)) return FW_OUTSIDE;
             memcpy(maps->at, y, d * sizeof *y);
             maps->known = 1;
         }
