@@ -122,7 +122,7 @@ def cut_off(s: float) -> fw.Density:
 
 
 def shifted(s: float) -> fw.Density:
-    """Means of many data, computed from raw sums, so that seven digits cancel; coordinates far from 0 in their scale."""
+    """Means of many data, computed from raw sums, so that seven digits cancel; the coordinates far from 0."""
     n, centre = 4000.0, 300.0
 
     def f(x):
@@ -243,7 +243,7 @@ def missing_jacobian() -> fw.Density:
 
 def forgotten_prior() -> fw.Density:
     """The gradient lacks the prior of the log spread, -x^2/2."""
-    return _regression(lambda g, x: g + [0.0, x[1]])
+    return _regression(lambda g, x: g + np.array([0.0, x[1]]))
 
 
 def single_precision() -> fw.Density:

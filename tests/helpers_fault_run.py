@@ -20,11 +20,12 @@ from collections import Counter
 from concurrent.futures import ProcessPoolExecutor
 from pathlib import Path
 
+from run_models import START, Boom, curved
+
 import fellwalk as fw
 from fellwalk.driver import Driver
 from fellwalk.errors import WorkerError
 from fellwalk.pools import _begin_worker
-from run_models import START, Boom, curved
 
 BLOCK, FAULTS = 3, 100
 OPTIONS = {"settle": 60, "keep": 540, "chains": 10, "seed": 20, "path": fw.Jittered(6)}  # 200 blocks a chain

@@ -19,9 +19,9 @@ def dask():
     """An executor on a Dask cluster of two worker processes."""
     import distributed
 
-    with distributed.LocalCluster(n_workers=2, threads_per_worker=1, dashboard_address=":0") as cluster:
-        with distributed.Client(cluster) as client, client.get_executor() as executor:
-            yield executor
+    with distributed.LocalCluster(n_workers=2, threads_per_worker=1, dashboard_address=":0") as cluster, \
+            distributed.Client(cluster) as client, client.get_executor() as executor:
+        yield executor
 
 
 def main(kind, record):

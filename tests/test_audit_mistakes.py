@@ -53,12 +53,13 @@ def test_a_compiled_density_that_is_right():
     assert "function" not in found.seconds
 
 
-# ---- how small a mistake is seen -------------------------------------------------------------------------------------------
+# ---- how small a mistake is seen -----------------------------------------------------------------------------------
 
 
 @pytest.mark.parametrize(("size", "weight"), [(3e-3, "mistake"), (1e-5, "caution"), (0.0, None)])
 def test_small_errors_are_told_from_rounding(size, weight):
-    """A gradient off by a share of `size`, in a log density whose own rounding is 1e-12: three digits refuse, five warn."""
+    """A gradient off by a share of `size`, in a log density whose own rounding is 1e-12: three digits refuse,
+    five warn."""
     def f(x):
         return 1e4 - 0.5 * float(x @ x), -x * [1.0, 1.0 + size]
 
@@ -70,7 +71,7 @@ def test_small_errors_are_told_from_rounding(size, weight):
 @pytest.mark.parametrize("seed", range(8))
 @pytest.mark.parametrize("digits", [1e-6, 1e-3])
 def test_noise_is_not_taken_for_a_mistake(digits, seed):
-    """A log density with noise that depends on the position alone, as of a solver with a tolerance; the exact gradient."""
+    """A log density with noise that depends on the position alone, as of a solver with a tolerance."""
     def f(x):
         own = np.random.default_rng(list(x.tobytes()))
         return -0.5 * float(x @ x) + digits * own.standard_normal(), -x
@@ -96,7 +97,7 @@ def test_one_wrong_entry_among_many(d):
             fw.run(fw.Density(f, d, start=start), chains=1, keep=4, settle=5, progress="off")
 
 
-# ---- what a run does -------------------------------------------------------------------------------------------------------
+# ---- what a run does -----------------------------------------------------------------------------------------------
 
 
 @pytest.mark.parametrize("name", [n for n, planted in audit_cases.PLANTED.items() if planted.small])
@@ -129,7 +130,8 @@ def test_a_run_of_a_correct_density_is_not_refused(name):
 
 
 def test_draws_do_not_depend_on_the_audit():
-    runs = [fw.run(audit_cases.CORRECT["logistic"](1.0), keep=20, chains=2, settle=20, seed=3, audit=audit, progress="off")
+    runs = [fw.run(audit_cases.CORRECT["logistic"](1.0), keep=20, chains=2, settle=20, seed=3, audit=audit,
+                   progress="off")
             for audit in (True, False)]
     np.testing.assert_array_equal(runs[0].draws, runs[1].draws)
 

@@ -132,7 +132,8 @@ def test_wrong_values_get_a_sentence(options, sentence, tmp_path, capsys):
 def test_an_exception_of_the_model_is_told_with_its_place(tmp_path, capsys):
     model = tmp_path / "model.py"
     model.write_text("import numpy as np\nimport fellwalk as fw\ncalls = [0]\n"
-                     "def f(x):\n    calls[0] += 1\n    if calls[0] > 300:\n        raise ZeroDivisionError('by nothing')\n"
+                     "def f(x):\n    calls[0] += 1\n    if calls[0] > 300:\n"
+                     "        raise ZeroDivisionError('by nothing')\n"
                      "    return -0.5 * float(x @ x), -x\ndensity = fw.Density(f, 2, start=[0.1, 0.2])\n")
     status, _, err = inside(capsys, "run", f"{model}:density", "--record", tmp_path / "a.fell", *SHORT)
     assert status == 1
@@ -218,22 +219,21 @@ def test_few_draws_are_told_without_a_verdict(tmp_path, capsys):
     assert "Verdict" not in out
 
 
-def test_a_reader_who_has_seen_enough(record):
-    """`fellwalk report | head -1`"""
-    reader = subprocess.Popen(["head", "-c", "10"], stdin=subprocess.PIPE, stdout=subprocess.DEVNULL)
-    reader.stdin.close()
-    reader.wait()
-    done = subprocess.run(f"{sys.executable} -m fellwalk report {record} | head -c 10; echo ${{PIPESTATUS[0]}}", shell=True,
-                          executable="/bin/bash", capture_output=True, text=True, timeout=60, check=False)
-    assert "Traceback" not in done.stderr
-    assert "Exception" not in done.stderr
+def test_a_reader_who_has_gone(record):
+    """As in `fellwalk report FILE | head -1`, when head has ended before anything is written."""
+    read, write = os.pipe()
+    os.close(read)
+    done = subprocess.run([sys.executable, "-m", "fellwalk", "report", record], stdout=write, stderr=subprocess.PIPE,
+                          text=True, timeout=60, check=False)
+    os.close(write)
+    assert (done.returncode, done.stderr) == (1, "")
 
 
 def test_the_demo(tmp_path):
     status, out, err = fellwalk("demo", cwd=tmp_path)
     assert status == 0, err
     assert "Verdict: fit for use." in out
-    assert f"Saved: {'demo.fell'}" in out
+    assert "Saved: demo.fell" in out
     assert (tmp_path / "demo.fell").exists()
     status, out, err = fellwalk("demo", "--folder", tmp_path / "none")
     assert (status, "No such file or directory" in err) == (1, True)

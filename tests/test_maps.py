@@ -1,7 +1,7 @@
 """The maps of bounded parameters, against independent formulas in many digits, to the edges of double precision.
 
-The formulas here are the textbooks', not the ones the core computes with: shares as an additive softmax of an orthonormal
-basis made by Gram-Schmidt, gaps by plain sums, correlations by the recursion of partial correlations on R itself
+The formulas here are the textbooks', not the ones the core computes with: shares as a softmax over an orthonormal basis
+made by Gram-Schmidt, gaps by plain sums, correlations by the recursion of partial correlations on R itself
 (Lewandowski, Kurowicka & Joe 2009, eq. 2). Log-Jacobians are log |det| of derivatives taken in mpmath, or, where the
 matrix is large, of its Taylor arithmetic; nothing is taken from the code that is tested.
 """
@@ -21,7 +21,7 @@ EPS = 2.0**-52
 TINY = 5e-324
 
 
-# ---- formulas in many digits ------------------------------------------------------------------------------------------
+# ---- formulas in many digits ---------------------------------------------------------------------------------------
 
 
 def exact_basis(n):
@@ -104,11 +104,12 @@ def one(kind, y):
     return parameters, parameters.natural(y), float(parameters.log_jacobian(y))
 
 
-# ---- elementwise kinds ---------------------------------------------------------------------------------------------------
+# ---- elementwise kinds ---------------------------------------------------------------------------------------------
 
 bound = st.one_of(st.sampled_from([0.0, 1.0, -1.0, 1e-300, -1e300, 2.385, 1e-308, TINY]),
                   st.floats(-1e300, 1e300, allow_nan=False))
-coordinate = st.one_of(st.floats(-40.0, 40.0), st.floats(-700.0, 700.0), st.sampled_from([0.0, -0.0, 1e-300, 36.7, -36.7]))
+coordinate = st.one_of(st.floats(-40.0, 40.0), st.floats(-700.0, 700.0),
+                       st.sampled_from([0.0, -0.0, 1e-300, 36.7, -36.7]))
 
 
 def ulps(x, n):
@@ -170,7 +171,7 @@ def test_bounds_an_ulp_apart_beyond_the_largest_difference_and_subnormal():
 
 @given(y=st.floats(-700.0, 700.0))
 def test_there_and_back_at_zero(y):
-    """exp and log with no bound to hide digits: the error of y is that of one rounding of x, eps, and of the logarithm."""
+    """exp and log with no bound to hide digits: the error of y is one rounding of x, eps, and one of the logarithm."""
     parameters, x, _ = one(fw.positive(), y)
     assert abs(parameters.free(x)[0] - y) <= 2 * EPS * (1 + abs(y))
 
@@ -186,7 +187,8 @@ def test_back_and_there(exponent, low):
     assert abs(again[0] - x) <= 4 * EPS * (1 + abs(math.log(x - low))) * (x - low) + ulps(x, 1) + ulps(low, 1)
 
 
-@given(share=st.floats(1e-16, 1.0), low=st.sampled_from([0.0, -1.0, 3.25, -1e300]), high=st.sampled_from([4.0, 1e10, 1e300]))
+@given(share=st.floats(1e-16, 1.0), low=st.sampled_from([0.0, -1.0, 3.25, -1e300]),
+       high=st.sampled_from([4.0, 1e10, 1e300]))
 def test_between_back_and_there(share, low, high):
     x = low + (high - low) * share
     if not low < x < high:
@@ -200,7 +202,7 @@ def test_between_back_and_there(share, low, high):
     assert abs(parameters.natural(y)[0] - x) <= 4 * EPS * (1 + abs(y[0])) * edge + ulps(x, 2) + ulps(low, 1)
 
 
-# ---- shares ----------------------------------------------------------------------------------------------------------------
+# ---- shares --------------------------------------------------------------------------------------------------------
 
 wild = st.one_of(st.floats(-3.0, 3.0), st.floats(-150.0, 150.0))
 
@@ -214,7 +216,7 @@ def test_shares(y):
     assert np.all(x < 1)
     assert abs(x.sum() - 1) <= 2 * EPS * len(x)
     for found, true in zip(x, exact, strict=True):
-        # z is a sum of len(y) terms, each to 2 roundings, so off by that times eps times its size; exp turns it relative
+        # z is a sum of len(y) terms, each to 2 roundings, off by that times eps times its size; exp turns it relative
         close(found, true, 2 * (len(y) + 3) * EPS * size, 2 * TINY)
     true = mp.fsum(mp.log(v) for v in exact) + mp.log(len(x)) / 2
     close(log_jacobian, true, 0, 2 * (len(y) + 3) * EPS * size * len(x))
@@ -239,7 +241,7 @@ def test_small_shares_come_back(share, place):
     np.testing.assert_allclose(again, x, rtol=8 * EPS * (1 + abs(math.log(share))))
 
 
-# ---- increasing ------------------------------------------------------------------------------------------------------------
+# ---- increasing ----------------------------------------------------------------------------------------------------
 
 SIDES = [(None, None), (-2.385, None), (None, 3.25), (-2.385, 3.25), (0.0, 1.0)]
 
@@ -253,9 +255,10 @@ def test_increasing(low, high, y):
     assert high is None or x[-1] < high
     exact = exact_increasing([mp.mpf(v) for v in y], *(None if b is None else mp.mpf(b) for b in (low, high)))
     largest = max([abs(float(v)) for v in exact] + [abs(b) for b in (low, high) if b is not None] + [abs(y[0])])
+    exponents = sum(map(abs, y)) if high is not None and low is not None else 0.0
     for found, true in zip(x, exact, strict=True):
         # each sum rounds at its own size; equal neighbours are moved apart by an ulp, which can add up
-        close(found, true, 0, 4 * (len(y) + 2) * EPS * (largest + sum(map(abs, y)) * (high is not None and low is not None)))
+        close(found, true, 0, 4 * (len(y) + 2) * EPS * (largest + exponents))
 
 
 @pytest.mark.parametrize(("low", "high"), SIDES)
@@ -287,7 +290,7 @@ def test_increasing_there_and_back(low, high, y):
     assert np.abs(parameters.free(x) - y).max() <= room
 
 
-# ---- correlations ----------------------------------------------------------------------------------------------------------
+# ---- correlations --------------------------------------------------------------------------------------------------
 
 
 @given(rows=st.integers(2, 5), data=st.data())
@@ -300,7 +303,8 @@ def test_correlation(rows, data):
     assert np.all(np.diagonal(full) == 1)
     assert np.array_equal(full, full.T)
     assert np.all(np.abs(x) < 1)
-    exact = mp.fsum((rows - k) * mp.log(mp.sech(mp.mpf(y[i * (i - 1) // 2 + k]))) for i in range(rows) for k in range(i))
+    exact = mp.fsum((rows - k) * mp.log(mp.sech(mp.mpf(y[i * (i - 1) // 2 + k])))
+                    for i in range(rows) for k in range(i))
     close(log_jacobian, exact, 1e-14, 1e-14)
 
 
@@ -327,7 +331,7 @@ def test_correlations_never_reach_one(y):
     assert np.isfinite(log_jacobian)
 
 
-# ---- what the core does with gradients -----------------------------------------------------------------------------------
+# ---- what the core does with gradients -----------------------------------------------------------------------------
 
 EVERYTHING = fw.Parameters(
     slope=fw.free(2), rate=fw.positive(2), late=fw.positive(above=None, below=2.0), angle=fw.between(0.0, 2.5),
@@ -413,7 +417,7 @@ def test_many_points_at_once_are_those_one_by_one():
 
 
 def test_nearly_singular_correlations_are_outside():
-    """Where the maps let a function be called, Cholesky succeeds on the rounded matrix; further on nothing is called."""
+    """Where the maps let a function be called, Cholesky succeeds on the rounded matrix; beyond nothing is called."""
     rng = np.random.default_rng(8)
     refused = 0
     for size in (1.0, 5.0, 9.0, 15.0, 40.0):

@@ -47,8 +47,8 @@ def test_lines_tell_draws_acceptance_failures_settling_and_time_left(monkeypatch
     clock.now += 10
     lines.update(0, "keep", 50, facts(40))
     assert out.getvalue().splitlines()[-1] == (
-        "fellwalk: kept 50 of 200 draws after 16 s; acceptance 0.50, failed steps 1, 1 of 2 chains settling; about 30 s "
-        "left")
+        "fellwalk: kept 50 of 200 draws after 16 s; acceptance 0.50, failed steps 1, 1 of 2 chains settling; about "
+        "30 s left")
     lines.update(1, "keep", 100, facts(100))
     lines.update(0, "keep", 100, facts(50))
     assert "kept 200 of 200 draws" in out.getvalue().splitlines()[-1]

@@ -104,7 +104,8 @@ def test_a_second_ctrl_c_abandons_what_is_in_hand(executor, tmp_path, expected):
     """The density hangs for 20 s (in threads, which cannot be interrupted in a call: 2 s) when told to."""
     record = tmp_path / "a.fell"
     process = started(record, executor, "hanging_density",
-                      env={**os.environ, "HANG": f"{tmp_path}/hang", "HANG_SECONDS": "2" if executor == "threads" else "20"})
+                      env={**os.environ, "HANG": f"{tmp_path}/hang",
+                           "HANG_SECONDS": "2" if executor == "threads" else "20"})
     wait_for(record, "settle", process=process)
     (tmp_path / "hang").touch()
     while (tmp_path / "hang").exists():

@@ -351,6 +351,11 @@ void fw_chain_point(const fw_chain *chain, double *x, double *gradient, double *
     if (log_density) *log_density = chain->value;
 }
 
+void fw_chain_failed_at(const fw_chain *chain, double *x)
+{
+    memcpy(x, chain->walk.failed_at, chain->walk.d * sizeof(double));
+}
+
 void fw_chain_summary(const fw_chain *chain, fw_summary *out)
 {
     const fw_learn *learn = &chain->learn;

@@ -202,9 +202,14 @@ FW_CLONES static double finish_one_sided(size_t n, double sign, const double *re
 {
     double sums[LANES] = {0}, nearest[LANES], farthest[LANES] = {0};
     for (size_t j = 0; j < LANES; ++j) nearest[j] = INFINITY;
-    SWEEP(n, const double e = sign * slope[i], t = bound[i] + e, off = fabs(t - bound[i]); x[i] = t; slope[i] = e;
-          sums[j] += y[i]; nearest[j] = off < nearest[j] ? off : nearest[j];
-          farthest[j] = off > farthest[j] ? off : farthest[j];);
+    for (size_t i = 0; i < n; ++i) {
+        const double e = sign * slope[i];
+        slope[i] = e;
+        x[i] = bound[i] + e;
+    }
+    SWEEP(n, sums[j] += y[i];);
+    SWEEP(n, const double off = fabs(x[i] - bound[i]); nearest[j] = fmin(nearest[j], off);
+          farthest[j] = fmax(farthest[j], off););
     *odd = 0;
     for (size_t j = 0; j < LANES; ++j)
         if (!(nearest[j] > 0.0) || farthest[j] > DBL_MAX) *odd = 1;

@@ -88,14 +88,55 @@ cdef void *compiled_pointer(object function, str wanted, str what, void **contex
     return PyCapsule_GetPointer(capsule, name)
 
 
+# ---- what was not written, and what was called -----------------------------------------------------------------------
+
+cdef double mark() noexcept nogil:
+    """A NaN that arithmetic does not produce."""
+    cdef uint64_t bits = 0x7ff8f311a1c0ffee
+    cdef double x
+    memcpy(&x, &bits, sizeof(double))
+    return x
+
+
+UNWRITTEN = mark()
+
+
+def is_unwritten(double x):
+    """Is x the NaN that stands where nothing has been written yet?"""
+    cdef double marked = mark()
+    return memcmp(&x, &marked, sizeof(double)) == 0
+
+
+cdef struct calls:
+    fw_density density
+    void *density_context
+    fw_hessian_product product
+    void *product_context
+    uint64_t gradients, products
+
+
+cdef int counted_density(size_t d, const double *x, double *value, double *gradient, void *context) noexcept nogil:
+    cdef calls *user = <calls *>context
+    user.gradients += 1
+    return user.density(d, x, value, gradient, user.density_context)
+
+
+cdef int counted_product(size_t d, const double *x, const double *p, double *product, void *context) noexcept nogil:
+    cdef calls *user = <calls *>context
+    user.products += 1
+    return user.product(d, x, p, product, user.product_context)
+
+
 # ---- Python functions of the user ------------------------------------------------------------------------------------
 
 cdef class Target:
     """The functions of one chain, with the arrays that Python functions are called with.
 
-    error holds the exception that a Python function raised until the call that caused it takes it out.
+    error holds the exception that a Python function raised until the call that caused it takes it out. gradients and
+    products count the calls really made, those of abandoned transitions included.
     """
     cdef fw_target c
+    cdef calls user
     cdef object function, product
     cdef object x, p, out
     cdef object error
@@ -113,23 +154,35 @@ cdef class Target:
         self.p = np.empty(dimension)
         self.out = np.empty(dimension)
         if self.compiled:
-            self.c.density = <fw_density>compiled_pointer(function, DENSITY_SIGNATURE, "log density", &context)
-            self.c.density_context = context
+            self.user.density = <fw_density>compiled_pointer(function, DENSITY_SIGNATURE, "log density", &context)
+            self.user.density_context = context
         else:
-            self.c.density = <fw_density>(call_in_place if in_place else call_pair)
-            self.c.density_context = <void *>self
+            self.user.density = <fw_density>(call_in_place if in_place else call_pair)
+            self.user.density_context = <void *>self
+        self.c.density = counted_density
+        self.c.density_context = <void *>&self.user
         if product is not None:
             if is_compiled(product):
-                self.c.product = <fw_hessian_product>compiled_pointer(product, PRODUCT_SIGNATURE, "Hessian product",
-                                                                      &context)
-                self.c.product_context = context
+                self.user.product = <fw_hessian_product>compiled_pointer(product, PRODUCT_SIGNATURE, "Hessian product",
+                                                                         &context)
+                self.user.product_context = context
             else:
-                self.c.product = <fw_hessian_product>call_product
-                self.c.product_context = <void *>self
+                self.user.product = <fw_hessian_product>call_product
+                self.user.product_context = <void *>self
+            self.c.product = counted_product
+            self.c.product_context = <void *>&self.user
+
+    @property
+    def gradients(self):
+        return self.user.gradients
+
+    @property
+    def products(self):
+        return self.user.products
 
     def evaluate(self, double[::1] x not None, double[::1] gradient not None):
         """One bare call at x: (return code, value); the gradient is written into `gradient`."""
-        cdef double value = float("nan")
+        cdef double value = mark()
         cdef int answer
         with nogil:
             answer = self.c.density(self.c.dimension, &x[0], &value, &gradient[0], self.c.density_context)
@@ -173,18 +226,31 @@ cdef double number(object value) except? -1.0:
     if isinstance(value, float):
         return <double>value
     try:
+        # NumPy turns complex numbers and arrays of one number into floats, with a warning at most
+        if isinstance(value, np.complexfloating) or (isinstance(value, np.ndarray)
+                                                     and (value.ndim or value.dtype.kind == "c")):
+            raise TypeError
         return PyFloat_AsDouble(value)
     except TypeError:
         raise DensityError(
             f"the log density must be one real number; the function gave {type(value).__name__} {value!r:.60}") from None
+    except OverflowError:
+        raise DensityError(f"the log density must be one real number; the function gave a number of type "
+                           f"{type(value).__name__} too large for a float") from None
 
 
 cdef int take_vector(object array, double *to, Py_ssize_t d, str what) except -1:
     cdef const double[::1] view
     if not (isinstance(array, np.ndarray) and array.dtype == np.float64 and array.ndim == 1 and array.flags.c_contiguous):
-        given = np.asarray(array)
+        try:
+            given = np.asarray(array)
+        except ValueError:
+            raise DensityError(f"the {what} must be an array of real numbers of shape ({d},); the function gave "
+                               f"{type(array).__name__} {array!r:.60}") from None
         if given.dtype.kind not in "fiub":
             raise DensityError(f"the {what} must hold real numbers; the function gave an array of dtype {given.dtype}")
+        if given.ndim == 0 and d != 1:
+            raise DensityError(f"the {what} must have shape ({d},); the function gave shape ()")
         array = np.ascontiguousarray(given, dtype=np.float64)
     if array.ndim != 1 or array.shape[0] != d:
         raise DensityError(f"the {what} must have shape ({d},); the function gave shape {tuple(array.shape)}")
@@ -392,8 +458,12 @@ cdef class Engine:
     def set_base(self, const double[::1] scale not None, const double[:, ::1] directions=None,
                  const double[::1] lambdas=None):
         cdef size_t count = 0 if directions is None else <size_t>directions.shape[0]
-        return fw_chain_set_base(self.chain, &scale[0], count, &directions[0, 0] if count else NULL,
-                                 &lambdas[0] if count else NULL)
+        self.enter()
+        try:
+            return fw_chain_set_base(self.chain, &scale[0], count, &directions[0, 0] if count else NULL,
+                                     &lambdas[0] if count else NULL)
+        finally:
+            self.leave(FW_OK)
 
     def base(self):
         cdef double[::1] scale = np.empty(self.dimension)
@@ -417,7 +487,11 @@ cdef class Engine:
         return status
 
     def settle(self, size_t least, size_t most):
-        return fw_chain_settle(self.chain, least, most)
+        self.enter()
+        try:
+            return fw_chain_settle(self.chain, least, most)
+        finally:
+            self.leave(FW_OK)
 
     def run(self, size_t n, double[:, ::1] draws=None, facts=None, double[:, ::1] gradients=None,
             int64_t[::1] failure_index=None, int32_t[::1] failure_code=None, double[:, ::1] failure_position=None):
@@ -477,6 +551,13 @@ cdef class Engine:
         fw_chain_point(self.chain, &vx[0], &vg[0], &value)
         return x, g, value
 
+    def failed_at(self):
+        """Position of the user's call that ended the latest call with a status from -1 to -3."""
+        x = np.empty(self.dimension)
+        cdef double[::1] to = x
+        fw_chain_failed_at(self.chain, &to[0])
+        return x
+
     def summary(self):
         cdef fw_summary s
         fw_chain_summary(self.chain, &s)
@@ -487,28 +568,48 @@ cdef class Engine:
                 "started": bool(s.started), "settled": bool(s.settled)}
 
     def export_state(self):
-        cdef size_t size = fw_chain_state_bytes(self.chain)
-        out = bytearray(size)
-        cdef char[::1] view = out
-        fw_chain_export(self.chain, &view[0], size)
-        return bytes(out) + self.stream.state
+        cdef size_t size
+        cdef char[::1] view
+        self.enter()
+        try:
+            size = fw_chain_state_bytes(self.chain)
+            out = bytearray(size)
+            view = out
+            fw_chain_export(self.chain, &view[0], size)
+            return bytes(out) + self.stream.state
+        finally:
+            self.leave(FW_OK)
 
     def import_state(self, const unsigned char[::1] given not None):
         cdef size_t size = <size_t>given.shape[0]
+        cdef int status
         if size < 40:
             return FW_BAD_STATE
-        cdef int status = fw_chain_import(self.chain, &given[0], size - 32)
-        if status == FW_OK:
-            self.stream.state = bytes(given[size - 32:])
-        return status
+        self.enter()
+        try:
+            status = fw_chain_import(self.chain, &given[0], size - 32)
+            if status == FW_OK:
+                self.stream.state = bytes(given[size - 32:])
+            return status
+        finally:
+            self.leave(FW_OK)
 
 
 # ---- the O(d) metric operations on arrays ----------------------------------------------------------------------------
 
+def reals(object given):
+    """A contiguous float64 array of what is given; TypeError, ValueError or OverflowError when it is not real numbers."""
+    array = np.asarray(given)
+    if array.dtype.kind not in "fiubO" or (array.dtype.kind == "O" and any(
+            isinstance(value, (complex, np.complexfloating, str, bytes)) for value in array.flat)):
+        raise TypeError(f"not real numbers: an array of dtype {array.dtype}")
+    return np.asarray(array, dtype=np.float64, order="C")
+
+
 cdef object vector(object a, str name, Py_ssize_t d=-1):
     try:
-        array = np.ascontiguousarray(a, dtype=np.float64)
-    except (TypeError, ValueError):
+        array = reals(a)
+    except (TypeError, ValueError, OverflowError):
         raise ShapeError(f"{name} must be an array of real numbers; it is {type(a).__name__}") from None
     if array.ndim != 1 or array.shape[0] == 0 or (d >= 0 and array.shape[0] != d):
         wanted = f"({d},)" if d >= 0 else "(d,) with d >= 1"

@@ -60,11 +60,14 @@ class Audit:
         for finding in self.findings:
             lines += ["", f"{finding.weight.capitalize()}: {finding.text}"]
         if self.ok and not math.isnan(self.largest_share):
-            one = "each coordinate" if self.compared == self.dimension else f"{self.compared} coordinates and all groups"
-            lines += ["", f"The gradient agrees with differences of the log density in {one}, within their errors (largest "
-                      f"difference {self.largest_share:.1g} of the derivative)."]
-        lines += ["", *self._speed(), *(["", "Far out:", *(f"  {line}" for line in self.behaviour)] if self.behaviour else [])]
-        lines += ["", "No mistake found." if self.ok else f"{len(self.mistakes)} mistake{'s' * (len(self.mistakes) > 1)} found."]
+            all_seen = self.compared == self.dimension
+            where = "each coordinate" if all_seen else f"{self.compared} coordinates and in all groups of coordinates"
+            lines += ["", (f"The gradient agrees with differences of the log density in {where}, within their errors "
+                           f"(largest difference {self.largest_share:.1g} of the derivative).")]
+        lines += ["", *self._speed()]
+        lines += ["", "Far out:", *(f"  {line}" for line in self.behaviour)] if self.behaviour else []
+        count = len(self.mistakes)
+        lines += ["", "No mistake found." if self.ok else f"{count} mistake{'s' * (count > 1)} found."]
         return "\n".join(row for line in lines for row in (wrap(line) if line else [""]))
 
     def _speed(self) -> list[str]:
@@ -74,13 +77,15 @@ class Audit:
         lines = [f"One log density with its gradient takes {_time(s['gradient'])}."]
         if "function" in s:
             over = s["gradient"] - s["function"]
-            lines[0] = lines[0][:-1] + (f", {_time(over)} of it in the call from the core." if over > 0.02 * s["gradient"]
-                                        else "; the call from the core adds nothing that can be measured.")
+            lines[0] = lines[0][:-1] + ("; the call from the core adds nothing that can be measured."
+                                        if over < 0.02 * s["gradient"] else
+                                        f", {_time(over)} of it in the call from the core.")
         if "value" in s:
             lines.append(f"The log density alone takes {_time(s['value'])}, so the gradient costs "
                          f"{s['gradient'] / s['value'] - 1:.1f} times as much again.")
         if "product" in s:
-            lines.append(f"A Hessian product takes {_time(s['product'])}, {s['product'] / s['gradient']:.1f} gradients.")
+            share = s["product"] / s["gradient"]
+            lines.append(f"A Hessian product takes {_time(s['product'])}, {share:.1f} gradients.")
         return lines
 
 
@@ -106,8 +111,8 @@ def audit(density: Density, x: ArrayLike | Mapping[str, ArrayLike] | None = None
     Errors: ArgumentError, ShapeError, StartError when the point itself has no finite log density or gradient.
     """
     if not isinstance(density, Density):
-        raise ArgumentError(f"audit looks at a fellwalk.Density; it was given {type(density).__name__}: wrap your function "
-                            "as fellwalk.Density(function, dimension)")
+        raise ArgumentError(f"audit looks at a fellwalk.Density; it was given {type(density).__name__}: wrap your "
+                            "function as fellwalk.Density(function, dimension)")
     rng = np.random.default_rng(seed)
     y = _point(density, x, rng)
     probe = Probe(density)
@@ -119,7 +124,8 @@ def audit(density: Density, x: ArrayLike | Mapping[str, ArrayLike] | None = None
     behaviour: list[str] = []
     if not any(finding.about == "gradient" for finding in findings):
         every = np.arange(density.dimension)
-        which = every if density.dimension <= _ALL else np.unique(np.linspace(0, density.dimension - 1, _ALL).astype(int))
+        some = np.unique(np.linspace(0, density.dimension - 1, _ALL).astype(int))
+        which = every if density.dimension <= _ALL else some
         reach = _filled(reaches(probe, y, sight, which), y, sight, which)
         findings += checks.repeats(probe, y, y + 0.3 * reach * rng.standard_normal(len(y)))
         far, behaviour, inside = checks.far_out(probe, y, reach, rng)
@@ -153,8 +159,8 @@ def _point(density: Density, x: object, rng: np.random.Generator) -> NDArray[np.
         y = size * rng.standard_normal(density.dimension) + (0.0 if size else 0.1)
         if Probe(density).at(y).finite:
             return y
-    raise ArgumentError("this density has no start of its own, and is not finite at the points tried; give x, a point of "
-                        f"shape ({density.dimension},) inside the support")
+    raise ArgumentError("this density has no start of its own, and is not finite at the points tried; give x, a point "
+                        f"of shape ({density.dimension},) inside the support")
 
 
 def _refuse(density: Density, probe: Probe, y: NDArray[np.float64], sight: Sight) -> None:
@@ -224,8 +230,8 @@ def _compared(probe: Probe, places: list[tuple[str, NDArray]], reach: NDArray, w
                                     f"{brief(probe.x_of(at))}."))
         elif sight.kind == "exception" and "far" not in label:
             findings.append(Finding("mistake", "exception", f"The function raises {type(sight.error).__name__} "
-                                    f"({sight.error}) at {label}, {brief(probe.x_of(at))}: return minus infinity where there "
-                                    "is no density."))
+                                    f"({sight.error}) at {label}, {brief(probe.x_of(at))}: return minus infinity where "
+                                    "there is no density."))
     return points, findings
 
 
@@ -238,9 +244,9 @@ def _gradient_findings(probe: Probe, points: list[Compared]) -> list[Finding]:
             return []
         share, p = max(off, key=lambda pair: pair[0])
         i = int(np.argmax(np.where(p.slightly_off, np.abs(p.given - p.right) / np.abs(p.right), 0.0)))
-        return [Finding("caution", "gradient", f"The gradient of {probe.density.coordinates[i]} differs from differences of "
-                        f"the log density by {share:.1g} of its size at {p.label}, more than rounding explains: single "
-                        "precision, a constant with few digits, or a solver with a loose tolerance.",
+        return [Finding("caution", "gradient", f"The gradient of {probe.density.coordinates[i]} differs from "
+                        f"differences of the log density by {share:.1g} of its size at {p.label}, more than rounding "
+                        "explains: single precision, a constant with few digits, or a solver with a loose tolerance.",
                         probe.density.coordinates[i])]
     wrong = sorted(np.flatnonzero(weight > 0), key=lambda i: -weight[i])
     guesses = [(i, guess(probe, points, i)) for i in wrong[:8]]
@@ -262,8 +268,8 @@ def _said(probe: Probe, points: list[Compared], i: int, wrong: int) -> str:
     if probe.maps is not None:
         kind = " (per unit of its free coordinate)"
     also = f" ({wrong} coordinates are wrong; this one matters most.)" if wrong > 1 else ""
-    return (f"The gradient of {name} is wrong: at {p.label}, {brief(probe.x_of(p.y))}, the function gives {given:.9g} where "
-            f"differences of its log density give {right:.9g}{kind}, uncertain by {error:.1g}.{also}")
+    return (f"The gradient of {name} is wrong: at {p.label}, {brief(probe.x_of(p.y))}, the function gives {given:.9g} "
+            f"where differences of its log density give {right:.9g}{kind}, uncertain by {error:.1g}.{also}")
 
 
 def _precision(points: list[Compared], findings: list[Finding]) -> list[Finding]:
@@ -281,12 +287,12 @@ def _largest_share(points: list[Compared]) -> float:
     return float(max((part.max() for part in known if len(part)), default=math.nan))
 
 
-def _value_alone(probe: Probe, y: NDArray, sight: Sight, value: Callable[[NDArray[np.float64]], float]) -> list[Finding]:
+def _value_alone(probe: Probe, y: NDArray, sight: Sight, value: Callable[[NDArray], float]) -> list[Finding]:
     alone = float(value(probe.x_of(y)))
     if abs(alone - sight.value) <= 1e-9 * (1.0 + abs(sight.value)):
         return []
-    return [Finding("mistake", "value", f"The function of the log density alone gives {alone:.9g} where the density gives "
-                    f"{sight.value:.9g}.")]
+    return [Finding("mistake", "value", f"The function of the log density alone gives {alone:.9g} where the density "
+                    f"gives {sight.value:.9g}.")]
 
 
 def glance(density: Density, y: NDArray[np.float64]) -> None:
@@ -303,7 +309,7 @@ def glance(density: Density, y: NDArray[np.float64]) -> None:
 
 
 def glance_at_start(density: Density) -> None:
-    """`glance` at the density's own start, for when a start is refused: the gradient may not have been written there."""
+    """`glance` at the density's own start, for when a start is refused: the gradient may not have been written."""
     glance(density, density.start if density.parameters is None else density.parameters.free(density.start))
 
 

@@ -1,4 +1,4 @@
-"""Checks of a density that need no derivatives: what it does to its arguments, far out, in two threads, and its speed."""
+"""Checks that need no derivatives: what a density does to its arguments, far out, in two threads, and its speed."""
 
 from __future__ import annotations
 
@@ -46,8 +46,8 @@ def written(probe: Probe, y: NDArray[np.float64]) -> list[Finding]:
     a, b = (_natural_gradient(probe, y, fill) for fill in (0.0, _MARK))
     left = np.flatnonzero((b == _MARK) & (a == 0.0))
     if len(left):
-        return [Finding("mistake", "gradient", f"The gradient of {names[left[0]]} is not written: the entry is left as it was "
-                        f"before the call ({len(left)} of {len(a)} entries). Set every entry at every call.",
+        return [Finding("mistake", "gradient", f"The gradient of {names[left[0]]} is not written: the entry is left as "
+                        f"it was before the call ({len(left)} of {len(a)} entries). Set every entry at every call.",
                         names[left[0]])]
     added = np.flatnonzero(np.abs((b - a) - _MARK) < 1e-6 * _MARK)
     if len(added):
@@ -72,8 +72,9 @@ def repeats(probe: Probe, y: NDArray[np.float64], other: NDArray[np.float64]) ->
     worst, what = 0.0, ""
     for again in (second, third):
         if again.kind != first.kind:
-            return [Finding("mistake", "repeats", "The same position gave a finite log density once and none the next time: "
-                            f"{brief(probe.x_of(y))}. The function keeps something between calls, or draws random numbers.")]
+            return [Finding("mistake", "repeats", "The same position gave a finite log density once and none the next "
+                            f"time: {brief(probe.x_of(y))}. The function keeps something between calls, or draws "
+                            "random numbers.")]
         if not first.finite:
             continue
         off = abs(again.value - first.value) / (1.0 + abs(first.value))
@@ -81,9 +82,9 @@ def repeats(probe: Probe, y: NDArray[np.float64], other: NDArray[np.float64]) ->
         if max(off, slope) > worst:
             worst, what = max(off, slope), "log density" if off >= slope else "gradient"
     if worst > 1e-9:
-        return [Finding("mistake", "repeats", f"The same position gave another {what} at another call (relative difference "
-                        f"{worst:.2g}): the function draws random numbers, uses random parts of the data, or keeps "
-                        "something from the call before. It must depend on the position alone.")]
+        return [Finding("mistake", "repeats", f"The same position gave another {what} at another call (relative "
+                        f"difference {worst:.2g}): the function draws random numbers, uses random parts of the data, "
+                        "or keeps something from the call before. It must depend on the position alone.")]
     if worst > 0:
         return [Finding("caution", "repeats", f"The same position gave a {what} that differs by rounding (relative "
                         f"{worst:.1g}), as with libraries that divide sums over threads: runs will then not repeat bit "
@@ -110,25 +111,27 @@ def forms(probe: Probe, y: NDArray[np.float64]) -> list[Finding]:
     changed = np.flatnonzero((given != x) & ~(np.isnan(given) & np.isnan(x)))
     if len(changed):
         name = density.names[changed[0]]
-        found.append(Finding("mistake", "input", f"The function changes its input ({len(changed)} of {len(x)} numbers, first "
-                             f"{name}): work on a copy, as in x = x - m in place of x -= m.", name))
+        found.append(Finding("mistake", "input", f"The function changes its input ({len(changed)} of {len(x)} numbers, "
+                             f"first {name}): work on a copy, as in x = x - m in place of x -= m.", name))
     if answer is None:
         return found
     value, gradient = (answer, out) if density.in_place else answer
     if isinstance(value, np.ndarray) and value.ndim:
-        found.append(Finding("caution", "forms", f"The log density comes as an array of shape {value.shape}; give a float."))
+        found.append(Finding("caution", "forms", f"The log density comes as an array of shape {value.shape}; "
+                             "give a float."))
     kind = getattr(value, "dtype", None)
     slope = np.asarray(gradient) if not isinstance(gradient, np.ndarray) else gradient
     if kind == np.float32 or slope.dtype == np.float32:
-        found.append(Finding("mistake", "precision", "The log density or its gradient comes in float32 (single precision): "
-                             "compute and give float64, or rounding will look like a change of the density."))
+        found.append(Finding("mistake", "precision", "The log density or its gradient comes in float32 (single "
+                             "precision): compute and give float64, or rounding will look like a change of the "
+                             "density."))
     elif not isinstance(gradient, np.ndarray):
-        found.append(Finding("caution", "forms", f"The gradient comes as a {type(gradient).__name__}, which is turned into an "
-                             "array at every call; give a NumPy array."))
+        found.append(Finding("caution", "forms", f"The gradient comes as a {type(gradient).__name__}, which is turned "
+                             "into an array at every call; give a NumPy array."))
     elif slope.dtype != np.float64 or not slope.flags.c_contiguous:
         found.append(Finding("caution", "forms", f"The gradient comes as {slope.dtype}"
-                             f"{'' if slope.flags.c_contiguous else ', not contiguous,'} and is copied at every call; give "
-                             "a contiguous float64 array."))
+                             f"{'' if slope.flags.c_contiguous else ', not contiguous,'} and is copied at every call; "
+                             "give a contiguous float64 array."))
     return found
 
 
@@ -149,9 +152,9 @@ def single_precision(sights: list[Sight], noises: list[float]) -> list[Finding]:
                             f"precision): {hint}.")]
     relative = np.median([n / max(1.0, abs(s.value)) for n, s in zip(noises, sights, strict=True)])
     if relative > 3e-9:
-        return [Finding("caution", "precision", f"The log density is noisy, by {relative:.1g} of its size where float64 "
-                        f"rounding is 1e-16. If single precision takes part: {hint}. If a solver with a tolerance does: "
-                        "tighten it.")]
+        return [Finding("caution", "precision", f"The log density is noisy, by {relative:.1g} of its size where "
+                        f"float64 rounding is 1e-16. If single precision takes part: {hint}. If a solver with a "
+                        "tolerance does: tighten it.")]
     return []
 
 
@@ -176,7 +179,8 @@ def far_out(probe: Probe, y: NDArray[np.float64], reach: NDArray[np.float64], rn
                 continue  # a chain does not call the function there
             sight = probe.at(at)
             counts[distance][sight.kind] = counts[distance].get(sight.kind, 0) + 1
-            heights.append(sight.value + probe.log_jacobian(at) if sight.kind in ("finite", "bad gradient") else -math.inf)
+            known = sight.kind in ("finite", "bad gradient")
+            heights.append(sight.value + probe.log_jacobian(at) if known else -math.inf)
             finding = _far_finding(sight, distance, along, probe.x_of(at))
             if finding and (finding.about not in found or finding.weight == "mistake" != found[finding.about].weight):
                 found[finding.about] = finding
@@ -185,8 +189,9 @@ def far_out(probe: Probe, y: NDArray[np.float64], reach: NDArray[np.float64], rn
         tried += 1
         rising += len(heights) > 3 and heights[0] < heights[1] + 10 and heights[1] + 10 < heights[2] < heights[3] - 10
     if rising == tried:
-        found["rising"] = Finding("mistake", "sign", "The log density rises without end in every direction tried: this looks "
-                                  "like minus the log density (an energy, a cost). Change the sign of value and gradient.")
+        found["rising"] = Finding("mistake", "sign", "The log density rises without end in every direction tried: this "
+                                  "looks like minus the log density (an energy, a cost). Change the sign of value and "
+                                  "gradient.")
     lines = [f"{distance:g} scales away: " + ", ".join(f"{n} {kind}" for kind, n in sorted(kinds.items()))
              for distance, kinds in counts.items() if kinds]
     return list(found.values()), lines, inside
@@ -198,16 +203,18 @@ def _far_finding(sight: Sight, distance: float, along: str, x: NDArray[np.float6
     if sight.kind == "exception":
         kind = type(sight.error).__name__
         return Finding("mistake" if reachable else "note", "exception", f"The function raises {kind} ({sight.error}) "
-                       f"{where}. A step that goes too far would stop the run there: return minus infinity instead.", along)
-    if sight.kind == "plus infinity":
-        return Finding("mistake" if reachable else "note", "plus infinity", f"The log density is plus infinity {where}: no "
-                       "density has that. Outside the support return minus infinity.", along)
-    if sight.kind == "NaN" and distance <= 1e3:
-        return Finding("mistake" if distance <= 10 else "caution" if distance <= 100 else "note", "NaN", f"The log density is NaN {where}. Outside the "
-                       "support return minus infinity; inside, look for inf - inf, 0/0 and logarithms of negative numbers.",
+                       f"{where}. A step that goes too far would stop the run there: return minus infinity instead.",
                        along)
+    if sight.kind == "plus infinity":
+        return Finding("mistake" if reachable else "note", "plus infinity", f"The log density is plus infinity "
+                       f"{where}: no density has that. Outside the support return minus infinity.", along)
+    if sight.kind == "NaN" and distance <= 1e3:
+        return Finding("mistake" if distance <= 10 else "caution" if distance <= 100 else "note", "NaN", f"The log "
+                       f"density is NaN {where}. Outside the support return minus infinity; inside, look for inf - "
+                       "inf, 0/0 and logarithms of negative numbers.", along)
     if sight.kind == "bad gradient" and distance <= 1e3:
-        return Finding("caution" if distance <= 10 else "note", "gradient far out", f"The log density is finite but its gradient is not {where}.", along)
+        return Finding("caution" if distance <= 10 else "note", "gradient far out",
+                       f"The log density is finite but its gradient is not {where}.", along)
     return None
 
 
@@ -241,8 +248,8 @@ def threads(density: Density, points: NDArray[np.float64]) -> list[Finding]:
 
     def work(which: int) -> None:
         mine = slice(which, None, 2)
-        wrong[which] = count_disagreements(density.target(), np.ascontiguousarray(points[mine]),
-                                           np.ascontiguousarray(values[mine]), np.ascontiguousarray(gradients[mine]), rounds)
+        arrays = (np.ascontiguousarray(part[mine]) for part in (points, values, gradients))
+        wrong[which] = count_disagreements(density.target(), *arrays, rounds)
 
     for _ in range(_THREAD_TRIES):
         pair = [threading.Thread(target=work, args=(which,)) for which in (0, 1)]
@@ -254,16 +261,17 @@ def threads(density: Density, points: NDArray[np.float64]) -> list[Finding]:
             break
     else:
         return []
-    return [Finding("mistake", "threads", f"Called from two threads at once, the compiled function gave other numbers than "
-                    f"from one ({sum(wrong)} of {rounds * len(points)} calls): it keeps intermediate results in a static or "
-                    "global variable, or in a context that chains share. Use local variables.")]
+    return [Finding("mistake", "threads", f"Called from two threads at once, the compiled function gave other numbers "
+                    f"than from one ({sum(wrong)} of {rounds * len(points)} calls): it keeps intermediate results in a "
+                    "static or global variable, or in a context that chains share. Use local variables.")]
 
 
-def speed(probe: Probe, y: NDArray[np.float64], value: Callable[[NDArray[np.float64]], float] | None) -> dict[str, float]:
+def speed(probe: Probe, y: NDArray[np.float64], value: Callable[[NDArray], float] | None) -> dict[str, float]:
     """Seconds a call: "gradient" through the core, "function" called directly, "product", "value" when given."""
     density, x = probe.density, probe.x_of(y)
     target = density.target()
-    found = {"gradient": _timed(lambda n: count_disagreements(target, y[None, :], np.zeros(1), np.zeros((1, len(y))), n))}
+    nothing = np.zeros(1), np.zeros((1, len(y)))
+    found = {"gradient": _timed(lambda n: count_disagreements(target, y[None, :], *nothing, n))}
     out = np.empty(density.natural_size)
     if not density.compiled:
         call = (lambda: density.function(x.copy(), out)) if density.in_place else (lambda: density.function(x.copy()))

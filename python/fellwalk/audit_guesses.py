@@ -45,11 +45,11 @@ def _factor(seen: Sequence[Compared], i: int, g: NDArray, r: NDArray, tolerance:
         return f"The sign of {what} is wrong {many}: look for a minus too many or too few."
     for value, words in ((2.0, "twice"), (0.5, "half of")):
         if abs(ratio / value - 1.0) < 1e-3:
-            return (f"It is {words} what it should be {many} ({what}): look for a forgotten or doubled factor 2, as in the "
-                    "derivative of -x^2/2.")
+            return (f"It is {words} what it should be {many} ({what}): look for a forgotten or doubled factor 2, as in "
+                    "the derivative of -x^2/2.")
     if len(seen) > 1 and np.ptp(r) > 0.05 * np.max(np.abs(r)):
-        return (f"It is {ratio:.6g} times what it should be {many} ({what}): look for a factor that stands in the value or "
-                "in the gradient only: a number of data, a variance in place of a standard deviation, a unit.")
+        return (f"It is {ratio:.6g} times what it should be {many} ({what}): look for a factor that stands in the "
+                "value or in the gradient only: a number of data, a variance in place of a standard deviation, a unit.")
     return None
 
 
@@ -82,9 +82,9 @@ def _constant(g: NDArray, r: NDArray, tolerance: NDArray) -> str | None:
         return None
     if abs(abs(middle) - 1.0) < 1e-4:
         side = "lacks" if middle < 0 else "has"
-        return (f"It is off by {middle:+.6g} at every point: the gradient {side} the 1 that belongs to the log-Jacobian of a "
-                "parameter walked in its logarithm (the value has + log t, so its derivative with respect to log t needs "
-                "+ 1; leave both out, or put both in).")
+        return (f"It is off by {middle:+.6g} at every point: the gradient {side} the 1 that belongs to the "
+                "log-Jacobian of a parameter walked in its logarithm (the value has + log t, so its derivative with "
+                "respect to log t needs + 1; leave both out, or put both in).")
     return (f"It is off by {middle:+.6g} at every point: a term linear in this coordinate, such as n times it or a "
             "log-Jacobian, stands in the value or in the gradient only.")
 
@@ -95,9 +95,9 @@ def _variable(probe: Probe, i: int, y: NDArray, g: NDArray, r: NDArray, toleranc
     if probe.maps is not None:
         slopes = np.array([_own_slope(probe, at, i) for at in y])
         if np.all(np.isfinite(slopes)) and np.ptp(slopes) > 0.02 * np.max(np.abs(slopes)):
-            for power, words in ((1.0, "the derivative with respect to the free coordinate (the logarithm, say) where that "
-                                       "with respect to the natural value belongs"),
-                                 (-1.0, "a chain rule factor that fellwalk puts in by itself")):
+            free = ("the derivative with respect to the free coordinate (the logarithm, say) where that with respect "
+                    "to the natural value belongs")
+            for power, words in ((1.0, free), (-1.0, "a chain rule factor that fellwalk puts in by itself")):
                 if np.all(np.abs(g - r * slopes**power) <= (1 + np.abs(slopes**power)) * tolerance):
                     return f"The function seems to give {words}: give the derivative with respect to the natural value."
     with np.errstate(all="ignore"):
@@ -125,7 +125,8 @@ def _own_slope(probe: Probe, y: float, i: int) -> float:
     return math.nan
 
 
-def _prior(probe: Probe, seen: Sequence[Compared], i: int, y: NDArray, apart: NDArray, tolerance: NDArray) -> str | None:
+def _prior(probe: Probe, seen: Sequence[Compared], i: int, y: NDArray, apart: NDArray,
+           tolerance: NDArray) -> str | None:
     natural = y if probe.maps is None else np.array([probe.x_of(p.y)[_natural_place(probe, i)] for p in seen])
     slopes = np.ones(len(y)) if probe.maps is None else np.array([_own_slope(probe, at, i) for at in y])
     if np.all(np.isfinite(slopes)) and len(y) >= 3:
@@ -135,11 +136,11 @@ def _prior(probe: Probe, seen: Sequence[Compared], i: int, y: NDArray, apart: ND
             width = 1 / math.sqrt(abs(b))
             centre = -a / b if abs(a / b) > 1e-6 * width else 0.0
             where = "the value but not in the gradient" if b > 0 else "the gradient but not in the value"
-            return (f"The difference is linear in this coordinate, as if a normal term of centre {centre:.4g} and width "
-                    f"{width:.4g} stood in {where}: a forgotten prior term, most likely.")
+            return (f"The difference is linear in this coordinate, as if a normal term of centre {centre:.4g} and "
+                    f"width {width:.4g} stood in {where}: a forgotten prior term, most likely.")
     if len(probe.density.names) > 1 and _alone(probe, seen, i, apart, tolerance):
-        return ("The difference depends on this coordinate alone, whatever the others are: a prior term of it stands in the "
-                "value or in the gradient only, most likely.")
+        return ("The difference depends on this coordinate alone, whatever the others are: a prior term of it stands "
+                "in the value or in the gradient only, most likely.")
     return None
 
 

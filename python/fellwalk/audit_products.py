@@ -16,7 +16,8 @@ __all__ = ["products"]
 _LEVELS = 6
 
 
-def products(probe: Probe, y: NDArray[np.float64], reach: NDArray[np.float64], rng: np.random.Generator) -> list[Finding]:
+def products(probe: Probe, y: NDArray[np.float64], reach: NDArray[np.float64],
+             rng: np.random.Generator) -> list[Finding]:
     """Findings on hessian_product at y; reach: (dimension,) steps over which the log density changes by about 1."""
     density = probe.density
     sight = probe.at(y)
@@ -35,12 +36,12 @@ def products(probe: Probe, y: NDArray[np.float64], reach: NDArray[np.float64], r
                 target.evaluate(y.copy(), np.empty(len(y)))
                 answer = target.multiply(y, p.copy(), out)
         except Exception as error:
-            return [Finding("mistake", "Hessian product", f"The Hessian product raises {type(error).__name__} ({error}) at the "
-                            "starting point.")]
+            return [Finding("mistake", "Hessian product", f"The Hessian product raises {type(error).__name__} "
+                            f"({error}) at the starting point.")]
         if answer or not np.all(np.isfinite(out)):
             bad = int(np.flatnonzero(~np.isfinite(out))[0]) if not answer else 0
-            return [Finding("mistake", "Hessian product", f"The Hessian product is not finite in {density.coordinates[bad]} at "
-                            "the starting point.", density.coordinates[bad])]
+            return [Finding("mistake", "Hessian product", f"The Hessian product is not finite in "
+                            f"{density.coordinates[bad]} at the starting point.", density.coordinates[bad])]
         found.append(out)
     return _against_gradient(probe, y, directions, found) + _symmetry(directions, found)
 
@@ -54,8 +55,8 @@ def _symmetry(directions: list[NDArray], found: list[NDArray]) -> list[Finding]:
             worst = max(worst, abs(one - two) / size if size > 0 else 0.0)
     if worst <= 1e-6:
         return []
-    return [Finding("mistake", "symmetry", f"The Hessian product is not symmetric: u.Hv and v.Hu differ by {worst:.2g} of "
-                    "their size. A second derivative stands in one place of a pair only, or the two orders differ.")]
+    return [Finding("mistake", "symmetry", f"The Hessian product is not symmetric: u.Hv and v.Hu differ by {worst:.2g} "
+                    "of their size. A second derivative stands in one place of a pair only, or the two orders differ.")]
 
 
 def _against_gradient(probe: Probe, y: NDArray, directions: list[NDArray], found: list[NDArray]) -> list[Finding]:
@@ -74,7 +75,8 @@ def _against_gradient(probe: Probe, y: NDArray, directions: list[NDArray], found
         right, error = _extrapolated(lambda t, p=p: gradient(t, p), noise)
         apart = np.abs(given - right)
         size = np.maximum(np.abs(given), np.abs(right))
-        wrong = (apart > 10.0 * error) & (apart > 1e-4 * size) & (apart * np.abs(p) > 1e-6 * np.abs(size * p).sum() / len(y))
+        matters = apart * np.abs(p) > 1e-6 * np.abs(size * p).sum() / len(y)
+        wrong = (apart > 10.0 * error) & (apart > 1e-4 * size) & matters
         if not wrong.any():
             continue
         weight = np.where(wrong, apart * np.abs(p), 0.0)
@@ -83,7 +85,8 @@ def _against_gradient(probe: Probe, y: NDArray, directions: list[NDArray], found
             worst = float(weight[i])
             name = probe.density.coordinates[i]
             ratio = given[i] / right[i] if right[i] else math.inf
-            hint = {-1: " Its sign is wrong.", 2: " It is twice what it should be.", 0.5: " It is half of what it should be."}
+            hint = {-1: " Its sign is wrong.", 2: " It is twice what it should be.",
+                    0.5: " It is half of what it should be."}
             guess = next((text for value, text in hint.items() if abs(ratio / value - 1) < 1e-3), "")
             finding = [Finding("mistake", "Hessian product", f"The Hessian product is wrong in {name}: it gives "
                                f"{given[i]:.9g} where differences of the gradient give {right[i]:.9g}, uncertain by "

@@ -1,5 +1,6 @@
 """One chain for use inside other programs: settle, advance, read, export, import."""
 
+import hashlib
 import json
 import struct
 from dataclasses import dataclass
@@ -7,25 +8,16 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
-from fellwalk._core import FACTS, SENTENCES, Engine, Stream
-from fellwalk.density import Density, as_vector, brief
-from fellwalk.errors import (
-    ArgumentError,
-    CallbackStop,
-    FellwalkError,
-    InfiniteDensityError,
-    Interrupted,
-    NotWrittenError,
-    SettleError,
-    StartError,
-    StateError,
-)
+from fellwalk._core import FACTS, Engine, Stream
+from fellwalk.density import Density, as_vector, brief, stopped
+from fellwalk.errors import ArgumentError, SettleError, StartError, StateError
 from fellwalk.motions import Leapfrog, Motion, NoUTurn, Path, whole
 from fellwalk.settings import Settings
 
 __all__ = ["Block", "Chain"]
 
 _STATE_MAGIC = b"fellwalk chain 1\n"
+_CHECKSUM_BYTES = 16  # BLAKE2b of all that stands before it
 _FAILURE_ROOM = 32  # positions of failed steps kept in one block; every failure is counted in the facts
 
 
@@ -47,22 +39,6 @@ class Block:
 
     def __len__(self) -> int:
         return len(self.facts)
-
-
-_STOPPED: dict[int, tuple[type[FellwalkError], str]] = {
-    -1: (CallbackStop, "it returned a negative code"),
-    -2: (NotWrittenError, "it returned 0 but did not write the log density and gradient; an exception inside compiled "
-                          "code is often lost this way: call the function once from Python at this position"),
-    -3: (InfiniteDensityError, "the log density is plus infinity there, so the function is not the logarithm of a "
-                               "density: look for a division by 0 or a logarithm of 0 with the wrong sign"),
-    -4: (Interrupted, "the transition in hand was abandoned; the chain is as it was before it"),
-}
-
-
-def stopped(status: int, where: str) -> FellwalkError:
-    """The exception that belongs to a status < 0 of the core."""
-    kind, why = _STOPPED.get(status, (FellwalkError, SENTENCES.get(status, f"status {status}")))
-    return kind(f"{where}: {why}")
 
 
 class Chain:
@@ -108,8 +84,10 @@ class Chain:
                                 'Density, or choose curvature="surrogate" or "difference"')
         self.density = density
         self.settings = settings
-        sequence = seed if isinstance(seed, np.random.SeedSequence) else np.random.SeedSequence(seed)
-        self._engine = Engine(density.target(), Stream(sequence), settings.core())
+        if not isinstance(seed, np.random.SeedSequence):
+            seed = np.random.SeedSequence(None if seed is None else whole("seed", seed, 0, 2**128))
+        self._target = density.target()
+        self._engine = Engine(self._target, Stream(seed), settings.core())
         self._told = (0, 0)
 
     @classmethod
@@ -138,21 +116,28 @@ class Chain:
         if not np.all(np.isfinite(x)):
             bad = int(np.flatnonzero(~np.isfinite(x))[0])
             raise StartError(f"the starting point is {x[bad]} in {self.density.coordinates[bad]}; start from finite numbers")
-        status = self._engine.start(x)
-        self._count()
+        try:
+            status = self._engine.start(x)
+        finally:
+            self._count()
         if status == -7:
-            value, gradient = self.density(x)
-            what = f"the log density is {value}"
-            if np.isfinite(value):
-                bad = int(np.flatnonzero(~np.isfinite(gradient))[0])
-                what = f"the gradient is {gradient[bad]} in {self.density.coordinates[bad]}"
-            raise StartError(f"{what} at the starting point {brief(x)}; start inside the support, where both are finite")
+            raise self._no_start(x)
         if status < 0:
-            raise stopped(status, f"evaluating the density at the starting point {brief(x)}")
+            raise stopped(status, "the starting point", self.density, x)
+
+    def _no_start(self, x: NDArray[np.float64]) -> StartError:
+        value, gradient = self.density(x)
+        wrong = np.flatnonzero(~np.isfinite(gradient))
+        if np.isfinite(value) and not len(wrong):
+            return StartError(f"the log density or its gradient was not finite at the starting point {brief(x)}, and was "
+                              "finite there at a second call; the function must depend on the position alone")
+        what = f"the log density is {value}"
+        if np.isfinite(value):
+            what = f"the gradient is {gradient[wrong[0]]} in {self.density.coordinates[wrong[0]]}"
+        return StartError(f"{what} at the starting point {brief(x)}; start inside the support, where both are finite")
 
     def _count(self) -> None:
-        found = self._engine.summary()
-        now = (found["gradients"], found["products"])
+        now = (self._target.gradients, self._target.products)
         self.density.gradients += now[0] - self._told[0]
         self.density.products += now[1] - self._told[1]
         self._told = now
@@ -163,6 +148,8 @@ class Chain:
         """Settle from here: a new plan, whatever came before. Returns the transitions made."""
         plan = Settings(settle=transitions)
         self._engine.settle(*plan.settle_bounds())
+        if self.settled:
+            return _joined("settle", [], self.density.dimension)
         return self._raised(self.block(2**62))
 
     def advance(self, draws: int) -> Block:
@@ -173,8 +160,6 @@ class Chain:
         count = whole("draws", draws, 0, 2**40)
         if not self.settled:
             raise SettleError("this chain has not settled; call settle() first, or make it with settle=0 and a step_size")
-        if not self._engine.summary()["step_size"] > 0:
-            raise ArgumentError("this chain has no step size: call settle() first, or give step_size=")
         return self._raised(self.block(count))
 
     def _raised(self, block: Block) -> Block:
@@ -183,9 +168,14 @@ class Chain:
         return block
 
     def block(self, most: int, *, draws: bool = True, gradients: bool = False) -> Block:
-        """Up to `most` transitions of the phase the chain is in; errors are returned in the block, not raised."""
-        phase = "keep" if self.settled else "settle"
-        parts = []
+        """Up to `most` transitions of the phase the chain is in; errors are returned in the block, not raised.
+
+        Errors: ArgumentError when the chain has settled without a step size.
+        """
+        phase = self.phase
+        if phase == "keep" and not self.step_size > 0:
+            raise ArgumentError("this chain has no step size: call settle() first, or give step_size=")
+        parts: list[Block] = []
         while most > 0 and self.phase == phase and not (parts and parts[-1].error is not None):
             parts.append(self._piece(phase, min(most, 1024), draws, gradients))
             most -= len(parts[-1])
@@ -202,8 +192,8 @@ class Chain:
                                                      position)
         self._count()
         if status < 0 and error is None:
-            where = "the compiled function" if status in (-1, -2, -3) else "the chain"
-            error = stopped(status, f"{where}, at transition {self._engine.summary()['transitions'] + 1}")
+            error = stopped(status, f"transition {self._engine.summary()['transitions'] + 1}", self.density,
+                            self._engine.failed_at())
         return Block(phase, draws[:done], None if gradients is None else gradients[:done], facts[:done],
                      (index[:rows], code[:rows], position[:rows]), error)
 
@@ -250,14 +240,17 @@ class Chain:
 
     @property
     def counts(self) -> dict[str, int]:
-        """Transitions, gradients and Hessian products so far."""
+        """Transitions completed so far, and the gradients and Hessian products they and the start took.
+
+        Calls of abandoned transitions are counted by the density only.
+        """
         found = self._engine.summary()
-        return {key: found[key] for key in ("transitions", "gradients", "products")}
+        return {"transitions": found["transitions"], "gradients": found["gradients"], "products": found["products"]}
 
     @property
     def summary(self) -> dict[str, object]:
         """What settling has found: step size, bend, beta, ceiling of acceptance, windows; and the workspace's size."""
-        return self._engine.summary()
+        return dict(self._engine.summary())
 
     # ---- state --------------------------------------------------------------------------------------------------
 
@@ -265,7 +258,8 @@ class Chain:
     def state(self) -> bytes:
         """Everything the chain is, random stream included. `Chain.from_state` goes on from it with the same bits."""
         head = json.dumps(self.settings.to_json()).encode()
-        return _STATE_MAGIC + struct.pack("<I", len(head)) + head + self._engine.export_state()
+        whole_state = _STATE_MAGIC + struct.pack("<I", len(head)) + head + self._engine.export_state()
+        return whole_state + _checksum(whole_state)
 
     @state.setter
     def state(self, given: bytes) -> None:
@@ -287,18 +281,23 @@ class Chain:
         if self._engine.import_state(core) != 0:
             raise StateError(f"the stored chain state is damaged, or belongs to a density of another dimension than "
                              f"{self.density.dimension}")
-        found = self._engine.summary()
-        self._told = (found["gradients"], found["products"])
 
     def __repr__(self) -> str:
         found = self._engine.summary()
         return f"<Chain of {self.density.dimension} coordinates, {found['transitions']} transitions, {self.phase}>"
 
 
-def _split_state(state: bytes) -> tuple[Settings, bytes]:
+def _checksum(given: bytes) -> bytes:
+    return hashlib.blake2b(given, digest_size=_CHECKSUM_BYTES).digest()
+
+
+def _split_state(given: bytes) -> tuple[Settings, bytes]:
     start = len(_STATE_MAGIC) + 4
-    if not isinstance(state, bytes) or state[: len(_STATE_MAGIC)] != _STATE_MAGIC or len(state) < start:
+    if not isinstance(given, bytes) or given[: len(_STATE_MAGIC)] != _STATE_MAGIC:
         raise StateError("this is not a chain state of fellwalk: it does not begin as one")
+    state, checksum = given[:-_CHECKSUM_BYTES], given[-_CHECKSUM_BYTES:]
+    if len(state) < start or _checksum(state) != checksum:
+        raise StateError("the stored chain state is damaged: it does not agree with its checksum")
     (length,) = struct.unpack("<I", state[start - 4 : start])
     try:
         settings = Settings.from_json(json.loads(state[start : start + length]))

@@ -75,37 +75,39 @@ def _parser() -> argparse.ArgumentParser:
     commands = parser.add_subparsers(title="commands", required=True, metavar="COMMAND")
 
     demo = commands.add_parser("demo", help="the whole job on an invented data set, in half a minute",
-                               description="Run the whole job on an invented data set: a density, four chains, a record, "
-                                           "the table and the verdict.", allow_abbrev=False)
+                               description="Run the whole job on an invented data set: a density, four chains, a "
+                                           "record, the table and the verdict.", allow_abbrev=False)
     demo.add_argument("--folder", default=".", help="where the record goes (default: here)")
     demo.set_defaults(action=lambda options: show(options.folder))
 
     make = commands.add_parser(
         "run", help="draw from a model", formatter_class=_Help, allow_abbrev=False,
         description="Settle chains, keep draws, write the record, print the table and the verdict.")
-    make.add_argument("model", metavar="MODEL", help="module:object or file.py:object; the object is a fellwalk.Density "
-                                                     "or a function without arguments that makes one")
-    make.add_argument("--record", required=True, metavar="FILE", help="file to write every finished block to")
-    make.add_argument("--replace", action="store_true", help="overwrite an old record of that name")
-    make.add_argument("--start", help="numbers separated by commas, or a .npy file of one point or one a chain; left "
-                                      "out: the model's own start")
-    make.add_argument("--chains", type=_whole(1), metavar="N", default=4, help="chains, each from its own start")
-    make.add_argument("--keep", type=_whole(1), metavar="N", default=1000, help="draws kept in each chain")
-    make.add_argument("--no-audit", action="store_true", help="do not look at the gradient first")
-    make.add_argument("--settle", type=_settle, metavar="N", default="auto", help='settling transitions, or "auto"')
-    make.add_argument("--seed", type=_whole(0), metavar="N", help="a whole number; left out: one is drawn and recorded")
-    make.add_argument("--motion", choices=sorted(MOTIONS), default="leapfrog", help="what moves a point")
-    make.add_argument("--bend", type=float, metavar="B", default=Lagrangian.bend, help="lagrangian motion: typical L - 1")
-    make.add_argument("--curvature", choices=["surrogate", "difference", "product"], default="surrogate",
-                      help="lagrangian motion: where Hessian products come from")
-    make.add_argument("--scheme", choices=["split", "semi-explicit"], default="split",
-                      help="lagrangian motion: the integrator")
-    make.add_argument("--halvings", type=_whole(0), metavar="N", default=0, help="a step may be done as up to 2^N smaller ones")
-    make.add_argument("--path", choices=sorted(PATHS), default="no-u-turn", help="how far it is moved")
-    make.add_argument("--steps", type=_whole(1), metavar="N", default=Jittered.steps, help="jittered path: steps drawn from 1..N")
-    make.add_argument("--doublings", type=_whole(1), metavar="N", default=NoUTurn.doublings, help="no-u-turn path: at most 2^N steps")
-    make.add_argument("--acceptance", type=float, metavar="RATE", default=0.8, help="rate that settling aims the step size at")
-    make.add_argument("--step-size", type=float, metavar="SIZE", help="where settling starts from, in units of the base metric")
+    add = make.add_argument
+    add("model", metavar="MODEL", help="module:object or file.py:object; the object is a fellwalk.Density or a "
+                                       "function without arguments that makes one")
+    add("--record", required=True, metavar="FILE", help="file to write every finished block to")
+    add("--replace", action="store_true", help="overwrite an old record of that name")
+    add("--start", help="numbers separated by commas, or a .npy file of one point or one a chain; left out: the "
+                          "model's own start")
+    add("--chains", type=_whole(1), metavar="N", default=4, help="chains, each from its own start")
+    add("--keep", type=_whole(1), metavar="N", default=1000, help="draws kept in each chain")
+    add("--no-audit", action="store_true", help="do not look at the gradient first")
+    add("--settle", type=_settle, metavar="N", default="auto", help='settling transitions, or "auto"')
+    add("--seed", type=_whole(0), metavar="N", help="a whole number; left out: one is drawn and recorded")
+    add("--motion", choices=sorted(MOTIONS), default="leapfrog", help="what moves a point")
+    add("--bend", type=float, metavar="B", default=Lagrangian.bend, help="lagrangian motion: typical L - 1")
+    add("--curvature", choices=["surrogate", "difference", "product"], default="surrogate",
+        help="lagrangian motion: where Hessian products come from")
+    add("--scheme", choices=["split", "semi-explicit"], default="split",
+        help="lagrangian motion: the integrator")
+    add("--halvings", type=_whole(0), metavar="N", default=0, help="a step may be done as up to 2^N smaller ones")
+    add("--path", choices=sorted(PATHS), default="no-u-turn", help="how far it is moved")
+    add("--steps", type=_whole(1), metavar="N", default=Jittered.steps, help="jittered path: steps drawn from 1..N")
+    add("--doublings", type=_whole(1), metavar="N", default=NoUTurn.doublings,
+        help="no-u-turn path: at most 2^N steps")
+    add("--acceptance", type=float, metavar="RATE", default=0.8, help="rate that settling aims the step size at")
+    add("--step-size", type=float, metavar="SIZE", help="where settling starts from, in units of the base metric")
     _common(make)
     make.set_defaults(action=_run)
 
@@ -114,15 +116,16 @@ def _parser() -> argparse.ArgumentParser:
                                             "run never interrupted.", allow_abbrev=False)
     again.add_argument("record", metavar="FILE", help="the record of the run")
     again.add_argument("--model", help="as for run; left out: the model that the record names")
-    again.add_argument("--keep", type=_whole(1), metavar="N", help="draws a chain in all, when more are wanted than at first")
+    again.add_argument("--keep", type=_whole(1), metavar="N",
+                       help="draws a chain in all, when more are wanted than at first")
     _common(again)
     again.set_defaults(action=_resume)
 
     look = commands.add_parser("audit", help="look for mistakes in a model before it runs", allow_abbrev=False,
-                               description="Compare gradient and Hessian product with differences, see what happens far "
-                                           "out, time the calls. The exit status is 1 when a mistake is found.")
+                               description="Compare gradient and Hessian product with differences, see what happens "
+                                           "far out, time the calls. The exit status is 1 when a mistake is found.")
     look.add_argument("model", metavar="MODEL", help="as for run")
-    look.add_argument("--start", help="numbers separated by commas: the point to look at; left out: the model's own start")
+    look.add_argument("--start", help="numbers separated by commas: the point to look at; left out: the model's own")
     look.add_argument("--seed", type=_whole(0), metavar="N", default=0, help="of the other points, which are random")
     look.set_defaults(action=_audit)
 
@@ -138,7 +141,8 @@ def _parser() -> argparse.ArgumentParser:
 
 
 def _common(command: argparse.ArgumentParser) -> None:
-    command.add_argument("--seconds", type=float, metavar="S", help="stop at a block edge after so long; resume goes on")
+    command.add_argument("--seconds", type=float, metavar="S",
+                         help="stop at a block edge after so long; resume goes on")
     command.add_argument("--progress", choices=["bars", "lines", "off"], help="left out: bars for a person, else lines")
     command.add_argument("--executor", choices=["here", "threads", "processes"],
                          help="who makes the blocks; left out: what suits the model")
@@ -187,10 +191,11 @@ def _path(options: argparse.Namespace) -> Path:
 
 def _run(options: argparse.Namespace) -> int:
     result = run(
-        find_model(options.model), _start(options.start), motion=_motion(options), path=_path(options), settle=options.settle,
-        keep=options.keep, chains=options.chains, seed=options.seed, acceptance=options.acceptance,
-        step_size=options.step_size, executor=options.executor, record=options.record, replace=options.replace,
-        progress=options.progress or True, seconds=options.seconds, audit=not options.no_audit)
+        find_model(options.model), _start(options.start), motion=_motion(options), path=_path(options),
+        settle=options.settle, keep=options.keep, chains=options.chains, seed=options.seed,
+        acceptance=options.acceptance, step_size=options.step_size, executor=options.executor,
+        record=options.record, replace=options.replace, progress=options.progress or True,
+        seconds=options.seconds, audit=not options.no_audit)
     return _finish(result, options.record)
 
 

@@ -140,6 +140,7 @@ cdef extern from "fellwalk.h" nogil:
 
     int fw_chain_integrate(fw_chain *chain, double *x, double *v, double step_size, size_t steps, fw_path_out *out)
     void fw_chain_point(const fw_chain *chain, double *x, double *gradient, double *log_density)
+    void fw_chain_failed_at(const fw_chain *chain, double *x)
 
     ctypedef struct fw_summary:
         uint64_t gradients

@@ -5,8 +5,17 @@ from collections.abc import Callable, Mapping, Sequence
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
-from fellwalk._core import MappedTarget, Target, is_compiled
-from fellwalk.errors import ArgumentError, DensityError, ShapeError
+from fellwalk._core import SENTENCES, UNWRITTEN, MappedTarget, Target, is_compiled, is_unwritten, reals
+from fellwalk.errors import (
+    ArgumentError,
+    CallbackStop,
+    DensityError,
+    FellwalkError,
+    InfiniteDensityError,
+    Interrupted,
+    NotWrittenError,
+    ShapeError,
+)
 from fellwalk.motions import whole
 from fellwalk.parameters import ByName, Parameters
 
@@ -16,8 +25,8 @@ __all__ = ["Density"]
 def as_vector(value: ArrayLike, dimension: int, what: str) -> NDArray[np.float64]:
     """A new contiguous float64 array of shape (dimension,), or a sentence."""
     try:
-        array = np.array(value, dtype=np.float64)
-    except (TypeError, ValueError):
+        array = np.array(reals(value))
+    except (TypeError, ValueError, OverflowError):
         raise ShapeError(f"{what} must be an array of real numbers; it is {value!r:.60}") from None
     if array.shape != (dimension,):
         raise ShapeError(f"{what} must have shape ({dimension},); it has shape {array.shape}")
@@ -47,7 +56,8 @@ class Density:
     free ones. With ``by_name=True`` Python functions see and give dicts of shaped arrays: f(values) -> (log density,
     gradients), in place f(values, gradients) -> log density, and hessian_product(values, directions) -> products.
 
-    Attributes ``gradients`` and ``products`` count the calls made so far in this process.
+    Attributes ``gradients`` and ``products`` count the calls made so far in this process, whether or not what they
+    were made for came to an end: an abandoned transition, a start that was refused, a call that raised.
     """
 
     def __init__(
@@ -62,7 +72,8 @@ class Density:
         by_name: bool = False,
     ) -> None:
         if not callable(function) and not is_compiled(function):
-            raise ArgumentError(f"the log density must be a function or a scipy.LowLevelCallable; it is {function!r:.60}")
+            raise ArgumentError(f"the log density must be a function or a scipy.LowLevelCallable; it is "
+                                f"{function!r:.60}")
         if hessian_product is not None and not callable(hessian_product) and not is_compiled(hessian_product):
             raise ArgumentError(f"hessian_product must be a function or a scipy.LowLevelCallable; it is "
                                 f"{hessian_product!r:.60}")
@@ -99,7 +110,7 @@ class Density:
         Errors: ArgumentError when it does not give a Density; and whatever it raises.
         """
         if not callable(function):
-            raise ArgumentError(f"factory needs a function that makes a fellwalk.Density; it was given {function!r:.60}")
+            raise ArgumentError(f"factory needs a function that makes a fellwalk.Density; it got {function!r:.60}")
         made = function(*args)
         if not isinstance(made, Density):
             raise ArgumentError(f"the function given to factory must return a fellwalk.Density; it returned "
@@ -132,23 +143,42 @@ class Density:
         return is_compiled(self.function)
 
     def __call__(self, x: ArrayLike) -> tuple[float, NDArray[np.float64]]:
-        """(log density, gradient) at x, shape (dimension,); -inf outside the support. Counts as one gradient."""
+        """(log density, gradient) at x, shape (dimension,); -inf outside the support, the gradient is then NaN.
+
+        Errors: NotWrittenError; DensityError when a compiled function asks to stop; and what the function raises.
+        """
         point = as_vector(x, self.dimension, "the position")
-        gradient = np.full(self.dimension, np.nan)
-        self.gradients += 1
-        answer, value = self.target().evaluate(point, gradient)
+        gradient = np.full(self.dimension, UNWRITTEN)
+        target = self.target()
+        try:
+            answer, value = target.evaluate(point, gradient)
+        finally:
+            self.gradients += target.gradients
         if answer < 0:
             raise DensityError(f"the compiled log density returned {answer} (it asked to stop) at {brief(point)}")
-        return (-np.inf if answer > 0 else value), gradient
+        if answer > 0:
+            return -np.inf, gradient
+        if is_unwritten(value) or (np.isfinite(value) and any(map(is_unwritten, gradient))):
+            raise stopped(-2, "the call", self, point)
+        return value, gradient
 
     def product(self, x: ArrayLike, p: ArrayLike) -> NDArray[np.float64]:
-        """H(x) p, shape (dimension,). Counts as one Hessian product."""
+        """H(x) p, shape (dimension,).
+
+        Errors: NotWrittenError; DensityError when a compiled function refuses; and what the function raises.
+        """
         point, vector = as_vector(x, self.dimension, "the position"), as_vector(p, self.dimension, "p")
-        out = np.full(self.dimension, np.nan)
-        self.products += 1
-        answer = self.target().multiply(point, vector, out)
+        out = np.full(self.dimension, UNWRITTEN)
+        target = self.target()
+        try:
+            answer = target.multiply(point, vector, out)
+        finally:
+            self.gradients += target.gradients
+            self.products += target.products
         if answer:
             raise DensityError(f"the compiled Hessian product returned {answer} at {brief(point)}")
+        if any(map(is_unwritten, out)):
+            raise stopped(-2, "the Hessian product", self, point)
         return out
 
     def __reduce_ex__(self, protocol: int) -> object:
@@ -177,6 +207,33 @@ def _checked_names(names: Sequence[str] | None, dimension: int) -> list[str]:
         twice = next(name for name in found if found.count(name) > 1)
         raise ArgumentError(f"the name {twice!r} stands more than once; names must differ")
     return found
+
+
+def stopped(status: int, where: str, density: Density, x: NDArray[np.float64]) -> FellwalkError:
+    """The exception that belongs to a status < 0 of the core; x: (dimension,), where the function was called."""
+    if status == -4:
+        return Interrupted(f"{where}: the transition in hand was abandoned; the chain is as it was before it")
+    at = f"{where}, at {brief(x if density.parameters is None else density.parameters.natural(x))}"
+    if status == -1:
+        return CallbackStop(f"{at}: the compiled function returned a negative code (it asked to stop)")
+    if status == -2:
+        return NotWrittenError(f"{at}: {_not_written(density)}")
+    if status == -3:
+        return InfiniteDensityError(f"{at}: the log density is plus infinity there, so the function is not the "
+                                    "logarithm of a density: look for a division by 0 or a logarithm of 0 with the "
+                                    "wrong sign")
+    return FellwalkError(f"{where}: {SENTENCES.get(status, f'status {status}')}")
+
+
+def _not_written(density: Density) -> str:
+    by_hand = density.in_place and not density.compiled
+    lost = "an exception inside compiled code is often lost this way: call the function once from Python there"
+    if not by_hand:
+        return f"the compiled function returned 0 but did not write all of its results; {lost}"
+    said = "the in-place function returned a log density but did not write all of the gradient it was given"
+    if density.hessian_product is not None and is_compiled(density.hessian_product):
+        return f"{said}, or the compiled Hessian product did not write its result; {lost}"
+    return f"{said}; set every entry at every call"
 
 
 def brief(x: NDArray[np.float64], most: int = 6) -> str:

@@ -1,6 +1,7 @@
 """Motions and paths as plain data: what moves a point, and how far."""
 
 from dataclasses import dataclass
+from numbers import Complex, Real
 
 from fellwalk._core import MAX_DOUBLINGS, MAX_HALVINGS
 from fellwalk.errors import ArgumentError
@@ -21,8 +22,10 @@ def whole(name: str, value: object, least: int, most: int) -> int:
 def real(name: str, value: object, above: float, most: float, *, include: bool = False) -> float:
     """`value` as a float in (above, most], or [above, most] with include; or a sentence."""
     try:
+        if isinstance(value, str | bytes) or (isinstance(value, Complex) and not isinstance(value, Real)):
+            raise TypeError
         number = float(value)  # type: ignore[arg-type]
-    except (TypeError, ValueError):
+    except (TypeError, ValueError, OverflowError):
         raise ArgumentError(f"{name} must be a number; it is {value!r}") from None
     if not (above < number <= most or (include and number == above)):
         bound = "at least" if include else "above"

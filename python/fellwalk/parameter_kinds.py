@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 from collections.abc import Sequence
 from dataclasses import dataclass
+from itertools import pairwise
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
@@ -21,7 +22,7 @@ MapItem = tuple[int, int, NDArray[np.float64] | None, NDArray[np.float64] | None
 
 @dataclass(frozen=True)
 class Kind:
-    """One parameter, which may be an array; made by `free`, `positive`, `between`, `shares`, `increasing`, `correlation`.
+    """One parameter, which may be an array; `free`, `positive`, `between`, `shares`, ... make it.
 
     shape: of the natural values as the user's function sees them by name. repeats: leading part of the shape over
     which shares, increasing and correlation are repeated. low, high: bounds as nested tuples of the values' shape
@@ -124,7 +125,7 @@ def _runs(low: NDArray[np.float64], high: NDArray[np.float64], size: int) -> lis
                      np.where(np.isfinite(high), _BELOW, _FREE))
     edges = [0, *(np.flatnonzero(np.diff(kinds)) + 1).tolist(), size]
     return [(int(kinds[a]), b - a, low[a:b].copy(), high[a:b].copy())
-            for a, b in zip(edges[:-1], edges[1:], strict=True)]
+            for a, b in pairwise(edges)]
 
 
 def _shape(given: int | Sequence[int], what: str) -> tuple[int, ...]:

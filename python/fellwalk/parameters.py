@@ -103,8 +103,8 @@ class Parameters:
             for k, (value, a, b) in enumerate(zip(values, low, high, strict=True)):
                 if not a < value < b:
                     side = f"above {a:g}" if not value > a else f"below {b:g}"
-                    raise StartError(f"{kind.labels(name)[k]} is {value:.17g}; it must be a finite number {side}, not on "
-                                     "the bound: start inside")
+                    raise StartError(f"{kind.labels(name)[k]} is {value:.17g}; it must be a finite number {side}, not "
+                                     "on the bound: start inside")
             if kind.word == "increasing":
                 gaps = np.diff(values.reshape(-1, kind.shape[-1]), axis=1)
                 if np.any(~(gaps > 0)):
@@ -249,8 +249,8 @@ class ByName:
 
     def _flat(self, given: object, what: str) -> NDArray[np.float64]:
         if not isinstance(given, Mapping):
-            raise DensityError(f"by name, the {what} must be a dict with one array for each parameter; the function gave "
-                               f"{type(given).__name__}")
+            raise DensityError(f"by name, the {what} must be a dict with one array for each parameter; the function "
+                               f"gave {type(given).__name__}")
         try:
             return self.parameters.join(given, gradient=True)
         except ShapeError as error:

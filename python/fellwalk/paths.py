@@ -6,8 +6,7 @@ import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
 from fellwalk._core import SENTENCES, Engine, Stream
-from fellwalk.chain import stopped
-from fellwalk.density import Density, as_vector
+from fellwalk.density import Density, as_vector, stopped
 from fellwalk.errors import ArgumentError
 from fellwalk.motions import Jittered, Leapfrog, Motion, real, whole
 from fellwalk.settings import Settings
@@ -63,22 +62,27 @@ def integrate(
     d = density.dimension
     position, velocity = as_vector(x, d, "x").copy(), as_vector(v, d, "v").copy()
     given = position.copy(), velocity.copy()
-    size = real("step_size", abs(float(step_size)), 0.0, 1e300) * (1 if step_size > 0 else -1)
+    size = real("step_size", step_size, -1e300, 1e300, include=True)
+    if size == 0.0:
+        raise ArgumentError("step_size must not be 0; a negative one goes back in time")
     count = whole("steps", steps, 0, 2**40)
     settings = Settings(motion=motion or Leapfrog(), path=Jittered(), settle=0, beta=beta)
     if settings.motion.core()["curvature"] == "product" and density.hessian_product is None:
         raise ArgumentError('curvature="product" needs a density with a Hessian product; give hessian_product=')
-    engine = Engine(density.target(), Stream(np.random.SeedSequence(0)), settings.core())
+    target = density.target()
+    engine = Engine(target, Stream(np.random.SeedSequence(0)), settings.core())
     diagonal = np.ones(d) if scale is None else as_vector(scale, d, "scale")
     if engine.set_base(diagonal) != 0:
         raise ArgumentError("scale must hold finite numbers > 0 (variances, one a coordinate)")
     rows = [np.full((count + 1, width), np.nan) for width in (d, d, 3)] if trace else [None] * 3
-    status, done, value, log_jacobian, log_ratio, gradients, products = engine.integrate(
-        position, velocity, size, count, *rows)
-    density.gradients += gradients
-    density.products += products
+    try:
+        status, done, value, log_jacobian, log_ratio, gradients, products = engine.integrate(
+            position, velocity, size, count, *rows)
+    finally:
+        density.gradients += target.gradients
+        density.products += target.products
     if status < 0:
-        raise stopped(status, f"after {done} of {count} steps")
+        raise stopped(status, f"after {done} of {count} steps", density, engine.failed_at())
     if status > 0:
         position, velocity = given
     found = None

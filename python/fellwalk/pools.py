@@ -144,16 +144,17 @@ class Workers:
         try:
             import loky
         except ImportError:
-            raise ArgumentError('executor="processes" needs loky: pip install loky; or give a ProcessPoolExecutor') from None
+            raise ArgumentError('executor="processes" needs loky: pip install loky; or give a '
+                                "ProcessPoolExecutor") from None
         return loky.ProcessPoolExecutor(self.count, initializer=_begin_worker, initargs=(os.getpid(),), env=_ONE_THREAD)
 
     def _pack(self) -> Parcel:
         try:
             packed = cloudpickle.dumps(self.density)
         except Exception as error:
-            raise ArgumentError(f"this density cannot be sent to other processes ({type(error).__name__}: {error}). Use "
-                                "threads, or make it with fellwalk.Density.factory(function, ...): every worker then "
-                                "calls that function itself") from error
+            raise ArgumentError(f"this density cannot be sent to other processes ({_told(error)}). Use threads, or "
+                                "make it with fellwalk.Density.factory(function, ...): every worker then calls that "
+                                "function itself") from error
         return Parcel(hashlib.blake2b(packed, digest_size=16).hexdigest(), packed, here(), self.check)
 
     # ---- using -------------------------------------------------------------------------------------------------
@@ -267,7 +268,7 @@ def _check_fork(executor: Any) -> None:
         return  # forked before we came
     other = 'ProcessPoolExecutor(mp_context=multiprocessing.get_context("forkserver")), or executor="processes"'
     if "jax" in sys.modules:
-        raise ArgumentError(f"this executor would fork the process after JAX was imported, and JAX may then hang; use {other}")
+        raise ArgumentError(f"this executor would fork the process after JAX was imported, which may hang; use {other}")
     if threading.active_count() > 1:
         names = ", ".join(thread.name for thread in threading.enumerate() if thread is not threading.main_thread())
         warnings.warn(f"this executor forks the process while other threads run ({names}); a worker may hang on a lock "

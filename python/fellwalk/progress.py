@@ -123,7 +123,8 @@ class Bars:
 
         self.tqdm = tqdm
         self.tally = _Tally(keep, kept)
-        self.whole = Bar(total=self.tally.whole, initial=self.tally.total, desc="draws", unit="draw", dynamic_ncols=True)
+        self.whole = Bar(total=self.tally.whole, initial=self.tally.total, desc="draws", unit="draw",
+                         dynamic_ncols=True)
         self.each = [Bar(total=keep, initial=count, desc=_label(c, 0 if count else None), unit="draw", leave=False,
                          dynamic_ncols=True) for c, count in enumerate(kept) if 1 < len(kept) <= 8]
 

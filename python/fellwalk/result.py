@@ -27,9 +27,9 @@ class Result:
     """Draws with the record of how they were made. Print it for the table and the verdict.
 
     draws: (chains, draws, parameters) in natural values, as many as the shortest chain has; ``result["name"]`` is one
-    parameter in its own shape. free_draws: (chains, draws, dimension), the same in the coordinates that the chains moved
-    in (`fellwalk.Parameters`; else the same array). gradients: like free_draws, of the log density there, or None when
-    they were not kept. facts: (chains, draws) of dtype ``fellwalk.facts.FACTS``.
+    parameter in its own shape. free_draws: (chains, draws, dimension), the same in the coordinates that the chains
+    moved in (`fellwalk.Parameters`; else the same array). gradients: like free_draws, of the log density there, or None
+    when they were not kept. facts: (chains, draws) of dtype ``fellwalk.facts.FACTS``.
     settling: the facts of settling, one array a chain. failures: (chain, draw, code, position) arrays of the failed
     steps whose position was kept, while keeping. names, seed, settings: as the run was given them. chains: what each
     chain found while settling (step size, bend, ...). spent: gradients, products and seconds, settling included.
@@ -150,17 +150,18 @@ class Result:
         """Lines on what was run and how it settled, at most 80 columns wide."""
         motion, path = self.settings["motion"], self.settings["path"]
         shown = ", ".join(f"{key} {value}" for key, value in motion.items() if key != "name" and value not in (0, None))
-        lines = [f"{len(self._parts)} chains of {self._shortest} draws, {len(self.names)} parameters, "
-                 f"{motion['name']} motion{f' ({shown})' if shown else ''} on {path['name']} paths, seed {self.seed}."]
+        moved = f"{motion['name']} motion{f' ({shown})' if shown else ''} on {path['name']} paths"
+        made = f"{len(self._parts)} chains of {self._shortest} draws, {len(self.names)} parameters"
+        lines = [f"{made}, {moved}, seed {self.seed}."]
         if all(self.chains):
             settled = [part.count("settle") for part in self._parts]
             sizes = [chain["step_size"] for chain in self.chains]
             lines.append(f"Settled in {_range(settled, 'd')} transitions: step size {_range(sizes, '.3g')}"
-                         + self._bend_line() + ".")
+                         f"{self._bend_line()}.")
         if not self.finished:
+            on = f" Go on with fellwalk.resume({self.path!r}, density)." if self.path else ""
             lines.append(f"Stopped early: {self.ended or 'not all draws asked for are made'} "
-                         f"({self._shortest} of {self.plan['keep']} draws a chain)."
-                         + (f" Go on with fellwalk.resume({self.path!r}, density)." if self.path else ""))
+                         f"({self._shortest} of {self.plan['keep']} draws a chain).{on}")
         return "\n".join(row for line in lines for row in wrap(line))
 
     def _bend_line(self) -> str:

@@ -73,7 +73,7 @@ def run(
     The first Ctrl-C ends the run at the next block edge and returns what there is; a second one abandons the
     transitions in hand and raises KeyboardInterrupt. An exception of the density comes out as it was raised, after
     finished blocks are safe; `resume` goes on either way, with the bits of an undisturbed run.
-    Errors: ArgumentError, ShapeError, StartError, AuditError, RecordError, WorkerError, and whatever the density raises.
+    Errors: ArgumentError, ShapeError, StartError, AuditError, RecordError, WorkerError, and what the density raises.
     """
     if not isinstance(density, Density):
         raise ArgumentError(f"the first argument must be a fellwalk.Density; it is {type(density).__name__}: wrap your "
@@ -94,7 +94,7 @@ def run(
         "parameters": None if density.parameters is None else density.parameters.to_json(),
     }
     if starts is None and density.start is None and density.parameters is None:
-        raise ArgumentError("this density has no start of its own; give starts, one point (dimension,) inside the support")
+        raise ArgumentError("this density has no start of its own; give starts: a point (dimension,) in the support")
     try:
         points = starting_points(density, density.start if starts is None else starts, chains,
                                  np.random.default_rng([seed, 1]))
@@ -162,7 +162,7 @@ def resume(
     Errors: OtherModelError when the density does not agree; RecordError and its kinds; and as `run`.
     """
     if not isinstance(density, Density | None):
-        raise ArgumentError(f"the second argument must be the fellwalk.Density of the run; it is {type(density).__name__}")
+        raise ArgumentError(f"the second argument must be the run's fellwalk.Density; it is {type(density).__name__}")
     seconds = None if seconds is None else real("seconds", seconds, 0.0, 1e12)
     with Record.open(record, write=True) as file:
         plan = plan_of(file)
@@ -175,7 +175,7 @@ def resume(
                                     f"ask for more, not for {keep}")
             plan = {**plan, "keep": keep}
         parts, states = read_parts(file), read_states(file)
-        left = sum(plan["keep"] - part.count("keep") + (0 if part.summary.get("settled") else _SETTLE) for part in parts)
+        left = sum(plan["keep"] - part.count("keep") + _SETTLE * (not part.summary.get("settled")) for part in parts)
         with Workers(executor, density, plan["chains"], left, check) as workers:
             if keep is not None:
                 file.set_entry("settings", plan)
@@ -193,21 +193,21 @@ def _named(file: Record, plan: dict[str, Any]) -> Density:
 def _agreed(file: Record, plan: dict[str, Any], density: Density) -> Check:
     """What the density gives at the first starting point, having seen that it agrees with the record."""
     if density.dimension != plan["dimension"]:
-        raise OtherModelError(f"{file.path}: the record is of a model with {plan['dimension']} coordinates; this density "
-                              f"has {density.dimension}")
+        raise OtherModelError(f"{file.path}: the record is of a model with {plan['dimension']} coordinates; this "
+                              f"density has {density.dimension}")
     if density.parameters != (Parameters.from_json(plan["parameters"]) if plan.get("parameters") else None):
-        raise OtherModelError(f"{file.path}: the parameters of this density differ from those of the record in kind, shape "
-                              "or bounds")
+        raise OtherModelError(f"{file.path}: the parameters of this density differ from those of the record in kind, "
+                              "shape or bounds")
     if density.names != plan["names"]:
         ours, theirs = next(pair for pair in zip(density.names, plan["names"], strict=True) if pair[0] != pair[1])
-        raise OtherModelError(f"{file.path}: the record is of a model with a coordinate {theirs!r} where this density has "
-                              f"{ours!r}")
+        raise OtherModelError(f"{file.path}: the record is of a model with a coordinate {theirs!r} where this density "
+                              f"has {ours!r}")
     then = read_check(file, plan["dimension"])
     now = Check.of(density, then.position)
     if not then.near(now):
-        raise OtherModelError(f"{file.path}: at {brief(then.position)} this density has log density {now.log_density!r}, "
-                              f"but the record was made with {then.log_density!r} (and its gradient): it is another "
-                              "model, or other data. Resume with the density of the run")
+        raise OtherModelError(f"{file.path}: at {brief(then.position)} this density has log density "
+                              f"{now.log_density!r}, but the record was made with {then.log_density!r} (and its "
+                              "gradient): it is another model, or other data. Resume with the density of the run")
     if not then.same(now):
         file.append_event("rounding", {"log_density": now.log_density, "was": then.log_density})
     return now

@@ -89,8 +89,8 @@ def plan_of(record: Record) -> dict[str, Any]:
 def _beginning(record: Record) -> dict[str, Any]:
     found = record.get_entry("beginning")
     if found is None:
-        raise RecordError(f"{record.path}: the run was killed before its first block, so there is nothing to go on from. "
-                          "Start it again with replace=True (in the command: --replace)")
+        raise RecordError(f"{record.path}: the run was killed before its first block, so there is nothing to go on "
+                          "from. Start it again with replace=True (in the command: --replace)")
     return found
 
 

@@ -17,14 +17,14 @@ _HALVINGS = 60
 def starting_points(
     density: Density, starts: ArrayLike, chains: int, rng: np.random.Generator
 ) -> NDArray[np.float64]:
-    """(chains, dimension) starting points, in the coordinates the chains move in, from one point (dimension,) or from one point a chain (chains, dimension).
+    """(chains, dimension) starting points, in the coordinates the chains move in, from one point (dimension,) or from
+    one point a chain (chains, dimension).
 
     The rule for one point: the first chain starts there; the others are drawn normal around it, with standard
     deviation 1/|gradient| in each coordinate, but at most 1 or the coordinate's own size (near a mode the gradient says
     nothing of the width). The deviations are halved until the log density and gradient are finite and the log density
-    is not more than 10 + 2 dimension below the given point's; after 60 halvings, or when nothing is left of them, a StartError
-    says so. Points given one
-    a chain are taken as they are.
+    is not more than 10 + 2 dimension below the given point's; after 60 halvings, or when nothing is left of them, a
+    StartError says so. Points given one a chain are taken as they are.
     """
     if density.parameters is not None:
         starts = free_starts(density, starts, chains, rng)
@@ -63,7 +63,8 @@ def _near(density: Density, first: NDArray[np.float64], value: float, spread: ND
         if np.isfinite(found) and found >= lowest and np.all(np.isfinite(gradient)):
             return x
     raise StartError(f"no second starting point was found near {brief(first)}: all points tried on a "
-                     "line towards it were outside the support or far below it in log density; give one starting point a chain")
+                     "line towards it were outside the support or far below it in log density; give one starting point "
+                     "a chain")
 
 
 def free_starts(density: Density, starts: object, chains: int, rng: np.random.Generator) -> NDArray[np.float64]:
@@ -97,5 +98,5 @@ def _drawn(density: Density, rng: np.random.Generator) -> NDArray[np.float64]:
         value, gradient = density(x)
         if np.isfinite(value) and np.all(np.isfinite(gradient)):
             return x
-    raise StartError(f"no starting point was found: {_HALVINGS} points drawn in the free coordinates have a log density "
-                     "or gradient that is not finite; give starts in natural values")
+    raise StartError(f"no starting point was found: {_HALVINGS} points drawn in the free coordinates have a log "
+                     "density or gradient that is not finite; give starts in natural values")

@@ -95,15 +95,17 @@ def make_block(density: Density, job: Job, live: Live | None = None) -> Done:
     chain = Chain.from_state(density, job.state)
     keeping, phase = chain.settled, chain.phase
     parts: list[Block] = []
-    done, size, elapsed = 0, 4, 0.0
+    moving = time.perf_counter()
+    seconds = max(job.seconds, 4 * (moving - begun))  # in millions of dimensions, unpacking a state takes its time
+    done, size, elapsed = 0, 1, 0.0
     with live.holding(chain):
-        while done < job.most and elapsed < job.seconds and chain.settled == keeping and not live.stopped:
+        while done < job.most and elapsed < seconds and chain.settled == keeping and not live.stopped:
             parts.append(chain.block(min(size, job.most - done), draws=keeping, gradients=keeping and job.gradients))
             done += len(parts[-1])
             if parts[-1].error is not None:
                 break
-            elapsed = time.perf_counter() - begun
-            size = max(1, min(8 * size, int(done * (job.seconds / elapsed - 1))))
+            elapsed = time.perf_counter() - moving
+            size = max(1, min(8 * size, int(done * (seconds / elapsed - 1))))
     block = _joined(phase, parts, density.dimension)
     return Done(job.chain, block, chain.state, time.perf_counter() - begun, chain.summary)
 
