@@ -1,28 +1,10 @@
-/* Lists of maps, the elementwise kinds, and the caller's functions seen through the maps. */
+/* Lists of maps, and the caller's functions seen through the maps. */
 #include <float.h>
 #include <math.h>
 #include <stdlib.h>
 #include <string.h>
 
-#include "kernels.h"
 #include "maps.h"
-
-#define LANES 8
-
-/* The body runs once for each element i, in lane j = i mod LANES, as in kernels.c. */
-#define SWEEP(n, ...)                                                                                                  \
-    do {                                                                                                               \
-        size_t base_ = 0;                                                                                              \
-        for (; base_ + LANES <= (n); base_ += LANES)                                                                   \
-            for (size_t j = 0; j < LANES; ++j) {                                                                       \
-                const size_t i = base_ + j;                                                                            \
-                __VA_ARGS__                                                                                            \
-            }                                                                                                          \
-        for (size_t j = 0; base_ + j < (n); ++j) {                                                                     \
-            const size_t i = base_ + j;                                                                                \
-            __VA_ARGS__                                                                                                \
-        }                                                                                                              \
-    } while (0)
 
 struct fw_maps {
     size_t count, free, natural;
@@ -62,7 +44,7 @@ static int is_finite(double a)
     return fabs(a) <= DBL_MAX;
 }
 
-/* Sizes below 2^26 keep n (n - 1) / 2 and every sum of them far from overflow. */
+/* At most 2^40 values and 2^16 rows: n (n - 1) / 2 and sums of such numbers stay far from overflow. */
 static int sound(const fw_map *map)
 {
     const size_t least = map->kind == FW_SHARES || map->kind == FW_CORRELATION ? 2 : 1;
@@ -187,87 +169,7 @@ size_t fw_maps_natural(const fw_maps *maps)
     return maps->natural;
 }
 
-/* ---- the elementwise kinds --------------------------------------------------------------------------------------- */
-
-static double fold(const double a[LANES])
-{
-    return ((a[0] + a[4]) + (a[2] + a[6])) + ((a[1] + a[5]) + (a[3] + a[7]));
-}
-
-/* x = bound + sign e, slope = sign e, e in slope on entry. Returns the sum of y; *odd: is some x on its bound, or not
- * finite? */
-FW_CLONES static double finish_one_sided(size_t n, double sign, const double *restrict y,
-                                         const double *restrict bound, double *restrict x, double *restrict slope,
-                                         int *odd)
-{
-    double sums[LANES] = {0}, nearest[LANES], farthest[LANES] = {0};
-    for (size_t j = 0; j < LANES; ++j) nearest[j] = INFINITY;
-    for (size_t i = 0; i < n; ++i) {
-        const double e = sign * slope[i];
-        slope[i] = e;
-        x[i] = bound[i] + e;
-    }
-    SWEEP(n, sums[j] += y[i];);
-    SWEEP(n, const double off = fabs(x[i] - bound[i]); nearest[j] = fmin(nearest[j], off);
-          farthest[j] = fmax(farthest[j], off););
-    *odd = 0;
-    for (size_t j = 0; j < LANES; ++j)
-        if (!(nearest[j] > 0.0) || farthest[j] > DBL_MAX) *odd = 1;
-    return fold(sums);
-}
-
-/* x = bound + sign exp(y), sign +1 (FW_ABOVE) or -1 (FW_BELOW). */
-static double one_sided(size_t n, double sign, const double *y, const double *bound, double *x, double *slope)
-{
-    int odd;
-    for (size_t i = 0; i < n; ++i) slope[i] = exp(y[i]);
-    const double sum = finish_one_sided(n, sign, y, bound, x, slope, &odd);
-    for (size_t i = 0; odd && i < n; ++i) {
-        if (x[i] == bound[i]) x[i] = nextafter(x[i], sign * INFINITY);
-        else if (fabs(x[i]) > DBL_MAX) x[i] = sign * DBL_MAX;
-    }
-    return sum;
-}
-
-/* From the nearer bound, so that a value keeps its digits beside either of them. e = exp(-|y|) in slope on entry. The
- * logarithms of 1 + e, at most log 2 each, are taken of products of up to LANES * 100 of them. */
-FW_CLONES static double finish_between(size_t n, const double *restrict y, const double *restrict low,
-                                       const double *restrict high, const double *restrict width,
-                                       const double *restrict twice, double *restrict x, double *restrict slope,
-                                       double *restrict turn)
-{
-    double sums[LANES] = {0}, total = 0.0;
-    for (size_t begin = 0; begin < n; begin += LANES * 100) {
-        const size_t end = n - begin < LANES * 100 ? n : begin + LANES * 100;
-        double products[LANES] = {1.0, 1.0, 1.0, 1.0, 1.0, 1.0, 1.0, 1.0};
-        for (size_t i = begin; i < end; ++i) {
-            const double e = slope[i], whole = 1.0 + e, share = e / whole, off = twice[i] * (width[i] * share);
-            double value = y[i] < 0.0 ? low[i] + off : high[i] - off;
-            value = value > low[i] ? value : nextafter(low[i], INFINITY);
-            x[i] = value < high[i] ? value : nextafter(high[i], -INFINITY);
-            slope[i] = twice[i] * (width[i] * (share / whole));
-            turn[i] = (y[i] < 0.0 ? 1.0 : -1.0) * ((1.0 - e) / whole);
-            sums[i % LANES] -= fabs(y[i]);
-            products[i % LANES] *= whole;
-        }
-        total -= 2.0 * log(((products[0] * products[4]) * (products[2] * products[6])) *
-                           ((products[1] * products[5]) * (products[3] * products[7])));
-    }
-    return total + fold(sums);
-}
-
-static double between(fw_maps *maps, size_t n, size_t at, const double *y, double *x)
-{
-    for (size_t i = 0; i < n; ++i) maps->slope[at + i] = exp(-fabs(y[i]));
-    return finish_between(n, y, maps->low + at, maps->high + at, maps->width + at, maps->twice + at, x,
-                          maps->slope + at, maps->turn + at);
-}
-
-FW_CLONES static void pull_with_turn(size_t n, const double *restrict g, const double *restrict slope,
-                                     const double *restrict turn, double *restrict out)
-{
-    for (size_t i = 0; i < n; ++i) out[i] = g[i] * slope[i] + turn[i];
-}
+/* ---- by kind --------------------------------------------------------------------------------------- */
 
 double fw_maps_apply(fw_maps *maps, const double *y, double *x)
 {
@@ -280,12 +182,15 @@ double fw_maps_apply(fw_maps *maps, const double *y, double *x)
         switch (b->kind) {
         case FW_FREE: memcpy(to, y + at, b->size * sizeof *x); break;
         case FW_ABOVE:
-            total += one_sided(b->size, 1.0, y + at, maps->low + at, to, maps->slope + at);
+            total += fw_one_sided(b->size, 1.0, y + at, maps->low + at, to, maps->slope + at);
             break;
         case FW_BELOW:
-            total += one_sided(b->size, -1.0, y + at, maps->high + at, to, maps->slope + at);
+            total += fw_one_sided(b->size, -1.0, y + at, maps->high + at, to, maps->slope + at);
             break;
-        case FW_BETWEEN: total += between(maps, b->size, at, y + at, to); break;
+        case FW_BETWEEN:
+            total += fw_between(b->size, y + at, maps->low + at, maps->high + at, maps->width + at, maps->twice + at, to,
+                                maps->slope + at, maps->turn + at);
+            break;
         default:
             total += fw_joint_apply(b, y + at, to);
             if (b->kind == FW_CORRELATION && fw_correlation_singular(b->size, b->scratch)) maps->outside = 1;
@@ -311,7 +216,7 @@ void fw_maps_pull(fw_maps *maps, const double *g, int with_jacobian, double *out
         } else if (!elementwise(b->kind)) {
             fw_joint_pull(b, from, with_jacobian, to);
         } else if (with_jacobian) {
-            pull_with_turn(b->size, from, slope, turn, to);
+            fw_pull_with_turn(b->size, from, slope, turn, to);
         } else {
             for (size_t i = 0; i < b->size; ++i) to[i] = from[i] * slope[i];
         }
@@ -351,18 +256,6 @@ void fw_maps_bend(fw_maps *maps, const double *g, const double *p, double *out)
     }
 }
 
-/* log((x - low) / (high - x)); through log1p in the middle, where the logarithm of a ratio near 1 loses digits, and as
- * a difference of logarithms only where the ratio would leave the range of doubles. */
-static double between_inverse(double x, double low, double high, double twice)
-{
-    if (!(x > low && x < high)) return NAN;
-    const double u = twice > 1.0 ? 0.5 * x - 0.5 * low : x - low;
-    const double v = twice > 1.0 ? 0.5 * high - 0.5 * x : high - x;
-    if (u > 0.5 * v && u < 2.0 * v) return log1p((u - v) / v);
-    const double ratio = u / v;
-    return ratio > 1e-290 && ratio < 1e290 ? log(ratio) : log(u) - log(v);
-}
-
 void fw_maps_invert(fw_maps *maps, const double *x, double *y)
 {
     for (size_t k = 0; k < maps->count; ++k) {
@@ -373,7 +266,7 @@ void fw_maps_invert(fw_maps *maps, const double *x, double *y)
         for (size_t i = 0; i < b->size && elementwise(b->kind); ++i) switch (b->kind) {
             case FW_ABOVE: to[i] = from[i] > low[i] ? log(from[i] - low[i]) : NAN; break;
             case FW_BELOW: to[i] = from[i] < high[i] ? log(high[i] - from[i]) : NAN; break;
-            case FW_BETWEEN: to[i] = between_inverse(from[i], low[i], high[i], maps->twice[b->free_at + i]); break;
+            case FW_BETWEEN: to[i] = fw_between_inverse(from[i], low[i], high[i], maps->twice[b->free_at + i]); break;
             default: to[i] = from[i];
             }
     }
@@ -414,8 +307,10 @@ int fw_mapped_density(size_t d, const double *y, double *value, double *gradient
     if (isnan(mark) && (same_bits(&maps->g[0], &mark) || same_bits(&maps->g[last], &mark))) return 0;
     *value += log_jacobian;
     fw_maps_pull(maps, maps->g, 1, gradient);
-    memcpy(maps->at, y, d * sizeof *y);
-    maps->known = 1;
+    if (maps->target.product) {
+        memcpy(maps->at, y, d * sizeof *y);
+        maps->known = 1;
+    }
     return 0;
 }
 

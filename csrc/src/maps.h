@@ -21,6 +21,15 @@ void fw_joint_push(const fw_block *block, const double *p, double *out);
 void fw_joint_bend(const fw_block *block, const double *g, const double *p, double *out);
 void fw_joint_invert(const fw_block *block, const double *x, double *y);
 
+/* maps_elementwise.c. slope = dx/dy. x = bound + sign exp(y), sign 1 or -1; returns log |dx/dy|. */
+double fw_one_sided(size_t n, double sign, const double *y, const double *bound, double *x, double *slope);
+/* high - low = twice * width. turn = derivative of log |dx/dy|, which is returned without the sum of log(high - low). */
+double fw_between(size_t n, const double *y, const double *low, const double *high, const double *width,
+                  const double *twice, double *x, double *slope, double *turn);
+double fw_between_inverse(double x, double low, double high, double twice);
+/* out = g*slope + turn */
+void fw_pull_with_turn(size_t n, const double *g, const double *slope, const double *turn, double *out);
+
 /* maps_correlation.c */
 size_t fw_correlation_scratch(size_t n);
 double fw_correlation_apply(size_t n, double *scratch, const double *y, double *x);

@@ -93,9 +93,9 @@ static void visit_state(cursor *c, fw_chain *chain)
     visit(c, chain->g, d);
     visit(c, walk->base.r, d);
     number(c, &k);
-    if (c->mode == READ) walk->base.k = (size_t)(k <= chain->settings.rank ? k : 0);
+    if (c->mode == READ) walk->base.k = (size_t)k;
     visit(c, walk->base.lambda, FW_MAX_DIRECTIONS);
-    if (chain->settings.rank) visit(c, walk->base.directions, chain->settings.rank * d);
+    if (walk->base.k) visit(c, walk->base.directions, walk->base.k * d);
     if (chain->learn.settled) return;
     visit(c, chain->mean_x, d);
     visit(c, chain->roots_x, d);
@@ -134,13 +134,18 @@ int fw_chain_export(const fw_chain *chain, void *bytes, size_t size)
     return FW_OK;
 }
 
-/* Size of the state that these bytes, whose settings agree, say they hold: settling decides what is there. */
-static size_t expected_size(const fw_chain *chain, const unsigned char *bytes, size_t settings)
+/* Size of the state that these bytes, whose settings agree, say they hold: settling decides what is there. 0: no such state. */
+static size_t expected_size(const fw_chain *chain, const unsigned char *bytes, size_t size, size_t settings)
 {
     const size_t at = settings + 8 * 9;
     fw_chain copy = *chain;
+    const size_t words = 3 * chain->walk.d; /* x, g, r stand between what was learned and the number of directions */
+    uint64_t k;
     memcpy(&copy.learn, bytes + at, sizeof copy.learn);
-    if (copy.learn.rows > FW_WINDOW_ROWS) return 0;
+    if (at + sizeof copy.learn + 8 * (words + 1) > size) return 0;
+    memcpy(&k, bytes + at + sizeof copy.learn + 8 * words, 8);
+    if (copy.learn.rows > FW_WINDOW_ROWS || k > chain->settings.rank) return 0;
+    copy.walk.base.k = (size_t)k;
     return fw_chain_state_bytes(&copy);
 }
 
@@ -156,7 +161,7 @@ int fw_chain_import(fw_chain *chain, const void *bytes, size_t size)
     visit_settings(&compare, chain);
     if (compare.mismatch) return FW_BAD_STATE;
     cursor read = {READ, (unsigned char *)bytes, 0, 0};
-    if (size != expected_size(chain, bytes, measure.at)) return FW_BAD_STATE;
+    if (size != expected_size(chain, bytes, size, measure.at)) return FW_BAD_STATE;
     visit_state(&read, chain);
     return read.at + 8 == size ? FW_OK : FW_BAD_STATE;
 }

@@ -16,6 +16,7 @@ from fellwalk.parameters import Parameters
 from fellwalk.paths import Trajectory, integrate
 from fellwalk.result import Result, load
 from fellwalk.run import resume, run
+from fellwalk.settled import Settled, SettledChain
 
 __version__ = version("fellwalk")
 
@@ -32,6 +33,8 @@ __all__ = [
     "NoUTurn",
     "Parameters",
     "Result",
+    "Settled",
+    "SettledChain",
     "Trajectory",
     "audit",
     "between",

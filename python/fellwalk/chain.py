@@ -3,7 +3,7 @@
 import hashlib
 import json
 import struct
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
@@ -13,6 +13,7 @@ from fellwalk.density import Density, as_vector, brief, stopped
 from fellwalk.errors import ArgumentError, SettleError, StartError, StateError
 from fellwalk.motions import Leapfrog, Motion, NoUTurn, Path, whole
 from fellwalk.settings import Settings
+from fellwalk.settled import SettledChain
 
 __all__ = ["Block", "Chain"]
 
@@ -49,6 +50,7 @@ class Chain:
         (``density.parameters.natural(block.draws)`` maps them).
     scale: optional variances of shape (dimension,) to start from, as the diagonal of the inverse base metric;
         settling refines them, unless ``adapt_scale=False``.
+    settled: the settled part of another chain; this one then does not settle.
     Other arguments as in `run`. Errors: ArgumentError, ShapeError, StartError, and whatever the density raises.
     """
 
@@ -67,12 +69,12 @@ class Chain:
         adapt_scale: bool = True,
         beta: float | None = None,
         rank: int | str = "auto",
+        settled: SettledChain | None = None,
     ) -> None:
         settings = Settings(motion=motion or Leapfrog(), path=path or NoUTurn(), settle=settle, acceptance=acceptance,
                             step_size=step_size, adapt_scale=adapt_scale, beta=beta, rank=rank)
-        self._make(density, settings, seed)
-        if scale is not None:
-            self._set_scale(scale)
+        self._make(density, settings if settled is None else self._reused(settings, settled), seed)
+        self._set_base(scale, settled)
         self._start(start if density.parameters is None else density.parameters.free(start))
 
     def _make(self, density: Density, settings: Settings, seed: int | np.random.SeedSequence | None) -> None:
@@ -98,18 +100,33 @@ class Chain:
         start: ArrayLike,
         seed: np.random.SeedSequence,
         scale: ArrayLike | None,
+        settled: SettledChain | None = None,
     ) -> "Chain":
         self = cls.__new__(cls)
-        self._make(density, settings, seed)
-        if scale is not None:
-            self._set_scale(scale)
+        self._make(density, settings if settled is None else self._reused(settings, settled), seed)
+        self._set_base(scale, settled)
         self._start(start)
         return self
 
-    def _set_scale(self, scale: ArrayLike) -> None:
-        values = as_vector(scale, self.density.dimension, "scale")
-        if self._engine.set_base(values) != 0:
-            raise ArgumentError("scale must hold finite numbers > 0 (variances, one a coordinate)")
+    @staticmethod
+    def _reused(settings: Settings, settled: SettledChain) -> Settings:
+        """Settings of a chain that takes over a settled part and does not settle."""
+        if settings.settle not in ("auto", 0):
+            raise ArgumentError(f"settled= takes the place of settling; leave settle out (it is {settings.settle!r})")
+        return replace(settings, settle=0, step_size=settled.step_size, beta=settled.beta, adapt_scale=False)
+
+    def _set_base(self, scale: ArrayLike | None, settled: SettledChain | None) -> None:
+        if settled is not None:
+            if scale is not None:
+                raise ArgumentError("give scale= or settled=, not both: the settled part has a scale of its own")
+            status = self._engine.set_base(settled.scale, settled.directions, settled.variances)
+        elif scale is not None:
+            status = self._engine.set_base(as_vector(scale, self.density.dimension, "scale"))
+        else:
+            return
+        if status != 0:
+            raise ArgumentError("scale must hold finite numbers > 0 (variances, one a coordinate), and a settled part "
+                                "no more directions than rank allows")
 
     def _start(self, start: ArrayLike) -> None:
         x = as_vector(start, self.density.dimension, "the starting point")
@@ -237,6 +254,18 @@ class Chain:
     def scale(self) -> NDArray[np.float64]:
         """The learned variances of the base metric's diagonal part, shape (dimension,)."""
         return self._engine.base()[0]
+
+    @property
+    def base_metric(self) -> tuple[NDArray[np.float64], NDArray[np.float64], NDArray[np.float64]]:
+        """The learned base metric: scale (dimension,), directions (k, dimension) and their variances (k,); its inverse
+        is G0^-1 = s^1/2 (I + E (lambda - 1) E') s^1/2, with s the scale and E' the directions."""
+        scale, directions, variances = self._engine.base()
+        return scale, directions, variances
+
+    @property
+    def settled_part(self) -> SettledChain:
+        """What settling has found, for the ``settled=`` of another chain. Errors: SettleError before settling ends."""
+        return SettledChain.of(self)
 
     @property
     def counts(self) -> dict[str, int]:

@@ -198,7 +198,8 @@ class Driver:
         abandoned = self.interrupts.count > 1
         real = [e for e in self.errors if not (abandoned and isinstance(e[2], Interrupted | KeyboardInterrupt))]
         why = "" if done else "an exception" if real else self.interrupts.name or "the time given had passed"
-        result = Result(self.plan, self.parts, ended=why, path=self.record.path if self.record else "")
+        path = self.record.path if self.record else ""
+        result = Result(self.plan, self.parts, states=self.states, ended=why, path=path)
         error = self._explained(real, result) if real else KeyboardInterrupt() if abandoned and not done else None
         if self.record:
             # a full disk must not hide what happened before

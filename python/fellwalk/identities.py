@@ -23,7 +23,7 @@ FALSE_ALARM = 0.01  # for all identities of one set of draws together (Bonferron
 ALL_PRODUCTS = 20  # dimensions up to which all products x_i g_j are looked at; beyond only those with i = j
 BATCHES = 16  # for each chain
 # A term with fewer effective draws than this is not judged: its error is not known well enough for chances this small.
-FEWEST_EFFECTIVE = 50
+FEWEST_EFFECTIVE = 100
 GROUP = 1 << 20  # numbers that stand in memory together
 
 
@@ -111,22 +111,23 @@ def _judged(rows: Array) -> tuple[Array, Array, Array]:
     each (p, chains + 1). NaN chances where nothing can be said."""
     p, chains, _ = rows.shape
     heavy = ~(tail_index(rows.reshape(p, -1)) < HEAVY)
-    whole = _student(rows)
+    whole = _student(rows, 1)
     if chains == 1:
         mean, errors, chance = (np.repeat(a[:, None], 2, axis=1) for a in whole)
         chance[:, 0] = np.nan  # the same as all together
     else:
-        each = _student(rows.reshape(p * chains, 1, -1))
+        each = _student(rows.reshape(p * chains, 1, -1), chains)
         mean, errors, chance = (
             np.concatenate([a.reshape(p, chains), b[:, None]], axis=1) for a, b in zip(each, whole, strict=True))
     chance[heavy] = np.nan
     return mean, errors, chance
 
 
-def _student(rows: Array) -> tuple[Array, Array, Array]:
+def _student(rows: Array, siblings: int) -> tuple[Array, Array, Array]:
     """Mean, mean in errors, and its two-sided chance for rows (p, chains, n).
 
-    The error is the larger one of the initial monotone sequence's and of batch means; the skewness of the batches is
+    siblings: so many successive rows are of the same term. An error is never taken smaller than it is in the mean of
+    these: a chain that happened to see little shows too small a spread and too small an error of it at once. The error is the larger one of the initial monotone sequence's and of batch means; the skewness of the batches is
     taken out of Student's statistic (Hall 1992, Journal of the Royal Statistical Society B 54, from memory).
     """
     p, chains, n = rows.shape
@@ -137,7 +138,11 @@ def _student(rows: Array) -> tuple[Array, Array, Array]:
     away = means - means.mean(axis=1, keepdims=True)
     variance = (away**2).mean(axis=1)
     worth = np.minimum(ac.effective_size(rows), chains * n)
-    squared = np.maximum(rows.var(axis=(1, 2)) / worth, variance / (count - 1))
+    spread = rows.var(axis=(1, 2))
+    squared = np.maximum(spread / worth, variance / (count - 1))
+    worth = spread / squared
+    shared = squared.reshape(-1, siblings).mean(axis=1)
+    squared = np.maximum(squared, np.repeat(shared, siblings))
     freedom = np.minimum(count - 1.0, worth / 4)
     t = mean / np.sqrt(squared)
     a = (away**3).mean(axis=1) / np.maximum(variance, 1e-300) ** 1.5 / np.sqrt(count)

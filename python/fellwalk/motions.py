@@ -12,7 +12,7 @@ __all__ = ["Jittered", "Lagrangian", "Leapfrog", "NoUTurn"]
 def whole(name: str, value: object, least: int, most: int) -> int:
     """`value` as an int inside [least, most], or a sentence."""
     if isinstance(value, bool) or not hasattr(value, "__index__"):
-        raise ArgumentError(f"{name} must be a whole number; it is {value!r}")
+        raise ArgumentError(f"{name} must be a whole number; it is {value!r:.60}")
     number = value.__index__()
     if not least <= number <= most:
         raise ArgumentError(f"{name} must be from {least} to {most}; it is {number}")
@@ -26,17 +26,23 @@ def real(name: str, value: object, above: float, most: float, *, include: bool =
             raise TypeError
         number = float(value)  # type: ignore[arg-type]
     except (TypeError, ValueError, OverflowError):
-        raise ArgumentError(f"{name} must be a number; it is {value!r}") from None
+        raise ArgumentError(f"{name} must be a number; it is {value!r:.60}") from None
     if not (above < number <= most or (include and number == above)):
         bound = "at least" if include else "above"
         raise ArgumentError(f"{name} must be {bound} {above:g} and at most {most:g}; it is {number!r}")
     return number
 
 
+def set_plain(record: object, **values: object) -> None:
+    """Set fields of a frozen dataclass to the plain numbers that the checks made of them."""
+    for name, value in values.items():
+        object.__setattr__(record, name, value)
+
+
 def chosen(name: str, value: object, choices: tuple[str, ...]) -> str:
     """`value` when it is one of the choices, or a sentence."""
     if value not in choices:
-        raise ArgumentError(f"{name} must be one of {', '.join(map(repr, choices))}; it is {value!r}")
+        raise ArgumentError(f"{name} must be one of {', '.join(map(repr, choices))}; it is {value!r:.60}")
     return str(value)
 
 
@@ -52,7 +58,7 @@ class Leapfrog:
     name = "leapfrog"
 
     def __post_init__(self) -> None:
-        whole("halvings", self.halvings, 0, MAX_HALVINGS)
+        set_plain(self, halvings=whole("halvings", self.halvings, 0, MAX_HALVINGS))
 
     def core(self) -> dict[str, object]:
         """The members of the core's settings that this motion fixes."""
@@ -80,10 +86,10 @@ class Lagrangian:
     name = "lagrangian"
 
     def __post_init__(self) -> None:
-        real("bend", self.bend, 0.0, 1e6, include=True)
+        set_plain(self, bend=real("bend", self.bend, 0.0, 1e6, include=True))
         chosen("curvature", self.curvature, ("surrogate", "difference", "product"))
         chosen("scheme", self.scheme, ("split", "semi-explicit"))
-        whole("halvings", self.halvings, 0, MAX_HALVINGS)
+        set_plain(self, halvings=whole("halvings", self.halvings, 0, MAX_HALVINGS))
 
     def core(self) -> dict[str, object]:
         """The members of the core's settings that this motion fixes."""
@@ -100,7 +106,7 @@ class Jittered:
     name = "jittered"
 
     def __post_init__(self) -> None:
-        whole("steps", self.steps, 1, 2**31 - 1)
+        set_plain(self, steps=whole("steps", self.steps, 1, 2**31 - 1))
 
     def core(self) -> dict[str, object]:
         """The members of the core's settings that this path fixes."""
@@ -120,7 +126,7 @@ class NoUTurn:
     name = "no-u-turn"
 
     def __post_init__(self) -> None:
-        whole("doublings", self.doublings, 1, MAX_DOUBLINGS - 1)
+        set_plain(self, doublings=whole("doublings", self.doublings, 1, MAX_DOUBLINGS - 1))
         chosen("turn", self.turn, ("base", "metric"))
 
     def core(self) -> dict[str, object]:

@@ -59,6 +59,9 @@ def integrate(
     scale: diagonal of the inverse base metric, shape (dimension,), default ones; beta: strength of the rank-one term
     of the Lagrangian motion's metric, G = diag(1/scale) + beta g g'. Raises what the density raises.
     """
+    if not isinstance(density, Density):
+        raise ArgumentError(f"the first argument must be a fellwalk.Density; it is {type(density).__name__}: wrap your "
+                            "function as fellwalk.Density(function, dimension)")
     d = density.dimension
     position, velocity = as_vector(x, d, "x").copy(), as_vector(v, d, "v").copy()
     given = position.copy(), velocity.copy()

@@ -17,7 +17,8 @@ from fellwalk.judge import judge, judge_function
 from fellwalk.judgement import Judgement
 from fellwalk.parameters import Parameters
 from fellwalk.record import Record
-from fellwalk.run_record import ChainResult, plan_of, read_parts
+from fellwalk.run_record import ChainResult, plan_of, read_parts, read_states
+from fellwalk.settled import Settled
 from fellwalk.table import wrap
 
 __all__ = ["Result", "load"]
@@ -36,8 +37,10 @@ class Result:
     finished: were all draws asked for made; ended: why not.
     """
 
-    def __init__(self, plan: dict[str, Any], parts: Sequence[ChainResult], *, ended: str = "", path: str = "") -> None:
+    def __init__(self, plan: dict[str, Any], parts: Sequence[ChainResult], *, states: Sequence[bytes] = (),
+                 ended: str = "", path: str = "") -> None:
         self.plan = plan
+        self._states = list(states)
         self.names: list[str] = plan["names"]
         self.parameters = Parameters.from_json(plan["parameters"]) if plan.get("parameters") else None
         self.settings: dict[str, Any] = plan["settings"]
@@ -104,6 +107,11 @@ class Result:
             rows = [(np.empty(0, int), np.empty(0, int), np.empty(0, int), np.empty((0, self.plan["dimension"])))]
         chain, draw, code, position = (np.concatenate(column) for column in zip(*rows, strict=True))
         return chain, draw, code, position
+
+    @cached_property
+    def settled(self) -> Settled:
+        """What settling has found, for the ``settled=`` of another run. Errors: SettleError before settling ends."""
+        return Settled.of_states(self._states, self.plan["dimension"])
 
     @property
     def finished(self) -> bool:
@@ -216,4 +224,5 @@ def load(path: str | os.PathLike[str], *, salvage: bool = False) -> Result:
         ended = last[0].details.get("why", "") if last else ""
         if not last or last[0].kind == "resumed":
             ended = "the run was killed or is still going on"
-        return Result(plan, read_parts(record), ended=ended, path=record.path)
+        states = [] if salvage else read_states(record)
+        return Result(plan, read_parts(record), states=states, ended=ended, path=record.path)

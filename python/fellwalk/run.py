@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import os
 from concurrent.futures import Executor
+from dataclasses import replace as replace_settings
 from typing import Any
 
 import numpy as np
@@ -23,6 +24,7 @@ from fellwalk.record import Record
 from fellwalk.result import Result
 from fellwalk.run_record import ChainResult, begin, plan_of, read_check, read_parts, read_states
 from fellwalk.settings import Settings
+from fellwalk.settled import Settled
 from fellwalk.starts import starting_points
 from fellwalk.work import Check
 
@@ -45,6 +47,8 @@ def run(
     acceptance: float = 0.8,
     step_size: float | None = None,
     scale: ArrayLike | None = None,
+    rank: int | str = "auto",
+    settled: Result | Settled | None = None,
     gradients: bool | None = None,
     executor: Executor | str | None = None,
     record: str | os.PathLike[str] | None = None,
@@ -61,6 +65,9 @@ def run(
         ``start`` of the density, they are drawn (`fellwalk.starts.free_starts`).
     settle: settling transitions a chain, or "auto": until the scale has stabilised, between stated bounds.
     acceptance: the rate that settling aims the step size at. step_size, scale: where settling starts from.
+    rank: directions of large or small variance that the base metric learns beside its diagonal: a number, or "auto":
+        those that stand out, at most 16. settled: another result (or its ``settled``), whose settled parts are used in
+        turn in the place of settling; the plan keeps their hash.
     gradients: keep the gradient at every draw (default: up to 1,000 dimensions).
     executor: who makes the blocks: any concurrent.futures.Executor (the density then goes to its workers by pickling,
         or by `Density.factory`), "here", "threads", "processes", or None: threads for compiled densities; for Python
@@ -78,7 +85,12 @@ def run(
     if not isinstance(density, Density):
         raise ArgumentError(f"the first argument must be a fellwalk.Density; it is {type(density).__name__}: wrap your "
                             "function as fellwalk.Density(function, dimension)")
-    settings = _settings(motion, path, settle, acceptance, step_size)
+    settings = _settings(motion, path, settle, acceptance, step_size, rank)
+    taken = settled.settled if isinstance(settled, Result) else settled
+    if taken is not None:
+        if settle not in ("auto", 0):
+            raise ArgumentError(f"settled= takes the place of settling; leave settle out (it is {settle!r})")
+        settings = replace_settings(settings, settle=0, step_size=taken.chains[0].step_size)
     chains, keep = whole("chains", chains, 1, 2**20), whole("keep", keep, 1, 2**40)
     seconds = None if seconds is None else real("seconds", seconds, 0.0, 1e12)
     seed = int(np.random.SeedSequence().entropy) if seed is None else whole("seed", seed, 0, 2**128)
@@ -91,6 +103,7 @@ def run(
         "seed": seed,
         "gradients": density.dimension <= _GRADIENTS_UP_TO if gradients is None else bool(gradients),
         "model": density.model,
+        "settled": None if taken is None else taken.hash,
         "parameters": None if density.parameters is None else density.parameters.to_json(),
     }
     if starts is None and density.start is None and density.parameters is None:
@@ -102,7 +115,7 @@ def run(
         if audit and density.start is not None:
             glance_at_start(density)
         raise
-    states = _first_states(density, settings, points, seed, scale)
+    states = _first_states(density, settings, points, seed, scale, taken)
     if audit:
         glance(density, points[-1])
     parts = [ChainResult() for _ in states]
@@ -124,11 +137,13 @@ def _drive(plan: dict[str, Any], states: list[bytes], parts: list[ChainResult], 
 
 
 def _first_states(density: Density, settings: Settings, points: np.ndarray, seed: int,
-                  scale: ArrayLike | None) -> list[bytes]:
+                  scale: ArrayLike | None, settled: Settled | None) -> list[bytes]:
     states = []
     for c, point in enumerate(points):
+        part = None if settled is None else settled.for_chain(c, density.dimension)
         try:
-            chain = Chain._with_settings(density, settings, point, np.random.SeedSequence(seed, spawn_key=(c,)), scale)
+            chain = Chain._with_settings(density, settings, point, np.random.SeedSequence(seed, spawn_key=(c,)), scale,
+                                         part)
         except StartError as error:
             raise StartError(f"chain {c + 1} of {len(points)}: {error}") from None
         states.append(chain.state)
@@ -136,9 +151,9 @@ def _first_states(density: Density, settings: Settings, points: np.ndarray, seed
 
 
 def _settings(motion: Motion | None, path: Path | None, settle: int | str, acceptance: float,
-              step_size: float | None) -> Settings:
+              step_size: float | None, rank: int | str) -> Settings:
     chosen = {key: value for key, value in (("motion", motion), ("path", path)) if value is not None}
-    settings = Settings(settle=settle, acceptance=acceptance, step_size=step_size, **chosen)
+    settings = Settings(settle=settle, acceptance=acceptance, step_size=step_size, rank=rank, **chosen)
     if settings.settle_bounds()[1] == 0 and step_size is None:
         raise ArgumentError("with settle=0 nothing finds a step size; give step_size=, or let the chains settle")
     return settings

@@ -4,7 +4,7 @@ from dataclasses import asdict, dataclass, field
 
 from fellwalk._core import MAX_DIRECTIONS
 from fellwalk.errors import ArgumentError
-from fellwalk.motions import MOTIONS, PATHS, Leapfrog, Motion, NoUTurn, Path, real, whole
+from fellwalk.motions import MOTIONS, PATHS, Leapfrog, Motion, NoUTurn, Path, real, set_plain, whole
 
 __all__ = ["Settings"]
 
@@ -34,16 +34,17 @@ class Settings:
             raise ArgumentError(f"motion must be one of {_listed(MOTIONS)}; it is {self.motion!r:.60}")
         if not isinstance(self.path, tuple(PATHS.values())):
             raise ArgumentError(f"path must be one of {_listed(PATHS)}; it is {self.path!r:.60}")
-        self.settle_bounds()
-        real("acceptance", self.acceptance, 0.0, 0.9999)
+        _, most = self.settle_bounds()
+        set_plain(self, settle=self.settle if self.settle == "auto" else most, adapt_scale=bool(self.adapt_scale),
+                  acceptance=real("acceptance", self.acceptance, 0.0, 0.9999))
         if self.step_size is not None:
-            real("step_size", self.step_size, 0.0, 1e300)
+            set_plain(self, step_size=real("step_size", self.step_size, 0.0, 1e300))
         if self.rank != "auto":
             if isinstance(self.rank, str):
                 raise ArgumentError(f'rank must be a number of directions or "auto"; it is {self.rank!r}')
-            whole("rank", self.rank, 0, MAX_DIRECTIONS)
+            set_plain(self, rank=whole("rank", self.rank, 0, MAX_DIRECTIONS))
         if self.beta is not None:
-            real("beta", self.beta, 0.0, 1e300, include=True)
+            set_plain(self, beta=real("beta", self.beta, 0.0, 1e300, include=True))
 
     def settle_bounds(self) -> tuple[int, int]:
         """Least and most settling transitions."""

@@ -130,9 +130,23 @@ TURN = [
     Planted(
         "turn test with momenta of the full metric at the start of a path and of the base metric elsewhere",
         Mutation(
-            ORBIT, "        momentum(&chain->walk, p, b->first_p);", "        fw_copy(chain->walk.d, p->w, b->first_p);"
+            ORBIT,
+            "    if (by_metric(chain)) fw_axpy(walk->d,",
+            "    if (by_metric(chain) && p->log_jacobian == 0.0) fw_axpy(walk->d,",
         ),
         (lagrangian(NO_U_TURN, "student", turn=1), lagrangian(NO_U_TURN, "student", scheme=1, curvature=2, turn=1)),
+    ),
+    Planted(
+        "turn test with momenta of the base metric at the start of a path and of the full metric elsewhere",
+        Mutation(
+            ORBIT,
+            "    if (by_metric(chain)) fw_axpy(walk->d,",
+            "    if (by_metric(chain) && p->log_jacobian != 0.0) fw_axpy(walk->d,",
+        ),
+        (
+            lagrangian(NO_U_TURN, "student", curvature=2, turn=1),
+            lagrangian(NO_U_TURN, "student", scheme=1, curvature=1, turn=1),
+        ),
     ),
     Planted(
         "a new half that turned is drawn from all the same",
