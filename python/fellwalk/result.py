@@ -164,8 +164,10 @@ class Result:
         if all(self.chains):
             settled = [part.count("settle") for part in self._parts]
             sizes = [chain["step_size"] for chain in self.chains]
-            lines.append(f"Settled in {_range(settled, 'd')} transitions: step size {_range(sizes, '.3g')}"
-                         f"{self._bend_line()}.")
+            how = f"Settled in {_range(settled, 'd')} transitions"
+            if self.plan.get("settled"):
+                how = f"Settled part {self.plan['settled']} taken over"
+            lines.append(f"{how}: step size {_range(sizes, '.3g')}{self._bend_line()}.")
         if not self.finished:
             on = f" Go on with fellwalk.resume({self.path!r}, density)." if self.path else ""
             lines.append(f"Stopped early: {self.ended or 'not all draws asked for are made'} "

@@ -15,7 +15,7 @@ from functools import cached_property
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy import linalg
+from scipy import linalg, special
 
 from fellwalk import autocorrelation as ac
 from fellwalk.stein import HEAVY, Frame, tail_index
@@ -32,6 +32,7 @@ MOST_LINEAR, MOST_PAIRED = 150, 12
 DRAWS_PER_TERM = 8
 FOLDS = 8
 BATCHES = 100
+FALSE_ALARM = 0.01
 # Penalties, as a share of the number of draws, on terms of variance one. The first only keeps the factorisation alive
 # where terms repeat each other.
 PENALTIES = (1e-12, 1e-3, 1e-2, 1e-1, 1.0)
@@ -57,7 +58,6 @@ class Sharpened:
     raw_error: Array
     correction: Array
     correction_error: Array
-    correction_worth: Array
 
 
 class _Design:
@@ -124,12 +124,14 @@ def _solve(gram: Array, penalty: float, product: Array) -> Array:
 class Sharpener:
     """Fits terms made from draws and gradients, both (chains, n, dimension), in the coordinates of the gradients.
 
-    candidates: which of "linear", "quadratic", "cubic" may be tried besides "none".
+    choice: "auto" tries all candidates and takes the best; the name of one takes that, better or not, wherever there are
+    draws enough to fit it.
     """
 
-    def __init__(self, x: Array, g: Array, candidates: Sequence[str] = CANDIDATES) -> None:
+    def __init__(self, x: Array, g: Array, choice: str = "auto") -> None:
         self.chains, self.n, self.dimension = x.shape
-        self.candidates = tuple(candidates)
+        self.forced = choice != "auto"
+        self.candidates = (choice,) if self.forced else CANDIDATES
         self._x, self._g = x.reshape(-1, self.dimension), g.reshape(-1, self.dimension)
         self.folds = _folds(self.chains, self.n)
 
@@ -157,7 +159,7 @@ class Sharpener:
             seen = [f for k, f in enumerate(self.folds) if k % 2 != parity]
             linear, paired = self._choose(values, seen)
             blocks = [self.frame.linear(linear)]
-            if "quadratic" in self.candidates:
+            if {"quadratic", "cubic"} & set(self.candidates):
                 blocks.append(self.frame.pairs(paired))
             made.append((_Design(blocks, self.folds), every[parity::2]))
         return made
@@ -202,16 +204,25 @@ class Sharpener:
                 series, fitting = rest
                 left, _ = self._error(series)
                 left = np.sqrt(left**2 + fitting) * _skewed(series.reshape(q, self.chains, self.n))
-                wins = (left < WORTHWHILE * error) & (spread > 0)
+                wins = ((left < WORTHWHILE * error) | (self.forced & (by == 0))) & (spread > 0)
                 if designs[0][0].heavy and wins.any():
                     # One by one such terms may have no variance; what is taken off in the end must show one.
                     wins[wins] = tail_index(f[wins] - series[wins]) < HEAVY
                 mean[wins], error[wins], by[wins] = series[wins].mean(axis=1), left[wins], level
                 taken[wins] = f[wins] - series[wins]
         correction_error, worth = self._error(taken)
+        doubtful = self._contradicts(taken, correction_error, worth)
+        mean[doubtful], error[doubtful], by[doubtful] = 0.0, raw_error[doubtful], 0
         floor = np.finfo(float).eps * (np.abs(centre) + spread)
         return Sharpened(centre + unit * mean, np.maximum(unit * error, floor), by, centre, unit * raw_error,
-                         unit * taken.mean(axis=1), unit * correction_error, worth)
+                         unit * taken.mean(axis=1), unit * correction_error)
+
+    def _contradicts(self, taken: Array, error: Array, worth: Array) -> NDArray[np.bool_]:
+        """Where what was taken off has a mean that is not zero within its error: then the draws do not belong to these
+        gradients, and a small error would only hide it. False alarms: 1% for all values together."""
+        with np.errstate(all="ignore"):
+            chance = 2 * special.stdtr(np.clip(worth / 4, 1, 60), -np.abs(taken.mean(axis=1)) / error)
+        return chance < FALSE_ALARM / len(taken)
 
     def _left(self, f: Array, designs: list[tuple[_Design, list[int]]], level: int) -> tuple[Array, Array] | None:
         """What is left of the values after one candidate, and the variance that fitting adds to its mean; or None."""
