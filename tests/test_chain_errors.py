@@ -203,3 +203,31 @@ def test_a_sentence_is_one_line_and_short_even_in_many_dimensions():
         fw.Chain(density, np.zeros(d))
     assert "\n" not in str(caught.value)
     assert len(str(caught.value)) < 300
+
+
+@pytest.mark.parametrize("options", [
+    {"step_size": np.float32(0.5)}, {"acceptance": np.float32(0.75)}, {"settle": np.int32(5)}, {"rank": np.int64(2)},
+    {"motion": fw.Leapfrog(halvings=np.int64(1))}, {"motion": fw.Lagrangian(bend=np.float32(0.5))},
+    {"path": fw.Jittered(np.int64(3))}, {"path": fw.NoUTurn(np.uint8(4))}, {"beta": np.float16(0.5)},
+    {"adapt_scale": np.bool_(False)},
+], ids=str)  # fmt: skip
+def test_numbers_of_numpy_are_settings_like_any_other(options):
+    chain = make(**{"step_size": 0.5, **options})
+    plain = make(**{"step_size": 0.5, **{k: v.item() if hasattr(v, "item") else v for k, v in options.items()}})
+    assert chain.state == fw.Chain.from_state(chain.density, chain.state).state
+    assert chain.settings == plain.settings
+
+
+@pytest.mark.parametrize("value", ["0.5", b"1", 10**400, np.complex64(1), np.complex128(0.5)])
+def test_what_only_looks_like_a_real_number_is_no_setting(value):
+    with pytest.raises(errors.ArgumentError, match="step_size must be a number"):
+        make(step_size=value)
+
+
+@pytest.mark.parametrize("start", [
+    [0.1, 1j], np.array([0.1, 2.0], np.complex64), ["0.1", "0.2"], [0.1, 10**400], [[1, 2], [3]], {"a": 1.0},
+    np.array([np.complex64(1), 0.1], object),
+], ids=lambda start: str(start)[:24])  # fmt: skip
+def test_a_start_that_holds_no_real_numbers(start):
+    with pytest.raises(errors.ShapeError, match="must be an array of real numbers"):
+        fw.Chain(fw.Density(normal, 2), start)

@@ -111,7 +111,7 @@ def test_keeping_changes_nothing_that_settling_has_learned(c):
 
 def test_adapting_while_keeping_is_seen():
     c = Combination("leapfrog", 0, 0, "jittered", 0, 0, 0, "student")
-    still_learning = build.Mutation("chain.c", "if (settling && !climbing) fw_learn_update(", "fw_learn_update(")
+    still_learning = build.Mutation("chain.c", "else if (settling) fw_learn_update(", "else fw_learn_update(")
     assert settle_and_keep(c, 150, 150).status == 0
     wrong = settle_and_keep(c, 150, 150, still_learning)
     assert wrong.status != 0 or wrong.others > 0

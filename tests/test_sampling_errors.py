@@ -50,18 +50,17 @@ def test_stated_errors_agree_with_independent_estimates(name, way):
     assert not bad, "\n".join(bad)
 
 
-@pytest.mark.parametrize(("name", "way"), [("mcmc01", "leapfrog, no-u-turn"), ("Norris", "leapfrog, jittered")])
-def test_stated_errors_are_the_true_scatter(name, way):
-    """300 runs of 4 x 1000 draws: what estimates miss the truth by, over the stated errors, is 1 within 25%.
+def test_stated_errors_are_the_true_scatter():
+    """200 runs of 4 x 1000 draws: what estimates miss the truth by, over the stated errors, is 1 within 32%.
 
-    The root mean square of 300 standard normals scatters by 4.1%; the limit used, at the rate FALSE_ALARM for all
-    quantities of a test together, is about 20%; 5% are left to the noise and skewness of estimates from few draws.
+    The root mean square of 200 standard normals scatters by 5.0%; the limit used, at the rate FALSE_ALARM for all
+    quantities of a test together, is about 25%; 5% are left to the noise and skewness of estimates from few draws.
     """
-    runs = 300
-    known = [m for m in sampling.target(name).marginals.values() if isinstance(m.of, int)]
+    runs = 200
+    known = [m for m in sampling.target("mcmc01").marginals.values() if isinstance(m.of, int)]
     missed = []
     for seed in range(runs):
-        judged = sampling.draw(name, way, keep=1000, seed=4000 + seed).judgement
+        judged = sampling.draw("mcmc01", "leapfrog, no-u-turn", keep=1000, seed=4000 + seed).judgement
         row = []
         for marginal in known:
             i = marginal.of
@@ -74,6 +73,6 @@ def test_stated_errors_are_the_true_scatter(name, way):
     ratio = np.sqrt((np.array(missed) ** 2).mean(axis=0))
     rate = sampling.FALSE_ALARM / (2 * ratio.size)
     low, high = np.sqrt(stats.chi2.ppf([rate, 1 - rate], runs) / runs) * [0.95, 1.05]
-    assert high < 1.27
-    assert low > 0.76
+    assert high < 1.32
+    assert low > 0.72
     assert np.all((low < ratio) & (ratio < high)), f"misses over stated errors: {np.round(ratio, 2)}, not 1"

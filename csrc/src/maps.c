@@ -279,6 +279,7 @@ int fw_maps_target(fw_maps *maps, const fw_target *natural, fw_target *target)
     if (natural->dimension != maps->natural || !natural->density) return FW_BAD_ARGUMENT;
     maps->target = *natural;
     maps->known = 0;
+    for (size_t i = 0; i < maps->natural; ++i) maps->g[i] = NAN; /* an entry never written is not taken for 0 */
     target->dimension = maps->free;
     target->density = fw_mapped_density;
     target->density_context = maps;

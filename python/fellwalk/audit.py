@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass, field
+from typing import Any
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
@@ -149,7 +150,7 @@ def audit(density: Density, x: ArrayLike | Mapping[str, ArrayLike] | None = None
                  _largest_share(points))
 
 
-def _point(density: Density, x: object, rng: np.random.Generator) -> NDArray[np.float64]:
+def _point(density: Density, x: Any, rng: np.random.Generator) -> NDArray[np.float64]:
     given = density.start if x is None else x
     if density.parameters is not None:
         return free_starts(density, given, 1, rng).reshape(-1)
@@ -236,7 +237,7 @@ def _compared(probe: Probe, places: list[tuple[str, NDArray]], reach: NDArray, w
 
 
 def _gradient_findings(probe: Probe, points: list[Compared]) -> list[Finding]:
-    weight = sum(p.importance for p in points)
+    weight = np.sum([p.importance for p in points], axis=0)
     if not np.any(weight > 0):
         off = [(float(np.max(np.abs(p.given - p.right)[p.slightly_off] / np.abs(p.right)[p.slightly_off])), p)
                for p in points if p.slightly_off.any()]
@@ -248,7 +249,7 @@ def _gradient_findings(probe: Probe, points: list[Compared]) -> list[Finding]:
                         f"differences of the log density by {share:.1g} of its size at {p.label}, more than rounding "
                         "explains: single precision, a constant with few digits, or a solver with a loose tolerance.",
                         probe.density.coordinates[i])]
-    wrong = sorted(np.flatnonzero(weight > 0), key=lambda i: -weight[i])
+    wrong = sorted(np.flatnonzero(weight > 0).tolist(), key=lambda i: -weight[i])
     guesses = [(i, guess(probe, points, i)) for i in wrong[:8]]
     i, why = guesses[0]
     return [Finding("mistake", "gradient", _said(probe, points, i, len(wrong)) + " " + why + _others(probe, guesses),
@@ -310,7 +311,8 @@ def glance(density: Density, y: NDArray[np.float64]) -> None:
 
 def glance_at_start(density: Density) -> None:
     """`glance` at the density's own start, for when a start is refused: the gradient may not have been written."""
-    glance(density, density.start if density.parameters is None else density.parameters.free(density.start))
+    if density.start is not None:
+        glance(density, density.start if density.parameters is None else density.parameters.free(density.start))
 
 
 def _glance(density: Density, probe: Probe, y: NDArray[np.float64]) -> None:

@@ -34,7 +34,7 @@ class Block:
     phase: str
     draws: NDArray[np.float64]
     gradients: NDArray[np.float64] | None
-    facts: NDArray
+    facts: NDArray[np.void]
     failures: tuple[NDArray[np.int64], NDArray[np.int32], NDArray[np.float64]]
     error: BaseException | None = None
 
@@ -132,7 +132,8 @@ class Chain:
         x = as_vector(start, self.density.dimension, "the starting point")
         if not np.all(np.isfinite(x)):
             bad = int(np.flatnonzero(~np.isfinite(x))[0])
-            raise StartError(f"the starting point is {x[bad]} in {self.density.coordinates[bad]}; start from finite numbers")
+            raise StartError(f"the starting point is {x[bad]} in {self.density.coordinates[bad]}; start from finite "
+                             "numbers")
         try:
             status = self._engine.start(x)
         finally:
@@ -146,8 +147,8 @@ class Chain:
         value, gradient = self.density(x)
         wrong = np.flatnonzero(~np.isfinite(gradient))
         if np.isfinite(value) and not len(wrong):
-            return StartError(f"the log density or its gradient was not finite at the starting point {brief(x)}, and was "
-                              "finite there at a second call; the function must depend on the position alone")
+            return StartError(f"the log density or its gradient was not finite at the starting point {brief(x)}, and "
+                              "was finite there at a second call; the function must depend on the position alone")
         what = f"the log density is {value}"
         if np.isfinite(value):
             what = f"the gradient is {gradient[wrong[0]]} in {self.density.coordinates[wrong[0]]}"
@@ -176,7 +177,8 @@ class Chain:
         """
         count = whole("draws", draws, 0, 2**40)
         if not self.settled:
-            raise SettleError("this chain has not settled; call settle() first, or make it with settle=0 and a step_size")
+            raise SettleError("this chain has not settled; call settle() first, or make it with settle=0 and a "
+                              "step_size")
         return self._raised(self.block(count))
 
     def _raised(self, block: Block) -> Block:
@@ -294,7 +296,8 @@ class Chain:
     def state(self, given: bytes) -> None:
         settings, core = _split_state(given)
         if settings != self.settings:
-            raise StateError(f"the stored state belongs to a chain of other settings ({settings}); use Chain.from_state")
+            raise StateError(f"the stored state belongs to a chain of other settings ({settings}); use "
+                             "Chain.from_state")
         self._import(core)
 
     @classmethod
@@ -343,13 +346,15 @@ def _joined(phase: str, parts: list[Block], dimension: int) -> Block:
                      (np.empty(0, np.int64), np.empty(0, np.int32), np.empty((0, dimension))))
     starts = np.cumsum([0, *(len(part) for part in parts[:-1])])
     index = [part.failures[0] + start for part, start in zip(parts, starts, strict=True)]
-    gradients = None if parts[0].gradients is None else np.concatenate([part.gradients for part in parts])
+    code, position = (np.concatenate(arrays) for arrays in zip(*(part.failures[1:] for part in parts), strict=True))
+    slopes = [part.gradients for part in parts if part.gradients is not None]
+    gradients = np.concatenate(slopes) if slopes else None
     return Block(
         phase,
         np.concatenate([part.draws for part in parts]),
         gradients,
         np.concatenate([part.facts for part in parts]),
-        (np.concatenate(index), *(np.concatenate([part.failures[i] for part in parts]) for i in (1, 2))),
+        (np.concatenate(index), code, position),
         parts[-1].error,
     )
 

@@ -1,6 +1,7 @@
 """The user's log density: what is called, how, and how often."""
 
 from collections.abc import Callable, Mapping, Sequence
+from typing import Any, SupportsIndex
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
@@ -22,7 +23,7 @@ from fellwalk.parameters import ByName, Parameters
 __all__ = ["Density"]
 
 
-def as_vector(value: ArrayLike, dimension: int, what: str) -> NDArray[np.float64]:
+def as_vector(value: object, dimension: int, what: str) -> NDArray[np.float64]:
     """A new contiguous float64 array of shape (dimension,), or a sentence."""
     try:
         array = np.array(reals(value))
@@ -181,7 +182,7 @@ class Density:
             raise stopped(-2, "the Hessian product", self, point)
         return out
 
-    def __reduce_ex__(self, protocol: int) -> object:
+    def __reduce_ex__(self, protocol: SupportsIndex) -> str | tuple[Any, ...]:
         if self.made_by is not None:
             function, args = self.made_by
             return Density.factory, (function, *args)

@@ -28,12 +28,17 @@ GROUP = 64
 
 @dataclass(frozen=True, eq=False)
 class Quantile:
-    """One quantile of every value: value, error (values,), and by: which candidate it comes from."""
+    """One quantile of every value: value, error (values,), and by: which candidate it comes from.
+
+    worth: independent draws that would give the sharpened share of draws below it the error it has; NaN where not
+    sharpened.
+    """
 
     level: float
     value: Array
     error: Array
     by: tuple[str, ...]
+    worth: Array
 
 
 @dataclass(frozen=True, eq=False)
@@ -137,7 +142,8 @@ def estimate_all(
     raw = Estimates(
         tuple(names), chains, n, numbers["estimate"], numbers["error"], worth, nothing, numbers["spread"],
         numbers["spread_error"], nothing,
-        {level: Quantile(level, value, np.where(still, 0.0, error), nothing) for level, (value, error) in plain.items()},
+        {level: Quantile(level, value, np.where(still, 0.0, error), nothing, np.full(count, np.nan))
+         for level, (value, error) in plain.items()},
         None, checked, why_not)
     if sharpener is None:
         return raw
@@ -157,7 +163,8 @@ class _Sharper:
         count = len(raw.names)
         self.numbers = {key: getattr(raw, key).astype(float) for key in ("estimate", "error", "spread", "spread_error")}
         self.by, self.spread_by = np.zeros(count, int), np.zeros(count, int)
-        self.at = {level: (q.value.copy(), q.error.copy(), np.zeros(count, int)) for level, q in raw.quantiles.items()}
+        self.at = {level: (q.value.copy(), q.error.copy(), np.zeros(count, int), q.worth.copy())
+                   for level, q in raw.quantiles.items()}
 
     def take(self, part: NDArray[np.int64], x: Array, event: NDArray[np.bool_], sharpener: Sharpener) -> None:
         from fellwalk.judge import standardise
@@ -183,7 +190,7 @@ class _Sharper:
         self.numbers["spread"][at] = np.ldexp(spread, exponent[won])
         self.numbers["spread_error"][at] = np.ldexp(error[1][won] / (2 * spread), exponent[won])
         self.spread_by[at] = by[1][won]
-        for k, (level, (value, value_error, value_by)) in enumerate(self.at.items(), start=2):
+        for k, (level, (value, value_error, value_by, value_worth)) in enumerate(self.at.items(), start=2):
             won = (by[k] > 0) & ~event
             # The share of draws below the plain quantile is off by what sharpening says; so is the level to look at.
             shifted = np.clip(level + plain[k] - mean[k], 0.0, 1.0)
@@ -192,7 +199,7 @@ class _Sharper:
                 value[part[i]] = np.ldexp(np.quantile(ordered[i], shifted[i]), exponent[i]) + origin[i]
                 wide = ac.quantile_error(ordered[i : i + 1], float(np.clip(shifted[i], 1e-9, 1 - 1e-9)), worth)
                 value_error[part[i]] = np.ldexp(wide[0], exponent[i])
-                value_by[part[i]] = by[k, i]
+                value_by[part[i]], value_worth[part[i]] = by[k, i], worth[0]
 
     def estimates(self, raw: Estimates) -> Estimates:
         def words(by: NDArray[np.int64]) -> tuple[str, ...]:
@@ -201,7 +208,8 @@ class _Sharper:
         numbers = self.numbers
         with np.errstate(all="ignore"):
             worth = np.where(self.by > 0, (numbers["spread"] / numbers["error"]) ** 2, raw.worth)
-        levels = {level: Quantile(level, value, error, words(by)) for level, (value, error, by) in self.at.items()}
+        levels = {level: Quantile(level, value, error, words(by), share_worth)
+                  for level, (value, error, by, share_worth) in self.at.items()}
         return Estimates(raw.names, raw.chains, raw.draws_per_chain, numbers["estimate"], numbers["error"], worth,
                          words(self.by), numbers["spread"], numbers["spread_error"], words(self.spread_by), levels, raw,
                          raw.checked)

@@ -14,14 +14,13 @@ from numpy.typing import ArrayLike
 
 from fellwalk import autocorrelation as ac
 from fellwalk import verdict as verdict_module
-from fellwalk.errors import ArgumentError
 from fellwalk.estimates import Estimates, estimate_all
 from fellwalk.identities import IdentityCheck, check_identities, describe
+from fellwalk.judge_input import checked_draws, checked_facts, checked_gradients, checked_names, checked_spent, values_of
 from fellwalk.judgement import Judgement
 from fellwalk.sharpen import Sharpener
 
 LEVELS = {"low": 0.05, "middle": 0.5, "high": 0.95}
-FEWEST_DRAWS = 4  # two in each half of a chain: below that a half has no variance
 MOST_SHARPENED = 1000  # parameters: beyond, only what is asked for by `fellwalk.Result.estimate` is sharpened
 
 # A sharpened estimate may be worth thousands of times its draws; but R-hat, autocorrelations and the fit itself rest on
@@ -29,7 +28,6 @@ MOST_SHARPENED = 1000  # parameters: beyond, only what is asked for by `fellwalk
 # that are then left, an effective size is known to about a fifth (relative spread over 40 runs of 4 x 1000 draws of a
 # first-order autoregression that are worth 210: 20%).
 MOST_CREDIT = 2.0
-SPENT = ("gradients", "products", "seconds")
 
 # Parameters are worked on in groups of about this many numbers, so that the transforms of 1e5 parameters never
 # stand in memory together.
@@ -59,11 +57,11 @@ def judge(
 
     Raises ArgumentError, naming the place, for anything else. Chains are counted from 1 in everything that is printed.
     """
-    raw, x = _checked_draws(draws)
+    raw, x = checked_draws(draws)
     chains, n, dimension = x.shape
-    names = _checked_names(names, dimension)
-    energies, failure = _checked_facts(facts, chains, n)
-    spent = _checked_spent(spent)
+    names = checked_names(names, dimension)
+    energies, failure = checked_facts(facts, chains, n)
+    spent = checked_spent(spent)
     numbers = measure(x)
     numbers["event"] = np.full(dimension, raw.dtype == np.bool_)
     pair = checked_gradients(x if free_draws is None else free_draws, gradients, (chains, n))
@@ -95,155 +93,6 @@ def judge_function(
         free_draws = np.asarray(draws, dtype=np.float64)
     return judge(values, names, facts=facts, spent=spent, gradients=gradients, free_draws=free_draws,
                  coordinates=coordinates)
-
-
-def values_of(
-    draws: ArrayLike, f: Callable[[np.ndarray], Any], names: Sequence[str] | None = None
-) -> tuple[np.ndarray, Sequence[str]]:
-    """Values (chains, draws, k) of a function of one draw, and names for them; see `judge_function`."""
-    if not callable(f):
-        raise ArgumentError(f"The function of the draws must be callable, not {type(f).__name__}.")
-    _, x = _checked_draws(draws)
-    chains, n, _ = x.shape
-    view = x.view()
-    view.flags.writeable = False
-    values: np.ndarray | None = None
-    is_scalar = False
-    for chain in range(chains):
-        for draw in range(n):
-            value = np.asarray(f(view[chain, draw]))
-            where = f"for draw {draw + 1} of chain {chain + 1}"
-            if value.ndim > 1 or value.size == 0 or value.dtype.kind not in "biuf":
-                raise ArgumentError(
-                    "The function must return a real number, a truth value or a vector of them, but "
-                    f"{where} it returned {_describe(value)}."
-                )
-            if values is None:
-                is_scalar = value.ndim == 0
-                values = np.empty((chains, n, value.size), dtype=value.dtype)
-                shape = value.shape
-            if value.shape != shape:
-                raise ArgumentError(
-                    f"The function must return the same shape every time, but {where} it returned shape {value.shape} "
-                    f"after {shape}."
-                )
-            if value.dtype != values.dtype:
-                # A function that gives an integer for one draw and a float for another is a function of numbers.
-                values = values.astype(np.result_type(values, value))
-            values[chain, draw] = value
-    if names is None:
-        label = getattr(f, "__name__", "value")
-        label = label if label.isidentifier() else "value"
-        names = [label] if is_scalar else [f"{label}[{i}]" for i in range(values.shape[2])]
-    return values, names
-
-
-def _describe(value: np.ndarray) -> str:
-    return f"an array of shape {value.shape} and type {value.dtype}"
-
-
-# ---- what comes in --------------------------------------------------------------------------------------------------
-
-
-def _checked_draws(draws: ArrayLike) -> tuple[np.ndarray, np.ndarray]:
-    if np.ma.isMaskedArray(draws) and np.ma.is_masked(draws):
-        raise ArgumentError("The draws are a masked array with masked entries; leave those draws out first.")
-    try:
-        raw = np.asarray(draws)
-    except (ValueError, TypeError):
-        raise ArgumentError(
-            "The draws must form one array (chains, draws, parameters), but the lists given differ in length."
-        ) from None
-    if raw.dtype.kind not in "biuf":
-        raise ArgumentError(f"The draws must be real numbers, but they have type {raw.dtype}.")
-    if raw.ndim != 3:
-        hint = "; for a single chain give draws[None]" if raw.ndim == 2 else ""
-        raise ArgumentError(
-            f"The draws must have shape (chains, draws, parameters), but they have shape {raw.shape}{hint}."
-        )
-    chains, n, dimension = raw.shape
-    if chains == 0 or dimension == 0:
-        lacking = "chain" if chains == 0 else "parameter"
-        raise ArgumentError(f"There is no {lacking} in draws of shape {raw.shape}; at least one is needed.")
-    if n < FEWEST_DRAWS:
-        raise ArgumentError(f"There are {n} draws a chain; at least {FEWEST_DRAWS} are needed to judge anything.")
-    with np.errstate(over="ignore"):
-        x = raw.astype(np.float64, copy=False)
-    finite = np.isfinite(x)
-    if not finite.all():
-        chain, draw, parameter = (int(i) for i in np.argwhere(~finite)[0])
-        raise ArgumentError(
-            f"Draw {draw + 1} of chain {chain + 1} (counted from 1) is {x[chain, draw, parameter]} in parameter "
-            f"x[{parameter}]; {int((~finite).sum())} of {x.size} numbers are not finite, and all must be."
-        )
-    return raw, x
-
-
-def _checked_names(names: Sequence[str] | None, dimension: int) -> list[str]:
-    if names is None:
-        return [f"x[{i}]" for i in range(dimension)]
-    if isinstance(names, str):
-        raise ArgumentError(f"The names must be a list of strings, not the single string {names!r}.")
-    try:
-        names = list(names)
-    except TypeError:
-        raise ArgumentError(f"The names must be a list of strings, not {type(names).__name__}.") from None
-    if len(names) != dimension:
-        raise ArgumentError(f"There are {len(names)} names for {dimension} parameters; one is needed for each.")
-    seen: dict[str, int] = {}
-    for i, name in enumerate(names):
-        if not isinstance(name, str) or not name.strip() or not name.isprintable():
-            raise ArgumentError(f"Name {i + 1} is {name!r}; a name must be a printable string that is not blank.")
-        if name in seen:
-            raise ArgumentError(
-                f"The name {name!r} stands for parameters {seen[name] + 1} and {i + 1}; names must differ."
-            )
-        seen[name] = i
-    return [str(name) for name in names]
-
-
-def _checked_facts(facts: np.ndarray | None, chains: int, n: int) -> tuple[np.ndarray | None, np.ndarray | None]:
-    if facts is None:
-        return None, None
-    fields = getattr(getattr(facts, "dtype", None), "names", None)
-    if fields is None or not {"energy", "failure"} <= set(fields):
-        raise ArgumentError('The facts must be a structured array with the fields "energy" and "failure".')
-    if facts.shape != (chains, n):
-        raise ArgumentError(
-            f"The facts must have shape {(chains, n)} like the draws, but they have shape {facts.shape}."
-        )
-    return np.asarray(facts["energy"], dtype=np.float64), np.asarray(facts["failure"])
-
-
-def _checked_spent(spent: Mapping[str, float] | None) -> dict[str, float]:
-    if spent is None:
-        return {}
-    if not isinstance(spent, Mapping) or not set(spent) <= set(SPENT):
-        raise ArgumentError(f"What was spent must be a dict with any of the keys {', '.join(SPENT)}.")
-    for key, value in spent.items():
-        if isinstance(value, bool) or not isinstance(value, int | float | np.number) or not 0 <= value < np.inf:
-            raise ArgumentError(f"What was spent in {key} must be a finite number, zero or more, not {value!r}.")
-    return {key: spent[key] for key in SPENT if key in spent}
-
-
-def checked_gradients(
-    free: ArrayLike, gradients: np.ndarray | None, shape: tuple[int, int]
-) -> tuple[np.ndarray, np.ndarray] | None:
-    """Draws and gradients in the same coordinates, both finite float64 (chains, n, dimension), or None without them."""
-    if gradients is None:
-        return None
-    x, g = np.asarray(free, dtype=np.float64), np.asarray(gradients, dtype=np.float64)
-    if x.shape != g.shape or x.ndim != 3 or x.shape[:2] != shape:
-        raise ArgumentError(
-            f"The gradients must have one row for each draw, in the same coordinates; draws of shape {x.shape} and "
-            f"gradients of shape {g.shape} were given for {shape[0]} chains of {shape[1]} draws."
-        )
-    finite = np.isfinite(g).all(axis=2) & np.isfinite(x).all(axis=2)
-    if not finite.all():
-        chain, draw = (int(i) for i in np.argwhere(~finite)[0])
-        raise ArgumentError(f"The gradient or the free coordinates at draw {draw + 1} of chain {chain + 1} (counted from "
-                            "1) are not finite.")
-    return x, g
 
 
 # ---- what is computed -----------------------------------------------------------------------------------------------
@@ -385,7 +234,7 @@ def prepare(
     """The check of draws against gradients, what sharpens with them, or None and a sentence why nothing does."""
     if pair is None:
         return None, None, ""
-    if failure is not None and np.isin(failure, verdict_module.EDGE_CODES).any():
+    if failure is not None and np.isin(failure, EDGE_CODES).any():
         why = "paths met an edge of the support, where the identities that sharpening rests on need not hold"
         return IdentityCheck(0, 0, (), why), None, f"Not sharpened: {why}."
     checked = check_identities(*pair)
@@ -402,14 +251,9 @@ def _credited(numbers: dict[str, np.ndarray], best: Estimates) -> dict[str, np.n
     sharp = np.array(best.by) != "none"
     for key in ("worth", "worth_mean"):
         credited[key] = np.where(sharp, _bounded(best.worth, numbers[key]), numbers[key])
-    tails = []
-    for name in ("low", "high"):
-        level, quantile = LEVELS[name], best.quantiles[LEVELS[name]]
-        with np.errstate(all="ignore"):
-            tails.append(np.where(np.array(quantile.by) != "none", level * (1 - level) / quantile.share_error**2,
-                                  quantile.share_worth))
-    credited["worth_tails"] = np.where(np.isnan(np.fmin(*tails)), numbers["worth_tails"],
-                                       _bounded(np.fmin(*tails), numbers["worth_tails"]))
+    plain = numbers["worth_tails"]
+    tails = [np.where(np.isfinite(q.worth), q.worth, plain) for q in (best.quantiles[LEVELS[k]] for k in ("low", "high"))]
+    credited["worth_tails"] = _bounded(np.fmin(*tails), plain)
     return credited
 
 
@@ -424,7 +268,7 @@ def _with_estimates(raw: Judgement, best: Estimates) -> Judgement:
         quantile = best.quantiles[level]
         by[name], numbers[name], numbers[name + "_error"] = quantile.by, quantile.value, quantile.error
     numbers["worth"] = np.where(np.array(best.by) != "none", best.worth, raw.worth)
-    return replace(raw, **numbers, by=by, raw=raw)
+    return replace(raw, **numbers, by=by, plain=raw)
 
 
 def quantiles(x: np.ndarray, level: float, worth: np.ndarray) -> tuple[np.ndarray, np.ndarray]:

@@ -8,6 +8,7 @@ import numpy as np
 
 from fellwalk import table
 from fellwalk.errors import ArgumentError
+from fellwalk.identities import IdentityCheck
 from fellwalk.verdict import Verdict
 
 Array = np.ndarray
@@ -30,6 +31,11 @@ class Judgement:
     spent: what the run cost; gradients_per_worth, products_per_worth, seconds_per_worth: the same for one effective
         draw of the parameter with the least worth, NaN when not known.
     verdict: `fellwalk.verdict.Verdict` with kind, reasons, draws_needed, notes and caution.
+
+    Judged together with gradients, numbers are sharpened where that helps: by["estimate"][i] (also "spread", "low",
+    "middle", "high") says with which terms, "none" where the draws speak alone, and worth is then how many independent
+    draws would give the error of the sharpened estimate. raw: the judgement of the draws alone, under the same verdict;
+    itself where nothing was sharpened. identities: what draws and gradients say of each other, None without gradients.
     """
 
     NUMBERS: ClassVar[tuple[str, ...]] = (
@@ -62,6 +68,14 @@ class Judgement:
     spent: dict[str, float]
     verdict: Verdict
     draws: Array = field(repr=False)
+    by: dict[str, tuple[str, ...]] = field(default_factory=dict)
+    identities: IdentityCheck | None = None
+    plain: "Judgement | None" = field(default=None, repr=False)
+
+    @property
+    def raw(self) -> "Judgement":
+        """The judgement of the draws alone."""
+        return self.plain or self
 
     @property
     def failed_share(self) -> float:
@@ -91,7 +105,7 @@ class Judgement:
         return None if self.constant.all() else int(np.nanargmin(self.worth))
 
     def quantile(self, level: float) -> tuple[Array, Array]:
-        """A quantile of every parameter and its Monte Carlo standard error, both (dimension,).
+        """A quantile of every parameter by the draws alone and its Monte Carlo standard error, both (dimension,).
 
         level: between 0 and 1, ends excluded. Raises ArgumentError otherwise. Vehtari et al. (2021).
         """
@@ -99,7 +113,7 @@ class Judgement:
             raise ArgumentError(f"The level of a quantile must be a number between 0 and 1, not {level!r}.")
         from fellwalk.judge import quantiles
 
-        return quantiles(self.draws, float(level), self.worth)
+        return quantiles(self.draws, float(level), self.raw.worth)
 
     def table(self, *, all: bool = False) -> str:
         """The table alone, at most 80 columns wide: the parameters in most need of attention, or all of them."""
@@ -112,9 +126,14 @@ class Judgement:
         """All but the draws as plain Python objects that any JSON writer takes; what is not finite becomes None."""
         parameters = [
             {"name": name} | {key: _plain(getattr(self, key)[i]) for key in self.NUMBERS}
+            | ({"by": {key: words[i] for key, words in self.by.items()}} if self.by else {})
             for i, name in enumerate(self.names)
         ]
         verdict = self.verdict
+        sharpened = {"raw": self.raw.to_dict()["parameters"]} if self.plain is not None else {}
+        checked = self.identities
+        if checked is not None:
+            sharpened["identities"] = {"checked": checked.checked, "broken": len(checked.alarms), "why_not": checked.why_not}
         return {
             "chains": self.chains,
             "draws_per_chain": self.draws_per_chain,
@@ -133,6 +152,7 @@ class Judgement:
                 "notes": list(verdict.notes),
                 "caution": verdict.caution,
             },
+            **sharpened,
         }
 
 

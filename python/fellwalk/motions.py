@@ -1,5 +1,6 @@
 """Motions and paths as plain data: what moves a point, and how far."""
 
+import operator
 from dataclasses import dataclass
 from numbers import Complex, Real
 
@@ -13,7 +14,7 @@ def whole(name: str, value: object, least: int, most: int) -> int:
     """`value` as an int inside [least, most], or a sentence."""
     if isinstance(value, bool) or not hasattr(value, "__index__"):
         raise ArgumentError(f"{name} must be a whole number; it is {value!r:.60}")
-    number = value.__index__()
+    number = operator.index(value)
     if not least <= number <= most:
         raise ArgumentError(f"{name} must be from {least} to {most}; it is {number}")
     return number
@@ -62,7 +63,8 @@ class Leapfrog:
 
     def core(self) -> dict[str, object]:
         """The members of the core's settings that this motion fixes."""
-        return {"motion": self.name, "scheme": "split", "curvature": "surrogate", "bend": 0.0, "halvings": self.halvings}
+        return {"motion": self.name, "scheme": "split", "curvature": "surrogate", "bend": 0.0,
+                "halvings": self.halvings}
 
 
 @dataclass(frozen=True)

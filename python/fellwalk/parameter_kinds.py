@@ -6,6 +6,7 @@ import math
 from collections.abc import Sequence
 from dataclasses import dataclass
 from itertools import pairwise
+from typing import Any
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
@@ -97,13 +98,13 @@ class Kind:
             return self.labels(name)
         return [f"{name}, free coordinate {k}" for k in range(self.dimension)]
 
-    def to_json(self) -> dict[str, object]:
+    def to_json(self) -> dict[str, Any]:
         """Plain values from which `from_json` makes the kind again."""
         return {"word": self.word, "shape": list(self.shape), "repeats": list(self.repeats), "low": self.low,
                 "high": self.high}
 
     @classmethod
-    def from_json(cls, given: dict[str, object]) -> Kind:
+    def from_json(cls, given: dict[str, Any]) -> Kind:
         """The kind that `to_json` was called on."""
         return cls(given["word"], tuple(given["shape"]), tuple(given["repeats"]), _tuples(given["low"]),
                    _tuples(given["high"]))
@@ -116,7 +117,7 @@ class Kind:
         return f"{self.word}{size}, above {low[0]:g}, below {high[0]:g}"
 
 
-def _tuples(value: object) -> object:
+def _tuples(value: Any) -> Any:
     return tuple(map(_tuples, value)) if isinstance(value, list | tuple) else value
 
 

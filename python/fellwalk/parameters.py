@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Mapping
+from typing import Any
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
@@ -168,12 +169,12 @@ class Parameters:
 
     # ---- kept ------------------------------------------------------------------------------------------------------
 
-    def to_json(self) -> list[list[object]]:
+    def to_json(self) -> list[list[Any]]:
         """Names and kinds as plain values; `from_json` makes the parameters again."""
         return [[name, kind.to_json()] for name, kind in self.kinds.items()]
 
     @classmethod
-    def from_json(cls, given: list[list[object]]) -> Parameters:
+    def from_json(cls, given: list[list[Any]]) -> Parameters:
         """The parameters that `to_json` was called on."""
         return cls({name: Kind.from_json(kind) for name, kind in given})
 
@@ -221,7 +222,7 @@ class ByName:
     def __init__(self, function: Callable[..., object], parameters: Parameters, form: str) -> None:
         self.function, self.parameters, self.form = function, parameters, form
 
-    def __call__(self, x: NDArray[np.float64], second: NDArray[np.float64] | None = None) -> object:
+    def __call__(self, x: NDArray[np.float64], second: Any = None) -> object:
         """As the form says: (x) -> (value, gradient), (x, gradient) -> value, (x, p) -> product."""
         values = self.parameters.split(x)
         if self.form == "multiply":

@@ -77,7 +77,7 @@ def integrate(
     diagonal = np.ones(d) if scale is None else as_vector(scale, d, "scale")
     if engine.set_base(diagonal) != 0:
         raise ArgumentError("scale must hold finite numbers > 0 (variances, one a coordinate)")
-    rows = [np.full((count + 1, width), np.nan) for width in (d, d, 3)] if trace else [None] * 3
+    rows = [np.full((count + 1, width), np.nan) for width in (d, d, 3)] if trace else []
     try:
         status, done, value, log_jacobian, log_ratio, gradients, products = engine.integrate(
             position, velocity, size, count, *rows)

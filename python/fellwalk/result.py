@@ -5,7 +5,7 @@ from __future__ import annotations
 import os
 from collections.abc import Callable, Sequence
 from functools import cached_property
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -20,6 +20,10 @@ from fellwalk.record import Record
 from fellwalk.run_record import ChainResult, plan_of, read_parts, read_states
 from fellwalk.settled import Settled
 from fellwalk.table import wrap
+
+if TYPE_CHECKING:
+    from fellwalk.density import Density
+    from fellwalk.estimates import Estimates
 
 __all__ = ["Result", "load"]
 
@@ -139,7 +143,12 @@ class Result:
     def judgement(self) -> Judgement:
         """What `judge` says of the draws. Errors: ArgumentError with fewer than four draws a chain."""
         self._enough()
-        return judge(self.draws, self.names, facts=self.facts, spent=self.spent)
+        return judge(self.draws, self.names, **self._judged_with())
+
+    def _judged_with(self) -> dict[str, Any]:
+        coordinates = self.names if self.parameters is None else self.parameters.coordinates
+        return {"facts": self.facts, "spent": self.spent, "gradients": self.gradients, "free_draws": self.free_draws,
+                "coordinates": coordinates}
 
     def _enough(self) -> None:
         if not self.judged:
@@ -150,7 +159,43 @@ class Result:
         """Judge a function of the draws: ``f(x)`` with x of shape (dimension,) gives a number, a truth value (its
         mean is a probability) or a short vector."""
         self._enough()
-        return judge_function(self.draws, f, names, facts=self.facts, spent=self.spent)
+        return judge_function(self.draws, f, names, **self._judged_with())
+
+    def estimate(
+        self,
+        f: Callable[[NDArray[np.float64]], Any] | str | None = None,
+        names: Sequence[str] | None = None,
+        *,
+        quantiles: Sequence[float] = (),
+        sharpen: str = "auto",
+        whole: bool = False,
+    ) -> Estimates:
+        """Means, standard deviations and quantiles with their errors, sharpened by the kept gradients where that helps.
+
+        f: nothing for all parameters, the name of a parameter, or a function of the draws in natural values: of one
+            draw (parameters,), as for `of`; with ``whole`` it is called once with all draws (chains, draws, parameters)
+            and gives (chains, draws) or (chains, draws, k). names: for the k values of a function.
+        quantiles: levels between 0 and 1. sharpen: "auto" takes what has the smallest held-out error, "none" the draws
+            alone; "linear", "quadratic" and "cubic" insist on these terms where there are draws enough.
+        Errors: ArgumentError; "auto" without kept gradients gives plain estimates, the others then raise.
+        """
+        from fellwalk.estimation import estimate
+
+        self._enough()
+        return estimate(self, f, names, quantiles, sharpen, whole)
+
+    def compute_gradients(self, density: Density) -> NDArray[np.float64]:
+        """Gradients at the kept draws of a run that kept none, (chains, draws, dimension); the calls count as spent.
+
+        density: that of the run. Errors: OtherModelError when its log density at a draw is not that of the run.
+        """
+        from fellwalk.estimation import gradients_again
+
+        if self.gradients is None:
+            self.gradients = gradients_again(self, density)
+            self.spent["gradients"] += self.gradients.shape[0] * self.gradients.shape[1]
+            self.__dict__.pop("judgement", None)
+        return self.gradients
 
     # ---- saying it ---------------------------------------------------------------------------------------------
 

@@ -14,7 +14,7 @@ from fellwalk.audit import glance, glance_at_start
 from fellwalk.chain import Chain
 from fellwalk.density import Density, brief
 from fellwalk.driver import Driver
-from fellwalk.errors import ArgumentError, OtherModelError, StartError
+from fellwalk.errors import ArgumentError, NotWrittenError, OtherModelError, StartError
 from fellwalk.model import find_model
 from fellwalk.motions import Motion, Path, real, whole
 from fellwalk.parameters import Parameters
@@ -111,8 +111,8 @@ def run(
     try:
         points = starting_points(density, density.start if starts is None else starts, chains,
                                  np.random.default_rng([seed, 1]))
-    except StartError:
-        if audit and density.start is not None:
+    except (NotWrittenError, StartError):
+        if audit:
             glance_at_start(density)
         raise
     states = _first_states(density, settings, points, seed, scale, taken)

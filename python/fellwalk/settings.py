@@ -1,6 +1,7 @@
 """The settings of a chain: checked once, written to records as JSON, handed to the core as they are."""
 
 from dataclasses import asdict, dataclass, field
+from typing import Any
 
 from fellwalk._core import MAX_DIRECTIONS
 from fellwalk.errors import ArgumentError
@@ -81,7 +82,7 @@ class Settings:
         return found
 
     @classmethod
-    def from_json(cls, values: dict) -> "Settings":
+    def from_json(cls, values: dict[str, Any]) -> "Settings":
         """Settings from what `to_json` gave."""
         motion, path = dict(values["motion"]), dict(values["path"])
         return cls(**{
@@ -91,7 +92,7 @@ class Settings:
         })
 
 
-def _listed(kinds: dict) -> str:
+def _listed(kinds: dict[str, type[Motion]] | dict[str, type[Path]]) -> str:
     return ", ".join(f"fellwalk.{kind.__name__}(...)" for kind in kinds.values())
 
 

@@ -33,6 +33,7 @@ DRAWS_PER_TERM = 8
 FOLDS = 8
 BATCHES = 100
 FALSE_ALARM = 0.01
+TAIL_GROWTH = 2.0
 # Penalties, as a share of the number of draws, on terms of variance one. The first only keeps the factorisation alive
 # where terms repeat each other.
 PENALTIES = (1e-12, 1e-3, 1e-2, 1e-1, 1.0)
@@ -203,7 +204,7 @@ class Sharpener:
                     continue
                 series, fitting = rest
                 left, _ = self._error(series)
-                left = np.sqrt(left**2 + fitting) * _skewed(series.reshape(q, self.chains, self.n))
+                left = np.sqrt(left**2 + fitting) * _skewed(series.reshape(q, self.chains, self.n)) * _tailed(series)
                 wins = ((left < WORTHWHILE * error) | (self.forced & (by == 0))) & (spread > 0)
                 if designs[0][0].heavy and wins.any():
                     # One by one such terms may have no variance; what is taken off in the end must show one.
@@ -276,6 +277,12 @@ def _skewed(series: Array) -> Array:
     z = 1.96
     lack = (z**4 + 2 * z**2 - 3) / 18 * skewness**2 - (z**2 - 3) / 12 * excess
     return 1 + np.maximum(lack, 0) / (chains * count)
+
+
+def _tailed(series: Array) -> Array:
+    """By what errors of means of series (q, N) must grow where the fourth moment is in doubt, so that the variance is known
+    badly: nothing up to the index 1/4 where that moment ends, then in proportion."""
+    return 1 + TAIL_GROWTH * np.clip(tail_index(series) - 0.25, 0.0, 0.25)
 
 
 def _standard(rows: Array) -> Array:

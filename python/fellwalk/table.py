@@ -14,6 +14,11 @@ WIDTH = 80
 ROWS = 24  # about one screen; more parameters are shown worst first, up to this many
 WIDEST_NUMBER = 8  # columns; a longer number is written less a common offset or in another unit
 HEADINGS = ("parameter", "estimate", "error", "spread", "low", "middle", "high", "worth", "agreement")
+MARK = "*"
+SHARPENED = (
+    f"{MARK} sharpened by the gradients at the draws, which have known averages; worth is then how many independent draws "
+    "would give this error."
+)
 TEXTBOOK = (
     "Textbook names: posterior mean, its Monte Carlo standard error, posterior standard deviation, 5%, 50% and 95% "
     "quantiles, effective sample size, R-hat."
@@ -47,10 +52,11 @@ class Row:
         self.errors |= {"high": float(j.high_error[i])}
         self.spread, self.spread_error = float(j.spread[i]), float(j.spread_error[i])
         self.is_event, self.is_constant = bool(j.event[i]), bool(j.constant[i])
+        self.sharpened = {key for key, by in j.by.items() if by[i] != "none"}
         self.exponent, self.offset = 0, 0.0
         if not self.is_constant and max(map(len, self._cells())) > WIDEST_NUMBER:
             self._shorten()
-        self.worth = "-" if self.is_constant else _worth(float(j.worth[i]))
+        self.worth = "-" if self.is_constant else worth_text(float(j.worth[i]))
         agreement = float(j.agreement[i])
         self.agreement = "constant" if self.is_constant else _agreement(agreement)
 
@@ -74,30 +80,42 @@ class Row:
             return value / 10.0**self.exponent
         return value * 10.0 ** min(-self.exponent, 300) * 10.0 ** max(-self.exponent - 300, 0)
 
-    def _number(self, value: float, error: float) -> str:
+    def _number(self, value: float, error: float, sharpened: bool = False) -> str:
         value, error = self._scaled(value), self._scaled(error)
         at = place(error)
         if at is None:
             # An exactly known number, or one whose error is zero for lack of variety in the draws.
             return f"{value:.6g}"
+        if sharpened:
+            # Far below the width of the distribution digits are of no use, and of no room.
+            at = min(at, 3 + (place(self._scaled(self.spread)) or 0))
         return digits(value, at)
+
+    def _error(self, error: float) -> str:
+        text = self._number(error, error)
+        return text if len(text) <= WIDEST_NUMBER or "estimate" not in self.sharpened else f"{self._scaled(error):.1e}"
 
     def _cells(self) -> list[str]:
         at = self._number
         if self.is_constant:
             return [f"{self.places['estimate']:.9g}", "0", "0", "", "", ""]
         shifted = {key: value - self.offset for key, value in self.places.items()}
-        cells = [at(shifted["estimate"], self.errors["estimate"]), at(self.errors["estimate"], self.errors["estimate"])]
-        cells.append(at(self.spread, self.spread_error))
+        mark = {key: MARK if key in self.sharpened else "" for key in ("estimate", "spread", "low", "middle", "high")}
+        cells = [at(shifted["estimate"], self.errors["estimate"], bool(mark["estimate"])) + mark["estimate"]]
+        cells.append(self._error(self.errors["estimate"]))
+        cells.append(at(self.spread, self.spread_error, bool(mark["spread"])) + mark["spread"])
         if self.is_event:
             return [*cells, "", "", ""]
-        return cells + [at(shifted[key], self.errors[key]) for key in ("low", "middle", "high")]
+        return cells + [at(shifted[key], self.errors[key]) + mark[key] for key in ("low", "middle", "high")]
 
     def cells(self) -> list[str]:
         return [*self._cells(), self.worth, self.agreement]
 
 
-def _worth(value: float) -> str:
+def worth_text(value: float) -> str:
+    """An effective size in at most seven columns."""
+    if math.isnan(value):
+        return "-"
     return f"{value:.0f}" if value < 999_999 else f"{value:.2g}"
 
 
@@ -159,7 +177,7 @@ def _order(judgement: "Judgement") -> np.ndarray:
     """Parameters by need of attention: those closest to, or furthest beyond, a bound of the verdict come first."""
     from fellwalk.verdict import AGREEMENT, WORTH_PER_CHAIN
 
-    j = judgement
+    j = judgement.raw
     with np.errstate(all="ignore"):
         target = WORTH_PER_CHAIN * j.chains
         need = np.fmax((j.agreement - 1) / (AGREEMENT - 1), np.fmax(target / j.worth, target / j.worth_tails))
@@ -172,7 +190,7 @@ def parameters(judgement: "Judgement", all_rows: bool = False) -> str:
     hidden = 0 if all_rows or count <= ROWS else count - ROWS
     chosen = _order(judgement)[:ROWS] if hidden else range(count)
     rows = [Row(judgement, int(i)) for i in chosen]
-    body = [row.cells() for row in rows]
+    body = _aligned([row.cells() for row in rows])
     widths = [max(len(HEADINGS[k + 1]), *(len(cells[k]) for cells in body)) for k in range(len(HEADINGS) - 1)]
     names = [judgement.names[row.index] for row in rows]
     longest = max(columns(HEADINGS[0]), *(columns(name) for name in names))
@@ -193,10 +211,23 @@ def parameters(judgement: "Judgement", all_rows: bool = False) -> str:
     if hidden:
         lines += wrap(f"The {ROWS} that need attention most, worst first; {hidden} more with .table(all=True).")
     lines += wrap(TEXTBOOK)
+    if any(row.sharpened for row in rows):
+        lines += wrap(f"{SHARPENED} By the draws alone: .raw")
     lines += _unit_notes(rows, short)
     if any(row.is_event for row in rows):
         lines += wrap("The estimate of a truth value is its probability.")
     return "\n".join(lines)
+
+
+def _aligned(body: list[list[str]]) -> list[list[str]]:
+    """Cells in which digits stand under digits where only some of a column are marked, if there is room for that."""
+    padded = [list(cells) for cells in body]
+    for k in range(len(padded[0])):
+        if any(cells[k].endswith(MARK) for cells in padded):
+            for cells in padded:
+                cells[k] += "" if cells[k].endswith(MARK) else " "
+    taken = sum(max(len(HEADINGS[k + 1]), *(len(cells[k]) for cells in padded)) + 1 for k in range(len(HEADINGS) - 1))
+    return padded if taken + 8 <= WIDTH else body
 
 
 def _unit_notes(rows: list[Row], names: list[str]) -> list[str]:
@@ -227,8 +258,21 @@ def verdict_lines(judgement: "Judgement") -> list[str]:
         lines += wrap(f"About {verdict.draws_needed:,} kept draws a chain in total should do.")
     for note in verdict.notes:
         lines += wrap(note)
+    lines += _identity_lines(judgement)
     lines += _failure_lines(judgement) + _energy_lines(judgement) + _cost_lines(judgement)
     return [*lines, *wrap(verdict.caution)]
+
+
+def _identity_lines(judgement: "Judgement") -> list[str]:
+    checked = judgement.identities
+    if checked is None:
+        return []
+    if checked.why_not:
+        return wrap(f"Draws and gradients were not checked against each other: {checked.why_not}.")
+    if not checked.checked:
+        return wrap("Too few effective draws to check draws and gradients against each other.")
+    held = f"{len(checked.alarms)} of {checked.checked} broken" if checked.alarms else f"all {checked.checked} hold"
+    return wrap(f"Identities of draws and gradients (E g = 0, E x g' = -I): {held}.")
 
 
 def _failure_lines(judgement: "Judgement") -> list[str]:

@@ -12,6 +12,7 @@ import numpy as np
 from scipy import special
 
 from fellwalk import autocorrelation as ac
+from fellwalk.failing import failing, percent
 
 FIT, MORE, NOT_TRUSTED = "fit for use", "needs more draws", "not to be trusted"
 
@@ -41,11 +42,6 @@ CRAWL = 0.1
 # at any length.
 STAND_SHARE, STAND_DRAWS = 0.1, 50
 
-# Failed steps cut paths short, so what lies behind them may be missed. At 400 effective draws the standard error of a
-# probability of 5% is sqrt(0.05 * 0.95 / 400) = 0.011: failures in more than 1% of the transitions could hide as much
-# probability as the errors shown allow for.
-FAILED_SHARE = 0.01
-
 # Where one draw holds more than this share of all squared deviations, spread and error hang on it, and mean or variance
 # may not exist. Share of 300 runs of 4000 independent draws above it: Cauchy 99%, Student t with 2 degrees of freedom
 # 57%, with 3 11%, with 5 none; lognormal of log-sd 1.5 55%, of 1 6%; normal none. It is a note: ranks do not suffer.
@@ -53,9 +49,6 @@ HEAVIEST = 0.15
 
 # So many sentences name chains that stand out, one for each set of chains; a reader of more has read enough.
 MOST_SORTS = 4
-
-# A step across the edge of the support hides nothing: the density there is zero. (Status codes 1 and 2 of the core.)
-EDGE_CODES = (1, 2)
 
 # If each transition renews the energy as a first-order autoregression does, its lag-one correlation is 1 - F/2 for an
 # energy fraction F, since E[(E_n - E_(n-1))^2] = 2 Var(E) (1 - r). Its autocorrelation time is then
@@ -102,10 +95,14 @@ def decide(
     numbers: dict[str, np.ndarray],
     fraction: np.ndarray | None,
     failure: np.ndarray | None,
+    credited: dict[str, np.ndarray] | None = None,
+    broken_identities: Sequence[str] = (),
 ) -> Verdict:
     """The verdict on finite draws (chains, n, dimension) with the numbers of `fellwalk.judge.measure`.
 
     fraction: energy fraction of each chain, failure: codes (chains, n); None where nothing is known of them.
+    credited: the numbers with the worths that sharpened estimates are credited with, by which more draws are asked for.
+    broken_identities: sentences on what draws and gradients contradict.
     """
     chains, n, dimension = x.shape
     varying = np.flatnonzero(~numbers["constant"])
@@ -115,12 +112,12 @@ def decide(
         broken += [f for f in _apart(x, names, numbers, varying) if f.index not in at_fault]
         at_fault |= {finding.index for finding in broken}
         broken += [f for f in _crawling(names, numbers, varying) if f.index not in at_fault]
-        reasons = _summaries(broken, len(varying)) + _failing(failure)
+        reasons = _summaries(broken, len(varying)) + failing(x, names, failure) + list(broken_identities)
         if dimension and not varying.size and not numbers["event"].any():
             reasons.append("No parameter differs between any two draws: nothing moved.")
         at_fault |= {finding.index for finding in broken}
         sound = np.array([i for i in varying if i not in at_fault], dtype=np.int64)
-        lacking, factor = _lacking(x, names, numbers, sound)
+        lacking, factor = _lacking(x, names, credited or numbers, sound)
         energy_lack, energy_factor = _energy(fraction, n)
         factor = max(factor, energy_factor)
     notes = _notes(names, numbers, fraction, n * chains)
@@ -258,22 +255,6 @@ def _crawling(names: Sequence[str], numbers: dict[str, np.ndarray], varying: np.
     return findings
 
 
-def _failing(failure: np.ndarray | None) -> list[str]:
-    if failure is None:
-        return []
-    failed = (failure != 0) & ~np.isin(failure, EDGE_CODES)
-    share = failed.mean()
-    if share <= FAILED_SHARE:
-        return []
-    by_chain = failed.mean(axis=1)
-    worst = int(np.argmax(by_chain))
-    text = (
-        f"Steps failed in {_percent(share)} of the transitions ({_percent(by_chain[worst])} in chain {worst + 1}); "
-        f"above {_percent(FAILED_SHARE)} a part of the distribution may be missed."
-    )
-    return [text]
-
-
 # ---- what more draws would cure -------------------------------------------------------------------------------------
 
 
@@ -367,7 +348,7 @@ def _notes(names: Sequence[str], numbers: dict[str, np.ndarray], fraction: np.nd
         more = f" (So it is in {heavy.size - 1} more.)" if heavy.size > 1 else ""
         notes.append(
             f"The spread of {names[worst]} and the error of its estimate hang on one draw, which holds "
-            f"{_percent(numbers['heaviest'][worst])} of all squared deviations: rather use low, middle and high.{more}"
+            f"{percent(numbers['heaviest'][worst])} of all squared deviations: rather use low, middle and high.{more}"
         )
     if fraction is not None and not np.isfinite(fraction).all():
         unknown = np.flatnonzero(~np.isfinite(fraction))
@@ -390,7 +371,3 @@ def _short(agreement: float) -> str:
     if not np.isfinite(agreement):
         return "infinite"
     return f"{agreement:.3f}" if agreement < 10 else f"{agreement:.3g}"
-
-
-def _percent(share: float) -> str:
-    return f"{100 * share:.2g}%"
