@@ -58,16 +58,14 @@ def counted(tmp_path_factory):
 
 @pytest.mark.parametrize("way", [
     {"motion": b"leapfrog"},
-    {"motion": b"lagrangian", "bend": 0.3, "curvature": 2, "turn": 1},
+    {"motion": b"leapfrog", "turn": 1},
 ])
 def test_paths_of_two_to_the_tenth_steps_allocate_nothing(counted, way):
     """Two chains of two blocks of memory each, made before they move; a path of 1023 steps in each asks for no more."""
     target = wide(LARGE)
     function = ctypes.cast(target._density, ctypes.c_void_p).value
-    product = ctypes.cast(target._product, ctypes.c_void_p).value
-    case = Case(d=LARGE, density=function, density_context=target._context, product=product,
-                product_context=target._context, path=b"no-u-turn", doublings=DOUBLINGS, steps=1,
-                keep=2, seed=3, **way)
+    case = Case(d=LARGE, density=function, density_context=target._context, path=b"no-u-turn", doublings=DOUBLINGS,
+                steps=1, keep=2, seed=3, **way)
     x = WIDE * np.random.default_rng(4).standard_normal(LARGE)
     draws, gradients = np.empty((2, 2, LARGE))
     found, state = np.zeros(2, FACTS), np.empty(64 * LARGE * 8, np.uint8)
@@ -173,8 +171,8 @@ def test_at_most_two_to_the_doublings_steps(motion, turn):
 def test_both_turn_tests_end_paths_on_a_normal(motion):
     """A period of a standard normal is 2 pi / 0.2 = 31 steps long, so no path of more than 63 steps may be needed."""
     for turn in ("base", "metric"):
-        path = fw.NoUTurn(turn=turn)
-        facts = unsettled(targets.standard_normal(5), np.ones(5), motion, path, step_size=0.2, seed=8).advance(200).facts
+        chain = unsettled(targets.standard_normal(5), np.ones(5), motion, fw.NoUTurn(turn=turn), step_size=0.2, seed=8)
+        facts = chain.advance(200).facts
         assert facts["steps"].max() <= 63
         assert np.median(facts["steps"]) >= 7
 

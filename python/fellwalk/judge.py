@@ -15,6 +15,7 @@ from numpy.typing import ArrayLike
 from fellwalk import autocorrelation as ac
 from fellwalk import verdict as verdict_module
 from fellwalk.estimates import Estimates, estimate_all
+from fellwalk.failing import EDGE_CODES
 from fellwalk.identities import IdentityCheck, check_identities, describe
 from fellwalk.judge_input import checked_draws, checked_facts, checked_gradients, checked_names, checked_spent, values_of
 from fellwalk.judgement import Judgement

@@ -196,7 +196,7 @@ class Sharpener:
         f = (flat - centre[:, None]) / unit[:, None]
         raw_error, _ = self._error(f)
         mean, error, by = np.zeros(q), raw_error.copy(), np.zeros(q, dtype=np.int64)
-        taken = np.zeros_like(f)
+        taken, least = np.zeros_like(f), raw_error.copy()
         if f.shape[1] >= FEWEST and len(self.frame) and self.candidates:
             for designs, level in self._tries(f):
                 rest = self._left(f, designs, level)
@@ -204,12 +204,14 @@ class Sharpener:
                     continue
                 series, fitting = rest
                 left, _ = self._error(series)
-                left = np.sqrt(left**2 + fitting) * _skewed(series.reshape(q, self.chains, self.n)) * _tailed(series)
-                wins = ((left < WORTHWHILE * error) | (self.forced & (by == 0))) & (spread > 0)
+                left = np.sqrt(left**2 + fitting) * _skewed(series.reshape(q, self.chains, self.n))
+                rated = left * _tailed(series)
+                wins = ((rated < WORTHWHILE * least) | (self.forced & (by == 0))) & (spread > 0)
                 if designs[0][0].heavy and wins.any():
                     # One by one such terms may have no variance; what is taken off in the end must show one.
                     wins[wins] = tail_index(f[wins] - series[wins]) < HEAVY
                 mean[wins], error[wins], by[wins] = series[wins].mean(axis=1), left[wins], level
+                least[wins] = rated[wins]
                 taken[wins] = f[wins] - series[wins]
         correction_error, worth = self._error(taken)
         doubtful = self._contradicts(taken, correction_error, worth)
@@ -280,8 +282,8 @@ def _skewed(series: Array) -> Array:
 
 
 def _tailed(series: Array) -> Array:
-    """By what errors of means of series (q, N) must grow where the fourth moment is in doubt, so that the variance is known
-    badly: nothing up to the index 1/4 where that moment ends, then in proportion."""
+    """What the errors of means of series (q, N) count as in a comparison, in proportion, where the fourth moment is in
+    doubt and so the variance is known badly: 1 up to the index 1/4, where that moment ends, 1.5 from 1/2 on."""
     return 1 + TAIL_GROWTH * np.clip(tail_index(series) - 0.25, 0.0, 0.25)
 
 
