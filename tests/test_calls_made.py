@@ -50,7 +50,7 @@ def test_a_call_that_raises_is_counted(form):
 
 
 def test_calls_of_the_users_function_are_counted_behind_bounds():
-    """The function is not called where the map overflows, and that is not counted."""
+    """What counts is the function itself, which is not called everywhere."""
     seen = []
 
     def exponential(x):
@@ -61,7 +61,8 @@ def test_calls_of_the_users_function_are_counted_behind_bounds():
     chain = fw.Chain(density, [0.7], seed=3, step_size=0.5)
     chain.advance(20)
     density([0.3])
-    assert density([800.0])[0] == -np.inf
+    density([800.0])
+    density([-800.0])
     assert density.gradients == len(seen)
 
 

@@ -167,7 +167,8 @@ def test_the_same_bytes_with_and_without_clones(builds, d, motion, path):
         assert np.isfinite(draws).all()
         assert len(np.unique(draws[:, 0])) > 10, "the chain hardly moved"
         assert np.array_equal(gradients[-1], target.value_gradient(draws[-1])[1])
-        assert found["gradients"][found["failure"] == 0].min() > 0
+        walked = (found["failure"] == 0) & (found["step_size"] > 0)  # a climb that stands on the mode needs no gradient
+        assert found["gradients"][walked].min() > 0
         for name, other in results.items():
             assert other[0] == 0
             for a, b in zip((draws, gradients, found), other[1:4], strict=True):

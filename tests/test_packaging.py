@@ -149,4 +149,4 @@ def test_the_extra_for_people_at_a_terminal_stays_light():
     extras = project()["optional-dependencies"]
     assert set(extras) == {"report", "test", "bench", "cluster", "all"}
     wanted = {requirement.split(">=")[0].split("[")[0] for requirement in extras["all"] + extras["report"]}
-    assert wanted == {"fellwalk", "tqdm", "matplotlib", "Jinja2"}
+    assert wanted == {"fellwalk", "tqdm", "matplotlib", "Jinja2", "loky", "threadpoolctl"}

@@ -203,6 +203,7 @@ static void look_at_ceiling(fw_chain *chain, const fw_route *route, double accep
     *(route->finer ? &learn->half_squares : &learn->whole_squares) += rejection * rejection;
     ++*(route->finer ? &learn->half_count : &learn->whole_count);
     if (learn->whole_count < epoch || learn->half_count < epoch || learn->whole_count % epoch != 0) return;
+    if (learn->tail_left > 0 && learn->tail_left < 2 * epoch) return; /* too late to find the step size of another bend */
     double of_whole, of_half;
     const double whole = mean_and_error(learn->whole_sum, learn->whole_squares, learn->whole_count, &of_whole);
     const double half = mean_and_error(learn->half_sum, learn->half_squares, learn->half_count, &of_half);

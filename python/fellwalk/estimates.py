@@ -88,8 +88,8 @@ class Estimates:
         lines = ["  ".join(cell + " " * (w - table.columns(cell)) if k == 0 else cell.rjust(w)
                            for k, (cell, w) in enumerate(zip(row, widths, strict=True))).rstrip()
                  for row in [head, *rows]]
-        marked = any(by != "none" for by in (*self.by, *self.spread_by, *(b for q in self.quantiles.values() for b in q.by)))
-        lines += table.wrap(table.SHARPENED) if marked else []
+        used = {*self.by, *self.spread_by}.union(*(q.by for q in self.quantiles.values()))
+        lines += table.wrap(table.SHARPENED) if used - {"none"} else []
         lines += table.wrap(self.why_not) if self.why_not else []
         return "\n".join(lines)
 
@@ -101,9 +101,12 @@ class Estimates:
         values = []
         for i, name in enumerate(self.names):
             one: dict[str, Any] = {"name": name, "by": self.by[i], "spread_by": self.spread_by[i]}
-            one |= {key: plain(getattr(self, key)[i]) for key in ("estimate", "error", "worth", "spread", "spread_error")}
-            one["quantiles"] = [{"level": q.level, "value": plain(q.value[i]), "error": plain(q.error[i]), "by": q.by[i]}
-                                for q in self.quantiles.values()]
+            numbers = ("estimate", "error", "worth", "spread", "spread_error")
+            one |= {key: plain(getattr(self, key)[i]) for key in numbers}
+            one["quantiles"] = [
+                {"level": q.level, "value": plain(q.value[i]), "error": plain(q.error[i]), "by": q.by[i]}
+                for q in self.quantiles.values()
+            ]
             values.append(one)
         return {"chains": self.chains, "draws_per_chain": self.draws_per_chain, "values": values,
                 "raw": None if self.raw is None else self.raw.to_dict()["values"]}

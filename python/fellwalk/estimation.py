@@ -17,8 +17,9 @@ if TYPE_CHECKING:
     from fellwalk.density import Density
     from fellwalk.result import Result
 
-# Log densities that a density gives again at a kept draw may differ by rounding: another order of sums, another machine.
+# A log density given again at a kept draw may differ by rounding: another order of sums, another machine.
 AGREES = 1e-6
+NO_GRADIENTS = "the run kept no gradients; compute_gradients(density) makes them"
 
 
 def estimate(
@@ -33,8 +34,8 @@ def estimate(
     if sharpen not in CHOICES:
         raise ArgumentError(f"sharpen must be one of {', '.join(map(repr, CHOICES))}; it is {sharpen!r}")
     if sharpen not in ("auto", "none") and result.gradients is None:
-        raise ArgumentError(f"sharpen={sharpen!r} needs the gradients at the draws, which this run did not keep; run with "
-                            "gradients=True, or call compute_gradients(density) first")
+        raise ArgumentError(f"sharpen={sharpen!r} needs the gradients at the draws, which this run did not keep; run "
+                            "with gradients=True, or call compute_gradients(density) first")
     levels = _checked_levels(levels)
     values, names = _values(result, f, names, whole)
     raw, x = checked_draws(values)
@@ -42,7 +43,7 @@ def estimate(
     numbers = measure(x)
     numbers["event"] = np.full(x.shape[2], raw.dtype == np.bool_)
     if sharpen == "none" or result.gradients is None:
-        why = "" if sharpen == "none" else "Not sharpened: the run kept no gradients; compute_gradients(density) makes them."
+        why = "" if sharpen == "none" else f"Not sharpened: {NO_GRADIENTS}."
         return estimate_all(x, names, numbers, levels, None, None, why)
     pair = checked_gradients(result.free_draws, result.gradients, x.shape[:2])
     checked, sharpener, why = prepare(pair, result.facts["failure"], sharpen)
@@ -70,7 +71,8 @@ def _values(
     if f is None:
         return result.draws, result.names
     if not isinstance(f, str):
-        raise ArgumentError(f"what to estimate must be a function, the name of a parameter, or left out; it is {f!r:.60}")
+        raise ArgumentError("what to estimate must be a function, the name of a parameter, or left out; it is "
+                            f"{f!r:.60}")
     if f in result.names:
         return result[f][..., None] if result[f].ndim == 2 else result[f], [f]
     values = result[f]  # a name with several elements, or a sentence
@@ -87,8 +89,8 @@ def _all_at_once(
     values = np.asarray(f(view))
     lead = view.shape[:2]
     if values.shape[:2] != lead or values.ndim not in (2, 3):
-        raise ArgumentError(f"with whole=True the function must give an array {lead} or {(*lead, 'k')} for draws of shape "
-                            f"{view.shape}; it gave shape {values.shape}")
+        raise ArgumentError(f"with whole=True the function must give an array of shape {lead} or {(*lead, 'k')} for draws "
+                            f"of shape {view.shape}; it gave shape {values.shape}")
     label = getattr(f, "__name__", "value")
     label = label if label.isidentifier() else "value"
     if values.ndim == 2:
@@ -106,6 +108,6 @@ def gradients_again(result: Result, density: Density) -> NDArray[np.float64]:
         for draw in range(x.shape[1]):
             value, out[chain, draw] = density(x[chain, draw])
             if not abs(value - told[chain, draw]) <= AGREES * (1 + abs(told[chain, draw])):
-                raise OtherModelError(f"at draw {draw + 1} of chain {chain + 1} this density has log density {value!r}, but "
-                                      f"the run had {float(told[chain, draw])!r}: it is another model, or other data")
+                raise OtherModelError(f"at draw {draw + 1} of chain {chain + 1} this density has log density {value!r}, "
+                                      f"but the run had {float(told[chain, draw])!r}: it is another model, or other data")
     return out

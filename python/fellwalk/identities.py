@@ -1,8 +1,9 @@
 """Do draws and gradients belong together? First-order identities that hold for every density, whatever its shape.
 
-E[g] = 0 and E[(x - mean) g^T] = -I for draws x of a density with gradient g of its logarithm, if it vanishes fast enough
-far out. Draws that have not arrived, that miss a part, or a gradient that is wrong break them, and no knowledge of the
-density is needed to see it. What breaks none: draws that fill one of several well separated places as they should.
+E[g] = 0 and E[(x - mean) g^T] = -I for draws x of a density with gradient g of its logarithm, if it vanishes fast
+enough far out. Draws that have not arrived, that miss a part, or a gradient that is wrong break them, and no knowledge
+of the density is needed to see it. What breaks none: draws that fill one of several well separated places as they
+should, the others left empty.
 """
 
 from __future__ import annotations
@@ -127,8 +128,9 @@ def _student(rows: Array, siblings: int) -> tuple[Array, Array, Array]:
     """Mean, mean in errors, and its two-sided chance for rows (p, chains, n).
 
     siblings: so many successive rows are of the same term. An error is never taken smaller than it is in the mean of
-    these: a chain that happened to see little shows too small a spread and too small an error of it at once. The error is the larger one of the initial monotone sequence's and of batch means; the skewness of the batches is
-    taken out of Student's statistic (Hall 1992, Journal of the Royal Statistical Society B 54, from memory).
+    these: a chain that happened to see little shows too small a spread and too small an error of it at once. The error
+    is the larger one of the initial monotone sequence's and of batch means; the skewness of the batches is taken out of
+    Student's statistic (Hall 1992, Journal of the Royal Statistical Society B 54, from memory).
     """
     p, chains, n = rows.shape
     length = n // BATCHES
@@ -161,7 +163,7 @@ def describe(check: IdentityCheck, coordinates: Sequence[str]) -> list[str]:
     worst = check.alarms[0]
     where = "" if worst.chain is None else f" in chain {worst.chain + 1}"
     if worst.first is None:
-        what = f"the mean gradient in {coordinates[worst.second]}{where} is {abs(worst.errors):.0f} errors away from zero"
+        what = f"the mean gradient in {coordinates[worst.second]}{where} is {abs(worst.errors):.0f} errors from zero"
     else:
         first, second = coordinates[worst.first], coordinates[worst.second]
         product = f"{first} less its mean times the gradient in {second}"
@@ -169,5 +171,6 @@ def describe(check: IdentityCheck, coordinates: Sequence[str]) -> list[str]:
                 f"({abs(worst.errors):.0f} errors away)")
     others = len(check.alarms) - 1
     more = f" {others} more of {check.checked} such identities are broken." if others else ""
-    return [f"Draws and gradients contradict each other: {what}. Either the gradient is wrong (fellwalk.audit looks into "
-            f"that), or these draws have not arrived at the distribution or miss a part of it.{more}"]
+    text = (f"Draws and gradients contradict each other: {what}. Either the gradient is wrong (fellwalk.audit looks into "
+            "that), or these draws have not arrived at the distribution or miss a part of it.")
+    return [text + more]

@@ -17,7 +17,14 @@ from fellwalk import verdict as verdict_module
 from fellwalk.estimates import Estimates, estimate_all
 from fellwalk.failing import EDGE_CODES
 from fellwalk.identities import IdentityCheck, check_identities, describe
-from fellwalk.judge_input import checked_draws, checked_facts, checked_gradients, checked_names, checked_spent, values_of
+from fellwalk.judge_input import (
+    checked_draws,
+    checked_facts,
+    checked_gradients,
+    checked_names,
+    checked_spent,
+    values_of,
+)
 from fellwalk.judgement import Judgement
 from fellwalk.sharpen import Sharpener
 
@@ -53,8 +60,10 @@ def judge(
     facts: structured array (chains, draws) with fields "energy" and "failure", as a run keeps it.
     spent: cost of the whole run, settling included: any of "gradients", "products", "seconds".
     gradients: of the log density at the draws, (chains, draws, free dimension). With them estimates are sharpened where
-        that helps (`fellwalk.sharpen`), and draws and gradients are checked against each other (`fellwalk.identities`).
-    free_draws: the draws in the coordinates of the gradients, where these are not those of the draws; coordinates: names.
+        that helps (`fellwalk.sharpen`), and draws and gradients are checked against each other
+        (`fellwalk.identities`).
+    free_draws: the draws in the coordinates of the gradients, where these are not those of the draws; coordinates:
+        their names.
 
     Raises ArgumentError, naming the place, for anything else. Chains are counted from 1 in everything that is printed.
     """
@@ -66,7 +75,9 @@ def judge(
     numbers = measure(x)
     numbers["event"] = np.full(dimension, raw.dtype == np.bool_)
     pair = checked_gradients(x if free_draws is None else free_draws, gradients, (chains, n))
-    return _assemble(x, names, numbers, energies, failure, spent, pair, coordinates or (names if free_draws is None else None))
+    if coordinates is None and free_draws is None:
+        coordinates = names
+    return _assemble(x, names, numbers, energies, failure, spent, pair, coordinates)
 
 
 def judge_function(
@@ -253,8 +264,8 @@ def _credited(numbers: dict[str, np.ndarray], best: Estimates) -> dict[str, np.n
     for key in ("worth", "worth_mean"):
         credited[key] = np.where(sharp, _bounded(best.worth, numbers[key]), numbers[key])
     plain = numbers["worth_tails"]
-    tails = [np.where(np.isfinite(q.worth), q.worth, plain) for q in (best.quantiles[LEVELS[k]] for k in ("low", "high"))]
-    credited["worth_tails"] = _bounded(np.fmin(*tails), plain)
+    ends = [best.quantiles[LEVELS[name]].worth for name in ("low", "high")]
+    credited["worth_tails"] = _bounded(np.fmin(*(np.where(np.isfinite(end), end, plain) for end in ends)), plain)
     return credited
 
 

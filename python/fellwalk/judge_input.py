@@ -156,6 +156,7 @@ def checked_gradients(
     finite = np.isfinite(g).all(axis=2) & np.isfinite(x).all(axis=2)
     if not finite.all():
         chain, draw = (int(i) for i in np.argwhere(~finite)[0])
-        raise ArgumentError(f"The gradient or the free coordinates at draw {draw + 1} of chain {chain + 1} (counted from "
-                            "1) are not finite.")
+        raise ArgumentError(
+            f"The gradient or the free coordinates at draw {draw + 1} of chain {chain + 1} (counted from 1) are not finite."
+        )
     return x, g

@@ -133,7 +133,9 @@ class Judgement:
         sharpened = {"raw": self.raw.to_dict()["parameters"]} if self.plain is not None else {}
         checked = self.identities
         if checked is not None:
-            sharpened["identities"] = {"checked": checked.checked, "broken": len(checked.alarms), "why_not": checked.why_not}
+            sharpened["identities"] = {
+                "checked": checked.checked, "broken": len(checked.alarms), "why_not": checked.why_not,
+            }  # fmt: skip
         return {
             "chains": self.chains,
             "draws_per_chain": self.draws_per_chain,

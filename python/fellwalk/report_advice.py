@@ -30,8 +30,8 @@ REMEDIES = (
      "Too many steps failed. Shorter steps follow the density better: aim at a higher acceptance rate (0.95 or more), or "
      "allow halved steps (halvings of 5). If they fail in one place, as shown below, a change of parameters there is the "
      "lasting cure."),
-    ("g =",
-     "Draws and gradients contradict each other. Look for a mistake in the gradient with `fellwalk audit`; if there is "
+    ("Draws and gradients contradict each other",
+     "What draws and gradients say does not fit together. Look for a mistake in the gradient with `fellwalk audit`; if there is "
      "none, the draws miss a part of the distribution."),
     ("nothing moved",
      "No chain has moved. Let the chains settle, or give a smaller step size, and look at the density with "

@@ -10,18 +10,21 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 from numpy.typing import NDArray
 
-from fellwalk import export
+from fellwalk import export, frames
 from fellwalk.errors import ArgumentError
 from fellwalk.facts import FACTS
 from fellwalk.judge import judge, judge_function
 from fellwalk.judgement import Judgement
 from fellwalk.parameters import Parameters
-from fellwalk.record import Record
+from fellwalk.record import Record, current_versions
 from fellwalk.run_record import ChainResult, plan_of, read_parts, read_states
 from fellwalk.settled import Settled
 from fellwalk.table import wrap
 
 if TYPE_CHECKING:
+    import pandas
+    import pyarrow
+
     from fellwalk.density import Density
     from fellwalk.estimates import Estimates
 
@@ -38,12 +41,13 @@ class Result:
     settling: the facts of settling, one array a chain. failures: (chain, draw, code, position) arrays of the failed
     steps whose position was kept, while keeping. names, seed, settings: as the run was given them. chains: what each
     chain found while settling (step size, bend, ...). spent: gradients, products and seconds, settling included.
-    finished: were all draws asked for made; ended: why not.
+    finished: were all draws asked for made; ended: why not. versions: of what made them.
     """
 
     def __init__(self, plan: dict[str, Any], parts: Sequence[ChainResult], *, states: Sequence[bytes] = (),
-                 ended: str = "", path: str = "") -> None:
+                 ended: str = "", path: str = "", versions: dict[str, Any] | None = None) -> None:
         self.plan = plan
+        self.versions: dict[str, Any] = current_versions() if versions is None else versions
         self._states = list(states)
         self.names: list[str] = plan["names"]
         self.parameters = Parameters.from_json(plan["parameters"]) if plan.get("parameters") else None
@@ -236,11 +240,37 @@ class Result:
     def __repr__(self) -> str:
         return f"<Result: {len(self._parts)} chains of {self._shortest} draws, {len(self.names)} parameters>"
 
+    def report(self, path: str | os.PathLike[str] | None = None, *, density: Density | None = None) -> str:
+        """The result as one self-contained HTML page, for light and dark screens, print and screen readers.
+
+        path: where to write it; the text is returned in any case. density: that of the run, for a slice of it and the
+        share of time spent in it; left out, the model that the run names is imported, and without one the page says so.
+        Needs the extra ``report``. Errors: ArgumentError without it; RecordError when the file cannot be written.
+        """
+        from fellwalk import report  # matplotlib and Jinja2 are loaded when a page is asked for
+
+        return report.page(self, density) if path is None else report.write(self, path, density)
+
+    def _repr_html_(self) -> str:
+        from fellwalk.report_table import notebook
+
+        return notebook(self)
+
     # ---- handing over ------------------------------------------------------------------------------------------
 
     def provenance(self) -> dict[str, Any]:
         """How the draws were made: plan, versions, chains."""
         return {**self.plan, "chains": self.chains, "spent": self.spent, "record": self.path}
+
+    def to_frame(self) -> pandas.DataFrame:
+        """A pandas data frame of one row a draw: chain and draw, both from 0, then the parameters. Errors:
+        ArgumentError without pandas."""
+        return frames.to_frame(self)
+
+    def to_arrow(self) -> pyarrow.Table:
+        """The same columns as a pyarrow table, with the provenance as JSON in its metadata ``fellwalk``. Errors:
+        ArgumentError without pyarrow."""
+        return frames.to_arrow(self)
 
     def save_npz(self, path: str | os.PathLike[str]) -> None:
         """Draws, facts, names and provenance as a NumPy .npz file."""
@@ -272,4 +302,4 @@ def load(path: str | os.PathLike[str], *, salvage: bool = False) -> Result:
         if not last or last[0].kind == "resumed":
             ended = "the run was killed or is still going on"
         states = [] if salvage else read_states(record)
-        return Result(plan, read_parts(record), states=states, ended=ended, path=record.path)
+        return Result(plan, read_parts(record), states=states, ended=ended, path=record.path, versions=record.versions)

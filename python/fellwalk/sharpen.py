@@ -3,8 +3,9 @@
 A value f of the draws is replaced by f - b . h, where the terms h (`fellwalk.stein`) have mean zero, so the mean stays
 and the variance may fall a thousandfold. The coefficients b come by ridge regression from other blocks of draws than
 those they are applied to, so that the series that is left has an honest error; its autocorrelation is judged by the
-rules that raw draws are judged by. Of nothing, linear, quadratic and cubic the least held-out error wins. (Zero variance
-principle: Assaraf & Caffarel 1999; Mira, Solgi & Imparato 2013; regularised by South, Oates, Mira & Drovandi; from memory.)
+rules that raw draws are judged by. Of nothing, linear, quadratic and cubic the least held-out error wins. (Principle of
+zero variance: Assaraf & Caffarel 1999; Mira, Solgi & Imparato 2013; with penalties South, Oates, Mira & Drovandi; all
+from memory.)
 """
 
 from __future__ import annotations
@@ -12,6 +13,7 @@ from __future__ import annotations
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 from functools import cached_property
+from itertools import pairwise
 
 import numpy as np
 from numpy.typing import NDArray
@@ -33,7 +35,7 @@ DRAWS_PER_TERM = 8
 FOLDS = 8
 BATCHES = 100
 FALSE_ALARM = 0.01
-TAIL_GROWTH = 2.0
+TAIL_GROWTH = 3.0
 # Penalties, as a share of the number of draws, on terms of variance one. The first only keeps the factorisation alive
 # where terms repeat each other.
 PENALTIES = (1e-12, 1e-3, 1e-2, 1e-1, 1.0)
@@ -47,8 +49,8 @@ FEWEST = 40  # draws of all chains: with fewer nothing is fitted
 class Sharpened:
     """Means of several values of the draws, arrays (values,).
 
-    mean, error: of the candidate that won; by: its number in CANDIDATES, 0 for the plain mean. raw, raw_error: the plain
-    mean and its error. correction, correction_error: what was taken off on average, and the error of that; its
+    mean, error: of the candidate that won; by: its number in CANDIDATES, 0 for the plain mean. raw, raw_error: the
+    plain mean and its error. correction, correction_error: what was taken off on average, and the error of that; its
     expectation is zero if the draws come from the density.
     """
 
@@ -86,8 +88,8 @@ class _Design:
         self.grams = np.array([self.terms[:, f] @ self.terms[:, f].T for f in folds])
 
     def fit(self, values: Array, p: int, serves: Sequence[int]) -> tuple[Array, Array]:
-        """Coefficients (folds served, p, q) of the first p terms, each from all folds but its own, with the penalty that
-        leaves the least variance on held-out folds; and that variance (q,)."""
+        """Coefficients (folds served, p, q) of the first p terms, each from all folds but its own, with the penalty
+        that leaves the least variance on held-out folds; and that variance (q,)."""
         terms = self.terms[:p]
         products = np.array([terms[:, f] @ values[:, f].T for f in self.folds])
         totals = np.array([values[:, f].sum(axis=1) for f in self.folds])
@@ -117,7 +119,8 @@ def _solve(gram: Array, penalty: float, product: Array) -> Array:
     ridged = gram.copy()
     ridged.flat[:: len(gram) + 1] += penalty
     try:
-        return linalg.cho_solve(linalg.cho_factor(ridged, overwrite_a=True, check_finite=False), product, check_finite=False)
+        factor = linalg.cho_factor(ridged, overwrite_a=True, check_finite=False)
+        return linalg.cho_solve(factor, product, check_finite=False)
     except linalg.LinAlgError:
         return np.zeros_like(product)  # leaves the value as it is
 
@@ -125,8 +128,8 @@ def _solve(gram: Array, penalty: float, product: Array) -> Array:
 class Sharpener:
     """Fits terms made from draws and gradients, both (chains, n, dimension), in the coordinates of the gradients.
 
-    choice: "auto" tries all candidates and takes the best; the name of one takes that, better or not, wherever there are
-    draws enough to fit it.
+    choice: "auto" tries all candidates and takes the best; the name of one takes that, better or not, wherever there
+    are draws enough to fit it.
     """
 
     def __init__(self, x: Array, g: Array, choice: str = "auto") -> None:
@@ -166,7 +169,8 @@ class Sharpener:
         return made
 
     def _choose(self, values: Array, seen: list[slice]) -> tuple[NDArray[np.int64], NDArray[np.int64]]:
-        """Coordinates for linear terms and for pairs: those whose own terms explain most of the values in some folds."""
+        """Coordinates for linear terms and for pairs: those whose own terms explain most of the values in given folds.
+        """
         frame = self.frame
         f = _standard(np.concatenate([values[:, s] for s in seen], axis=1))
         slopes = _standard(np.concatenate([frame.gy[:, s] for s in seen], axis=1))
@@ -196,7 +200,7 @@ class Sharpener:
         f = (flat - centre[:, None]) / unit[:, None]
         raw_error, _ = self._error(f)
         mean, error, by = np.zeros(q), raw_error.copy(), np.zeros(q, dtype=np.int64)
-        taken, least = np.zeros_like(f), raw_error.copy()
+        taken, doubt = np.zeros_like(f), _tailed(f)
         if f.shape[1] >= FEWEST and len(self.frame) and self.candidates:
             for designs, level in self._tries(f):
                 rest = self._left(f, designs, level)
@@ -204,14 +208,12 @@ class Sharpener:
                     continue
                 series, fitting = rest
                 left, _ = self._error(series)
-                left = np.sqrt(left**2 + fitting) * _skewed(series.reshape(q, self.chains, self.n))
-                rated = left * _tailed(series)
-                wins = ((rated < WORTHWHILE * least) | (self.forced & (by == 0))) & (spread > 0)
+                left = np.sqrt(left**2 + fitting) * _skewed(series.reshape(q, self.chains, self.n)) * doubt
+                wins = ((left < WORTHWHILE * error) | (self.forced & (by == 0))) & (spread > 0)
                 if designs[0][0].heavy and wins.any():
                     # One by one such terms may have no variance; what is taken off in the end must show one.
                     wins[wins] = tail_index(f[wins] - series[wins]) < HEAVY
                 mean[wins], error[wins], by[wins] = series[wins].mean(axis=1), left[wins], level
-                least[wins] = rated[wins]
                 taken[wins] = f[wins] - series[wins]
         correction_error, worth = self._error(taken)
         doubtful = self._contradicts(taken, correction_error, worth)
@@ -281,10 +283,15 @@ def _skewed(series: Array) -> Array:
     return 1 + np.maximum(lack, 0) / (chains * count)
 
 
-def _tailed(series: Array) -> Array:
-    """What the errors of means of series (q, N) count as in a comparison, in proportion, where the fourth moment is in
-    doubt and so the variance is known badly: 1 up to the index 1/4, where that moment ends, 1.5 from 1/2 on."""
-    return 1 + TAIL_GROWTH * np.clip(tail_index(series) - 0.25, 0.0, 0.25)
+def _tailed(values: Array) -> Array:
+    """By what errors of sharpened means of values (q, N) must grow where the fourth moment of the values is in doubt.
+
+    Without that moment a variance is known badly, and the candidate whose draws happened to meet no extreme looks best.
+    Nothing up to the tail index 1/4, where the moment ends; three quarters as much again from 1/2 on.
+    """
+    if values.shape[1] < FEWEST:
+        return np.ones(len(values))
+    return 1 + TAIL_GROWTH * np.clip(tail_index(values) - 0.25, 0.0, 0.25)
 
 
 def _standard(rows: Array) -> Array:
@@ -294,10 +301,10 @@ def _standard(rows: Array) -> Array:
 
 
 def _folds(chains: int, n: int) -> list[slice]:
-    """About FOLDS blocks of successive draws in the row of all chains; none reaches over two chains unless there are many."""
+    """About FOLDS blocks of successive draws in the row of all chains, none over two chains unless there are many."""
     if chains >= FOLDS:
         edges = [round(k * chains / FOLDS) * n for k in range(FOLDS + 1)]
     else:
         pieces = max(2, -(-FOLDS // chains))
         edges = sorted({c * n + round(k * n / pieces) for c in range(chains) for k in range(pieces + 1)})
-    return [slice(a, b) for a, b in zip(edges[:-1], edges[1:], strict=True) if b > a]
+    return [slice(a, b) for a, b in pairwise(edges) if b > a]

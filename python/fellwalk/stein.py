@@ -1,9 +1,9 @@
 """Terms with mean zero, made from draws and the gradients at them: Stein's identity in coordinates.
 
 For a density that vanishes fast enough far out, with gradient g of its logarithm, and a polynomial P of the draws:
-E[ lap P + grad P . g ] = 0 (Assaraf & Caffarel 1999, Physical Review Letters 83; Mira, Solgi & Imparato 2013, Statistics
-and Computing 23; both from memory). Degree 1 gives the coordinates of g, degree 2 the products x_i g_j + x_j g_i, plus 2
-where i = j. This file makes such terms and finds those whose variance the draws do not vouch for.
+E[ lap P + grad P . g ] = 0 (Assaraf & Caffarel 1999, Physical Review Letters 83; Mira, Solgi & Imparato 2013,
+Statistics and Computing 23; both from memory). Degree 1 gives the coordinates of g, degree 2 the products x_i g_j + x_j
+g_i, plus 2 where i = j. This file makes such terms and finds those whose variance the draws do not vouch for.
 """
 
 from __future__ import annotations
@@ -31,8 +31,8 @@ TAIL_SHARE, TAIL_LEAST, TAIL_MOST = 0.05, 20, 500
 def tail_index(values: Array) -> Array:
     """Extreme value index of |values| along the last axis: 1 / (tail exponent) where tails are powers, else about 0.
 
-    values: (..., N), N >= 40. Returns (...); -inf for a constant. Moment estimator of Dekkers, Einmahl & de Haan (1989),
-    Annals of Statistics 17 (from memory), over the largest 5% of the draws.
+    values: (..., N), N >= 40. Returns (...); -inf for a constant or an event. Moment estimator of Dekkers, Einmahl & de
+    Haan (1989), Annals of Statistics 17 (from memory), over the largest 5% of the draws, at most 500.
     """
     size = np.abs(values)
     count = size.shape[-1]
@@ -43,8 +43,10 @@ def tail_index(values: Array) -> Array:
         logs = np.log(top[..., 1:] / least)
         first, second = logs.mean(axis=-1), (logs**2).mean(axis=-1)
         index = first + 1 - 0.5 / (1 - first**2 / second)
-    # Nothing beyond the threshold but copies of it: bounded. A threshold of zero: all weight on few draws, as heavy as can be.
-    return np.where(second == 0, -np.inf, np.where(np.isfinite(index), index, np.inf))
+    # Half of the largest draws are equal: bounded, an event for instance.
+    bounded = 2 * (top == top.max(axis=-1, keepdims=True)).sum(axis=-1) > k
+    # A threshold of zero: all weight is on few draws, which is as heavy as can be.
+    return np.where(bounded, -np.inf, np.where(np.isfinite(index), index, np.inf))
 
 
 class Frame:
@@ -62,7 +64,7 @@ class Frame:
         self.y = np.ascontiguousarray(((x[:, self.kept] - self.centre) / self.scale).T)
         self.gy = np.ascontiguousarray((g[:, self.kept] * self.scale).T)
         self.mixed = False
-        if mix and 1 < len(self.kept):
+        if mix and len(self.kept) > 1:
             self._uncorrelate()
 
     def _uncorrelate(self) -> None:

@@ -16,8 +16,8 @@ WIDEST_NUMBER = 8  # columns; a longer number is written less a common offset or
 HEADINGS = ("parameter", "estimate", "error", "spread", "low", "middle", "high", "worth", "agreement")
 MARK = "*"
 SHARPENED = (
-    f"{MARK} sharpened by the gradients at the draws, which have known averages; worth is then how many independent draws "
-    "would give this error."
+    f"{MARK} sharpened by the gradients at the draws, which have known averages; worth is then how many independent "
+    "draws would give this error."
 )
 TEXTBOOK = (
     "Textbook names: posterior mean, its Monte Carlo standard error, posterior standard deviation, 5%, 50% and 95% "
