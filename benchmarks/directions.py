@@ -121,7 +121,7 @@ def cost_table(settle: int, keep: int) -> None:
     for name, target in (("independent", targets.standard_normal(d)), ("six spikes", targets.random_spikes(d))):
         for rank in (0, "auto"):
             start = target.exact_draws(1, np.random.default_rng(1))[0]
-            chain = chain_on(target, start, rank=rank, seed=1)
+            chain = chain_on(target, start, rank=rank, seed=1, path=fw.Jittered(8))
             begun = time.thread_time()
             settling = chain.settle(settle)
             middle = time.thread_time()
@@ -134,7 +134,7 @@ def cost_table(settle: int, keep: int) -> None:
             rows.append([f"{name}, rank {rank}", str(chain.summary["directions"]), f"{calls[0]}", f"{calls[1]}",
                          f"{1e3 * step:.2f} ms", f"{own:.2f} s", f"{100 * own / whole:.1f}%",
                          f"{100 * own / (1e-3 * calls[0] + middle - begun):.1f}%"])
-    print(f"### d = 100,000: {settle} settling transitions, {keep} kept\n")
+    print(f"### d = 100,000: {settle} settling transitions, {keep} kept, jittered paths of 1 to 8 steps\n")
     print(table(["target", "directions", "gradients settling", "keeping", "one step", "settling's own",
                  "of a run with gradients of 1 ms", "of its settling"], rows))
 
@@ -148,8 +148,8 @@ def main() -> None:
     longley_table(4 if quick else 20)
     equicorrelated_table(2 if quick else 8)
     spikes_table(2 if quick else 12)
-    nothing_table(10 if quick else 100)
-    cost_table(200, 50 if quick else 200)
+    nothing_table(10 if quick else 60)
+    cost_table(200, 100 if quick else 300)
     print(f"\n{machine()}\n{time.process_time() - begun:.0f} s of processor time; {before} before, {busy()} after.")
 
 

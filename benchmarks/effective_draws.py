@@ -38,6 +38,7 @@ def motions(halvings: int) -> dict[str, fw.Leapfrog | fw.Lagrangian]:
 
     return {
         "leapfrog": fw.Leapfrog(halvings=halvings),
+        "surrogate, bend 0.1": bent(0.1, "surrogate"),
         "surrogate, bend 0.3": bent(0.3, "surrogate"),
         "surrogate, bend 1": bent(1.0, "surrogate"),
         "product, bend 1": bent(1.0, "product"),

@@ -12,7 +12,7 @@ Targets and settings: `CASES` in tests/sharpened_runs.py. What was measured stan
 import sys
 
 import numpy as np
-from common import busy, fw, machine
+from common import busy, machine
 from sharpened_runs import CASES, KINDS, Study, draw, study
 
 
@@ -28,8 +28,8 @@ def coverage_lines(name: str, s: Study) -> list[str]:
         ratio = (s.squared(True).mean(axis=0) / s.squared(False).mean(axis=0))[there, k]
         won = np.mean(s.by[:, there, k] != "none")
         lines.append(f"| {name} | {kind} | {there.sum()} | {100 * sharp.min():.1f} to {100 * sharp.max():.1f} "
-                     f"| {100 * raw.min():.1f} to {100 * raw.max():.1f} | {ratio.max():.2g} | {1 / np.median(ratio):.3g} "
-                     f"| {100 * won:.0f}% |")
+                     f"| {100 * raw.min():.1f} to {100 * raw.max():.1f} | {ratio.max():.2g} "
+                     f"| {1 / np.median(ratio):.3g} | {100 * won:.0f}% |")
     return lines
 
 
@@ -47,7 +47,8 @@ def outside(name: str, s: Study) -> list[str]:
 
 def coverage(runs: int, names: list[str]) -> None:
     print(f"{machine()}; {busy()}\n")
-    print("| target | of | values | sharpened covers, % | plain covers, % | worst MSE ratio | median gain | sharpened |")
+    print("| target | of | values | sharpened covers, % | plain covers, % | worst MSE ratio | median gain | sharpened "
+          "|")
     print("|---|---|---|---|---|---|---|---|")
     said: list[str] = []
     for name in names:
@@ -55,8 +56,8 @@ def coverage(runs: int, names: list[str]) -> None:
         print("\n".join(coverage_lines(name, s)), flush=True)
         said += [*outside(name, s), f"- {name}: identities called broken in {s.broken} of {runs} runs"]
         if (s.true_error > 0).any():
-            said.append(f"- {name}: the mean of all runs is at most {np.nanmax(np.abs(s.offset())):.1f} errors of both from "
-                        "the published values")
+            said.append(f"- {name}: the mean of all runs is at most {np.nanmax(np.abs(s.offset())):.1f} errors of both "
+                        "from the published values")
     print("\n".join(["", *said]))
 
 

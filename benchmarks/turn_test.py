@@ -25,7 +25,7 @@ def main() -> None:
     for name, build in TARGETS.items():
         target, cells = build(), [name]
         for curvature, all_ratios in ratios.items():
-            motion, pair = fw.Lagrangian(curvature=curvature), []
+            motion, pair = fw.Lagrangian(bend=1.0, curvature=curvature), []
             for turn in ("base", "metric"):
                 path = fw.NoUTurn(turn=turn)
                 pair.append(float(np.median([one_run(target, motion, path, s, budget) for s in range(seeds)])))

@@ -106,6 +106,18 @@ def test_far_out_on_targets_that_are_not_normal(name, far):
     assert_right(chain, target, 4000, [key for key in target.marginals if key != "form"])
 
 
+@pytest.mark.parametrize("motion", MOTIONS)
+@pytest.mark.parametrize("path", [fw.NoUTurn(), fw.Jittered(10)])
+@pytest.mark.parametrize("off", [0.0, 1e-30, 1e-8])
+def test_from_the_mode_itself(off, path, motion):
+    """Where the gradient is next to nothing: it says nothing of the scale, nor of how strongly a metric should bend."""
+    target = targets.standard_normal(8)
+    for more in ({}, {"scale": np.ones(8)}):
+        chain = chain_on(target, np.full(8, off), motion=MOTIONS[motion], path=path, seed=5, **more)
+        settled_in_bounds(chain)
+        assert_right(chain, target, 1500)
+
+
 # ---- first steps ----------------------------------------------------------------------------------------------------
 
 

@@ -64,14 +64,10 @@ void fw_base_gradient(const fw_base *base, const double *g, double *c)
     if (base->k > 0) fw_base_spread(base, c);
 }
 
-void fw_base_kick_drift(const fw_base *base, double kick, double step, fw_point *p)
+/* x += step S w, what the diagonal does already done */
+static void drift_along_directions(const fw_base *base, double step, fw_point *p)
 {
     const size_t d = base->d;
-    if (base->k == 0) {
-        fw_kick_drift(d, kick, p->c, step, base->r, p->w, p->x);
-        return;
-    }
-    fw_kick_drift(d, kick, p->c, step, base->r, p->w, p->x);
     for (size_t j = 0; j < base->k; ++j) {
         const double *e = base->directions + j * d;
         const double part = (sqrt(base->lambda[j]) - 1.0) * fw_dot(d, e, p->w);
@@ -79,24 +75,40 @@ void fw_base_kick_drift(const fw_base *base, double kick, double step, fw_point 
     }
 }
 
-static void set_sums(fw_point *p, const double sums[3])
+void fw_base_kick_drift(const fw_base *base, double kick, double step, fw_point *p)
 {
-    p->ww = sums[0];
-    p->wc = sums[1];
-    p->cc = sums[2];
+    fw_kick_drift(base->d, kick, p->c, step, base->r, p->w, p->x);
+    drift_along_directions(base, step, p);
+}
+
+void fw_base_kick2_drift(const fw_base *base, double kc, double kh, double step, fw_point *p)
+{
+    p->ww = fw_kick2_drift(base->d, kc, p->c, kh, p->hc, step, base->r, p->w, p->x);
+    drift_along_directions(base, step, p);
+}
+
+void fw_base_leave(const fw_base *base, double kick, double step, fw_point *p)
+{
+    if (base->k == 0)
+        fw_kick_drift_gradient(base->d, kick, p->g, step, base->r, p->w, p->x);
+    else
+        fw_base_kick_drift(base, kick, step, p);
 }
 
 void fw_base_arrive_kick(const fw_base *base, double kick, fw_point *p)
 {
     double sums[3];
     if (base->k == 0) {
-        fw_whiten_kick(base->d, kick, base->r, p->g, p->c, p->w, sums);
-    } else {
-        fw_base_gradient(base, p->g, p->c);
-        fw_axpy(base->d, kick, p->c, p->w);
-        fw_gram2(base->d, p->w, p->c, sums);
+        fw_kick_gradient(base->d, kick, base->r, p->g, p->w, sums);
+        p->ww = sums[0];
+        p->cc = sums[1];
+        return;
     }
-    set_sums(p, sums);
+    fw_base_gradient(base, p->g, p->c);
+    fw_axpy(base->d, kick, p->c, p->w);
+    fw_gram2(base->d, p->w, p->c, sums);
+    p->ww = sums[0];
+    p->cc = sums[2];
 }
 
 void fw_base_arrive(const fw_base *base, fw_point *p)
@@ -108,5 +120,7 @@ void fw_base_arrive(const fw_base *base, fw_point *p)
         fw_base_gradient(base, p->g, p->c);
         fw_gram2(base->d, p->w, p->c, sums);
     }
-    set_sums(p, sums);
+    p->ww = sums[0];
+    p->wc = sums[1];
+    p->cc = sums[2];
 }

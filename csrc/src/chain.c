@@ -28,7 +28,6 @@ static void lay_out_point(purse *from, fw_point *p, int curved)
     p->w = vectors(from, 1);
     p->c = vectors(from, 1);
     p->g = vectors(from, 1);
-    p->hw = vectors(from, curved ? 1 : 0);
     p->hc = vectors(from, curved ? 1 : 0);
 }
 

@@ -184,6 +184,9 @@ int fw_climb(fw_chain *chain, fw_facts *facts)
     ++learn->climbed;
     remember(chain);
     learn->rows = learn->climbed + 1 < MEMORY ? learn->climbed + 1 : MEMORY;
-    if (learn->climbed % look == 0 && (!worth_it(chain) || learn->climbed >= most_iterations)) fw_climb_stop(chain);
+    if (learn->climbed % look == 0) {
+        if (!worth_it(chain) || learn->climbed >= most_iterations) fw_climb_stop(chain);
+        else if (chain->settings.adapt_scale && !chain->learn.scale_kept) scale_from_climb(chain);
+    }
     return FW_OK;
 }

@@ -3,7 +3,6 @@
 #include <math.h>
 #include <string.h>
 
-#include "kernels.h"
 #include "walk.h"
 
 /* A NaN that arithmetic does not produce: what is still there after the call was not written. */
@@ -54,50 +53,21 @@ int fw_evaluate(fw_walk *walk, const double *x, double *value, double *g)
     return FW_OK;
 }
 
-/* Forward difference of the gradient along the natural vector walk->natural, whose length in the base metric is
- * sqrt(pp). In that metric the point moves by eta = sqrt(macheps), or by the root of the coarsest spacing of its
- * coordinates (in base units) where that is larger: the two balance truncation against rounding, in any units. */
-static int difference(fw_walk *walk, const fw_point *at, double pp)
+int fw_evaluate_probe(fw_walk *walk)
 {
-    const size_t d = walk->d;
-    double coarsest = 0.0;
-    for (size_t i = 0; i < d; ++i) {
-        const double spacing = fabs(at->x[i]) / walk->base.r[i];
-        if (spacing > coarsest) coarsest = spacing;
-    }
-    const double eta = sqrt(DBL_EPSILON * (coarsest > 1.0 ? (coarsest < 1e14 ? coarsest : 1e14) : 1.0));
-    const double h = eta / sqrt(pp);
-    fw_copy(d, at->x, walk->probe);
-    fw_axpy(d, h, walk->natural, walk->probe);
     double value;
     const int status = fw_evaluate(walk, walk->probe, &value, walk->product);
-    if (status < 0) return status;
-    if (status > 0) return FW_PRODUCT_BAD;
-    for (size_t i = 0; i < d; ++i) walk->product[i] = (walk->product[i] - at->g[i]) / h;
-    return FW_OK;
+    return status > 0 ? FW_PRODUCT_BAD : status;
 }
 
-int fw_curve(fw_walk *walk, const fw_point *at, const double *p, double pp, double *hp)
+int fw_multiply(fw_walk *walk, const double *x)
 {
     const size_t d = walk->d;
-    if (!(pp > 0.0)) {
-        memset(hp, 0, d * sizeof *hp);
-        return isnan(pp) ? FW_PRODUCT_BAD : FW_OK;
-    }
-    fw_base_velocity(&walk->base, p, walk->natural);
-    if (walk->curvature == FW_DIFFERENCE) {
-        const int status = difference(walk, at, pp);
-        if (status != FW_OK) return status;
-    } else {
-        ++walk->products;
-        walk->product[0] = walk->product[d - 1] = unwritten();
-        const int answer =
-            walk->target.product(d, at->x, walk->natural, walk->product, walk->target.product_context);
-        if (answer < 0) return fail(walk, at->x, FW_CALLBACK_STOP);
-        if (answer > 0) return FW_PRODUCT_BAD;
-        if (is_unwritten(walk->product[0]) || is_unwritten(walk->product[d - 1]))
-            return fail(walk, at->x, FW_NOT_WRITTEN);
-    }
-    fw_base_gradient(&walk->base, walk->product, hp);
+    ++walk->products;
+    walk->product[0] = walk->product[d - 1] = unwritten();
+    const int answer = walk->target.product(d, x, walk->natural, walk->product, walk->target.product_context);
+    if (answer < 0) return fail(walk, x, FW_CALLBACK_STOP);
+    if (answer > 0) return FW_PRODUCT_BAD;
+    if (is_unwritten(walk->product[0]) || is_unwritten(walk->product[d - 1])) return fail(walk, x, FW_NOT_WRITTEN);
     return FW_OK;
 }

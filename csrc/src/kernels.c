@@ -6,6 +6,18 @@
 
 #define LANES 8
 
+static double fold(const double s[LANES])
+{
+    return ((s[0] + s[4]) + (s[2] + s[6])) + ((s[1] + s[5]) + (s[3] + s[7]));
+}
+
+static double largest(const double most[LANES])
+{
+    double x = most[0];
+    for (size_t j = 1; j < LANES; ++j) x = most[j] > x ? most[j] : x;
+    return x;
+}
+
 /* A kernel is written once: SWEEP runs its body for every half group of four elements, GET and PUT move one, SUM, ADD
  * and FOLD keep a sum in eight lanes. Where the compiler has vectors a half group is one vector (an incomplete one is
  * padded with zeros); elsewhere the body runs element by element in the same order of operations. */
@@ -13,27 +25,39 @@
 #pragma GCC diagnostic ignored "-Wpsabi" /* vectors cross only inlined calls */
 typedef double group __attribute__((vector_size(32), aligned(8), may_alias));
 
-static inline group get(const double *a, size_t m)
+/* m is a constant where these are inlined: each becomes one or two moves. */
+__attribute__((always_inline)) static inline group get(const double *a, size_t m)
 {
-    group x = {0};
-    if (m == 4) return *(const group *)a;
-    for (size_t j = 0; j < m; ++j) x[j] = a[j];
-    return x;
+    switch (m) {
+    case 1: return (group){a[0], 0.0, 0.0, 0.0};
+    case 2: return (group){a[0], a[1], 0.0, 0.0};
+    case 3: return (group){a[0], a[1], a[2], 0.0};
+    default: return *(const group *)a;
+    }
 }
 
-static inline void put(double *a, group x, size_t m)
+__attribute__((always_inline)) static inline void put(double *a, group x, size_t m)
 {
-    if (m == 4)
-        *(group *)a = x;
-    else
-        for (size_t j = 0; j < m; ++j) a[j] = x[j];
+    switch (m) {
+    case 3: a[2] = x[2]; /* fall through */
+    case 2: a[1] = x[1]; /* fall through */
+    case 1: a[0] = x[0]; break;
+    default: *(group *)a = x;
+    }
 }
 
 #define HALF(at, half, count, BODY)                                                                                    \
     {                                                                                                                  \
-        const size_t i = (at), m = (count);                                                                            \
-        enum { h = (half) };                                                                                           \
+        const size_t i = (at);                                                                                         \
+        enum { m_ = (count), half_ = (half) };                                                                         \
         BODY                                                                                                           \
+    }
+#define REST(at, half, count, BODY)                                                                                    \
+    switch (count) {                                                                                                   \
+    case 1: HALF(at, half, 1, BODY) break;                                                                             \
+    case 2: HALF(at, half, 2, BODY) break;                                                                             \
+    case 3: HALF(at, half, 3, BODY) break;                                                                             \
+    default: break;                                                                                                    \
     }
 #define SWEEP(n, BODY)                                                                                                 \
     do {                                                                                                               \
@@ -44,16 +68,18 @@ static inline void put(double *a, group x, size_t m)
         }                                                                                                              \
         if (at_ + 4 <= (n)) {                                                                                          \
             HALF(at_, 0, 4, BODY)                                                                                      \
-            if (at_ + 4 < (n)) HALF(at_ + 4, 1, (n) - (at_ + 4), BODY)                                                 \
-        } else if (at_ < (n)) {                                                                                        \
-            HALF(at_, 0, (n)-at_, BODY)                                                                                \
+            REST(at_ + 4, 1, (n) - (at_ + 4), BODY)                                                                    \
+        } else {                                                                                                       \
+            REST(at_, 0, (n)-at_, BODY)                                                                                \
         }                                                                                                              \
     } while (0)
-#define GET(a) get((a) + i, m)
-#define PUT(a, x) put((a) + i, x, m)
+#define GET(a) get((a) + i, m_)
+#define PUT(a, x) put((a) + i, x, m_)
 #define SUM(s) group s[2] = {{0}}
-#define ADD(s, x) (s)[h] += (x)
-#define LANE(s, j) (s)[(j) / 4][(j) % 4]
+#define ADD(s, x) (s)[half_] += (x)
+#define FOLD(s) fold_group((s)[0] + (s)[1])
+
+__attribute__((always_inline)) static inline double fold_group(group x) { return (x[0] + x[2]) + (x[1] + x[3]); }
 #else
 typedef double group;
 
@@ -69,15 +95,8 @@ typedef double group;
 #define PUT(a, x) (a)[i] = (x)
 #define SUM(s) double s[LANES] = {0}
 #define ADD(s, x) (s)[j] += (x)
-#define LANE(s, j) (s)[j]
+#define FOLD(s) fold(s)
 #endif
-#define FOLD(s)                                                                                                        \
-    (((LANE(s, 0) + LANE(s, 4)) + (LANE(s, 2) + LANE(s, 6))) + ((LANE(s, 1) + LANE(s, 5)) + (LANE(s, 3) + LANE(s, 7))))
-
-static double fold(const double s[LANES])
-{
-    return ((s[0] + s[4]) + (s[2] + s[6])) + ((s[1] + s[5]) + (s[3] + s[7]));
-}
 
 FW_CLONES double fw_dot(size_t n, const double *restrict a, const double *restrict b)
 {
@@ -113,11 +132,6 @@ int fw_all_positive(size_t n, const double *restrict a)
     for (size_t i = 0; i < n; ++i)
         if (!(a[i] > 0.0 && a[i] <= DBL_MAX)) return 0;
     return 1;
-}
-
-FW_CLONES void fw_copy(size_t n, const double *restrict from, double *restrict to)
-{
-    for (size_t i = 0; i < n; ++i) to[i] = from[i];
 }
 
 FW_CLONES void fw_scale_by(size_t n, const double *a, const double *b, double *out)
@@ -179,17 +193,25 @@ FW_CLONES void fw_kick_drift(size_t n, double kick, const double *restrict c, do
     }
 }
 
-FW_CLONES void fw_whiten_kick(size_t n, double kick, const double *restrict r, const double *restrict g,
-                              double *restrict c, double *restrict w, double sums[3])
+FW_CLONES void fw_kick_drift_gradient(size_t n, double kick, const double *restrict g, double step,
+                                      const double *restrict r, double *restrict w, double *restrict x)
+{
+    for (size_t i = 0; i < n; ++i) {
+        const double t = w[i] + kick * (r[i] * g[i]);
+        w[i] = t;
+        x[i] += step * (r[i] * t);
+    }
+}
+
+FW_CLONES void fw_kick_gradient(size_t n, double kick, const double *restrict r, const double *restrict g,
+                                double *restrict w, double sums[2])
 {
     SUM(ww);
-    SUM(wc);
     SUM(cc);
-    SWEEP(n, const group e = GET(r) * GET(g); const group t = GET(w) + kick * e; PUT(c, e); PUT(w, t); ADD(ww, t * t);
-          ADD(wc, t * e); ADD(cc, e * e););
+    SWEEP(n, const group e = GET(r) * GET(g); const group t = GET(w) + kick * e; PUT(w, t); ADD(ww, t * t);
+          ADD(cc, e * e););
     sums[0] = FOLD(ww);
-    sums[1] = FOLD(wc);
-    sums[2] = FOLD(cc);
+    sums[1] = FOLD(cc);
 }
 
 FW_CLONES void fw_whiten(size_t n, const double *restrict r, const double *restrict g, double *restrict c,
@@ -225,10 +247,157 @@ FW_CLONES void fw_gram2(size_t n, const double *restrict w, const double *restri
     sums[2] = FOLD(cc);
 }
 
-FW_CLONES void fw_kick2(size_t n, double kc, const double *restrict c, double kh, const double *restrict h,
-                        double *restrict w)
+FW_CLONES double fw_kick2_drift(size_t n, double kc, const double *restrict c, double kh, const double *restrict h,
+                                double step, const double *restrict r, double *restrict w, double *restrict x)
 {
-    for (size_t i = 0; i < n; ++i) w[i] += kc * c[i] + kh * h[i];
+    SUM(ww);
+    SWEEP(n, const group t = GET(w) + (kc * GET(c) + kh * GET(h)); PUT(w, t); PUT(x, GET(x) + step * (GET(r) * t));
+          ADD(ww, t * t););
+    return FOLD(ww);
+}
+
+FW_CLONES void fw_kick2(size_t n, double kc, const double *restrict c, double kh, const double *restrict h,
+                        double *restrict w, double sums[3])
+{
+    SUM(ww);
+    SUM(wc);
+    SUM(wh);
+    SWEEP(n, const group e = GET(c); const group f = GET(h); const group t = GET(w) + (kc * e + kh * f); PUT(w, t);
+          ADD(ww, t * t); ADD(wc, t * e); ADD(wh, t * f););
+    sums[0] = FOLD(ww);
+    sums[1] = FOLD(wc);
+    sums[2] = FOLD(wh);
+}
+
+FW_CLONES void fw_kick2_spread(size_t n, double kc, const double *restrict c, double kh, const double *restrict h,
+                               const double *restrict r, double *restrict w, double *restrict v, double sums[2])
+{
+    SUM(ww);
+    SUM(wh);
+    SWEEP(n, const group f = GET(h); const group t = GET(w) + (kc * GET(c) + kh * f); PUT(w, t); PUT(v, GET(r) * t);
+          ADD(ww, t * t); ADD(wh, t * f););
+    sums[0] = FOLD(ww);
+    sums[1] = FOLD(wh);
+}
+
+FW_CLONES double fw_whiten_spread(size_t n, const double *restrict r, const double *restrict g, double *restrict c,
+                                  double *restrict v)
+{
+    SUM(cc);
+    SWEEP(n, const group s = GET(r); const group e = s * GET(g); PUT(c, e); PUT(v, s * e); ADD(cc, e * e););
+    return FOLD(cc);
+}
+
+/* Maxima need no order, but a lane each keeps the passes in vectors. */
+FW_CLONES void fw_whiten_coarsest(size_t n, const double *restrict r, const double *restrict g, const double *restrict x,
+                                  double *restrict c, double sums[2])
+{
+    double s[LANES] = {0}, most[LANES] = {0};
+    size_t i = 0;
+    for (; i + LANES <= n; i += LANES)
+        for (size_t j = 0; j < LANES; ++j) {
+            const double e = r[i + j] * g[i + j], spacing = fabs(x[i + j]) / r[i + j];
+            c[i + j] = e;
+            s[j] += e * e;
+            most[j] = spacing > most[j] ? spacing : most[j];
+        }
+    for (size_t j = 0; i < n; ++i, ++j) {
+        const double e = r[i] * g[i], spacing = fabs(x[i]) / r[i];
+        c[i] = e;
+        s[j] += e * e;
+        most[j] = spacing > most[j] ? spacing : most[j];
+    }
+    sums[0] = fold(s);
+    sums[1] = largest(most);
+}
+
+FW_CLONES double fw_coarsest(size_t n, const double *restrict r, const double *restrict x)
+{
+    double most[LANES] = {0};
+    for (size_t i = 0; i < n; ++i) {
+        const double spacing = fabs(x[i]) / r[i];
+        if (spacing > most[i % LANES]) most[i % LANES] = spacing;
+    }
+    return largest(most);
+}
+
+FW_CLONES void fw_probe(size_t n, double h, const double *restrict x, const double *restrict r, const double *restrict p,
+                        double *restrict out)
+{
+    for (size_t i = 0; i < n; ++i) out[i] = x[i] + h * (r[i] * p[i]);
+}
+
+FW_CLONES void fw_difference_over(size_t n, const double *a, const double *b, double h, double *out)
+{
+    for (size_t i = 0; i < n; ++i) out[i] = (a[i] - b[i]) / h;
+}
+
+FW_CLONES void fw_whiten_product(size_t n, const double *restrict r, const double *restrict q, const double *restrict c,
+                                 double *restrict y, double sums[2])
+{
+    SUM(cy);
+    SUM(yy);
+    SWEEP(n, const group e = GET(r) * GET(q); PUT(y, e); ADD(cy, GET(c) * e); ADD(yy, e * e););
+    sums[0] = FOLD(cy);
+    sums[1] = FOLD(yy);
+}
+
+FW_CLONES void fw_whiten_difference(size_t n, double h, const double *restrict r, const double *restrict q,
+                                    const double *restrict g, double *restrict y, double sums[2])
+{
+    SUM(cy);
+    SUM(yy);
+    SWEEP(n, const group s = GET(r); const group b = GET(g); const group e = s * ((GET(q) - b) / h); PUT(y, e);
+          ADD(cy, s * b * e); ADD(yy, e * e););
+    sums[0] = FOLD(cy);
+    sums[1] = FOLD(yy);
+}
+
+FW_CLONES double fw_product_dot(size_t n, const double *restrict r, const double *restrict q, const double *restrict w)
+{
+    SUM(s);
+    SWEEP(n, ADD(s, GET(w) * (GET(r) * GET(q))););
+    return FOLD(s);
+}
+
+FW_CLONES double fw_difference_dot(size_t n, double h, const double *restrict r, const double *restrict q,
+                                   const double *restrict g, const double *restrict w)
+{
+    SUM(s);
+    SWEEP(n, ADD(s, GET(w) * (GET(r) * ((GET(q) - GET(g)) / h))););
+    return FOLD(s);
+}
+
+FW_CLONES void fw_product_sums(size_t n, const double *restrict r, const double *restrict q, const double *restrict w,
+                               const double *restrict c, const double *restrict p, double sums[4])
+{
+    SUM(yw);
+    SUM(yc);
+    SUM(yp);
+    SUM(wp);
+    SWEEP(n, const group y = GET(r) * GET(q); const group t = GET(w); const group f = GET(p); ADD(yw, y * t);
+          ADD(yc, y * GET(c)); ADD(yp, y * f); ADD(wp, t * f););
+    sums[0] = FOLD(yw);
+    sums[1] = FOLD(yc);
+    sums[2] = FOLD(yp);
+    sums[3] = FOLD(wp);
+}
+
+FW_CLONES void fw_difference_sums(size_t n, double h, const double *restrict r, const double *restrict q,
+                                  const double *restrict g, const double *restrict w, const double *restrict p,
+                                  double sums[4])
+{
+    SUM(yw);
+    SUM(yc);
+    SUM(yp);
+    SUM(wp);
+    SWEEP(n, const group s = GET(r); const group b = GET(g); const group y = s * ((GET(q) - b) / h);
+          const group t = GET(w); const group f = GET(p); ADD(yw, y * t); ADD(yc, y * (s * b)); ADD(yp, y * f);
+          ADD(wp, t * f););
+    sums[0] = FOLD(yw);
+    sums[1] = FOLD(yc);
+    sums[2] = FOLD(yp);
+    sums[3] = FOLD(wp);
 }
 
 FW_CLONES double fw_ratio_dot(size_t n, const double *restrict a, const double *restrict b,

@@ -2,11 +2,30 @@
  *
  * Sums run in eight fixed lanes (element i belongs to lane i mod 8) and are folded in one fixed order, and the build
  * forbids contraction of a*b+c, so a result has the same bits on every processor and in every function clone.
+ *
+ * Beyond the caches a step costs what it moves. Vectors of d numbers read + written in one step, the caller's functions
+ * apart, without learned directions (each adds 3 to a leapfrog step); "least": every pass between two calls, or between
+ * two sums that the next pass needs, reads each vector once and writes only what has changed.
+ *
+ *   motion                            passes                                                       moved   least
+ *   leapfrog                          kick and drift 6, kick 4                                        10      10
+ *   surrogate, either scheme          kick and drift 6, whiten 4, kick 3                              13      13
+ *   product, split                    kick and drift 7, whiten 4, H c 4, kick 6, H w 3, kick 3        27      27
+ *   product, semi-explicit            S w 3, H w 5, kick and drift 7, whiten 4, H c 4, S w 3,         35      34
+ *                                     H w 5, kick 4
+ *   difference, split                 kick and drift 7, whiten 4, probe 4, H c 4, kick 4, probe 4,    34      33
+ *                                     H w 4, kick 3
+ *   difference, semi-explicit         probe 4, H w 5, kick and drift 7, whiten 4, probe 4, H c 4,     41      40
+ *                                     probe 4, H w 5, kick 4
+ *
+ * What is left: in the third the S w of the second half could go with H c; in the last two the coarsest spacing could
+ * be found while drifting, at the price of a division an element in every motion.
  */
 #ifndef FW_KERNELS_H
 #define FW_KERNELS_H
 
 #include <stddef.h>
+#include <string.h>
 
 #if !defined(FW_NO_CLONES) && defined(__x86_64__) && defined(__linux__) && defined(__GLIBC__) && defined(__GNUC__) &&   \
     !defined(__clang__) && __GNUC__ >= 12
@@ -22,7 +41,28 @@ double fw_sum_log(size_t n, const double *a);
 int fw_all_finite(size_t n, const double *a);
 int fw_all_positive(size_t n, const double *a);
 
-void fw_copy(size_t n, const double *from, double *to);
+/* Here, as a call costs more than copying a few numbers. */
+static inline void fw_copy(size_t n, const double *restrict from, double *restrict to)
+{
+    if (n > 64) {
+        memcpy(to, from, n * sizeof *to);
+        return;
+    }
+    for (; n >= 4; n -= 4, from += 4, to += 4) {
+        const double a = from[0], b = from[1], c = from[2], d = from[3];
+        to[0] = a;
+        to[1] = b;
+        to[2] = c;
+        to[3] = d;
+    }
+    switch (n) {
+    case 3: to[2] = from[2]; /* fall through */
+    case 2: to[1] = from[1]; /* fall through */
+    case 1: to[0] = from[0]; break;
+    default: break;
+    }
+}
+
 void fw_scale_by(size_t n, const double *a, const double *b, double *out);   /* out = a*b */
 void fw_divide_by(size_t n, const double *a, const double *b, double *out);  /* out = a/b */
 void fw_axpy(size_t n, double k, const double *a, double *y);                /* y += k a */
@@ -36,16 +76,46 @@ void fw_gram(size_t n, size_t rows, const double *const *vectors, double *out);
 
 /* w += kick c; x += step r*w */
 void fw_kick_drift(size_t n, double kick, const double *c, double step, const double *r, double *w, double *x);
-/* c = r*g; w += kick c; sums: w.w, w.c, c.c with the new w */
-void fw_whiten_kick(size_t n, double kick, const double *r, const double *g, double *c, double *w, double sums[3]);
+/* the same with c = r*g, which is not kept */
+void fw_kick_drift_gradient(size_t n, double kick, const double *g, double step, const double *r, double *w, double *x);
+/* c = r*g, which is not kept; w += kick c; sums: w.w, c.c with the new w */
+void fw_kick_gradient(size_t n, double kick, const double *r, const double *g, double *w, double sums[2]);
 /* c = r*g; sums: w.w, w.c, c.c */
 void fw_whiten(size_t n, const double *r, const double *g, double *c, const double *w, double sums[3]);
 /* w += kick c; sums: w.w, w.c */
 void fw_kick(size_t n, double kick, const double *c, double *w, double sums[2]);
 /* sums: w.w, w.c, c.c */
 void fw_gram2(size_t n, const double *w, const double *c, double sums[3]);
-/* w += kc c + kh h */
-void fw_kick2(size_t n, double kc, const double *c, double kh, const double *h, double *w);
+
+/* w += kc c + kh h; x += step r*w; returns w.w */
+double fw_kick2_drift(size_t n, double kc, const double *c, double kh, const double *h, double step, const double *r,
+                      double *w, double *x);
+/* w += kc c + kh h; sums: w.w, w.c, w.h */
+void fw_kick2(size_t n, double kc, const double *c, double kh, const double *h, double *w, double sums[3]);
+/* the same, and v = r*w; sums: w.w, w.h */
+void fw_kick2_spread(size_t n, double kc, const double *c, double kh, const double *h, const double *r, double *w,
+                     double *v, double sums[2]);
+/* c = r*g; v = r*c; returns c.c */
+double fw_whiten_spread(size_t n, const double *r, const double *g, double *c, double *v);
+/* c = r*g; sums: c.c, largest |x|/r */
+void fw_whiten_coarsest(size_t n, const double *r, const double *g, const double *x, double *c, double sums[2]);
+double fw_coarsest(size_t n, const double *r, const double *x); /* largest |x|/r */
+/* out = x + h r*p */
+void fw_probe(size_t n, double h, const double *x, const double *r, const double *p, double *out);
+/* out = (a - b)/h */
+void fw_difference_over(size_t n, const double *a, const double *b, double h, double *out);
+/* y = r*q; sums: c.y, y.y. Then with y = r*(q - g)/h and c = r*g. */
+void fw_whiten_product(size_t n, const double *r, const double *q, const double *c, double *y, double sums[2]);
+void fw_whiten_difference(size_t n, double h, const double *r, const double *q, const double *g, double *y,
+                          double sums[2]);
+/* w.y of the same y, which are not kept */
+double fw_product_dot(size_t n, const double *r, const double *q, const double *w);
+double fw_difference_dot(size_t n, double h, const double *r, const double *q, const double *g, const double *w);
+/* y.w, y.c, y.p, w.p of the same y */
+void fw_product_sums(size_t n, const double *r, const double *q, const double *w, const double *c, const double *p,
+                     double sums[4]);
+void fw_difference_sums(size_t n, double h, const double *r, const double *q, const double *g, const double *w,
+                        const double *p, double sums[4]);
 
 /* metric operations: v/delta etc. with one rank-one term; see metric.c */
 double fw_ratio_dot(size_t n, const double *a, const double *b, const double *delta);       /* sum a*b/delta */

@@ -15,9 +15,14 @@ static const double pi = 3.14159265358979323846;
 /* cosh(sqrt z) - 1 and sinh(sqrt z)/sqrt z, continued through z = 0 (cos and sin for z < 0): both entire in z. */
 static void entire(double z, double *cosh_less_one, double *sinh_ratio)
 {
-    if (fabs(z) < 1e-3) { /* first term left out: z^5/10! and z^5/11!, below 1e-21 */
-        *cosh_less_one = z / 2 * (1 + z / 12 * (1 + z / 30 * (1 + z / 56)));
-        *sinh_ratio = 1 + z / 6 * (1 + z / 20 * (1 + z / 42 * (1 + z / 72)));
+    if (fabs(z) < 0.25) { /* first terms left out: z^8/16! and z^7/15!, below 2e-17 of the sums */
+        const double zz = z * z;
+        const double even = 1 / 2. + zz * (1 / 720. + zz * (1 / 3628800. + zz / 87178291200.));
+        const double odd = 1 / 24. + zz * (1 / 40320. + zz / 479001600.);
+        *cosh_less_one = z * (even + z * odd);
+        const double even_s = zz * (1 / 120. + zz * (1 / 362880. + zz / 6227020800.));
+        const double odd_s = 1 / 6. + zz * (1 / 5040. + zz / 39916800.);
+        *sinh_ratio = 1.0 + (even_s + z * odd_s);
     } else if (z > 0.0) {
         const double y = sqrt(z), half = sinh(0.5 * y);
         *cosh_less_one = 2.0 * half * half;
@@ -29,9 +34,10 @@ static void entire(double z, double *cosh_less_one, double *sinh_ratio)
     }
 }
 
-/* Exact flow of dw/dt = -rate c (w.Hw) for the signed time t: w <- w - s c. A = w.Hw, B = w.Hc, C = c.Hc.
- * rate sqrt(disc) |t| is the same from both ends; past 4 the way back is lost to rounding (error 1e-16 e^8). */
-static int christoffel(double rate, double t, double a, double b, double c, int surrogate, double *s, double *log_delta)
+/* Exact flow of dw/dt = -rate c (w.Hw) for the signed time t: w <- w - s c, Jacobian (1 + rise)^-2. A = w.Hw,
+ * B = w.Hc, C = c.Hc. rate sqrt(disc) |t| is the same from both ends; past 4 the way back is lost to rounding (error
+ * 1e-16 e^8). */
+static int christoffel(double rate, double t, double a, double b, double c, int surrogate, double *s, double *rise)
 {
     double disc = b * b - a * c;
     if (surrogate && disc > 0.0) disc = 0.0; /* Cauchy-Schwarz */
@@ -40,10 +46,9 @@ static int christoffel(double rate, double t, double a, double b, double c, int 
     if (!(z > -pi * pi)) return FW_POLE;
     double cosh_less_one, sinh_ratio;
     entire(z, &cosh_less_one, &sinh_ratio);
-    const double rise = cosh_less_one + b * time * sinh_ratio;
-    if (!(1.0 + rise > 0.0)) return FW_POLE;
-    *s = a * time * sinh_ratio / (1.0 + rise);
-    *log_delta = log1p(rise);
+    *rise = cosh_less_one + b * time * sinh_ratio;
+    if (!(1.0 + *rise > 0.0)) return FW_POLE;
+    *s = a * time * sinh_ratio / (1.0 + *rise);
     return FW_OK;
 }
 
@@ -58,8 +63,9 @@ static int finish(const fw_walk *walk, fw_point *p)
 
 /* ---- surrogate: everything is a multiple of c ------------------------------------------------------------------- */
 
-/* The half step w <- w + *k c. leaving: first half of a step (Christoffel flow, then kick), else kick, then flow. */
-static int half_surrogate(const fw_walk *walk, const fw_point *p, double step, int leaving, double *k, double *jacobian)
+/* The half step w <- w + *k c, its Jacobian (1 + *rise)^-2 or, semi-explicit, 1 + *rise.
+ * leaving: first half of a step (Christoffel flow, then kick), else kick, then flow. */
+static int half_surrogate(const fw_walk *walk, const fw_point *p, double step, int leaving, double *k, double *rise)
 {
     const double l = level(walk, p), rate = walk->beta / l;
     const double kick = 0.5 * step * (1.0 + rate) / l;
@@ -68,33 +74,36 @@ static int half_surrogate(const fw_walk *walk, const fw_point *p, double step, i
         if (!(before > 0.0)) return FW_POLE;
         *k = kick + a * (p->ww + kick * p->wc) / before;
         const double after = 1.0 + a * (p->wc + *k * p->cc);
-        if (!(after > 0.0)) return FW_POLE;
-        *jacobian = log(after) - log(before);
-        return FW_OK;
+        *rise = (after - before) / before;
+        return after > 0.0 ? FW_OK : FW_POLE;
     }
-    double ww = p->ww, wc = p->wc, s, log_delta;
+    double ww = p->ww, wc = p->wc, s;
     if (!leaving) {
         ww += kick * (2.0 * wc + kick * p->cc);
         wc += kick * p->cc;
     }
-    const int status = christoffel(rate, 0.5 * step, -ww, -wc, -p->cc, 1, &s, &log_delta);
+    const int status = christoffel(rate, 0.5 * step, -ww, -wc, -p->cc, 1, &s, rise);
     *k = kick - s;
-    *jacobian = -2.0 * log_delta;
     return status;
+}
+
+/* log of the product of two Jacobians as half_surrogate gives them: one logarithm a step */
+static double log_jacobian(const fw_walk *walk, double rise, double other)
+{
+    return (walk->scheme == FW_SEMI_EXPLICIT ? 1.0 : -2.0) * log1p(rise + other + rise * other);
 }
 
 static int step_surrogate(fw_walk *walk, fw_point *p, double step)
 {
-    double k, jacobian, sums[2];
-    int status = half_surrogate(walk, p, step, 1, &k, &jacobian);
+    double k, leaving, arriving, sums[2];
+    int status = half_surrogate(walk, p, step, 1, &k, &leaving);
     if (status != FW_OK) return status;
-    p->log_jacobian += jacobian;
     fw_base_kick_drift(&walk->base, k, step, p);
     status = fw_walk_arrive(walk, p);
     if (status != FW_OK) return status;
-    status = half_surrogate(walk, p, step, 0, &k, &jacobian);
+    status = half_surrogate(walk, p, step, 0, &k, &arriving);
     if (status != FW_OK) return status;
-    p->log_jacobian += jacobian;
+    p->log_jacobian += log_jacobian(walk, leaving, arriving);
     fw_kick(walk->d, k, p->c, p->w, sums);
     p->ww = sums[0];
     p->wc = sums[1];
@@ -102,23 +111,6 @@ static int step_surrogate(fw_walk *walk, fw_point *p, double step)
 }
 
 /* ---- curvature of the density itself ------------------------------------------------------------------------------ */
-
-static int curve_gradient(fw_walk *walk, fw_point *p)
-{
-    const int status = fw_curve(walk, p, p->c, p->cc, p->hc);
-    if (status != FW_OK) return status;
-    p->chc = fw_dot(walk->d, p->c, p->hc);
-    return isfinite(p->chc) ? FW_OK : FW_PRODUCT_BAD;
-}
-
-static int curve_velocity(fw_walk *walk, fw_point *p)
-{
-    const int status = fw_curve(walk, p, p->w, p->ww, p->hw);
-    if (status != FW_OK) return status;
-    p->whw = fw_dot(walk->d, p->w, p->hw);
-    p->whc = fw_dot(walk->d, p->w, p->hc);
-    return isfinite(p->whw) ? FW_OK : FW_PRODUCT_BAD;
-}
 
 /* b = G^-1 grad phi = bc c + bh hc */
 static void force(const fw_walk *walk, const fw_point *p, double *bc, double *bh)
@@ -128,77 +120,91 @@ static void force(const fw_walk *walk, const fw_point *p, double *bc, double *bh
     *bc = -(1.0 + walk->beta * *bh * p->chc) / l;
 }
 
-static void sum_up(const fw_walk *walk, fw_point *p)
-{
-    double sums[3];
-    fw_gram2(walk->d, p->w, p->c, sums);
-    p->ww = sums[0];
-    p->wc = sums[1];
-    p->cc = sums[2];
-}
-
-/* First half of a split step; the drift follows. */
+/* First half of a split step, and the drift. */
 static int leave_split(fw_walk *walk, fw_point *p, double step)
 {
-    double bc, bh, s, log_delta;
+    double bc, bh, s, rise;
     force(walk, p, &bc, &bh);
-    const int status = christoffel(bh, 0.5 * step, p->whw, p->whc, p->chc, 0, &s, &log_delta);
+    const int status = christoffel(bh, 0.5 * step, p->whw, p->whc, p->chc, 0, &s, &rise);
     if (status != FW_OK) return status;
-    p->log_jacobian -= 2.0 * log_delta;
-    fw_kick2(walk->d, -s - 0.5 * step * bc, p->c, -0.5 * step * bh, p->hc, p->w);
+    p->log_jacobian -= 2.0 * log1p(rise);
+    fw_base_kick2_drift(&walk->base, -s - 0.5 * step * bc, -0.5 * step * bh, step, p);
     return FW_OK;
 }
 
-/* Second half. The H w that ends the step starts the next one: after the flow it is H w - s H c. */
+/* Second half. What the next step needs of H w follows from H w here: after the flow it is H w - s hc. */
 static int arrive_split(fw_walk *walk, fw_point *p, double step)
 {
-    double bc, bh, s, log_delta;
+    const size_t d = walk->d;
+    const int spread = walk->base.k == 0 && walk->curvature == FW_PRODUCT;
+    double bc, bh, s, rise, whw, sums[3];
     force(walk, p, &bc, &bh);
-    fw_kick2(walk->d, -0.5 * step * bc, p->c, -0.5 * step * bh, p->hc, p->w);
-    sum_up(walk, p);
-    int status = curve_velocity(walk, p);
+    const double kc = -0.5 * step * bc, kh = -0.5 * step * bh;
+    if (spread)
+        fw_kick2_spread(d, kc, p->c, kh, p->hc, walk->base.r, p->w, walk->natural, sums);
+    else
+        fw_kick2(d, kc, p->c, kh, p->hc, p->w, sums);
+    p->ww = sums[0];
+    const double whc = sums[spread ? 1 : 2];
+    int status = fw_curve_velocity(walk, p, spread, &whw);
     if (status != FW_OK) return status;
-    status = christoffel(bh, 0.5 * step, p->whw, p->whc, p->chc, 0, &s, &log_delta);
+    status = christoffel(bh, 0.5 * step, whw, whc, p->chc, 0, &s, &rise);
     if (status != FW_OK) return status;
-    p->log_jacobian -= 2.0 * log_delta;
-    fw_axpy(walk->d, -s, p->c, p->w);
-    fw_axpy(walk->d, -s, p->hc, p->hw);
-    p->whw = fw_dot(walk->d, p->w, p->hw);
-    p->whc = fw_dot(walk->d, p->w, p->hc);
-    sum_up(walk, p);
+    p->log_jacobian -= 2.0 * log1p(rise);
+    fw_kick(d, -s, p->c, p->w, sums);
+    p->ww = sums[0];
+    p->wc = sums[1];
+    p->whw = whw - 2.0 * s * whc + s * s * p->chc;
+    p->whc = whc - s * p->chc;
     return FW_OK;
 }
 
-/* Either half of a semi-explicit step: [I + a c (Hw)^T] w' = w - (step/2) b, a = step beta / 2L. */
-static int half_semi_explicit(fw_walk *walk, fw_point *p, double step)
+/* Either half of a semi-explicit step, [I + a c (Hw)^T] w' = w - (step/2) b with a = step beta / 2L, so that
+ * w' = w + *kc c + *kh hc. */
+static int half_semi_explicit(fw_walk *walk, fw_point *p, double step, double *kc, double *kh)
 {
-    double bc, bh;
-    const int status = curve_velocity(walk, p);
+    double bc, bh, sums[4];
+    const int status = fw_curve_velocity_all(walk, p, sums);
     if (status != FW_OK) return status;
     force(walk, p, &bc, &bh);
-    const double a = 0.5 * step * bh, before = 1.0 + a * p->whc;
+    const double whw = sums[0], whc = sums[3], a = 0.5 * step * bh, before = 1.0 + a * whc;
     if (!(before > 0.0)) return FW_POLE;
-    fw_kick2(walk->d, -0.5 * step * bc, p->c, -0.5 * step * bh, p->hc, p->w);
-    fw_axpy(walk->d, -a * fw_dot(walk->d, p->hw, p->w) / before, p->c, p->w);
-    const double after = 1.0 - a * fw_dot(walk->d, p->w, p->hc);
+    *kc = -0.5 * step * bc;
+    *kh = -0.5 * step * bh;
+    *kc -= a * (whw + *kc * sums[1] + *kh * sums[2]) / before;
+    const double after = 1.0 - a * (whc + *kc * p->chc + *kh * p->hchc);
     if (!(after > 0.0)) return FW_POLE;
-    p->log_jacobian += log(after) - log(before);
-    sum_up(walk, p);
+    p->log_jacobian += log(after / before);
+    return FW_OK;
+}
+
+static int leave_semi_explicit(fw_walk *walk, fw_point *p, double step)
+{
+    double kc, kh;
+    const int status = half_semi_explicit(walk, p, step, &kc, &kh);
+    if (status == FW_OK) fw_base_kick2_drift(&walk->base, kc, kh, step, p);
+    return status;
+}
+
+static int arrive_semi_explicit(fw_walk *walk, fw_point *p, double step)
+{
+    double kc, kh, sums[3];
+    const int status = half_semi_explicit(walk, p, step, &kc, &kh);
+    if (status != FW_OK) return status;
+    fw_kick2(walk->d, kc, p->c, kh, p->hc, p->w, sums);
+    p->ww = sums[0];
+    p->wc = sums[1];
     return FW_OK;
 }
 
 static int step_curved(fw_walk *walk, fw_point *p, double step)
 {
-    int status = walk->scheme == FW_SPLIT ? leave_split(walk, p, step) : half_semi_explicit(walk, p, step);
-    if (status != FW_OK) return status;
-    fw_base_kick_drift(&walk->base, 0.0, step, p);
-    status = fw_walk_arrive(walk, p);
-    if (status != FW_OK) return status;
-    status = curve_gradient(walk, p);
-    if (status != FW_OK) return status;
-    status = walk->scheme == FW_SPLIT ? arrive_split(walk, p, step) : half_semi_explicit(walk, p, step);
-    if (status != FW_OK) return status;
-    return finish(walk, p);
+    const int split = walk->scheme == FW_SPLIT;
+    int status = split ? leave_split(walk, p, step) : leave_semi_explicit(walk, p, step);
+    if (status == FW_OK) status = fw_evaluate(walk, p->x, &p->value, p->g);
+    if (status == FW_OK) status = fw_curve_gradient(walk, p);
+    if (status == FW_OK) status = split ? arrive_split(walk, p, step) : arrive_semi_explicit(walk, p, step);
+    return status == FW_OK ? finish(walk, p) : status;
 }
 
 /* ---- the motion --------------------------------------------------------------------------------------------------- */
@@ -210,14 +216,20 @@ static void refresh(const fw_walk *walk, fw_point *p)
 {
     const double root = sqrt(level(walk, p));
     const double k = walk->beta / (root * (1.0 + root));
-    fw_axpy(walk->d, -k * fw_dot(walk->d, p->c, p->w), p->c, p->w);
+    double sums[2];
+    fw_kick(walk->d, -k * p->wc, p->c, p->w, sums);
+    p->ww = sums[0];
+    p->wc = sums[1];
 }
 
 static int complete(fw_walk *walk, fw_point *p)
 {
     if (curved(walk)) {
-        int status = curve_gradient(walk, p);
-        if (status == FW_OK && walk->scheme == FW_SPLIT) status = curve_velocity(walk, p);
+        int status = fw_curve_gradient(walk, p);
+        if (status == FW_OK && walk->scheme == FW_SPLIT) {
+            p->whc = fw_dot(walk->d, p->w, p->hc);
+            status = fw_curve_velocity(walk, p, 0, &p->whw);
+        }
         if (status != FW_OK) return status;
     }
     return finish(walk, p);

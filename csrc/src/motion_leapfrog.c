@@ -17,7 +17,7 @@ static int complete(fw_walk *walk, fw_point *p)
 
 static int step(fw_walk *walk, fw_point *p, double step)
 {
-    fw_base_kick_drift(&walk->base, 0.5 * step, step, p);
+    fw_base_leave(&walk->base, 0.5 * step, step, p);
     const int status = fw_evaluate(walk, p->x, &p->value, p->g);
     if (status != FW_OK) return status;
     fw_base_arrive_kick(&walk->base, 0.5 * step, p);

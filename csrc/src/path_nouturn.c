@@ -63,7 +63,7 @@ static int weigh(fw_chain *chain, orbit *o, const fw_point *p, int first)
         o->shift = log_weight;
     }
     const double weight = exp(log_weight - o->shift);
-    o->accept_sum += log_weight < 0.0 ? exp(log_weight) : 1.0;
+    o->accept_sum += log_weight >= 0.0 ? 1.0 : o->shift == 0.0 ? weight : exp(log_weight);
     o->fresh_sum += weight;
     if (first || chain->random.uniform(chain->random.state) * o->fresh_sum < weight) keep(chain, &chain->fresh, p);
     return FW_OK;

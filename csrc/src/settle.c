@@ -173,7 +173,9 @@ void fw_learn_beta(fw_chain *chain)
         for (; j > 0 && sorted[j - 1] > learn->ring[i]; --j) sorted[j] = sorted[j - 1];
         sorted[j] = learn->ring[i];
     }
-    const double median = 0.5 * (sorted[(n - 1) / 2] + sorted[n / 2]);
+    double median = 0.5 * (sorted[(n - 1) / 2] + sorted[n / 2]);
+    /* where the base metric fits, |c|^2 is about d; at a mode it is nothing, and a beta from there would hold the chain */
+    if (median < 0.01 * (double)chain->walk.d) median = 0.01 * (double)chain->walk.d;
     if (median > 0.0 && isfinite(learn->bend / median)) chain->walk.beta = learn->bend / median;
 }
 

@@ -22,16 +22,12 @@ void fw_point_copy(const fw_walk *walk, const fw_point *from, fw_point *to)
     to->w = arrays.w;
     to->c = arrays.c;
     to->g = arrays.g;
-    to->hw = arrays.hw;
     to->hc = arrays.hc;
     fw_copy(d, from->x, to->x);
     fw_copy(d, from->w, to->w);
     fw_copy(d, from->c, to->c);
     fw_copy(d, from->g, to->g);
-    if (to->hw) {
-        fw_copy(d, from->hw, to->hw);
-        fw_copy(d, from->hc, to->hc);
-    }
+    if (to->hc) fw_copy(d, from->hc, to->hc);
 }
 
 int fw_walk_arrive(fw_walk *walk, fw_point *p)
@@ -108,12 +104,9 @@ int fw_walk_step(fw_walk *walk, fw_point *p, double step)
 
 int fw_walk_begin(fw_walk *walk, fw_point *p, const fw_random *random)
 {
-    fw_base_gradient(&walk->base, p->g, p->c);
-    p->cc = fw_dot(walk->d, p->c, p->c);
     random->normals(random->state, walk->d, p->w);
+    fw_base_arrive(&walk->base, p);
     walk->motion->refresh(walk, p);
-    p->ww = fw_dot(walk->d, p->w, p->w);
-    p->wc = fw_dot(walk->d, p->w, p->c);
     p->log_jacobian = 0.0;
     const int status = isfinite(p->cc) ? walk->motion->complete(walk, p) : FW_GRADIENT_BAD;
     if (status > 0) fw_walk_failed(walk, p->x);

@@ -18,13 +18,14 @@ typedef struct fw_base {
     double log_det; /* log det G0^-1 */
 } fw_base;
 
-/* x, w, c, g are d-vectors; hw = H~ w and hc = H~ c are NULL unless the motion uses a curvature of its own. */
+/* x, w, c, g are d-vectors; hc = H~ c is NULL unless the motion uses a curvature of its own. Motions keep c and the sums
+ * up to date as far as they need them. */
 typedef struct fw_point {
-    double *x, *w, *c, *g;
-    double *hw, *hc;
-    double value;          /* log density at x */
-    double ww, wc, cc;     /* w.w, w.c, c.c */
-    double whw, whc, chc;  /* w.hw, w.hc, c.hc */
+    double *x, *w, *c, *g, *hc;
+    double value;                /* log density at x */
+    double ww, wc, cc;           /* w.w, w.c, c.c */
+    double whw, whc, chc, hchc;  /* w.H~w, w.hc, c.hc, hc.hc */
+    double coarsest;             /* largest |x|/r, for gradient differences */
     double energy;
     double log_jacobian;   /* of the map from the start of the path */
 } fw_point;
@@ -34,8 +35,8 @@ struct fw_walk;
 typedef struct fw_motion {
     const char *name;
     const char *source; /* where the method was published */
-    int uses_products;  /* 1: points carry hw and hc when the curvature is not the surrogate */
-    /* Turn standard normal numbers in p->w into a velocity drawn given p->x. */
+    int uses_products;  /* 1: points carry hc when the curvature is not the surrogate */
+    /* Turn standard normal numbers in p->w into a velocity drawn given p->x; c and the sums are set and kept so. */
     void (*refresh)(const struct fw_walk *walk, fw_point *p);
     /* Complete a point whose x, w, c, value and the sums ww, wc, cc are set: curvature, energy. */
     int (*complete)(struct fw_walk *walk, fw_point *p);
@@ -70,8 +71,16 @@ typedef struct fw_walk {
 
 /* density.c: one checked evaluation; value and g are set on FW_OK only. */
 int fw_evaluate(fw_walk *walk, const double *x, double *value, double *g);
-/* hp = S^T H S p, p whitened, at the point (x, g); by the caller's product or by a gradient difference. */
-int fw_curve(fw_walk *walk, const fw_point *at, const double *p, double pp, double *hp);
+/* walk->product = gradient at walk->probe, or Hessian at x times walk->natural. */
+int fw_evaluate_probe(fw_walk *walk);
+int fw_multiply(fw_walk *walk, const double *x);
+
+/* curvature.c: from x and g of the point: c, cc, hc, chc, hchc, coarsest. */
+int fw_curve_gradient(fw_walk *walk, fw_point *p);
+/* w.H~w at the point, ww set. spread: walk->natural is S w already. */
+int fw_curve_velocity(fw_walk *walk, const fw_point *p, int spread, double *whw);
+/* w.H~w, c.H~w, hc.H~w, hc.w */
+int fw_curve_velocity_all(fw_walk *walk, const fw_point *p, double sums[4]);
 
 /* base.c */
 void fw_base_set(fw_base *base, const double *scale, size_t k, const double *directions, const double *lambda);
@@ -82,7 +91,10 @@ void fw_base_whiten_velocity(const fw_base *base, const double *v, double *w);
 void fw_base_gradient(const fw_base *base, const double *g, double *c);    /* c = S^T g */
 /* w += kick c; x += step S w */
 void fw_base_kick_drift(const fw_base *base, double kick, double step, fw_point *p);
-/* c = S^T g; w += kick c; sums of p */
+/* w += kc c + kh hc, ww; x += step S w */
+void fw_base_kick2_drift(const fw_base *base, double kc, double kh, double step, fw_point *p);
+/* c = S^T g; w += kick c; ww and cc. Without learned directions c is neither kept nor, by the first, read. */
+void fw_base_leave(const fw_base *base, double kick, double step, fw_point *p);
 void fw_base_arrive_kick(const fw_base *base, double kick, fw_point *p);
 /* c = S^T g; sums of p */
 void fw_base_arrive(const fw_base *base, fw_point *p);

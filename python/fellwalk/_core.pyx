@@ -8,6 +8,7 @@ import ctypes
 
 import numpy as np
 
+cimport numpy as cnp
 from cpython.mem cimport PyMem_Free, PyMem_Malloc
 from cpython.pycapsule cimport PyCapsule_GetContext, PyCapsule_GetName, PyCapsule_GetPointer
 from cpython.ref cimport PyObject
@@ -19,6 +20,8 @@ from numpy.random.c_distributions cimport random_standard_normal_fill
 from fellwalk.core cimport *
 
 from fellwalk.errors import ArgumentError, DensityError, ShapeError
+
+cnp.import_array()
 
 cdef extern from "Python.h":
     Py_ssize_t Py_REFCNT(PyObject *o)
@@ -142,6 +145,9 @@ cdef class Target:
     cdef object error
     cdef readonly Py_ssize_t dimension
     cdef readonly bint compiled
+    # Between calls of a Python function in few dimensions there are fractions of a microsecond: to give the lock of the
+    # interpreter away for them and take it again costs more, and the interpreter itself gives it to others in turn.
+    cdef bint keeps_gil
 
     def __cinit__(self, function, Py_ssize_t dimension, *, bint in_place=False, product=None):
         cdef void *context = NULL
@@ -150,6 +156,7 @@ cdef class Target:
         self.function = function
         self.product = product
         self.compiled = is_compiled(function)
+        self.keeps_gil = not self.compiled and dimension <= 1000
         self.x = np.empty(dimension)
         self.p = np.empty(dimension)
         self.out = np.empty(dimension)
@@ -211,15 +218,20 @@ def is_compiled(function):
     return isinstance(function, tuple) and type(function).__name__ == "LowLevelCallable"
 
 
-cdef object lend(object array, const double *data, Py_ssize_t d):
-    """The array to call a Python function with: the chain's own, or a new one when somebody kept the last."""
-    # one reference from the attribute, one from this argument
-    if Py_REFCNT(<PyObject *>array) > 3:
-        array = np.empty(d)
-    cdef double[::1] view = array
-    if data != NULL:
-        memcpy(&view[0], data, <size_t>d * sizeof(double))
-    return array
+cdef inline bint is_vector(object array, Py_ssize_t d) noexcept:
+    """Is this an array of d contiguous, aligned float64, one dimension?"""
+    return (cnp.PyArray_Check(array) and cnp.PyArray_TYPE(<cnp.ndarray>array) == cnp.NPY_DOUBLE
+            and cnp.PyArray_NDIM(<cnp.ndarray>array) == 1 and cnp.PyArray_DIM(<cnp.ndarray>array, 0) == d
+            and cnp.PyArray_ISCARRAY_RO(<cnp.ndarray>array))
+
+
+cdef inline bint lendable(PyObject *array, Py_ssize_t d) noexcept:
+    """Can a Python function be called with this array again? Not when somebody kept it, or changed its shape."""
+    return Py_REFCNT(array) == 1 and is_vector(<object>array, d) and cnp.PyArray_ISWRITEABLE(<cnp.ndarray>array)
+
+
+cdef inline void fill(object array, const double *data, Py_ssize_t d) noexcept:
+    memcpy(cnp.PyArray_DATA(<cnp.ndarray>array), data, <size_t>d * sizeof(double))
 
 
 cdef double number(object value) except? -1.0:
@@ -240,8 +252,7 @@ cdef double number(object value) except? -1.0:
 
 
 cdef int take_vector(object array, double *to, Py_ssize_t d, str what) except -1:
-    cdef const double[::1] view
-    if not (isinstance(array, np.ndarray) and array.dtype == np.float64 and array.ndim == 1 and array.flags.c_contiguous):
+    if not is_vector(array, d):
         try:
             given = np.asarray(array)
         except ValueError:
@@ -254,15 +265,16 @@ cdef int take_vector(object array, double *to, Py_ssize_t d, str what) except -1
         array = np.ascontiguousarray(given, dtype=np.float64)
     if array.ndim != 1 or array.shape[0] != d:
         raise DensityError(f"the {what} must have shape ({d},); the function gave shape {tuple(array.shape)}")
-    view = array
-    memcpy(to, &view[0], <size_t>d * sizeof(double))
+    memcpy(to, cnp.PyArray_DATA(<cnp.ndarray>array), <size_t>d * sizeof(double))
     return 0
 
 
 cdef int call_pair(size_t d, const double *x, double *value, double *gradient, void *context) noexcept with gil:
     cdef Target self = <Target>context
     try:
-        self.x = lend(self.x, x, <Py_ssize_t>d)
+        if not lendable(<PyObject *>self.x, <Py_ssize_t>d):
+            self.x = np.empty(<Py_ssize_t>d)
+        fill(self.x, x, <Py_ssize_t>d)
         answer = self.function(self.x)
         if not (isinstance(answer, tuple) and len(<tuple>answer) == 2):
             raise DensityError(
@@ -278,16 +290,18 @@ cdef int call_pair(size_t d, const double *x, double *value, double *gradient, v
 
 cdef int call_in_place(size_t d, const double *x, double *value, double *gradient, void *context) noexcept with gil:
     cdef Target self = <Target>context
-    cdef double[::1] view
     try:
-        self.x = lend(self.x, x, <Py_ssize_t>d)
-        self.out = lend(self.out, gradient, <Py_ssize_t>d)
+        if not lendable(<PyObject *>self.x, <Py_ssize_t>d):
+            self.x = np.empty(<Py_ssize_t>d)
+        if not lendable(<PyObject *>self.out, <Py_ssize_t>d):
+            self.out = np.empty(<Py_ssize_t>d)
+        fill(self.x, x, <Py_ssize_t>d)
+        fill(self.out, gradient, <Py_ssize_t>d)
         answer = self.function(self.x, self.out)
         if answer is None:
             raise DensityError("the in-place function must return the log density; it returned None")
         value[0] = number(answer)
-        view = self.out
-        memcpy(gradient, &view[0], d * sizeof(double))
+        take_vector(self.out, gradient, <Py_ssize_t>d, "gradient")
         return 0
     except BaseException as error:
         self.error = error
@@ -297,8 +311,12 @@ cdef int call_in_place(size_t d, const double *x, double *value, double *gradien
 cdef int call_product(size_t d, const double *x, const double *p, double *product, void *context) noexcept with gil:
     cdef Target self = <Target>context
     try:
-        self.x = lend(self.x, x, <Py_ssize_t>d)
-        self.p = lend(self.p, p, <Py_ssize_t>d)
+        if not lendable(<PyObject *>self.x, <Py_ssize_t>d):
+            self.x = np.empty(<Py_ssize_t>d)
+        if not lendable(<PyObject *>self.p, <Py_ssize_t>d):
+            self.p = np.empty(<Py_ssize_t>d)
+        fill(self.x, x, <Py_ssize_t>d)
+        fill(self.p, p, <Py_ssize_t>d)
         take_vector(self.product(self.x, self.p), product, <Py_ssize_t>d, "Hessian product")
         return 0
     except BaseException as error:
@@ -308,57 +326,55 @@ cdef int call_product(size_t d, const double *x, const double *p, double *produc
 
 # ---- random numbers --------------------------------------------------------------------------------------------------
 
-cdef struct counted:
-    bitgen_t outer
-    bitgen_t *inner
-    uint64_t used
-    uint64_t marked
+cdef extern from "stream.h":
+    ctypedef struct fw_stream:
+        uint64_t low, high, inc_low, inc_high, marked_low, marked_high
+    uint64_t fw_stream_next(fw_stream *stream) noexcept nogil
+    double fw_stream_uniform(fw_stream *stream) noexcept nogil
 
 
-cdef uint64_t counted_uint64(void *state) noexcept nogil:
-    cdef counted *c = <counted *>state
-    c.used += 1
-    return c.inner.next_uint64(c.inner.state)
+cdef struct numbers:
+    fw_stream own
+    bitgen_t outer  # the same, for NumPy's distributions
 
 
-cdef uint32_t counted_uint32(void *state) noexcept nogil:
-    return <uint32_t>(counted_uint64(state) >> 32)
+cdef uint64_t stream_uint64(void *state) noexcept nogil:
+    return fw_stream_next(<fw_stream *>state)
 
 
-cdef double counted_double(void *state) noexcept nogil:
-    cdef counted *c = <counted *>state
-    c.used += 1
-    return c.inner.next_double(c.inner.state)
+cdef uint32_t stream_uint32(void *state) noexcept nogil:
+    return <uint32_t>(fw_stream_next(<fw_stream *>state) >> 32)
+
+
+cdef double stream_double(void *state) noexcept nogil:
+    return fw_stream_uniform(<fw_stream *>state)
 
 
 cdef void stream_normals(void *state, size_t n, double *out) noexcept nogil:
-    random_standard_normal_fill(&(<counted *>state).outer, <Py_ssize_t>n, out)
+    random_standard_normal_fill(&(<numbers *>state).outer, <Py_ssize_t>n, out)
 
 
 cdef double stream_uniform(void *state) noexcept nogil:
-    return counted_double(state)
+    return fw_stream_uniform(&(<numbers *>state).own)
 
 
 cdef void stream_mark(void *state) noexcept nogil:
-    cdef counted *c = <counted *>state
-    c.marked = c.used
+    cdef fw_stream *own = &(<numbers *>state).own
+    own.marked_low, own.marked_high = own.low, own.high
 
 
 cdef class Stream:
-    """NumPy's PCG64DXSM, counted, so that it can go back to where a transition began."""
-    cdef object generator
-    cdef counted c
+    """The numbers of NumPy's PCG64DXSM, which can go back to where a transition began."""
+    cdef numbers c
 
     def __cinit__(self, seed_sequence):
-        cdef object lock
-        self.generator = np.random.PCG64DXSM(seed_sequence)
-        capsule = self.generator.capsule
-        self.c.inner = <bitgen_t *>PyCapsule_GetPointer(capsule, "BitGenerator")
-        self.c.outer.state = <void *>&self.c
-        self.c.outer.next_uint64 = counted_uint64
-        self.c.outer.next_uint32 = counted_uint32
-        self.c.outer.next_double = counted_double
-        self.c.outer.next_raw = counted_uint64
+        self.c.outer.state = <void *>&self.c.own
+        self.c.outer.next_uint64 = stream_uint64
+        self.c.outer.next_uint32 = stream_uint32
+        self.c.outer.next_double = stream_double
+        self.c.outer.next_raw = stream_uint64
+        begun = np.random.PCG64DXSM(seed_sequence).state["state"]
+        self.state = begun["state"].to_bytes(16, "little") + begun["inc"].to_bytes(16, "little")
 
     cdef fw_random random(self) noexcept:
         cdef fw_random r
@@ -370,23 +386,30 @@ cdef class Stream:
 
     def rewind(self):
         """Back to the mark: the numbers of the abandoned transition come again."""
-        if self.c.used != self.c.marked:
-            self.generator.advance(-int(self.c.used - self.c.marked))
-            self.c.used = self.c.marked
+        self.c.own.low, self.c.own.high = self.c.own.marked_low, self.c.own.marked_high
+
+    def normals(self, size_t n):
+        """The next n standard normal numbers."""
+        cdef double[::1] out = np.empty(n)
+        if n:
+            stream_normals(&self.c, n, &out[0])
+        return np.asarray(out)
+
+    def uniforms(self, size_t n):
+        """The next n numbers in [0, 1)."""
+        return np.array([fw_stream_uniform(&self.c.own) for _ in range(n)])
 
     @property
     def state(self):
         """32 bytes: the generator's state and increment, little-endian."""
-        inner = self.generator.state["state"]
-        return inner["state"].to_bytes(16, "little") + inner["inc"].to_bytes(16, "little")
+        words = (self.c.own.low, self.c.own.high, self.c.own.inc_low, self.c.own.inc_high)
+        return b"".join(int(word).to_bytes(8, "little") for word in words)
 
     @state.setter
     def state(self, bytes given):
-        whole = self.generator.state
-        whole["state"] = {"state": int.from_bytes(given[:16], "little"), "inc": int.from_bytes(given[16:32], "little")}
-        whole["has_uint32"] = whole["uinteger"] = 0
-        self.generator.state = whole
-        self.c.used = self.c.marked = 0
+        low, high, inc_low, inc_high = (int.from_bytes(given[i : i + 8], "little") for i in range(0, 32, 8))
+        self.c.own.low, self.c.own.high, self.c.own.inc_low, self.c.own.inc_high = low, high, inc_low, inc_high
+        stream_mark(&self.c)
 
 
 # ---- the chain -------------------------------------------------------------------------------------------------------
@@ -516,8 +539,11 @@ cdef class Engine:
         out.failure_position = &failure_position[0, 0] if out.failures_room else NULL
         self.enter()
         try:
-            with nogil:
+            if self.target.keeps_gil:
                 status = fw_chain_run(self.chain, n, &out, &done)
+            else:
+                with nogil:
+                    status = fw_chain_run(self.chain, n, &out, &done)
             if status < 0:
                 self.stream.rewind()
         finally:

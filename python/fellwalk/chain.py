@@ -19,6 +19,7 @@ __all__ = ["Block", "Chain"]
 
 _STATE_MAGIC = b"fellwalk chain 1\n"
 _CHECKSUM_BYTES = 16  # BLAKE2b of all that stands before it
+_PIECE = 1024  # transitions between two looks of Python
 _FAILURE_ROOM = 32  # positions of failed steps kept in one block; every failure is counted in the facts
 
 
@@ -194,27 +195,36 @@ class Chain:
         phase = self.phase
         if phase == "keep" and not self.step_size > 0:
             raise ArgumentError("this chain has no step size: call settle() first, or give step_size=")
+        # How long settling goes on is not known, so its arrays grow; those of kept draws are made once.
+        rows = _PIECE if phase == "settle" else most
         parts: list[Block] = []
         while most > 0 and self.phase == phase and not (parts and parts[-1].error is not None):
-            parts.append(self._piece(phase, min(most, 1024), draws, gradients))
+            parts.append(self._rows(phase, min(most, rows), draws, gradients))
             most -= len(parts[-1])
         return _joined(phase, parts, self.density.dimension)
 
-    def _piece(self, phase: str, n: int, want_draws: bool, want_gradients: bool) -> Block:
+    def _rows(self, phase: str, n: int, want_draws: bool, want_gradients: bool) -> Block:
+        """Up to n transitions, in pieces between which Python may answer a Ctrl-C."""
         d = self.density.dimension
         draws = np.empty((n if want_draws else 0, d))
         gradients = np.empty((n, d)) if want_gradients else None
-        facts = np.zeros(n, dtype=FACTS)
-        room = min(n, _FAILURE_ROOM)
-        index, code, position = np.empty(room, np.int64), np.empty(room, np.int32), np.empty((room, d))
-        status, done, rows, error = self._engine.run(n, draws if want_draws else None, facts, gradients, index, code,
-                                                     position)
-        self._count()
-        if status < 0 and error is None:
-            error = stopped(status, f"transition {self._engine.summary()['transitions'] + 1}", self.density,
-                            self._engine.failed_at())
-        return Block(phase, draws[:done], None if gradients is None else gradients[:done], facts[:done],
-                     (index[:rows], code[:rows], position[:rows]), error)
+        facts = np.empty(n, dtype=FACTS)
+        failures, done, error = [], 0, None
+        while done < n and error is None and self.phase == phase:
+            piece = slice(done, min(n, done + _PIECE))
+            room = min(piece.stop - done, _FAILURE_ROOM)
+            index, code, position = np.empty(room, np.int64), np.empty(room, np.int32), np.empty((room, d))
+            status, made, rows, error = self._engine.run(
+                piece.stop - done, draws[piece] if want_draws else None, facts[piece],
+                None if gradients is None else gradients[piece], index, code, position)
+            failures.append((index[:rows] + done, code[:rows], position[:rows].copy()))
+            done += made
+            self._count()
+            if status < 0 and error is None:
+                error = stopped(status, f"transition {self._engine.summary()['transitions'] + 1}", self.density,
+                                self._engine.failed_at())
+        joined = tuple(np.concatenate(column) for column in zip(*failures, strict=True))
+        return Block(phase, draws[:done], None if gradients is None else gradients[:done], facts[:done], joined, error)
 
     def interrupt(self) -> None:
         """Abandon the transition in hand; may be called from another thread."""

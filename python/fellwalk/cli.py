@@ -2,6 +2,7 @@
 
 import argparse
 import os
+import shlex
 import signal
 import sys
 from collections.abc import Callable, Sequence
@@ -10,6 +11,8 @@ import numpy as np
 
 from fellwalk import __version__
 from fellwalk.audit import audit
+from fellwalk.cli_json import audit_document, print_document, result_document
+from fellwalk.cli_settings import read_settings
 from fellwalk.demo.show import show
 from fellwalk.errors import ArgumentError, FellwalkError
 from fellwalk.interrupts import watching
@@ -27,8 +30,10 @@ def main(arguments: Sequence[str] | None = None) -> int:
     The exit status is 0 when all is done (or `--seconds` have passed), 1 after an error, 2 for wrong usage, 130 when
     Ctrl-C and 143 when SIGTERM ended the run early.
     """
-    options = _parser().parse_args(arguments)
+    typed = list(sys.argv[1:] if arguments is None else arguments)
+    options = _parser()[0].parse_args(typed)
     try:
+        options = _with_file(options, typed)
         with watching(signal.SIGTERM):
             status = options.action(options)
         sys.stdout.flush()
@@ -53,6 +58,23 @@ def main(arguments: Sequence[str] | None = None) -> int:
         return 1
 
 
+def _with_file(options: argparse.Namespace, typed: list[str]) -> argparse.Namespace:
+    """Options again, with a settings file's values in the place of defaults."""
+    if options.command == "run":
+        parser, make = _parser()
+        given = read_settings(options.settings, make) if options.settings else {}
+        make.set_defaults(**given)
+        options = parser.parse_args(typed)
+        missing = [name for name, there in (("MODEL", options.model), ("--record", options.record)) if not there]
+        if missing:
+            make.error(f"the following arguments are required: {', '.join(missing)}")
+        options.notes = {"command": shlex.join(["fellwalk", *typed])}
+        if given:
+            options.notes["settings file"] = options.settings
+            options.notes["settings"] = {key: np.asarray(value).tolist() for key, value in given.items()}
+    return options
+
+
 def _tell(error: BaseException, before: str = "") -> None:
     print(f"fellwalk: {before}{error}", file=sys.stderr)
     for note in getattr(error, "__notes__", []):
@@ -67,12 +89,18 @@ class _Help(argparse.HelpFormatter):
         return f"{action.help} (default: %(default)s)" if told else action.help
 
 
-def _parser() -> argparse.ArgumentParser:
+def _parser() -> tuple[argparse.ArgumentParser, argparse.ArgumentParser]:
+    """The parser of the command, and that of `run`."""
     parser = argparse.ArgumentParser(
-        prog="fellwalk", allow_abbrev=False,
-        description="Draws from a density given by its logarithm and gradient, with a record of how they were made.")
+        prog="fellwalk", allow_abbrev=False, formatter_class=argparse.RawDescriptionHelpFormatter,
+        description="Draws from a density given by its logarithm and gradient, with a record of how\nthey were made.",
+        epilog="The usual course, for a density in model.py:\n"
+               "  fellwalk audit model.py:density                      is the gradient right?\n"
+               "  fellwalk run model.py:density --record walk.fell     draws, table, verdict\n"
+               "  fellwalk report walk.fell                            and a page with figures\n"
+               "`fellwalk COMMAND --help` tells what a command takes.")
     parser.add_argument("--version", action="version", version=f"fellwalk {__version__}")
-    commands = parser.add_subparsers(title="commands", required=True, metavar="COMMAND")
+    commands = parser.add_subparsers(title="commands", required=True, metavar="COMMAND", dest="command")
 
     demo = commands.add_parser("demo", help="the whole job on an invented data set, in half a minute",
                                description="Run the whole job on an invented data set: a density, four chains, a "
@@ -82,14 +110,18 @@ def _parser() -> argparse.ArgumentParser:
 
     make = commands.add_parser(
         "run", help="draw from a model", formatter_class=_Help, allow_abbrev=False,
+        usage="fellwalk run MODEL --record FILE [options]",
         description="Settle chains, keep draws, write the record, print the table and the verdict.")
     add = make.add_argument
-    add("model", metavar="MODEL", help="module:object or file.py:object; the object is a fellwalk.Density or a "
-                                       "function without arguments that makes one")
-    add("--record", required=True, metavar="FILE", help="file to write every finished block to")
+    add("model", metavar="MODEL", nargs="?",
+        help="module:object or file.py:object; the object is a fellwalk.Density or a function without arguments that "
+             "makes one")
+    add("--record", metavar="FILE", help="file to write every finished block to")
+    add("--settings", metavar="TOML", help="a TOML file of settings, named as these options are without the dashes in "
+                                           "front, also model; an option typed here counts before the file")
     add("--replace", action="store_true", help="overwrite an old record of that name")
-    add("--start", help="numbers separated by commas, or a .npy file of one point or one a chain; left out: the "
-                          "model's own start")
+    add("--start", metavar="X", help="numbers separated by commas, or a .npy file of one point or one a chain; left "
+                                     "out: the model's own start")
     add("--chains", type=_whole(1), metavar="N", default=4, help="chains, each from its own start")
     add("--keep", type=_whole(1), metavar="N", default=1000, help="draws kept in each chain")
     add("--no-audit", action="store_true", help="do not look at the gradient first")
@@ -129,15 +161,25 @@ def _parser() -> argparse.ArgumentParser:
     look.add_argument("--seed", type=_whole(0), metavar="N", default=0, help="of the other points, which are random")
     look.set_defaults(action=_audit)
 
-    report = commands.add_parser("report", help="print the table and the verdict of a record", allow_abbrev=False,
-                                 description="Print the table and the verdict of a record, also while it is written.")
+    report = commands.add_parser(
+        "report", help="the table, the verdict and a page with figures of a record", allow_abbrev=False,
+        description="Print the table and the verdict of a record, also while it is written, and make a page of it: one "
+                    "HTML file with figures, costs and settings. A part of the page needs the model that the record "
+                    "names, which is imported and called for it.")
     report.add_argument("record", metavar="FILE", help="the record of a run")
-    report.add_argument("--all", action="store_true", help="every parameter, however many there are")
+    report.add_argument("-o", "--output", metavar="PAGE", help="where the page goes; left out: beside the record, with "
+                                                               "the ending .html")
+    report.add_argument("--no-page", action="store_true", help="only print")
+    report.add_argument("--model", help="as for run; left out: the model that the record names")
+    report.add_argument("--no-model", action="store_true", help="leave the model out: run none of its code")
+    report.add_argument("--all", action="store_true", help="print every parameter, however many there are")
     report.add_argument("--salvage", action="store_true", help="of a damaged record, what stands before the damage")
     report.set_defaults(action=_report)
+    for command in (make, again, look, report):
+        command.add_argument("--json", action="store_true", help="print one JSON document in place of text")
     for command in (demo, make, again, look, report):
         command.add_argument("--debug", action="store_true", help="show the Python traceback of an error")
-    return parser
+    return parser, make
 
 
 def _common(command: argparse.ArgumentParser) -> None:
@@ -165,9 +207,9 @@ def _settle(text: str) -> int | str:
     return text if text == "auto" else _whole(0)(text)
 
 
-def _start(text: str | None) -> np.ndarray | None:
-    if text is None:
-        return None
+def _start(text: str | np.ndarray | None) -> np.ndarray | None:
+    if text is None or isinstance(text, np.ndarray):  # a settings file gives numbers as they are
+        return text
     if text.endswith(".npy"):
         try:
             return np.load(text, allow_pickle=False)
@@ -195,38 +237,72 @@ def _run(options: argparse.Namespace) -> int:
         settle=options.settle, keep=options.keep, chains=options.chains, seed=options.seed,
         acceptance=options.acceptance, step_size=options.step_size, executor=options.executor,
         record=options.record, replace=options.replace, progress=options.progress or True,
-        seconds=options.seconds, audit=not options.no_audit)
-    return _finish(result, options.record)
+        seconds=options.seconds, audit=not options.no_audit, notes=options.notes)
+    return _finish(result, options)
 
 
 def _resume(options: argparse.Namespace) -> int:
     density = find_model(options.model) if options.model else None
     result = resume(options.record, density, keep=options.keep, executor=options.executor,
                     progress=options.progress or True, seconds=options.seconds)
-    return _finish(result, options.record)
+    return _finish(result, options)
 
 
-def _finish(result: Result, record: str) -> int:
-    print(result)
+def _finish(result: Result, options: argparse.Namespace) -> int:
+    record = shlex.quote(options.record)
     more = result.judgement.verdict.draws_needed if result.finished and result.judged else None
+    following = f"fellwalk report {record}"
     if not result.finished:
-        print(f"\nNext: fellwalk resume {record}")
+        following = f"fellwalk resume {record}"
     elif more:
-        print(f"\nNext: fellwalk resume {record} --keep {more}")
+        following = f"fellwalk resume {record} --keep {more}"
+    if options.json:
+        print_document(result_document(result, following))
     else:
-        print(f"\nNext: fellwalk report {record}, or fellwalk.load({record!r}) in Python")
+        print(result)
+        ready = result.finished and not more
+        print(f"\nNext: {following}{f', or fellwalk.load({options.record!r}) in Python' if ready else ''}")
     return {"Ctrl-C": 130, "SIGTERM": 143}.get(result.ended, 0)
 
 
 def _audit(options: argparse.Namespace) -> int:
     found = audit(find_model(options.model), _start(options.start), seed=options.seed)
-    print(found)
+    if options.json:
+        print_document(audit_document(found))
+    else:
+        print(found)
     return 0 if found.ok else 1
 
 
 def _report(options: argparse.Namespace) -> int:
+    if options.no_page and options.output:
+        raise ArgumentError("--no-page and -o contradict each other: leave one of them out")
     result = load(options.record, salvage=options.salvage)
-    print(result)
-    if options.all and result.judged:
-        print(f"\n{result.judgement.table(all=True)}")
+    wanted = bool(options.output) or not (options.no_page or options.json)
+    page = (options.output or f"{os.path.splitext(options.record)[0]}.html") if wanted else ""
+    if not options.json:
+        print(result)
+        if options.all and result.judged:
+            print(f"\n{result.judgement.table(all=True)}")
+        sys.stdout.flush()
+    if page and not _write_page(result, page, options):
+        page = ""
+    if options.json:
+        print_document(result_document(result, page=page))
+    elif page:
+        print(f"\nPage: {page}")
     return 0
+
+
+def _write_page(result: Result, page: str, options: argparse.Namespace) -> bool:
+    """Write the page; where it was not asked for by name, a page that cannot be made is no error."""
+    density = find_model(options.model) if options.model else None
+    try:
+        from fellwalk import report  # matplotlib takes a second to load, so only where a page is made
+    except ArgumentError as error:
+        if options.output:
+            raise
+        print(f"fellwalk: no page: {error}", file=sys.stderr)
+        return False
+    report.write(result, page, density, find=not options.no_model, replace=bool(options.output))
+    return True

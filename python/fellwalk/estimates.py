@@ -134,10 +134,11 @@ def estimate_all(
     why_not: str = "",
 ) -> Estimates:
     """Estimates of draws (chains, n, values), with their `numbers` of `fellwalk.judge.measure`."""
-    from fellwalk.judge import quantiles
+    from fellwalk.judge import LEVELS, quantiles
 
     chains, n, count = x.shape
-    plain = {level: quantiles(x, level, numbers["worth"]) for level in levels}
+    measured = {level: (numbers[name], numbers[name + "_error"]) for name, level in LEVELS.items()}
+    plain = {level: measured[level] if level in measured else quantiles(x, level, numbers["worth"]) for level in levels}
     still = numbers["constant"]
     with np.errstate(all="ignore"):
         worth = np.where(still, np.nan, (numbers["spread"] / numbers["error"]) ** 2)
@@ -175,10 +176,13 @@ class _Sharper:
         y, origin, exponent = standardise(np.ascontiguousarray(np.moveaxis(x, 2, 0)))
         count = len(y)
         centre = y.reshape(count, -1).mean(axis=1)
-        ordered = np.sort(y.reshape(count, -1), axis=1)
-        places = [np.quantile(ordered, level, axis=1) for level in self.at]
-        series = [y, (y - centre[:, None, None]) ** 2, *((y <= q[:, None, None]).astype(float) for q in places)]
-        found = sharpener.sharpen(np.concatenate(series))
+        ordered = np.sort(y.reshape(count, -1), axis=1) if self.at else y.reshape(count, -1)
+        series = np.empty((2 + len(self.at), *y.shape))
+        series[0] = y
+        np.square(y - centre[:, None, None], out=series[1])
+        for k, level in enumerate(self.at, start=2):
+            np.less_equal(y, np.quantile(ordered, level, axis=1)[:, None, None], out=series[k])
+        found = sharpener.sharpen(series.reshape(-1, *y.shape[1:]))
         mean, error, by, plain = (a.reshape(len(series), count) for a in (found.mean, found.error, found.by, found.raw))
 
         won = by[0] > 0

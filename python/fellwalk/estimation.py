@@ -89,8 +89,8 @@ def _all_at_once(
     values = np.asarray(f(view))
     lead = view.shape[:2]
     if values.shape[:2] != lead or values.ndim not in (2, 3):
-        raise ArgumentError(f"with whole=True the function must give an array of shape {lead} or {(*lead, 'k')} for draws "
-                            f"of shape {view.shape}; it gave shape {values.shape}")
+        raise ArgumentError(f"with whole=True the function must give an array of shape {lead} or {(*lead, 'k')} for "
+                            f"draws of shape {view.shape}; it gave shape {values.shape}")
     label = getattr(f, "__name__", "value")
     label = label if label.isidentifier() else "value"
     if values.ndim == 2:
@@ -108,6 +108,7 @@ def gradients_again(result: Result, density: Density) -> NDArray[np.float64]:
         for draw in range(x.shape[1]):
             value, out[chain, draw] = density(x[chain, draw])
             if not abs(value - told[chain, draw]) <= AGREES * (1 + abs(told[chain, draw])):
-                raise OtherModelError(f"at draw {draw + 1} of chain {chain + 1} this density has log density {value!r}, "
-                                      f"but the run had {float(told[chain, draw])!r}: it is another model, or other data")
+                then = float(told[chain, draw])
+                raise OtherModelError(f"at draw {draw + 1} of chain {chain + 1} this density has log density {value!r} "
+                                      f"where the run had {then!r}: it is another model, or other data")
     return out

@@ -7,10 +7,11 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 from matplotlib.axes import Axes
+from matplotlib.axis import Axis
 from numpy.typing import NDArray
 
 from fellwalk import autocorrelation as ac
-from fellwalk.figures import AREA, INK, LINE, MUTED, RULE, Drawing, draw, finite_range, labels, number
+from fellwalk.figures import AREA, INK, LINE, MUTED, PAPER, RULE, Drawing, draw, finite_range, labels, number
 from fellwalk.judge import standardise
 
 if TYPE_CHECKING:
@@ -67,15 +68,15 @@ class Progress:
         with np.errstate(all="ignore"):
             outside = np.abs(estimate[first:] - last) > 2 * np.hypot(error[first:], error[-1])
         drift = (self.estimate[-1, column] - self.estimate[len(self.draws) // 2, column])
-        words = (f"{plain_name(self.names[column])}: after {number(self.spent[-1])} gradients the estimate is "
-                 f"{number(last)}, with error {number(error[-1])}. Since half of the draws it has moved by "
-                 f"{number(drift)}. "
+        words = (f"{_plain_name(self.names[column])}: after {number(self.spent[-1])} gradients the estimate is "
+                 f"{number(last, 5)}, with error {number(error[-1], 2)}. Since half of the draws it has moved by "
+                 f"{number(drift, 2)}. "
                  + ("At some time after the first quarter it was further from its last value than its errors allow."
                     if outside.any() else "After the first quarter it kept within its errors of its last value."))
 
         def paint(axes: Axes) -> None:
-            _settling(axes, self.settled)
             axes.axhspan(last - two[-1], last + two[-1], color=AREA, lw=0)
+            _settling(axes, self.settled)
             if 1 < self.by_chain.shape[1] <= _MOST_CHAINS:
                 axes.plot(self.spent, self.by_chain[:, :, column], color=MUTED, lw=0.7, alpha=0.65)
             axes.fill_between(self.spent, estimate - two, estimate + two, color=LINE, alpha=0.28, lw=0)
@@ -99,8 +100,8 @@ class Progress:
         values = share[good]
         ends = finite_range(values) if values.size else (0.01, 1.0)
         bottom, top = (values.min() * 0.8, values.max() * 1.25) if values.size else ends
-        words = (f"Monte Carlo errors as parts of the spread, {len(self.names)} parameters. After all draws the largest "
-                 f"is {100 * share[-1, worst]:.2g}% of its spread ({self.names[worst]}), the smallest "
+        words = (f"Monte Carlo errors as parts of the spread, {len(self.names)} parameters. After all draws the "
+                 f"largest is {100 * share[-1, worst]:.2g}% of its spread ({self.names[worst]}), the smallest "
                  f"{100 * np.min(share[-1][good[-1]], initial=np.inf):.2g}%."
                  if good[-1].any() else "No errors are known.")
 
@@ -116,8 +117,8 @@ class Progress:
                 axes.plot(kept, np.where(good, share, np.nan)[:, worst], color=INK, lw=1.8)
             axes.set_xlim(kept[0] * 0.95, kept[-1] * 1.05)
             axes.set_ylim(bottom, top * 1.1)
-            _plain_log(axes.xaxis, kept[0], kept[-1])
-            _plain_log(axes.yaxis, bottom, top * 1.1, percent=True)
+            plain_log(axes.xaxis, kept[0], kept[-1])
+            plain_log(axes.yaxis, bottom, top * 1.1, percent=True)
             axes.set_xlabel("gradients spent on kept draws")
             axes.set_title("error, as a part of the spread")
             axes.grid(color=RULE, lw=0.5)
@@ -125,7 +126,8 @@ class Progress:
         return draw(key, "Errors by gradients spent on kept draws", words, 210, paint)
 
 
-def plain_name(name: str) -> str:
+def _plain_name(name: str) -> str:
+    """A name for a sentence."""
     return labels([name], 60)[0]
 
 
@@ -141,7 +143,7 @@ def _at(y: NDArray[np.float64]) -> tuple[NDArray, NDArray, NDArray]:
 
 def _settling(axes: Axes, settled: float) -> None:
     if settled > 0:
-        axes.axvspan(0, settled, facecolor="none", edgecolor=RULE, hatch="////", lw=0)
+        axes.axvspan(0, settled, facecolor=PAPER, edgecolor=RULE, hatch="////", lw=0)
         axes.axvline(settled, color=RULE, lw=0.8)
         axes.annotate("settling", (0, 1), xycoords="axes fraction", xytext=(5, -5), textcoords="offset points",
                       va="top", color=MUTED, fontsize=10)
@@ -163,12 +165,12 @@ def short(value: float) -> str:
     return f"{value:.4g}"
 
 
-def _plain_log(axis: object, low: float, high: float, percent: bool = False) -> None:
+def plain_log(axis: Axis, low: float, high: float, percent: bool = False) -> None:
     """A few round ticks on a logarithmic axis."""
     decades = np.arange(np.floor(np.log10(low)), np.ceil(np.log10(high)) + 1)
     ticks = [m * 10.0**d for d in decades for m in (1, 2, 5) if low <= m * 10.0**d <= high]
     if len(ticks) > 6:
         ticks = [t for t in ticks if abs(np.log10(t) - round(np.log10(t))) < 1e-9]
     text = [f"{100 * t:.3g}%" if percent else short(t) for t in ticks]
-    axis.set_ticks(ticks, labels=text)  # type: ignore[attr-defined]
-    axis.set_ticks([], minor=True)  # type: ignore[attr-defined]
+    axis.set_ticks(ticks, labels=text)
+    axis.set_ticks([], minor=True)

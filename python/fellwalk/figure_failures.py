@@ -3,13 +3,14 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 from matplotlib.axes import Axes
 from numpy.typing import NDArray
 
-from fellwalk.figures import AREA, INK, LINE, MARK, MUTED, RULE, Drawing, draw, labels, number, plain, rows_of_labels
+from fellwalk.failing import EDGE_CODES, HARMLESS_CODES
+from fellwalk.figures import AREA, INK, LINE, MARK, MUTED, WIDTH, Drawing, draw, labels, number, plain, rows_of_labels
 
 if TYPE_CHECKING:
     from fellwalk.result import Result
@@ -19,6 +20,14 @@ __all__ = ["Trouble"]
 _CLOUD = 1500  # draws shown behind the places of trouble
 _SHOWN = 400  # places of trouble shown of each kind
 _ROWS = 6
+_FEWEST = 8  # places that can tell where they lie; the verdict asks for as many
+PATHS, STEPS, EDGES, HALVED = "paths that failed", "failed steps", "steps across the edge", "paths with halved steps"
+_LOOKS: dict[str, dict[str, Any]] = {
+    PATHS: {"marker": "o", "ms": 6.0, "mew": 1.3, "mec": MARK},
+    STEPS: {"marker": "x", "ms": 5.5, "mew": 1.5, "mec": MARK},
+    EDGES: {"marker": "x", "ms": 4.5, "mew": 1.0, "mec": LINE},
+    HALVED: {"marker": "o", "ms": 3.4, "mew": 0.8, "mec": LINE},
+}
 _TENTHS = np.arange(0.1, 1.0, 0.1)
 
 
@@ -50,13 +59,15 @@ class Places:
 
     def sentence(self, names: list[str]) -> str:
         """Where they lie, in the parameter that tells most."""
+        if len(self.positions) < _FEWEST:
+            return f"The {self.word} are too few to tell where they lie."
         k = int(np.argmax(self.distance))
         below, above = np.cumsum(self.ranks[k]), np.cumsum(self.ranks[k][::-1])
         name = plain(names[k])
         # 1.36 / sqrt(m): the 5% point of the Kolmogorov-Smirnov distance of m independent places.
         if self.distance[k] < 1.36 / np.sqrt(len(self.positions)):
             return f"{self.word.capitalize()} are spread over the draws: no single parameter tells where they lie."
-        tenths = np.arange(12) / 10 - 0.0
+        tenths = np.arange(12) / 10
         low, high = below[:11] - tenths[:11], above[:11] - tenths[:11]
         at, side, share = ((int(np.argmax(low)), "lowest", below) if low.max() >= high.max()
                            else (int(np.argmax(high)), "highest", above))
@@ -66,94 +77,106 @@ class Places:
 
 
 class Trouble:
-    """Failed steps whose position was kept, and draws whose transition needed halved steps.
+    """Paths that failed, the places of their failed steps, paths that met the edge of the support, halved steps.
 
-    failed, halved: how many transitions; places: the kinds of which positions are known.
+    failed, edges, one_way, halved: how many transitions, of `transitions`; one_way: ended because their far end would
+    have halved the step differently, which halving asks for. places: the kinds of which positions are known.
     """
 
     def __init__(self, result: Result) -> None:
         self.names = result.names if result.parameters is None else result.parameters.coordinates
         self.draws = result.free_draws.reshape(-1, len(self.names))
-        self.failed = int(np.count_nonzero(result.facts["failure"]))
-        self.transitions = result.facts.size
+        failure = result.facts["failure"]
+        edge, one_way = np.isin(failure, EDGE_CODES), np.isin(failure, HARMLESS_CODES) & ~np.isin(failure, EDGE_CODES)
+        failed = (failure != 0) & ~edge & ~one_way
         halved = _halved(result)
-        self.halved = int(halved.sum())
-        self.places: list[Places] = []
-        positions = result.failures[3]
-        positions = positions[np.isfinite(positions).all(axis=1)]
-        self.known = len(positions)
-        if len(positions) and len(self.draws):
-            self.places.append(Places.of("failed steps", positions, self.draws))
-        if self.halved and len(self.draws):
-            self.places.append(Places.of("transitions with halved steps", result.free_draws[halved], self.draws))
+        counts = [int(np.count_nonzero(kind)) for kind in (failed, edge, one_way, halved)]
+        self.failed, self.edges, self.one_way, self.halved = counts
+        self.transitions = failure.size
+        _, _, code, position = result.failures
+        finite = np.isfinite(position).all(axis=1)
+        at_edge = np.isin(code, EDGE_CODES)
+        kinds = ((PATHS, result.free_draws[failed]), (STEPS, position[finite & ~np.isin(code, HARMLESS_CODES)]),
+                 (EDGES, position[finite & at_edge]), (HALVED, result.free_draws[halved]))
+        self.places = [Places.of(word, rows, self.draws) for word, rows in kinds if len(rows)]
 
     def sentences(self) -> list[str]:
         """What happened how often, and where."""
         total = f"{self.transitions:,} kept transitions"
-        if not self.failed and not self.halved:
+        if not (self.failed or self.edges or self.halved or self.one_way):
             return [f"No step failed and none was halved in {total}, so there is no place to show."]
-        lines = [f"A step failed in {self.failed:,} of {total}"
-                 + (f"; the places of {self.known:,} are known." if self.known < self.failed else ".")]
+        lines = [f"A failed step cut the path short in {self.failed:,} of {total}." if self.failed
+                 else f"No path was cut short by a failed step that matters, in {total}."]
+        if self.edges:
+            lines.append(f"In {self.edges:,} a step crossed the edge of the support, which hides nothing.")
         if self.halved:
-            lines.append(f"Steps were halved in {self.halved:,} of them, as the settings allow where the energy swings.")
-        return lines + [places.sentence(self.names) for places in self.places]
+            lines.append(f"Steps were halved in {self.halved:,}, as the settings allow where the energy swings.")
+        if self.one_way:
+            lines.append(f"In {self.one_way:,} a path ended because its far end would have halved the step "
+                         "differently; halving asks for that, and it does no harm.")
+        return [" ".join(lines), *(places.sentence(self.names) for places in self.places)]
 
     def drawings(self, key: str) -> list[Drawing]:
         """A map and, for each kind of trouble, its share in every tenth of the draws."""
         if not self.places:
             return []
-        found = [self._tenths(f"{key}-{number}", places) for number, places in enumerate(self.places)]
+        found = [self._tenths(f"{key}-{number}", places) for number, places in enumerate(self.places)
+                 if len(places.positions) >= _FEWEST]
         return found if len(self.names) < 2 else [self._map(f"{key}-map"), *found]
 
     def _map(self, key: str) -> Drawing:
-        main = self.places[0]
-        a, b = np.argsort(-main.distance, kind="stable")[:2]
-        thin = max(1, len(self.draws) // _CLOUD)
-        first, second = labels([self.names[a], self.names[b]], 40)
+        pair = np.argsort(-self.places[0].distance, kind="stable")[:2]
+        thin = max(1, -(-len(self.draws) // _CLOUD))
+        first, second = labels([self.names[k] for k in pair], 40)
+        # A failed step may have flown to anywhere; the map ends a width of the draws beyond them.
+        low, high = self.draws[:, pair].min(axis=0), self.draws[:, pair].max(axis=0)
+        width = np.where(high > low, high - low, 1.0)
+        low, high = low - width, high + width
+        far = sum(int(np.any((p.positions[:, pair] < low) | (p.positions[:, pair] > high), axis=1).sum())
+                  for p in self.places)
         words = (f"Draws in the plane of {first} and {second}, with the places of trouble over them. "
-                 + " ".join(places.sentence(self.names) for places in self.places))
+                 + " ".join(places.sentence(self.names) for places in self.places)
+                 + (f" {far:,} places lie further out than the map and are drawn at its rim." if far else ""))
 
         def paint(axes: Axes) -> None:
-            axes.plot(self.draws[::thin, a], self.draws[::thin, b], ls="", marker="o", ms=1.8, mew=0, color=MUTED,
-                      alpha=0.45, rasterized=False)
-            for places in self.places:
-                failed = places.word == "failed steps"
-                p = places.positions[:: max(1, len(places.positions) // _SHOWN)]
-                axes.plot(p[:, a], p[:, b], ls="", marker="x" if failed else "o", ms=5.5 if failed else 3.6,
-                          mew=1.5 if failed else 0.9, mfc="none", color=MARK if failed else LINE,
-                          label=places.word)
-            axes.set_xlabel(first)
-            axes.set_title(second)
-            axes.legend(loc="best", frameon=False, fontsize=10, handletextpad=0.3, borderaxespad=0.1)
+            axes.plot(*self.draws[::thin, pair].T, ls="", marker=",", color=MUTED, alpha=0.9)
+            for places in reversed(self.places):
+                p = np.clip(places.positions[:: -(-len(places.positions) // _SHOWN)][:, pair], low, high)
+                axes.plot(p[:, 0], p[:, 1], ls="", mfc="none", label=places.word, **_LOOKS[places.word])
+            axes.margins(0.03)
+            axes.set_xlabel(f"{first} →")
+            axes.set_title(f"↑ {second}")
+            axes.legend(loc="upper center", bbox_to_anchor=(0.5, -0.16), ncols=2, frameon=False, fontsize=10.5,
+                        handletextpad=0.2, columnspacing=1.2, borderaxespad=0.1)
 
-        return draw(key, "Map of the draws and the places of trouble", words, 300, paint)
+        return draw(key, "Map of the draws and the places of trouble", words, 340, paint, bottom=78)
 
     def _tenths(self, key: str, places: Places) -> Drawing:
         order = np.argsort(-places.distance, kind="stable")[: min(_ROWS, len(self.names))]
         names = labels([self.names[k] for k in order])
-        words = (f"Of {len(places.positions):,} {places.word}, by tenths of the draws from lowest to highest: "
-                 + "; ".join(f"{plain(self.names[k])}: {number(100 * places.ranks[k][:2].sum())}% lowest or below, "
-                             f"{number(100 * places.ranks[k][-2:].sum())}% highest or above" for k in order) + ".")
+        title = f"{len(places.positions):,} {places.word}, by tenths of the draws"
+        words = (f"Of {title}: " + "; ".join(
+            f"{plain(self.names[k])}: {number(100 * places.ranks[k][:2].sum(), 2)}% lowest or below, "
+            f"{number(100 * places.ranks[k][-2:].sum(), 2)}% highest or above" for k in order) + ".")
 
         def paint(axes: Axes) -> None:
             rows_of_labels(axes, names, [False] * len(names))
             highest = max(float(places.ranks[order].max()), 0.2)
+            colour = _LOOKS[places.word]["mec"]
             for r, k in enumerate(order):
                 base = r + 0.42
-                heights = 0.8 * places.ranks[k] / highest
-                axes.bar(np.arange(12), -heights, bottom=base, width=0.9,
-                         color=[MARK, *[LINE] * 10, MARK] if places.word == "failed steps" else LINE)
+                axes.bar(np.arange(12), -0.8 * places.ranks[k] / highest, bottom=base, width=0.9, color=colour, lw=0)
                 axes.plot([0.5, 10.5], [base] * 2, color=INK, lw=0.8)
                 axes.plot([0.5, 10.5], [base - 0.08 / highest] * 2, color=MUTED, lw=0.8, ls=(0, (2, 2)))
             axes.axvspan(0.5, 10.5, color=AREA, lw=0, zorder=0)
-            axes.set_xlim(-0.6, 11.6)
-            axes.set_xticks([0, 1, 10, 11], labels=["below", "lowest\ntenth", "highest\ntenth", "above"])
-            axes.spines["bottom"].set_color(RULE)
+            axes.set_xlim(-1.1, 12.1)
+            axes.set_xticks([-0.2, 5.5, 11.2],
+                            labels=["below\nall draws", "lowest to highest tenth", "above\nall draws"])
+            axes.spines["bottom"].set_visible(False)
             axes.tick_params(axis="x", length=0)
-            axes.set_title(f"{places.word}, by tenths of the draws")
+            axes.set_title(title, x=-130 / (WIDTH - 148), ha="left")
 
-        return draw(key, f"{places.word.capitalize()} by tenths of the draws", words, 70 + 38 * len(order), paint,
-                    left=140, bottom=40)
+        return draw(key, title.capitalize(), words, 66 + 36 * len(order), paint, left=136, bottom=42)
 
 
 def _halved(result: Result) -> NDArray[np.bool_]:

@@ -12,8 +12,8 @@ from scipy import stats
 
 from fellwalk.errors import FellwalkError
 from fellwalk.facts import SENTENCES
+from fellwalk.figure_estimates import plain_log
 from fellwalk.figures import AREA, INK, LINE, MARK, MUTED, PAPER, RULE, Drawing, draw, finite_range, labels, number
-from fellwalk.figure_estimates import _plain_log
 from fellwalk.geometry import Line, Slice, inverse_sizes, plane_metric
 
 if TYPE_CHECKING:
@@ -21,7 +21,7 @@ if TYPE_CHECKING:
 
 __all__ = ["Bend", "slice_drawing"]
 
-_DROPS = (-128.0, -64.0, -32.0, -16.0, -8.0, -4.0, -2.0, -0.5)  # of the log density below its highest point in the slice
+_DROPS = (-128.0, -64.0, -32.0, -16.0, -8.0, -4.0, -2.0, -0.5)  # of the log density, below its highest point
 _ELLIPSES = 7
 
 
@@ -35,8 +35,8 @@ class Bend:
     def __init__(self, result: Result) -> None:
         gradients = result.gradients
         if gradients is None:
-            raise FellwalkError("The gradients at the draws were not kept, so how steep the density is along them is not "
-                                "known. Keep them with gradients=True.")
+            raise FellwalkError("The gradients at the draws were not kept, so how steep the density is along them is "
+                                "not known. Keep them with gradients=True.")
         parts = result.settled.chains
         self.dimension = gradients.shape[2]
         with np.errstate(all="ignore"):
@@ -51,17 +51,23 @@ class Bend:
         """Does the motion bend its metric at all?"""
         return max(self.betas) > 0
 
+    @property
+    def tail(self) -> float:
+        """The 95% point of the steepness over that of a normal density."""
+        return float(np.quantile(self.steepness, 0.95) / (stats.chi2.ppf(0.95, self.dimension) / self.dimension))
+
     def sentences(self) -> list[str]:
         """What the distribution says."""
         low, middle, high = np.quantile(self.steepness, [0.05, 0.5, 0.95])
-        expected = stats.chi2.ppf(0.95, self.dimension) / self.dimension
-        lines = [f"Steepness g'G0⁻¹g / d is {number(middle)} in the middle, between {number(low)} and {number(high)} at nine "
-                 f"draws in ten. A normal density with a perfect base metric would have a 95% point of {number(expected)}; "
-                 f"this one has {number(high / expected)} times that."]
+        shape = (f"{_shape(self.tail, middle)} Its steepness g'G0⁻¹g / d, with g the gradient, G0 the learned base "
+                 f"metric and d the number of coordinates, is {number(middle)} in the middle and between {number(low)} "
+                 f"and {number(high)} at nine draws in ten; the steepest twentieth begins at {number(self.tail, 2)} "
+                 "times the value of a normal density.")
+        lines = [shape]
         if self.is_bent:
             low, middle, high = np.quantile(self.bend, [0.05, 0.5, 0.95])
-            lines.append(f"The bend L − 1 is {number(middle)} in the middle, between {number(low)} and {number(high)} at "
-                         "nine draws in ten: lengths along the gradient count up to "
+            lines.append(f"The bend L − 1 is {number(middle)} in the middle, between {number(low)} and {number(high)} "
+                         "at nine draws in ten: lengths along the gradient count up to "
                          f"{number(np.sqrt(1 + high))} times.")
         else:
             lines.append("The bend L − 1 is 0 at every draw, as this motion does not bend its metric.")
@@ -94,10 +100,23 @@ class Bend:
             axes.plot(np.sqrt(edges[1:] * edges[:-1]), law, color=INK, lw=1.2, ls=(0, (4, 2)))
             axes.set_xlim(low, high)
             axes.set_ylim(0, 1.12 * max(counts.max(), min(law.max(), 2.0 * counts.max())))
-            _plain_log(axes.xaxis, low, high)
+            plain_log(axes.xaxis, low, high)
             axes.set_xlabel("dashed: a normal density, perfect base metric")
 
         return draw(key, name.capitalize(), " ".join(self.sentences()), 230, paint, left=14)
+
+
+def _shape(tail: float, middle: float) -> str:
+    """In words, how far from normal. The bounds are round numbers: a step length that is right at the middle is too
+    long by the square root of the tail at the steepest twentieth of the draws, by a fifth at 1.5 and twice at 4."""
+    if tail < 0.5 and middle < 0.5:
+        return "Seen through the base metric this density is flatter than a normal one: it is wider than was learned."
+    if tail < 1.5:
+        return "Seen through the base metric this density is nearly normal: one step length suits all of it."
+    if tail < 4:
+        return "Seen through the base metric this density bends: its steepness changes from place to place."
+    return ("Seen through the base metric this density bends strongly: a step that suits most of it is far too long at "
+            "its steepest places. Halved steps, or other parameters, help there.")
 
 
 def slice_drawing(key: str, found: Slice, line: Line | None, names: list[str]) -> Drawing:
@@ -126,8 +145,8 @@ def slice_drawing(key: str, found: Slice, line: Line | None, names: list[str]) -
             axes.plot(*p[0], ls="", marker="o", ms=6.5, mfc=PAPER, mec=INK, mew=1.4)
         axes.set_xlim(x[0], x[-1])
         axes.set_ylim(y[0], y[-1])
-        axes.set_xlabel(first)
-        axes.set_title(second)
+        axes.set_xlabel(f"{first} →")
+        axes.set_title(f"↑ {second}")
 
     return draw(key, f"Slice of the log density: {first} and {second}", words, 360, paint)
 

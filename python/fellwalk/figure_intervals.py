@@ -17,7 +17,7 @@ __all__ = ["Intervals"]
 
 # Chance that a page of chains of one law has a line drawn heavily, shared out over all lines (Bonferroni).
 _FALSE_MARK = 1e-3
-_REACH = (-0.75, 1.75)  # of the axis, in intervals; lines further out end in an arrow
+_WIDEST, _LEAST = 0.75, 0.15  # the drawing goes so far beyond the band, in intervals; lines further out end in an arrow
 _LINE_HEIGHT, _GAP = 4.0, 11.0
 
 
@@ -42,6 +42,9 @@ class Intervals:
             self.places = np.nan_to_num((self.quantiles - start) / spread, nan=0.5, posinf=9.0, neginf=-9.0)
             self.middle = (j.middle[indices] - start) / spread
         self.apart = self._apart(draws)
+        beyond = max(float(np.max(-self.places[0], initial=0)), float(np.max(self.places[2] - 1, initial=0)))
+        margin = min(max(beyond + 0.06, _LEAST), _WIDEST)
+        self.ends = -margin, 1 + margin
 
     def _apart(self, draws: NDArray[np.float64]) -> NDArray[np.bool_]:
         chains = draws.shape[0]
@@ -58,7 +61,13 @@ class Intervals:
                 means = scores.mean(axis=1)
                 rest = (means.sum() - means) / (chains - 1)
                 rest_squared = (squared.sum() - squared) / (chains - 1) ** 2
-                found[:, column] = np.abs(means - rest) > bound * np.sqrt(squared + rest_squared)
+                far = np.abs(means - rest) > bound * np.sqrt(squared + rest_squared)
+            if far.any():
+                # One chain far from the rest leaves the rest far from it: the smaller side of the widest gap is meant.
+                order = np.argsort(means)
+                cut = int(np.argmax(np.diff(means[order]))) + 1
+                side = order[:cut] if 2 * cut <= chains else order[cut:]
+                found[side, column] = far[side]
         return found
 
     def words(self, columns: NDArray[np.int64]) -> str:
@@ -71,11 +80,13 @@ class Intervals:
         off = np.abs(self.places[1][:, moving] - self.middle[moving])
         chain, column = np.unravel_index(int(np.argmax(off)), off.shape)
         name = names[self.indices[moving[column]]]
-        text = f"{len(columns)} parameters, {chains} {'chain' if chains == 1 else 'chains'}. "
+        text = (f"{len(columns)} {'parameter' if len(columns) == 1 else 'parameters'}, {chains} "
+                f"{'chain' if chains == 1 else 'chains'}. ")
         if chains > 1:
             text += (f"The middle that is furthest from the common one is that of chain {chain + 1} in {name}: "
-                     f"{number(off[chain, column])} of the interval from low to high. ")
-        marked = [f"chain {c + 1} in {names[self.indices[k]]}" for k in moving for c in np.flatnonzero(self.apart[:, k])]
+                     f"{number(100 * off[chain, column], 2)}% of the interval from low to high. ")
+        marked = [f"chain {c + 1} in {names[self.indices[k]]}"
+                  for k in moving for c in np.flatnonzero(self.apart[:, k])]
         if marked:
             more = f" and {len(marked) - 6} more" if len(marked) > 6 else ""
             return text + f"Apart from the others: {', '.join(marked[:6])}{more}."
@@ -91,7 +102,7 @@ class Intervals:
 
         def paint(axes: Axes) -> None:
             axes.axvspan(0, 1, color=AREA, lw=0)
-            axes.set_xlim(*_REACH)
+            axes.set_xlim(*self.ends)
             rows_of_labels(axes, names, lagging)
             for r in range(len(columns) + 1):
                 axes.axhline(r - 0.5, color=RULE, lw=0.5)
@@ -102,10 +113,11 @@ class Intervals:
             axes.spines["bottom"].set_visible(False)
 
         title = f"Intervals by chain: {names[0]}" + (f" to {names[-1]}" if len(names) > 1 else "")
-        return draw(key, title, self.words(columns), 24 + row * len(columns) + 6, paint, left=140, top=24, bottom=6,
+        return draw(key, title, self.words(columns), 24 + row * len(columns) + 6, paint, left=136, top=24, bottom=6,
                     right=8)
 
     def _lines(self, axes: Axes, columns: NDArray[np.int64], offsets: NDArray[np.float64]) -> None:
+        left, right = self.ends[0] + 0.03, self.ends[1] - 0.03
         thin: list[tuple[list[float], list[float]]] = [([], []), ([], [])]
         dots: list[list[tuple[float, float]]] = [[], []]
         beyond: list[tuple[float, float, str]] = []
@@ -116,14 +128,14 @@ class Intervals:
             axes.plot([self.middle[k]] * 2, [r - 0.5, r + 0.5], color=MUTED, lw=0.8, ls=(0, (2, 2)))
             for c, offset in enumerate(offsets):
                 heavy = int(self.apart[c, k])
-                low, middle, high = np.clip(self.places[:, c, k], _REACH[0] + 0.03, _REACH[1] - 0.03)
+                low, middle, high = np.clip(self.places[:, c, k], left, right)
                 thin[heavy][0].extend([low, high, np.nan])
                 thin[heavy][1].extend([r + offset] * 3)
                 dots[heavy].append((middle, r + offset))
-                if self.places[0, c, k] < _REACH[0]:
-                    beyond.append((_REACH[0] + 0.03, r + offset, "<"))
-                if self.places[2, c, k] > _REACH[1]:
-                    beyond.append((_REACH[1] - 0.03, r + offset, ">"))
+                if self.places[0, c, k] < left:
+                    beyond.append((left, r + offset, "<"))
+                if self.places[2, c, k] > right:
+                    beyond.append((right, r + offset, ">"))
         for heavy, colour in ((0, LINE), (1, MARK)):
             axes.add_line(Line2D(*thin[heavy], color=colour, lw=1.2 + 1.2 * heavy, solid_capstyle="butt"))
             if dots[heavy]:

@@ -28,8 +28,8 @@ from fellwalk.table import shorten_names
 __all__ = ["AREA", "INK", "LINE", "MARK", "MUTED", "PAPER", "RULE", "WIDTH", "Drawing", "draw", "labels", "number",
            "plain", "rows_of_labels"]
 
-WIDTH = 440  # CSS pixels at full size; a telephone of 400 shows nine tenths of it
-_FONT = 11.5
+WIDTH = 400  # CSS pixels at full size; a telephone of 400 shows nine tenths of it
+_FONT = 12.0
 
 INK, MUTED, RULE, PAPER, AREA, LINE, MARK = (f"#0102{k:02x}" for k in range(3, 10))
 _VARIABLES = dict(zip((INK, MUTED, RULE, PAPER, AREA, LINE, MARK),
@@ -91,14 +91,15 @@ def labels(names: list[str], width: int = 20) -> list[str]:
     return shorten_names([plain(name) for name in names], width)
 
 
-def number(value: float) -> str:
-    """A number for a sentence or an axis, of four significant digits."""
+def number(value: float, digits: int = 3) -> str:
+    """A number for a sentence, of so many significant digits; whole counts below a million keep all of theirs."""
     if not math.isfinite(value):
         return "unknown" if math.isnan(value) else "infinite"
     size = abs(value)
-    if size >= 10_000 and size < 1e15 and float(f"{value:.4g}") == round(value):
+    rounded = float(f"{value:.{digits}g}")
+    if 1000 <= size < 1e6 or (size < 1e15 and size >= 1e6 and rounded == round(value)):
         return f"{value:,.0f}".replace("-", "−")
-    return f"{value:,.0f}" if 1000 <= size < 1e6 else f"{value:.4g}".replace("e+0", "e").replace("e+", "e")
+    return f"{value:.{digits}g}".replace("e+0", "e").replace("e+", "e").replace("-", "−")
 
 
 @contextmanager
@@ -157,7 +158,10 @@ def _adapt(element: ElementTree.Element, key: str) -> None:
             element.attrib["href"] = value.replace("#", f"#{key}-", 1)
         elif "url(#" in value:
             element.attrib[name] = value.replace("url(#", f"url(#{key}-")
-    style = element.attrib.get("style")
+    # Variables are known to style only, not to attributes.
+    coloured = [name for name in ("fill", "stroke") if element.attrib.get(name) in _VARIABLES]
+    moved = "; ".join(f"{name}: {element.attrib.pop(name)}" for name in coloured)
+    style = "; ".join(filter(None, (element.attrib.get("style"), moved)))
     if style:
         style = re.sub(r"font:\s*(?:[a-z0-9]+\s+)*?([\d.]+)px\s+[^;]*", r"font-size: \1px", style)
         element.attrib["style"] = re.sub(r"#0102[0-9a-f]{2}", lambda m: f"var(--{_VARIABLES[m[0]]})", style)

@@ -8,7 +8,7 @@ should, the others left empty.
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Sequence
+from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -69,42 +69,78 @@ def check_identities(x: Array, g: Array) -> IdentityCheck:
         frame = Frame(x.reshape(-1, dimension), g.reshape(-1, dimension), mix=False)
         if not len(frame) or n < 2 * BATCHES:
             return IdentityCheck(0, 0, (), "too few draws, or none that differ")
-        found: list[tuple[Array, ...]] = []
-        labels: list[tuple[int, int]] = []
-        for names, rows in _terms(frame):
-            labels += names
-            found.append(_judged(rows.reshape(len(rows), chains, n)))
-    mean, errors, chance = (np.concatenate(parts) for parts in zip(*found, strict=True))
-    counted = np.isfinite(chance)
-    limit = FALSE_ALARM / max(int(counted.sum()), 1)
-    alarms = []
-    for row, column in np.argwhere(counted & (chance < limit)):
-        first, second = labels[row]
-        expected = -1.0 if first == second else 0.0
-        observed = float(mean[row, column]) - (1.0 if first == second else 0.0)
-        alarms.append(Finding(None if first < 0 else int(frame.kept[first]), int(frame.kept[second]),
-                              None if column == chains else int(column), observed, expected,
-                              float(errors[row, column]), float(chance[row, column])))
+        return _check(frame, chains, n)
+
+
+def _check(frame: Frame, chains: int, n: int) -> IdentityCheck:
+    """Batch means settle nearly all; the few that look broken by them are looked at draw by draw."""
+    labels, mean, chance, worth = _by_batches(frame, chains, n)
+    enough = worth >= FEWEST_EFFECTIVE
+    limit = FALSE_ALARM / max(int(enough.sum()), 1)
+    suspects = np.flatnonzero((enough & (chance < limit)).any(axis=1))
+    alarms, left_out = [], int((~enough).sum())
+    step = max(1, GROUP // (chains * n))
+    for start in range(0, len(suspects), step):
+        part = suspects[start : start + step]
+        mean, errors, exact = _judged(_series(frame, labels[part]).reshape(len(part), chains, n))
+        exact[~enough[part]] = np.nan
+        left_out += int((enough[part] & np.isnan(exact)).sum())
+        for row, column in np.argwhere(exact < limit):
+            first, second = labels[part[row]]
+            expected = -1.0 if first == second else 0.0
+            alarms.append(Finding(
+                None if first < 0 else int(frame.kept[first]), int(frame.kept[second]),
+                None if column == chains else int(column), float(mean[row, column]) + expected, expected,
+                float(errors[row, column]), float(exact[row, column])))
     alarms.sort(key=lambda finding: (finding.chance, -abs(finding.errors)))
-    return IdentityCheck(int(counted.sum()), int((~counted).sum()), tuple(alarms))
+    return IdentityCheck(enough.size - left_out, left_out, tuple(alarms))
 
 
-def _terms(frame: Frame) -> Iterator[tuple[list[tuple[int, int]], Array]]:
-    """Labels (first, second) of terms of mean zero, first = -1 for the gradient alone, and the terms (p, N)."""
-    count = len(frame)
-    step = max(1, GROUP // frame.y.shape[1])
-    for start in range(0, count, step):
-        part = range(start, min(start + step, count))
-        yield [(-1, j) for j in part], frame.gy[part.start : part.stop]
+def _series(frame: Frame, labels: NDArray[np.int64]) -> Array:
+    """The terms of mean zero with these labels (first, second), (p, N); first = -1 stands for the gradient alone."""
+    rows = frame.gy[labels[:, 1]]
+    products = labels[:, 0] >= 0
+    rows[products] *= frame.y[labels[products, 0]]
+    rows[labels[:, 0] == labels[:, 1]] += 1
+    return rows
+
+
+def _by_batches(frame: Frame, chains: int, n: int) -> tuple[NDArray[np.int64], Array, Array, Array]:
+    """Labels (p, 2) of all terms, and for each chain and in the last column for all: means, chances by Student's t of
+    the batch means alone, and effective draws by these, each (p, chains + 1)."""
+    count, length = len(frame), n // BATCHES
+    kept = slice(n - length * BATCHES, n)
+    y, gy = (a.reshape(count, chains, n)[:, :, kept].reshape(count, chains * BATCHES, length).transpose(1, 0, 2)
+             for a in (frame.y, frame.gy))
+    order = np.arange(count)
     if count <= ALL_PRODUCTS:
-        for i in range(count):
-            rows = frame.y[i] * frame.gy
-            rows[i] += 1
-            yield [(i, j) for j in range(count)], rows
-        return
-    for start in range(0, count, step):
-        part = range(start, min(start + step, count))
-        yield [(i, i) for i in part], frame.y[part.start : part.stop] * frame.gy[part.start : part.stop] + 1
+        products = np.ascontiguousarray(y) @ np.ascontiguousarray(gy.transpose(0, 2, 1)) / length
+        squares = (frame.y**2) @ (frame.gy**2).T / (chains * n)
+        pairs = np.column_stack([np.repeat(order, count), np.tile(order, count)])
+    else:
+        products = np.einsum("bil,bil->bi", y, gy)[:, :, None] / length
+        squares = np.einsum("in,in->i", frame.y**2, frame.gy**2) / (chains * n)
+        pairs = np.column_stack([order, order])
+    labels = np.concatenate([np.column_stack([np.full(count, -1), order]), pairs])
+    batches = np.concatenate([gy.mean(axis=2).T, products.reshape(chains * BATCHES, -1).T])
+    second = np.concatenate([np.einsum("in,in->i", frame.gy, frame.gy) / (chains * n), squares.reshape(-1)])
+    diagonal = labels[:, 0] == labels[:, 1]
+    # Of y g + 1, whose square is (y g)^2 + 2 y g + 1.
+    second[diagonal] += 2 * batches[diagonal].mean(axis=1) + 1
+    batches[diagonal] += 1
+    spread = second - batches.mean(axis=1) ** 2
+    each = batches.reshape(-1, chains, BATCHES)
+    # As in _student: no chain's error is taken smaller than it is in the mean of the chains.
+    own = each.var(axis=2, ddof=1) / BATCHES
+    squared = np.column_stack([np.maximum(own, own.mean(axis=1, keepdims=True)),
+                               batches.var(axis=1, ddof=1) / batches.shape[1]])
+    mean = np.column_stack([each.mean(axis=2), batches.mean(axis=1)])
+    freedom = np.array([*[BATCHES - 1.0] * chains, chains * BATCHES - 1.0])
+    chance = 2 * special.stdtr(freedom, -np.abs(mean) / np.sqrt(squared))
+    worth = spread[:, None] / np.column_stack([np.repeat(own.mean(axis=1)[:, None], chains, axis=1), squared[:, -1]])
+    if chains == 1:
+        worth[:, 0] = 0.0  # the same as all together
+    return labels, mean, np.where(squared > 0, chance, 1.0), np.where(squared > 0, worth, 0.0)
 
 
 def _judged(rows: Array) -> tuple[Array, Array, Array]:
@@ -113,13 +149,9 @@ def _judged(rows: Array) -> tuple[Array, Array, Array]:
     p, chains, _ = rows.shape
     heavy = ~(tail_index(rows.reshape(p, -1)) < HEAVY)
     whole = _student(rows, 1)
-    if chains == 1:
-        mean, errors, chance = (np.repeat(a[:, None], 2, axis=1) for a in whole)
-        chance[:, 0] = np.nan  # the same as all together
-    else:
-        each = _student(rows.reshape(p * chains, 1, -1), chains)
-        mean, errors, chance = (
-            np.concatenate([a.reshape(p, chains), b[:, None]], axis=1) for a, b in zip(each, whole, strict=True))
+    each = _student(rows.reshape(p * chains, 1, -1), chains)
+    mean, errors, chance = (
+        np.concatenate([a.reshape(p, chains), b[:, None]], axis=1) for a, b in zip(each, whole, strict=True))
     chance[heavy] = np.nan
     return mean, errors, chance
 
@@ -149,8 +181,9 @@ def _student(rows: Array, siblings: int) -> tuple[Array, Array, Array]:
     t = mean / np.sqrt(squared)
     a = (away**3).mean(axis=1) / np.maximum(variance, 1e-300) ** 1.5 / np.sqrt(count)
     flat = t + a * t**2 / 3 + a**2 * t**3 / 27 + a / 6
-    # Of the statistic with and without the correction the nearer one to zero counts: no alarm on the correction's word.
-    least = np.where(np.sign(flat) == np.sign(t), np.minimum(np.abs(t), np.abs(flat)), 0.0)
+    # Of the statistic with and without the correction the nearer one to zero counts: no alarm on the correction's
+    # word. It may take away half at most, since the skewness of few batches is itself uncertain.
+    least = np.clip(np.where(np.sign(flat) == np.sign(t), np.abs(flat), 0.0), np.abs(t) / 2, np.abs(t))
     chance = 2 * special.stdtr(freedom, -least)
     known = (squared > 0) & (worth >= FEWEST_EFFECTIVE)
     return mean, np.where(known, t, np.nan), np.where(known, chance, np.nan)
@@ -171,6 +204,6 @@ def describe(check: IdentityCheck, coordinates: Sequence[str]) -> list[str]:
                 f"({abs(worst.errors):.0f} errors away)")
     others = len(check.alarms) - 1
     more = f" {others} more of {check.checked} such identities are broken." if others else ""
-    text = (f"Draws and gradients contradict each other: {what}. Either the gradient is wrong (fellwalk.audit looks into "
-            "that), or these draws have not arrived at the distribution or miss a part of it.")
+    text = (f"Draws and gradients contradict each other: {what}. Either the gradient is wrong (fellwalk.audit looks "
+            "into that), or these draws have not arrived at the distribution or miss a part of it.")
     return [text + more]

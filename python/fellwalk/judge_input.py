@@ -157,6 +157,7 @@ def checked_gradients(
     if not finite.all():
         chain, draw = (int(i) for i in np.argwhere(~finite)[0])
         raise ArgumentError(
-            f"The gradient or the free coordinates at draw {draw + 1} of chain {chain + 1} (counted from 1) are not finite."
+            f"The gradient or the free coordinates at draw {draw + 1} of chain {chain + 1} (counted from 1) are not "
+            "finite."
         )
     return x, g

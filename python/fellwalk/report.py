@@ -1,8 +1,9 @@
-"""The page: one self-contained HTML file that answers whether draws can be used, what would fix them, what they cost."""
+"""The page: one self-contained HTML file that says whether draws can be used, what would fix them, what they cost."""
 
 from __future__ import annotations
 
 import contextlib
+import itertools
 import os
 import re
 from importlib.resources import files
@@ -28,11 +29,11 @@ from fellwalk.figure_estimates import Progress
 from fellwalk.figure_failures import Trouble
 from fellwalk.figure_geometry import Bend, slice_drawing
 from fellwalk.figure_intervals import Intervals
-from fellwalk.figures import Drawing, plain
+from fellwalk.figures import plain
 from fellwalk.geometry import Line, Slice, agrees, worst_pair
 from fellwalk.model import find_model
 from fellwalk.report_advice import remedies
-from fellwalk.report_table import answer, by_need, html_table, needs_attention, table_notes
+from fellwalk.report_table import answer, by_need, html_table, table_notes
 from fellwalk.table import ROWS, _energy_lines, _failure_lines, _identity_lines
 from fellwalk.verdict import CAUTION, FIT, MORE, NOT_TRUSTED
 
@@ -42,7 +43,7 @@ if TYPE_CHECKING:
 
 __all__ = ["page", "write"]
 
-_ESTIMATES = 4  # parameters whose estimate is followed; those that need attention most
+_ESTIMATES = 3  # parameters whose estimate is followed; those that need attention most
 _INTERVALS = 400  # parameters whose intervals are drawn; beyond, those that need attention most
 _TABLED = 1000  # the same for rows of the table
 _TALL = 1100.0  # pixels of one drawing of intervals
@@ -57,8 +58,8 @@ def write(result: Result, path: str | os.PathLike[str], density: Density | None 
     replace: whether a file that is no page of fellwalk may be overwritten. Errors: RecordError.
     """
     if not replace and os.path.exists(path) and not _is_page(path):
-        raise RecordError(f"{path}: there is a file already, and it is not a page of fellwalk. Give the page another name "
-                          "with -o")
+        raise RecordError(f"{path}: there is a file already, and it is not a page of fellwalk. Give the page another "
+                          "name with -o")
     text = page(result, density, find=find)
     with _whole_file(path) as file:
         file.write(text.encode("utf-8", "replace"))
@@ -149,8 +150,10 @@ def _model(result: Result, density: Density | None, find: bool) -> tuple[Density
 def _notes(judgement: Judgement | None) -> list[str]:
     if judgement is None:
         return []
-    lines = (_identity_lines(judgement), _failure_lines(judgement), _energy_lines(judgement))
-    return [*judgement.verdict.notes, *(" ".join(block) for block in lines if block)]
+    failed = " ".join(_failure_lines(judgement)).replace(": - ", ": ").replace(" - ", "; ")
+    lines = (" ".join(_identity_lines(judgement)), failed + ("." if failed[-1:].isalnum() else ""),
+             " ".join(_energy_lines(judgement)))
+    return [*judgement.verdict.notes, *filter(None, lines)]
 
 
 def _table(judgement: Judgement | None) -> dict[str, Any]:
@@ -186,7 +189,7 @@ def _groups(count: int, most: int) -> list[tuple[int, int]]:
     """Even groups of at most `most` out of `count`, as (start, stop)."""
     pieces = -(-count // most)
     edges = np.linspace(0, count, pieces + 1).round().astype(int) if pieces else np.zeros(1, int)
-    return [(int(a), int(b)) for a, b in zip(edges[:-1], edges[1:], strict=True)]
+    return [(int(a), int(b)) for a, b in itertools.pairwise(edges)]
 
 
 def _estimates(result: Result, judgement: Judgement | None) -> dict[str, Any]:
@@ -201,6 +204,9 @@ def _estimates(result: Result, judgement: Judgement | None) -> dict[str, Any]:
     kept = progress.spent[-1] - progress.settled
     double = (f"Errors fall as one over the square root of the gradients: half the error would take about "
               f"{figures.number(float(f'{3 * kept:.2g}'))} gradients more.")
+    if judgement.verdict.kind == NOT_TRUSTED:
+        double = ("Since the verdict is that these draws are not to be trusted, the errors below need not tell how far "
+                  "the estimates are from the truth.")
     return {"estimates": [*drawings, progress.errors_drawing("errors")], "no_estimates": "", "double": double,
             "followed": min(_ESTIMATES, len(order)), "errors_of": len(order),
             "sharpened": any(by != "none" for by in judgement.by.get("estimate", ()))}
@@ -213,8 +219,8 @@ def _trouble(result: Result) -> dict[str, Any]:
     settling = sum(int(np.count_nonzero(facts["failure"])) for facts in result.settling)
     lines = trouble.sentences()
     if settling:
-        lines.append(f"While settling, steps failed in {settling:,} transitions; that is where step sizes are tried, and "
-                     "does no harm to the draws.")
+        lines.append(f"While settling, steps failed in {settling:,} transitions; that is where step sizes are tried, "
+                     "and does no harm to the draws.")
     return {"trouble": lines, "trouble_drawings": trouble.drawings("trouble")}
 
 
@@ -230,28 +236,29 @@ def _geometry(result: Result, model: Density | None, no_model: str, seconds: flo
     if model is None:
         return {**found, "slice_said": f"A slice of the log density needs the model: {no_model}"}
     try:
-        drawing, said = _slice(result, model, seconds)
+        return found | _slice(result, model, seconds)
     except Exception as error:  # the user's function runs here
         return {**found, "slice_said": f"A slice could not be drawn ({type(error).__name__}: {error})."}
-    return {**found, "slice": drawing, "slice_said": said, "slice_caption": _slice_caption(result, drawing)}
 
 
-def _slice(result: Result, model: Density, seconds: float) -> tuple[Drawing | None, str]:
+def _slice(result: Result, model: Density, seconds: float) -> dict[str, Any]:
     pair = worst_pair(result)
     if not pair:
-        return None, "No coordinate varies, so there is nothing to draw a slice through."
+        return {"slice_said": "No coordinate varies, so there is nothing to draw a slice through."}
     found = Slice.of(result, model, pair, seconds)
     if found is None:
-        return None, (f"No slice is drawn: at {told.duration(seconds)} a gradient it would take too long.")
+        return {"slice_said": f"No slice is drawn: at {told.duration(seconds)} a gradient it would take too long."}
     line = Line.of(result, model, found.chain, found.centre)
-    return slice_drawing("slice", found, line, model.coordinates), ""
+    return {"slice": slice_drawing("slice", found, line, model.coordinates),
+            "slice_caption": _slice_caption(result, pair)}
 
 
-def _slice_caption(result: Result, drawing: Drawing | None) -> str:
-    if drawing is None or result.plan["dimension"] == 1:
-        return "The density along the only coordinate that varies." if drawing else ""
+def _slice_caption(result: Result, pair: list[int]) -> str:
+    if len(pair) == 1:
+        return "The density along the only coordinate that varies."
     bent = " and its bend" if result.settings["motion"]["name"] == "lagrangian" else ""
     return ("The two coordinates that mix worst; the others stay at the most central draw. Contours: how far the log "
-            "density lies below its highest value here. Heavy ellipse: unit length in the base metric, which is good where "
-            f"it has the shape of the contours. Thin ellipses: one step of unit speed in the metric{bent}. Black: a path "
-            "of usual length from the ring; it moves in all coordinates, so this is its shadow on the plane.")
+            "density lies below its highest value here. Heavy ellipse: unit length in the base metric, which is good "
+            f"where it has the shape of the contours. Thin ellipses: one step of unit speed in the metric{bent}. Line "
+            "with dots: a path of usual length from the ring; it moves in all coordinates, so this is its shadow on the "
+            "plane.")

@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from fellwalk.errors import FellwalkError
+from fellwalk.failing import HARMLESS_CODES
 from fellwalk.figures import number
 from fellwalk.geometry import seconds_in_density
 from fellwalk.judgement import Judgement
@@ -20,7 +21,7 @@ if TYPE_CHECKING:
 __all__ = ["Share", "chain_rows", "code", "cost_rows", "cost_summary", "settings_rows", "share_of_user", "version_rows"]
 
 CHAIN_HEADINGS = ("chain", "settling transitions", "gradients in settling", "gradients for draws", "Hessian products",
-                  "step size", "acceptance", "failed steps")
+                  "step size", "acceptance", "failed steps that matter")
 
 
 @dataclass(frozen=True)
@@ -44,10 +45,11 @@ def share_of_user(result: Result, density: Density | None, why_not: str) -> Shar
     if not spent["seconds"] > 0:
         return Share(each, np.nan, "Not known: the run's time is not.")
     share = each * spent["gradients"] / spent["seconds"]
-    said = f"{100 * share:.0f}%" if share < 0.995 else "practically all"
+    said = f"{100 * share:.0f}%" if share < 0.95 else "all"
     products = " (Hessian products left out)" if spent["products"] else ""
-    return Share(each, share, f"About {said}{products}: a gradient takes {duration(each)} when timed now, times "
-                              f"{spent['gradients']:,.0f}. An estimate, as the run itself does not time your code.")
+    text = (f"{'Nearly' if said == 'all' else 'About'} {said}{products}: a gradient takes {duration(each)} when timed "
+            f"now, times {spent['gradients']:,.0f}. An estimate, as the run itself does not time your code.")
+    return Share(each, share, text)
 
 
 def duration(seconds: float) -> str:
@@ -77,15 +79,16 @@ def cost_summary(result: Result, judgement: Judgement | None, share: Share) -> s
         text += f"; {100 * _settled(result, 'gradients') / spent['gradients']:.0f}% of the gradients went into settling"
     text += "."
     if np.isfinite(share.share):
-        text += f" About {min(100 * share.share, 100):.0f}% of the time was spent in your code."
+        said = f"About {100 * share.share:.0f}%" if share.share < 0.95 else "Nearly all"
+        text += f" {said} of the time was spent in your code."
     return text
 
 
 def cost_rows(result: Result, judgement: Judgement | None, share: Share) -> list[tuple[str, str]]:
     """The cost of the whole run, as (what, how much)."""
     spent, settled = result.spent, _settled(result, "gradients")
-    rows = [("Gradients", f"{spent['gradients']:,.0f}: {settled:,.0f} in settling, {spent['gradients'] - settled:,.0f} for "
-                          "the kept draws")]
+    kept = spent["gradients"] - settled
+    rows = [("Gradients", f"{spent['gradients']:,.0f}: {settled:,.0f} in settling, {kept:,.0f} for the kept draws")]
     products = f"{spent['products']:,.0f}" if spent["products"] else "none"
     rows.append(("Hessian products", products))
     rows.append(("Time", f"{duration(spent['seconds'])} of work, all chains added up"))
@@ -108,9 +111,14 @@ def chain_rows(result: Result) -> list[tuple[str, ...]]:
         acceptance = f"{facts['acceptance'].mean():.2f}" if len(facts) else "–"
         step = f"{chain['step_size']:.3g}" if chain else "–"
         products = int(facts["products"].sum() + settling["products"].sum())
-        rows.append((str(c + 1), f"{len(settling):,}", f"{settling['gradients'].sum():,}", f"{facts['gradients'].sum():,}",
-                     f"{products:,}", step, acceptance, f"{np.count_nonzero(facts['failure']):,}"))
+        rows.append((str(c + 1), f"{len(settling):,}", f"{settling['gradients'].sum():,}",
+                     f"{facts['gradients'].sum():,}", f"{products:,}", step, acceptance,
+                     f"{_failed(facts['failure']):,}"))
     return rows
+
+
+def _failed(failure: np.ndarray) -> int:
+    return int(np.count_nonzero((failure != 0) & ~np.isin(failure, HARMLESS_CODES)))
 
 
 def settings_rows(result: Result) -> list[tuple[str, str]]:
@@ -154,8 +162,8 @@ def code(result: Result) -> str:
         given["settled"] = "earlier"
         given.pop("settle")
         given.pop("step_size", None)
-    arguments = ",\n                ".join(f"{key}={value}" for key, value in given.items())
-    return f"import fellwalk as fw\n\nresult = fw.run(density, starts,\n                {arguments})"
+    arguments = "".join(f"    {key}={value},\n" for key, value in given.items())
+    return f"import fellwalk as fw\n\nresult = fw.run(\n    density, starts,\n{arguments})"
 
 
 def version_rows(result: Result) -> list[tuple[str, str]]:
@@ -168,4 +176,5 @@ def judged(result: Result) -> tuple[Judgement | None, str]:
     try:
         return result.judgement, ""
     except FellwalkError as error:
-        return None, str(error)
+        text = str(error)
+        return None, text[:1].upper() + text[1:]

@@ -22,6 +22,9 @@ ANSWERS = {"fit for use": "Yes: fit for use", "needs more draws": "Not yet: need
            "not to be trusted": "No: not to be trusted"}
 
 
+_SIGN = ' <span class="sign" aria-hidden="true">▲</span><span class="unseen"> needs attention</span>'
+
+
 def answer(verdict: Verdict | None) -> str:
     """The verdict as an answer to whether the draws can be used."""
     return "No verdict yet" if verdict is None else ANSWERS[verdict.kind]
@@ -51,9 +54,8 @@ def html_table(judgement: Judgement, indices: Iterable[int], caption: str = "") 
     rows = []
     for i in map(int, indices):
         cells = "".join(f"<td>{escape(cell).replace('-', '−')}</td>" for cell in Row(judgement, i).cells())
-        sign = '<span class="sign" aria-hidden="true">▲</span><span class="unseen"> needs attention</span>' * bool(short[i])
-        rows.append(f'<tr{" class=short" if short[i] else ""}><th scope="row">{escape(shown(judgement.names[i]))} {sign}'
-                    f"</th>{cells}</tr>")
+        kind, sign = (' class="short"', _SIGN) if short[i] else ("", "")
+        rows.append(f'<tr{kind}><th scope="row">{escape(shown(judgement.names[i]))}{sign}</th>{cells}</tr>')
     said = f"<caption>{escape(caption)}</caption>" if caption else ""
     return f"<table>{said}<thead><tr>{head}</tr></thead><tbody>{''.join(rows)}</tbody></table>"
 
@@ -96,7 +98,8 @@ def notebook(result: Result) -> str:
     try:
         j = result.judgement
     except FellwalkError as error:
-        return f'<div class="fellwalk">{"".join(parts)}<p class="answer">No verdict yet</p><p>{escape(str(error))}</p></div>'
+        parts += [f'<p class="answer">{answer(None)}</p><p>{escape(str(error))}</p>']
+        return f'<div class="fellwalk">{"".join(parts)}</div>'
     chosen = by_need(j)[:ROWS] if len(j.names) > ROWS else np.arange(len(j.names))
     more = [f"The {ROWS} that need attention most, worst first, of {len(j.names)}."] * (len(j.names) > ROWS)
     parts += [f'<p class="answer">{answer(j.verdict)}</p><ul>',

@@ -208,9 +208,14 @@ class Result:
         motion, path = self.settings["motion"], self.settings["path"]
         shown = ", ".join(f"{key} {value}" for key, value in motion.items() if key != "name" and value not in (0, None))
         moved = f"{motion['name']} motion{f' ({shown})' if shown else ''} on {path['name']} paths"
-        made = f"{len(self._parts)} chains of {self._shortest} draws, {len(self.names)} parameters"
+        counts = ((len(self._parts), "chain"), (self._shortest, "draw"), (len(self.names), "parameter"))
+        chains, draws, parameters = (f"{count} {word}{'s' * (count != 1)}" for count, word in counts)
+        made = f"{chains} of {draws}, {parameters}"
         lines = [f"{made}, {moved}, seed {self.seed}."]
-        if all(self.chains):
+        if self._parts and not all(chain.get("settled") for chain in self.chains):
+            lines.append(f"Settling has not ended, after {_range([part.count('settle') for part in self._parts], 'd')} "
+                         "transitions.")
+        elif all(self.chains):
             settled = [part.count("settle") for part in self._parts]
             sizes = [chain["step_size"] for chain in self.chains]
             how = f"Settled in {_range(settled, 'd')} transitions"
@@ -260,7 +265,7 @@ class Result:
 
     def provenance(self) -> dict[str, Any]:
         """How the draws were made: plan, versions, chains."""
-        return {**self.plan, "chains": self.chains, "spent": self.spent, "record": self.path}
+        return {**self.plan, "chains": self.chains, "spent": self.spent, "record": self.path, "versions": self.versions}
 
     def to_frame(self) -> pandas.DataFrame:
         """A pandas data frame of one row a draw: chain and draw, both from 0, then the parameters. Errors:

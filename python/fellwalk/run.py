@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import os
+from collections.abc import Mapping
 from concurrent.futures import Executor
 from dataclasses import replace as replace_settings
 from typing import Any
@@ -56,6 +57,7 @@ def run(
     progress: object = None,
     seconds: float | None = None,
     audit: bool = True,
+    notes: Mapping[str, Any] | None = None,
 ) -> Result:
     """Settle `chains` chains, keep `keep` draws of each, and judge them.
 
@@ -76,6 +78,7 @@ def run(
     record: file to write every finished block to, so that nothing finished is lost; `replace` overwrites an old one.
     progress: "bars", "lines", "off" or None (bars when a person watches). seconds: stop at a block edge after so long.
     audit: look at the gradient at the last starting point first (ten gradients or so), and refuse one that is wrong.
+    notes: what the plan, and so the record, is to keep besides, as plain JSON values by name; reports show them.
 
     The first Ctrl-C ends the run at the next block edge and returns what there is; a second one abandons the
     transitions in hand and raises KeyboardInterrupt. An exception of the density comes out as it was raised, after
@@ -106,6 +109,8 @@ def run(
         "settled": None if taken is None else taken.hash,
         "parameters": None if density.parameters is None else density.parameters.to_json(),
     }
+    if notes:
+        plan["notes"] = dict(notes)
     if starts is None and density.start is None and density.parameters is None:
         raise ArgumentError("this density has no start of its own; give starts: a point (dimension,) in the support")
     try:

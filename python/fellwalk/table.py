@@ -87,8 +87,10 @@ class Row:
             # An exactly known number, or one whose error is zero for lack of variety in the draws.
             return f"{value:.6g}"
         if sharpened:
-            # Far below the width of the distribution digits are of no use, and of no room.
-            at = min(at, 3 + (place(self._scaled(self.spread)) or 0))
+            # Digits far below the width of the distribution give way where there is no room for them.
+            least = place(self._scaled(self.spread)) or at
+            while at > least and len(digits(value, at)) >= WIDEST_NUMBER:
+                at -= 1
         return digits(value, at)
 
     def _error(self, error: float) -> str:
