@@ -11,6 +11,7 @@ import os
 import select
 import shutil
 import subprocess
+import sys
 import tempfile
 import time
 from collections.abc import Iterator
@@ -145,3 +146,11 @@ def opened() -> Iterator[Browser]:
         yield browser
     finally:
         browser.close()
+
+
+if __name__ == "__main__":
+    # python tests/browser.py PAGE PICTURE [WIDTH [HEIGHT]]: a picture of the top of a page
+    page, picture, width, height = (*sys.argv[1:], *("1280", "1500")[len(sys.argv) - 3 :])
+    with opened() as shown:
+        shown.open(Path(page), int(width))
+        shown.picture(Path(picture), int(height))

@@ -12,6 +12,7 @@ import os
 import sys
 
 import numpy as np
+
 from fellwalk import record_file
 from fellwalk.errors import RecordError
 from fellwalk.facts import FACTS

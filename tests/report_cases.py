@@ -16,7 +16,8 @@ MARKUP = ["<script>alert('x')</script>", "<b>bold</b> & \"quoted\" id=\"y\"", "$
 
 def made(draws, names=None, *, gradients=None, facts=None, failures=(), motion=None, ended="", path="", keep=None,
          model=None, summary=None):
-    """A result of these draws (chains, n, dimension), as if it had been run; failures: (chain, draw, code, position)."""
+    """A result of these draws (chains, n, dimension), as if it had been run; failures: rows of chain, draw, code and
+    position."""
     chains, n, dimension = draws.shape
     plan = {"settings": Settings(motion=motion or fw.Leapfrog()).to_json(), "dimension": dimension, "chains": chains,
             "names": names or [f"x[{i}]" for i in range(dimension)], "keep": n if keep is None else keep, "seed": 11,
@@ -71,9 +72,10 @@ def neck_density():
 
 @functools.cache
 def neck_run(halvings=0):
-    """A funnel with too long steps: steps fail in its neck, or are halved there."""
-    return fw.run(neck_density(), motion=fw.Leapfrog(halvings=halvings), acceptance=0.6, settle=150, keep=600, chains=4,
-                  seed=4, executor="here", progress="off")
+    """A funnel with too long steps: steps fail in its neck, or, a step size given, are halved there."""
+    settling = {"settle": 0, "step_size": 0.5} if halvings else {"settle": 150, "acceptance": 0.6}
+    return fw.run(neck_density(), motion=fw.Leapfrog(halvings=halvings), keep=600, chains=4, seed=4, executor="here",
+                  progress="off", **settling)
 
 
 @functools.cache

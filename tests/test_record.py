@@ -19,6 +19,8 @@ from pathlib import Path
 import helpers_record_writer as writer
 import numpy as np
 import pytest
+from helpers_record_writer import DIMENSION, expected_draws, make_block, state_after
+
 from fellwalk import record as record_module
 from fellwalk import record_file, record_items
 from fellwalk.errors import (
@@ -31,7 +33,6 @@ from fellwalk.errors import (
 )
 from fellwalk.facts import FACTS
 from fellwalk.record import Record
-from helpers_record_writer import DIMENSION, expected_draws, make_block, state_after
 
 posix_only = pytest.mark.skipif(os.name == "nt", reason="needs POSIX signals, limits and rights")
 

@@ -35,7 +35,7 @@ def main(arguments: Sequence[str] | None = None) -> int:
     try:
         options = _with_file(options, typed)
         with watching(signal.SIGTERM):
-            status = options.action(options)
+            status = int(options.action(options))
         sys.stdout.flush()
         return status
     except KeyboardInterrupt:
@@ -212,7 +212,7 @@ def _start(text: str | np.ndarray | None) -> np.ndarray | None:
         return text
     if text.endswith(".npy"):
         try:
-            return np.load(text, allow_pickle=False)
+            return np.asarray(np.load(text, allow_pickle=False))
         except (OSError, ValueError) as error:
             raise ArgumentError(f"the starting points cannot be read from {text}: {error}") from None
     try:

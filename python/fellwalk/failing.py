@@ -13,8 +13,9 @@ FAILED_SHARE = 0.01
 
 # Failures that start from the same few draws mark where the chains stop getting on: a neck too narrow for the step. Of
 # at least so many failures, half starting in so small a share of the draws at one end of a parameter: by chance that
-# happens with probability 2 C(8, 4) 0.02^4 = 2e-5 a parameter. On the demo's funnel, where plain chains missed 2.5% of the
-# probability while R-hat was 1.001, half of the failures started in the lowest 0.4% to 1.3% of the draws (6 of 6 seeds).
+# happens with probability 2 C(8, 4) 0.02^4 = 2e-5 a parameter. On the demo's funnel, where plain chains missed 2.5% of
+# the probability while R-hat was 1.001, half of the failures started in the lowest 0.4% to 1.3% of the draws (6 of 6
+# seeds).
 FAILED_PLACE, FAILED_THERE = 0.02, 8
 
 # A step across the edge of the support hides nothing: the density there is zero. (Status codes 1 and 2 of the core.)
@@ -58,8 +59,8 @@ def _failing_at_an_end(x: np.ndarray, names: Sequence[str], failed: np.ndarray) 
             if share < most:
                 most = share
                 found = (
-                    f"Half of the {int(where.sum())} failed steps start where {name} is {end} (in {percent(share)} of the "
-                    "draws), so what lies beyond may be missed; smaller steps (acceptance=0.95) or halved ones "
+                    f"Half of the {int(where.sum())} failed steps start where {name} is {end} (in {percent(share)} of "
+                    "the draws), so what lies beyond may be missed; smaller steps (acceptance=0.95) or halved ones "
                     "(halvings=5) get further."
                 )
     return [found] if found else []

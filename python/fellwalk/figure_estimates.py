@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 from matplotlib.axes import Axes
@@ -83,7 +83,7 @@ class Progress:
             axes.plot(self.spent, estimate, color=LINE, lw=1.8, marker="o", ms=2.6)
             axes.set_xlim(0, self.spent[-1] * 1.02)
             seen = [estimate[first:] - two[first:], estimate[first:] + two[first:]]
-            chains = self.by_chain[-1, :, column] if self.by_chain.shape[1] <= _MOST_CHAINS else []
+            chains: Any = self.by_chain[-1, :, column] if self.by_chain.shape[1] <= _MOST_CHAINS else []
             axes.set_ylim(*finite_range(np.concatenate([*seen, chains])))
             axes.set_title(name)
             _gradient_axis(axes, self.spent[-1])
@@ -131,7 +131,7 @@ def _plain_name(name: str) -> str:
     return labels([name], 60)[0]
 
 
-def _at(y: NDArray[np.float64]) -> tuple[NDArray, NDArray, NDArray]:
+def _at(y: NDArray[np.float64]) -> tuple[NDArray[np.float64], ...]:
     """Mean, its error and the spread from draws (parameters, chains, k)."""
     with np.errstate(all="ignore"):
         flat = y.reshape(len(y), -1)

@@ -180,7 +180,7 @@ class Trouble:
 
 
 def _halved(result: Result) -> NDArray[np.bool_]:
-    """Transitions (chains, draws) without a failed step that took more gradients than their steps do unhalved."""
+    """Transitions (chains, draws) without a harmful failure that took more gradients than their steps do unhalved."""
     facts = result.facts
     motion = result.settings["motion"]
     if not motion.get("halvings"):
@@ -189,4 +189,5 @@ def _halved(result: Result) -> NDArray[np.bool_]:
     each = 1.0
     if motion.get("curvature") == "difference" and facts.size:
         each = max(1.0, float(np.min(facts["gradients"] / steps)))
-    return (facts["failure"] == 0) & (facts["gradients"] > np.ceil(each * steps))
+    harmless = (facts["failure"] == 0) | np.isin(facts["failure"], HARMLESS_CODES)
+    return np.asarray(harmless & (facts["gradients"] > np.ceil(each * steps)), bool)

@@ -110,13 +110,15 @@ def _shape(tail: float, middle: float) -> str:
     """In words, how far from normal. The bounds are round numbers: a step length that is right at the middle is too
     long by the square root of the tail at the steepest twentieth of the draws, by a fifth at 1.5 and twice at 4."""
     if tail < 0.5 and middle < 0.5:
-        return "Seen through the base metric this density is flatter than a normal one: it is wider than was learned."
-    if tail < 1.5:
-        return "Seen through the base metric this density is nearly normal: one step length suits all of it."
-    if tail < 4:
-        return "Seen through the base metric this density bends: its steepness changes from place to place."
-    return ("Seen through the base metric this density bends strongly: a step that suits most of it is far too long at "
-            "its steepest places. Halved steps, or other parameters, help there.")
+        what = "is flatter than a normal one: it is wider than was learned."
+    elif tail < 1.5:
+        what = "is nearly normal: one step length suits all of it."
+    elif tail < 4:
+        what = "bends: its steepness changes from place to place."
+    else:
+        what = ("bends strongly: a step that suits most of it is far too long at its steepest places. Halved steps, or "
+                "other parameters, help there.")
+    return f"Where the chains have been, seen through the base metric, this density {what}"
 
 
 def slice_drawing(key: str, found: Slice, line: Line | None, names: list[str]) -> Drawing:

@@ -90,7 +90,8 @@ class Intervals:
         if marked:
             more = f" and {len(marked) - 6} more" if len(marked) > 6 else ""
             return text + f"Apart from the others: {', '.join(marked[:6])}{more}."
-        return text + ("No line lies apart from the others." if chains > 1 else "")
+        return text + ("No line lies apart from the others." if chains > 1 else
+                       "One chain alone has nothing to be compared with.")
 
     def drawing(self, key: str, columns: NDArray[np.int64]) -> Drawing:
         """Rows for these columns of `indices`."""
@@ -141,5 +142,5 @@ class Intervals:
             if dots[heavy]:
                 x, y = zip(*dots[heavy], strict=True)
                 axes.plot(x, y, ls="", marker="|", ms=4.5, mew=2.0, color=INK if not heavy else MARK)
-        for x, y, sign in beyond:
-            axes.plot([x], [y], ls="", marker=sign, ms=4, color=MARK)
+        for end, level, sign in beyond:
+            axes.plot([end], [level], ls="", marker=sign, ms=4, color=MARK)

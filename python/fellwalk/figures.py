@@ -35,7 +35,7 @@ INK, MUTED, RULE, PAPER, AREA, LINE, MARK = (f"#0102{k:02x}" for k in range(3, 1
 _VARIABLES = dict(zip((INK, MUTED, RULE, PAPER, AREA, LINE, MARK),
                       ("ink", "muted", "rule", "paper", "area", "line", "mark"), strict=True))
 
-_STYLE: dict[str, Any] = {
+_STYLE: Any = {  # of matplotlib's own type of settings
     "svg.fonttype": "none",
     "text.parse_math": False,
     "text.usetex": False,
@@ -125,7 +125,7 @@ def draw(key: str, title: str, words: str, height: float, paint: Callable[[Axes]
 def _svg(figure: Figure, key: str, title: str, words: str, width: float, height: float) -> Markup:
     with matplotlib.rc_context({"svg.hashsalt": key}):
         file = io.BytesIO()
-        FigureCanvasSVG(figure).print_svg(file, metadata={"Date": None})
+        FigureCanvasSVG(figure).print_figure(file, format="svg", metadata={"Date": None})
     ElementTree.register_namespace("", _SVG)
     root = ElementTree.fromstring(file.getvalue())
     for parent in list(root.iter()):

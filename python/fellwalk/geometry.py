@@ -31,7 +31,7 @@ _LONGEST = 255  # steps of the path shown
 _MOST_MIXING = 5000  # coordinates looked at for the pair that mixes worst
 
 
-def base_strengths(part: SettledChain) -> tuple[NDArray, NDArray, NDArray]:
+def base_strengths(part: SettledChain) -> tuple[NDArray[np.float64], ...]:
     """(square roots of the scale, directions (k, d), variances (k,)) of the base metric of one chain."""
     return np.sqrt(part.scale), part.directions.reshape(-1, len(part.scale)), part.variances
 
@@ -40,7 +40,7 @@ def inverse_sizes(part: SettledChain, gradients: NDArray[np.float64]) -> NDArray
     """q = g' G0^-1 g of gradients (n, d), shape (n,)."""
     root, directions, variances = base_strengths(part)
     white = gradients * root
-    return np.einsum("nd,nd->n", white, white) + ((white @ directions.T) ** 2) @ (variances - 1.0)
+    return np.asarray(np.einsum("nd,nd->n", white, white) + ((white @ directions.T) ** 2) @ (variances - 1.0))
 
 
 def plane_metric(part: SettledChain, pair: list[int], gradient: NDArray[np.float64] | None = None,
@@ -50,7 +50,7 @@ def plane_metric(part: SettledChain, pair: list[int], gradient: NDArray[np.float
     ends = directions[:, pair]
     found = np.eye(len(pair)) + (ends.T * (1.0 / variances - 1.0)) @ ends
     found = found / np.outer(root[pair], root[pair])
-    return found if gradient is None else found + beta * np.outer(gradient[pair], gradient[pair])
+    return np.asarray(found if gradient is None else found + beta * np.outer(gradient[pair], gradient[pair]))
 
 
 def velocity(part: SettledChain, gradient: NDArray[np.float64], beta: float,
@@ -65,7 +65,7 @@ def velocity(part: SettledChain, gradient: NDArray[np.float64], beta: float,
     size = float(u @ u)
     if beta > 0 and size > 0:
         z = z + (1.0 / np.sqrt(1.0 + beta * size) - 1.0) * (u @ z) / size * u
-    return root * half(z)
+    return np.asarray(root * half(z))
 
 
 def worst_pair(result: Result) -> list[int]:

@@ -260,5 +260,5 @@ def _slice_caption(result: Result, pair: list[int]) -> str:
     return ("The two coordinates that mix worst; the others stay at the most central draw. Contours: how far the log "
             "density lies below its highest value here. Heavy ellipse: unit length in the base metric, which is good "
             f"where it has the shape of the contours. Thin ellipses: one step of unit speed in the metric{bent}. Line "
-            "with dots: a path of usual length from the ring; it moves in all coordinates, so this is its shadow on the "
-            "plane.")
+            "with dots: a path of usual length from the ring; it moves in all coordinates, so this is its shadow on "
+            "the plane.")

@@ -14,7 +14,7 @@ if TYPE_CHECKING:
 
 __all__ = ["REMEDIES", "remedies"]
 
-# By words of the verdict's own sentences: what each calls for. A test holds the two together.
+# By words of the verdict's own sentences: what each calls for. A test holds the two together. Fields: see `_further`.
 REMEDIES = {
     "kept apart from": (
         "The chains found different places, which more draws of the same kind do not cure. Run again from more "
@@ -23,22 +23,22 @@ REMEDIES = {
         "one."
     ),
     "stood still": (
-        "A chain that stands still refuses every move. Aim at a higher acceptance rate (0.95 or more), allow "
-        "halved steps (halvings of 5), start nearer to the bulk, and look at the density where it stands with "
-        "`fellwalk audit`."
+        "A chain that stands still refuses every move. Aim at a higher acceptance rate ({rate}), allow {halved}, "
+        "start nearer to the bulk, and look at the density where it stands with `fellwalk audit`."
     ),
     "far more slowly than the others": (
         "A crawling chain is stuck, or is alone in a place that the others have not met. Run again with longer "
-        "settling and more chains; if chains crawl again, aim at a higher acceptance rate or allow halved steps."
+        "settling and more chains; if chains crawl again, aim at a higher acceptance rate ({rate}) or allow "
+        "{halved}."
     ),
     "Steps failed in": (
-        "Too many steps failed. Shorter steps follow the density better: aim at a higher acceptance rate (0.95 or "
-        "more), or allow halved steps (halvings of 5). If they fail in one place, as shown below, a change of "
-        "parameters there is the lasting cure."
+        "Too many steps failed. Shorter steps follow the density better: aim at a higher acceptance rate "
+        "({rate}), or allow {halved}. If they fail in one place, as shown below, a change of parameters there is "
+        "the lasting cure."
     ),
     "failed steps start where": (
-        "The chains do not get on beyond one end of a parameter. Run again with halved steps (halvings of 5) or a "
-        "higher acceptance rate (0.95 or more), so that they go further; see where steps failed, below."
+        "The chains do not get on beyond one end of a parameter. Run again and allow {halved}, or aim at a higher "
+        "acceptance rate ({rate}), so that they go further; where steps failed is shown below."
     ),
     "Draws and gradients contradict each other": (
         "What draws and gradients say does not fit together. Look for a mistake in the gradient with `fellwalk "
@@ -70,7 +70,8 @@ def remedies(result: Result, judgement: Judgement | None) -> list[str]:
         return steps or ["Keep more draws."]
     verdict = judgement.verdict
     said = " ".join(verdict.reasons)
-    steps += [text for words, text in REMEDIES.items() if words in said and verdict.kind != FIT]
+    steps += [text.format(**_further(result)) for words, text in REMEDIES.items()
+              if words in said and verdict.kind != FIT]
     needed = verdict.draws_needed
     if needed and needed > judgement.draws_per_chain:
         have = judgement.draws_per_chain
@@ -85,6 +86,15 @@ def remedies(result: Result, judgement: Judgement | None) -> list[str]:
     elif verdict.kind != FIT and not steps:
         steps.append("Run longer: more draws are all that is lacking.")
     return steps or ["Nothing needs to be fixed."]
+
+
+def _further(result: Result) -> dict[str, str]:
+    """Settings one step further than those of the run, as they are to be typed: shorter steps, more halving."""
+    now, halvings = float(result.settings["acceptance"]), int(result.settings["motion"].get("halvings") or 0)
+    rate = 0.95 if now < 0.95 else round(1 - (1 - now) / 2, 4)
+    if halvings:
+        return {"rate": f"`acceptance={rate:g}`", "halved": f"more halving (`halvings={halvings + 3}`)"}
+    return {"rate": f"`acceptance={rate:g}`", "halved": "halved steps (`halvings=5`)"}
 
 
 def _resume(result: Result, keep: int | None = None) -> str:

@@ -105,7 +105,7 @@ def cost_rows(result: Result, judgement: Judgement | None, share: Share) -> list
 
 def chain_rows(result: Result) -> list[tuple[str, ...]]:
     """One row a chain under CHAIN_HEADINGS."""
-    rows = []
+    rows: list[tuple[str, ...]] = []
     for c, (settling, chain) in enumerate(zip(result.settling, result.chains, strict=True)):
         facts = result.facts[c]
         acceptance = f"{facts['acceptance'].mean():.2f}" if len(facts) else "–"

@@ -44,7 +44,7 @@ def needs_attention(judgement: Judgement) -> np.ndarray:
     with np.errstate(invalid="ignore"):
         worth = np.fmax(j.worth, np.fmin(judgement.worth, MOST_CREDIT * j.worth))
         short = (worth < asked) | (j.worth_tails < asked) | (j.agreement >= AGREEMENT)
-    return short & ~j.constant
+    return np.asarray(short & ~j.constant)
 
 
 def html_table(judgement: Judgement, indices: Iterable[int], caption: str = "") -> str:
