@@ -39,26 +39,26 @@ JACOBIAN = [
     ),
     Planted(
         "log-Jacobian dropped, split, surrogate",
-        Mutation(MOTION, "    *jacobian = -2.0 * log_delta;", "    *jacobian = 0.0 * log_delta;"),
+        Mutation(MOTION, "FW_SEMI_EXPLICIT ? 1.0 : -2.0)", "FW_SEMI_EXPLICIT ? 1.0 : 0.0)"),
         (lagrangian(JITTERED, "student"), lagrangian(NO_U_TURN, "ring", turn=1)),
     ),
     Planted(
         "log-Jacobian dropped, semi-explicit, surrogate",
-        Mutation(MOTION, "*jacobian = log(after) - log(before);", "*jacobian = 0.0;"),
+        Mutation(MOTION, "FW_SEMI_EXPLICIT ? 1.0 : -2.0)", "FW_SEMI_EXPLICIT ? 0.0 : -2.0)"),
         (lagrangian(JITTERED, "student", scheme=1), lagrangian(NO_U_TURN, "ring", scheme=1, turn=1)),
     ),
     Planted(
         "log-Jacobian of the first half step dropped, split, products",
         Mutation(
             MOTION,
-            "    p->log_jacobian -= 2.0 * log_delta;\n    fw_kick2(",
-            "    p->log_jacobian -= 0.0 * log_delta;\n    fw_kick2(",
+            "    p->log_jacobian -= 2.0 * log1p(rise);\n    fw_base_kick2_drift(",
+            "    p->log_jacobian -= 0.0 * log1p(rise);\n    fw_base_kick2_drift(",
         ),
         (lagrangian(JITTERED, "student", curvature=2), lagrangian(NO_U_TURN, "ring", curvature=1)),
     ),
     Planted(
         "log-Jacobian dropped, semi-explicit, products",
-        Mutation(MOTION, "p->log_jacobian += log(after) - log(before);", "p->log_jacobian += 0.0;"),
+        Mutation(MOTION, "p->log_jacobian += log(after / before);", "p->log_jacobian += 0.0;"),
         (lagrangian(JITTERED, "student", scheme=1, curvature=2), lagrangian(NO_U_TURN, "ring", scheme=1, curvature=1)),
     ),
     Planted(
@@ -79,16 +79,11 @@ FIELD = [
         "paths begin with the surrogate field and go on with exact products",
         Mutation(
             MOTION,
-            "        int status = curve_gradient(walk, p);\n"
-            "        if (status == FW_OK && walk->scheme == FW_SPLIT) status = curve_velocity(walk, p);\n"
-            "        if (status != FW_OK) return status;",
-            "        for (size_t i = 0; i < walk->d; ++i) {\n"
-            "            p->hc[i] = -p->c[i];\n"
-            "            p->hw[i] = -p->w[i];\n"
-            "        }\n"
-            "        p->chc = -p->cc;\n"
-            "        p->whw = -p->ww;\n"
-            "        p->whc = -p->wc;",
+            "            status = fw_curve_velocity(walk, p, 0, &p->whw);\n        }\n",
+            "            for (size_t i = 0; i < walk->d; ++i) p->hc[i] = -p->c[i];\n"
+            "            p->chc = -p->cc;\n"
+            "            p->whw = -p->ww;\n"
+            "            p->whc = -p->wc;\n        }\n",
         ),
         (lagrangian(NO_U_TURN, "ring", curvature=2, turn=1), lagrangian(JITTERED, "rosenbrock", curvature=2)),
     ),
@@ -182,8 +177,8 @@ VELOCITY = [
         "velocities drawn from the base metric instead of the bent one",
         Mutation(
             MOTION,
-            "    fw_axpy(walk->d, -k * fw_dot(walk->d, p->c, p->w), p->c, p->w);",
-            "    fw_axpy(walk->d, -k * 0.0, p->c, p->w);",
+            "    fw_kick(walk->d, -k * p->wc, p->c, p->w, sums);",
+            "    fw_kick(walk->d, -k * 0.0, p->c, p->w, sums);",
         ),
         (lagrangian(JITTERED, "student"), lagrangian(NO_U_TURN, "ring", curvature=2)),
     ),
