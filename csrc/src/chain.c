@@ -48,7 +48,6 @@ static void lay_out_orbit(purse *from, fw_chain *chain)
         piece->rho = vectors(from, 1);
         piece->last = vectors(from, i > 0 ? 1 : 0);
         piece->first_p = vectors(from, metric ? 1 : 0);
-        piece->edge = vectors(from, chain->walk.halvings > 0 && !metric ? 1 : 0);
     }
 }
 
@@ -72,7 +71,6 @@ static void lay_out(purse *from, fw_chain *chain)
     for (size_t i = 0; i < 2; ++i) lay_out_point(from, &chain->end[i], curved);
     if (walk->halvings > 0)
         for (size_t i = 0; i < 2; ++i) lay_out_point(from, &walk->spare[i], curved);
-    walk->edge = vectors(from, walk->halvings > 0 ? 1 : 0);
     walk->natural = vectors(from, curved ? 1 : 0);
     walk->product = vectors(from, curved ? 1 : 0);
     walk->probe = vectors(from, curved ? 1 : 0);

@@ -18,7 +18,6 @@ typedef struct fw_candidate {
  * and the sum of its momenta. */
 typedef struct fw_piece {
     double *first, *first_p, *last, *rho;
-    double *edge; /* halved steps: mean velocity of the step that led to its first point */
 } fw_piece;
 
 /* Everything settling knows besides vectors; exported as it stands. */
@@ -32,6 +31,7 @@ typedef struct fw_learn {
     double change;
     /* step size: dual averaging */
     double log_step, log_average, shortfall, mu, count;
+    double searched;            /* log of the step size that the last search found */
     uint64_t search;            /* 1: look for a step size before the next path */
     /* bend */
     double bend, ceiling;
@@ -101,7 +101,6 @@ int fw_learn_route(fw_chain *chain, fw_route *route);
 void fw_learn_update(fw_chain *chain, const fw_route *route, const fw_facts *facts);
 void fw_learn_climbed(fw_chain *chain);
 void fw_learn_beta(fw_chain *chain);
-void fw_dual_average(fw_learn *learn, double target, double acceptance);
 
 /* chain.c */
 void fw_chain_take(fw_chain *chain, const double *x, const double *g, double value);

@@ -16,7 +16,13 @@
 
 static const uint64_t look = 4, most_iterations = 400;
 
-static double least_gain(const fw_chain *chain) { return (double)chain->walk.d + 10.0; }
+/* What the iterations up to a look must gain: to begin with, more than a few standard deviations in every coordinate
+ * amount to (short paths find home from there, and what looks like a rise may be the neck of a funnel). */
+static double least_gain(const fw_chain *chain, uint64_t looked_at)
+{
+    const double d = (double)chain->walk.d;
+    return looked_at == 0 ? 10.0 * d + 100.0 : d + 10.0;
+}
 
 static double *row_x(const fw_chain *chain, uint64_t i) { return chain->rows_x + i % MEMORY * chain->walk.d; }
 static double *row_g(const fw_chain *chain, uint64_t i) { return chain->rows_g + i % MEMORY * chain->walk.d; }
@@ -102,7 +108,7 @@ static int worth_it(fw_chain *chain)
     fw_learn *learn = &chain->learn;
     const uint64_t since = learn->climbed % look == 0 && learn->climbed > 0 ? look : learn->climbed % look;
     const uint64_t back = learn->climbed - since;
-    if (chain->value - learn->climb_value[back % MEMORY] > least_gain(chain)) return 1;
+    if (chain->value - learn->climb_value[back % MEMORY] > least_gain(chain, back)) return 1;
     fw_chain_take(chain, row_x(chain, back), row_g(chain, back), learn->climb_value[back % MEMORY]);
     return 0;
 }

@@ -483,27 +483,3 @@ FW_CLONES void fw_seam(size_t n, const double *restrict fa, const double *restri
     sums[4] = FOLD(s4);
     sums[5] = FOLD(s5);
 }
-
-FW_CLONES void fw_seam_steps(size_t n, const double *restrict fa, const double *restrict la, const double *restrict ra,
-                             const double *restrict edge, const double *restrict fb, const double *restrict lb,
-                             const double *restrict rb, double *restrict out, double sums[6])
-{
-    SUM(s0);
-    SUM(s1);
-    SUM(s2);
-    SUM(s3);
-    SUM(s4);
-    SUM(s5);
-    SWEEP(n, const group f_a = GET(fa); const group l_b = GET(lb); const group f_b = GET(fb); const group l_a = GET(la);
-          const group r_a = GET(ra) + GET(edge); const group r_b = GET(rb); const group inside = r_a + r_b;
-          const group rho = inside + 0.5 * (f_a + l_b); const group near_b = r_a + 0.5 * (f_a + f_b);
-          const group near_a = r_b + GET(edge) + 0.5 * (l_a + l_b); ADD(s0, f_a * rho); ADD(s1, l_b * rho);
-          ADD(s2, f_a * near_b); ADD(s3, f_b * near_b); ADD(s4, l_a * near_a); ADD(s5, l_b * near_a);
-          PUT(out, inside););
-    sums[0] = FOLD(s0);
-    sums[1] = FOLD(s1);
-    sums[2] = FOLD(s2);
-    sums[3] = FOLD(s3);
-    sums[4] = FOLD(s4);
-    sums[5] = FOLD(s5);
-}

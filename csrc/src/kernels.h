@@ -136,9 +136,5 @@ void fw_add_pair(size_t n, const double *a, const double *b, double *out, double
 void fw_seam(size_t n, const double *fa, const double *la, const double *pa, const double *ra, const double *fb,
              const double *lb, const double *pb, const double *rb, double *out, double sums[6]);
 
-/* The same where ra, rb and out sum the mean velocities of the steps inside a piece, and edge is that of the step across
- * the seam; the momenta of a piece are then (steps inside) + (first + last) / 2. */
-void fw_seam_steps(size_t n, const double *fa, const double *la, const double *ra, const double *edge, const double *fb,
-                   const double *lb, const double *rb, double *out, double sums[6]);
 
 #endif

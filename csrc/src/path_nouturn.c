@@ -10,12 +10,8 @@
  * are those of v with p = G0 v. With FW_TURN_METRIC momenta are those of the full metric, p = G v; then the tests
  * at the inner ends of a seam are left out on both sides, which keeps the rule the same from either end and the
  * memory at four vectors a level.
- *
- * Halved steps may span many turns of the fast coordinates, of which the velocities at their ends are no sample; then
- * the base test sums the mean velocities of the steps inside a piece, plus half of either end, in the place of momenta.
  */
 #include <math.h>
-#include <string.h>
 
 #include "chain.h"
 #include "kernels.h"
@@ -69,9 +65,6 @@ static int weigh(fw_chain *chain, orbit *o, const fw_point *p, int first)
     return FW_OK;
 }
 
-/* Pieces are summed by the mean velocities of steps (see above). */
-static int by_steps(const fw_chain *chain) { return chain->carry.edge != NULL; }
-
 static int by_metric(const fw_chain *chain) { return chain->settings.turn == FW_TURN_METRIC; }
 
 /* What stands for the momentum of a state in the turn test: the same rule for every state of an orbit. */
@@ -95,17 +88,13 @@ static int join(fw_chain *chain, unsigned level, const fw_point *p)
     const int metric = by_metric(chain);
     fw_piece *a = &chain->level[level], *b = &chain->carry;
     double sums[6];
-    if (by_steps(chain)) {
-        fw_seam_steps(d, a->first, a->last, a->rho, b->edge, b->first, p->w, b->rho, chain->spare_rho, sums);
-        swap(&b->edge, &a->edge);
-    } else if (!metric && level == 0) { /* two single states: one product of velocities decides every test */
+    if (!metric && level == 0) { /* two single states: one product of velocities decides every test */
         fw_add_pair(d, a->first, p->w, b->rho, sums);
         swap(&a->first, &b->first);
         return sums[1] + sums[0] > 0.0 && p->ww + sums[0] > 0.0;
-    } else {
-        const double *first_p = metric ? b->first_p : b->first;
-        fw_seam(d, a->first, a->last, a->last, a->rho, b->first, p->w, first_p, b->rho, chain->spare_rho, sums);
     }
+    const double *first_p = metric ? b->first_p : b->first;
+    fw_seam(d, a->first, a->last, a->last, a->rho, b->first, p->w, first_p, b->rho, chain->spare_rho, sums);
     swap(&b->rho, &chain->spare_rho);
     swap(&a->first, &b->first);
     if (metric) swap(&a->first_p, &b->first_p);
@@ -116,13 +105,12 @@ static int join(fw_chain *chain, unsigned level, const fw_point *p)
 static void wait_at(fw_chain *chain, unsigned level, const fw_point *p)
 {
     fw_piece *a = &chain->level[level], *b = &chain->carry;
-    if (!by_metric(chain) && !by_steps(chain) && level == 0) {
+    if (!by_metric(chain) && level == 0) {
         fw_copy(chain->walk.d, p->w, a->first);
         return;
     }
     swap(&a->first, &b->first);
     swap(&a->rho, &b->rho);
-    if (by_steps(chain)) swap(&a->edge, &b->edge);
     if (by_metric(chain)) swap(&a->first_p, &b->first_p);
     tested_momentum(chain, p, a->last);
 }
@@ -132,15 +120,9 @@ static void carry_state(fw_chain *chain, const fw_point *p)
 {
     const size_t d = chain->walk.d;
     fw_piece *b = &chain->carry;
-    if (by_steps(chain)) {
-        fw_copy(d, chain->walk.edge, b->edge);
-        memset(b->rho, 0, d * sizeof(double));
-    } else if (by_metric(chain)) {
-        tested_momentum(chain, p, b->first_p);
-        fw_copy(d, b->first_p, b->rho);
-    } else {
-        return;
-    }
+    if (!by_metric(chain)) return;
+    tested_momentum(chain, p, b->first_p);
+    fw_copy(d, b->first_p, b->rho);
     fw_copy(d, p->w, b->first);
 }
 
@@ -172,15 +154,10 @@ static int orbit_goes_on(fw_chain *chain, const fw_point *outer, const fw_point 
     const size_t d = chain->walk.d;
     const fw_piece *b = &chain->carry;
     double sums[6];
-    if (by_steps(chain)) {
-        fw_seam_steps(d, outer->w, chain->seam, chain->orbit_rho, b->edge, b->first, p->w, b->rho, chain->spare_rho, sums);
-    } else {
-        const int single = depth == 0 && !by_metric(chain);
-        const double *first = single ? p->w : b->first, *rho = single ? p->w : b->rho;
-        const double *first_p = by_metric(chain) ? b->first_p : first;
-        fw_seam(d, outer->w, chain->seam, chain->seam, chain->orbit_rho, first, p->w, first_p, rho, chain->spare_rho,
-                sums);
-    }
+    const int single = depth == 0 && !by_metric(chain);
+    const double *first = single ? p->w : b->first, *rho = single ? p->w : b->rho;
+    const double *first_p = by_metric(chain) ? b->first_p : first;
+    fw_seam(d, outer->w, chain->seam, chain->seam, chain->orbit_rho, first, p->w, first_p, rho, chain->spare_rho, sums);
     swap(&chain->orbit_rho, &chain->spare_rho);
     return onward(chain, sums);
 }
@@ -191,10 +168,7 @@ static int travel(fw_chain *chain, const fw_route *route, fw_facts *facts)
     const unsigned most = route->doublings + (route->finer ? 1u : 0u);
     orbit o = {.start = chain->end[0].energy, .held_sum = 1.0};
     fw_point_copy(walk, &chain->end[0], &chain->end[1]);
-    if (by_steps(chain))
-        memset(chain->orbit_rho, 0, walk->d * sizeof(double));
-    else
-        tested_momentum(chain, &chain->end[0], chain->orbit_rho);
+    tested_momentum(chain, &chain->end[0], chain->orbit_rho);
     facts->energy = o.start;
     for (unsigned depth = 0; depth < most; ++depth) {
         const int forward = chain->random.uniform(chain->random.state) < 0.5;

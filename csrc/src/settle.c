@@ -35,6 +35,19 @@ static uint64_t next_window(const fw_learn *learn)
     return begun + before + before + before / 2 > end ? end - begun : before;
 }
 
+/* How boldly the averaging moves the step: first by the factor `reach`, then by 1 / gamma. Hoffman & Gelman 2014 have 10
+ * and 0.05. Halved steps that are far too long are still accepted, at a great price, and orbits that end because the far
+ * end would choose other halvings make the rate noisier. */
+typedef struct boldness {
+    double reach, gamma;
+} boldness;
+
+static const boldness *bold(const fw_chain *chain)
+{
+    static const boldness whole = {10.0, 0.05}, halved = {3.0, 0.1};
+    return chain->walk.halvings > 0 ? &halved : &whole;
+}
+
 static void restart_average(fw_learn *learn, double reach)
 {
     learn->mu = learn->log_step + log(reach);
@@ -42,16 +55,25 @@ static void restart_average(fw_learn *learn, double reach)
     learn->log_average = learn->log_step;
 }
 
-/* Nesterov 2009; Hoffman & Gelman 2014 with their gamma = 0.05, t0 = 10, kappa = 0.75. */
-void fw_dual_average(fw_learn *learn, double target, double acceptance)
+/* Nesterov 2009; Hoffman & Gelman 2014 with their t0 = 10, kappa = 0.75. Where the step would fall below `least` it is
+ * held there and the shortfall with it: a few refused transitions in a row (a stuck point, a hard edge) would otherwise
+ * pile up a debt that hundreds of accepted ones cannot repay. */
+static void dual_average(fw_learn *learn, double gamma, double least, double target, double acceptance)
 {
     const double t = learn->count += 1.0;
     const double weight = 1.0 / (t + 10.0);
     learn->shortfall = (1.0 - weight) * learn->shortfall + weight * (target - acceptance);
-    learn->log_step = learn->mu - sqrt(t) / 0.05 * learn->shortfall;
+    learn->log_step = learn->mu - sqrt(t) / gamma * learn->shortfall;
+    if (!(learn->log_step > least)) {
+        learn->log_step = least;
+        learn->shortfall = (learn->mu - least) * gamma / sqrt(t);
+    }
     const double share = pow(t, -0.75);
     learn->log_average = share * learn->log_step + (1.0 - share) * learn->log_average;
 }
+
+/* No step that is worth its cost lies further below the one where a single step from a typical point is accepted. */
+static double lowest_step(const fw_learn *learn) { return learn->searched - log(100.0); }
 
 static void forget_epoch(fw_learn *learn)
 {
@@ -97,8 +119,9 @@ void fw_learn_plan(fw_chain *chain, size_t least, size_t most)
     learn->climbing = most > 1 && chain->rows_x && learn->climbed == 0;
     learn->search = chain->settings.adapt_step != 0;
     learn->log_step = log(chain->step_size > 0.0 ? chain->step_size : 1.0);
+    learn->searched = learn->log_step;
     forget_epoch(learn);
-    restart_average(learn, 10.0);
+    restart_average(learn, bold(chain)->reach);
     clear_window(chain);
     if (most == 0) return;
     learn->window = chain->settings.adapt_scale ? next_window(learn) : 0;
@@ -110,11 +133,12 @@ void fw_learn_plan(fw_chain *chain, size_t least, size_t most)
 
 /* ---- first guess of the step size --------------------------------------------------------------------------------- */
 
-/* log weight after one step from end[0]; a failed step weighs nothing. */
+/* log weight after one step from end[0], not halved (halving would accept far too long steps, at a great price); a
+ * failed step weighs nothing. */
 static int one_step(fw_chain *chain, double step, double *log_weight)
 {
     fw_point_copy(&chain->walk, &chain->end[0], &chain->end[1]);
-    const int status = fw_walk_step(&chain->walk, &chain->end[1], step);
+    const int status = fw_walk_whole_step(&chain->walk, &chain->end[1], step);
     *log_weight = status == FW_OK ? chain->end[0].energy - chain->end[1].energy + chain->end[1].log_jacobian : -INFINITY;
     return status < 0 ? status : FW_OK;
 }
@@ -141,8 +165,8 @@ static int search_step(fw_chain *chain)
         if (next_good || !good) step = next;
         if (next_good != good) break;
     }
-    learn->log_step = learn->epoch_log_step = log(step);
-    restart_average(learn, 10.0);
+    learn->log_step = learn->epoch_log_step = learn->searched = log(step);
+    restart_average(learn, bold(chain)->reach);
     learn->search = 0;
     return FW_OK;
 }
@@ -384,9 +408,8 @@ void fw_learn_update(fw_chain *chain, const fw_route *route, const fw_facts *fac
     fw_learn *learn = &chain->learn;
     ++learn->done;
     if (chain->settings.adapt_step && !route->finer) {
-        fw_dual_average(learn, chain->settings.acceptance, facts->acceptance);
-        if (has_ceiling(chain) && learn->log_step < learn->epoch_log_step - log(4.0))
-            learn->log_step = learn->epoch_log_step - log(4.0);
+        const double least = has_ceiling(chain) ? fmax(lowest_step(learn), learn->epoch_log_step - log(4.0)) : lowest_step(learn);
+        dual_average(learn, bold(chain)->gamma, least, chain->settings.acceptance, facts->acceptance);
     }
     if (has_ceiling(chain)) look_at_ceiling(chain, route, facts->acceptance);
     if (tunes_bend(chain)) {

@@ -87,19 +87,20 @@ static int halved_step(fw_walk *walk, fw_point *p, double step)
         }
     }
     walk->halved += ((uint64_t)1 << k) - 1;
-    fw_difference(walk->d, walk->spare[0].x, p->x, walk->edge);
-    fw_base_whiten_velocity(&walk->base, walk->edge, walk->edge);
-    fw_scale(walk->d, 1.0 / step, walk->edge);
     fw_point_copy(walk, &walk->spare[0], p);
     return FW_OK;
 }
 
-int fw_walk_step(fw_walk *walk, fw_point *p, double step)
+int fw_walk_whole_step(fw_walk *walk, fw_point *p, double step)
 {
-    if (walk->halvings > 0) return halved_step(walk, p, step);
     const int status = walk->motion->step(walk, p, step);
     if (status > 0) fw_walk_failed(walk, p->x);
     return status;
+}
+
+int fw_walk_step(fw_walk *walk, fw_point *p, double step)
+{
+    return walk->halvings > 0 ? halved_step(walk, p, step) : fw_walk_whole_step(walk, p, step);
 }
 
 int fw_walk_begin(fw_walk *walk, fw_point *p, const fw_random *random)

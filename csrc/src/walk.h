@@ -66,7 +66,6 @@ typedef struct fw_walk {
     double *failed_at;        /* position of the last failed evaluation or step */
     double *natural, *product, *probe; /* scratch of curvature products; NULL when the curvature is the surrogate */
     fw_point spare[2];        /* scratch of halving; NULL arrays without it */
-    double *edge;             /* with halving: whitened mean velocity of the last step */
 } fw_walk;
 
 /* density.c: one checked evaluation; value and g are set on FW_OK only. */
@@ -105,6 +104,8 @@ void fw_point_copy(const fw_walk *walk, const fw_point *from, fw_point *to);
 int fw_walk_begin(fw_walk *walk, fw_point *p, const fw_random *random);
 /* A signed step, halved as the settings ask; the paths call only this. */
 int fw_walk_step(fw_walk *walk, fw_point *p, double step);
+/* The same without halving. */
+int fw_walk_whole_step(fw_walk *walk, fw_point *p, double step);
 void fw_walk_failed(fw_walk *walk, const double *x);
 /* Evaluate p->x and make c and the sums. */
 int fw_walk_arrive(fw_walk *walk, fw_point *p);

@@ -63,7 +63,7 @@ class Settings:
             **self.motion.core(),
             **self.path.core(),
             "beta": -1.0 if self.beta is None else float(self.beta),
-            "halving_bound": 1.0,
+            "halving_bound": 2.0,
             "step_size": float(self.step_size or 0.0),
             "acceptance": float(self.acceptance),
             "settle_least": least,
