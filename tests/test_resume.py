@@ -106,7 +106,7 @@ def test_draws_are_added_as_if_asked_for_at_first(tmp_path):
     record = tmp_path / "a.fell"
     first = fw.run(density, **options(keep=1), record=record)
     assert first.finished
-    assert "1 draws" in str(first)
+    assert "1 draw," in str(first)
     for keep in (7, 7, 120):
         assert fw.resume(record, density, keep=keep).draws.shape == (CHAINS, keep, 3)
     assert_same(fw.resume(record, density, keep=200), expected)

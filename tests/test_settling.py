@@ -148,12 +148,9 @@ def test_a_first_step_far_too_large_next_to_an_edge(factor):
 
 
 EDGE = [(start, motion) for motion in ("leapfrog", "surrogate") for start in ((0.3, 27.0), (1e-9, 1e-9), (40.0, 0.1))]
-COLLAPSES = pytest.mark.xfail(reason="a few paths that end at once at the edge take the step size down for good")
 
 
-@pytest.mark.parametrize(
-    ("start", "motion"),
-    [pytest.param(*case, marks=COLLAPSES if case == ((1e-9, 1e-9), "surrogate") else ()) for case in EDGE])
+@pytest.mark.parametrize(("start", "motion"), EDGE)
 def test_half_normals_in_two_scales(start, motion):
     """The density is cut off at its mode; paths that leave the support end there, say so, and nothing is lost."""
     target = targets.half_normal([0.31, 27.0])
@@ -171,7 +168,7 @@ def test_exponentials_in_three_scales(start):
     target = targets.exponential([0.31, 27.0, 1.4])
     chain = chain_on(target, start, seed=17)
     settled_in_bounds(chain)
-    assert_right(chain, target, 60_000)
+    assert_right(chain, target, 100_000)
 
 
 # ---- coordinates without information --------------------------------------------------------------------------------

@@ -19,6 +19,7 @@ from fellwalk.parameters import Parameters
 from fellwalk.record import Record, current_versions
 from fellwalk.run_record import ChainResult, plan_of, read_parts, read_states
 from fellwalk.settled import Settled
+from fellwalk.settling import settling_remarks
 from fellwalk.table import wrap
 
 if TYPE_CHECKING:
@@ -222,6 +223,7 @@ class Result:
             if self.plan.get("settled"):
                 how = f"Settled part {self.plan['settled']} taken over"
             lines.append(f"{how}: step size {_range(sizes, '.3g')}{self._bend_line()}.")
+            lines += settling_remarks(self.settling, self.chains, self.settings["acceptance"])
         if not self.finished:
             on = f" Go on with fellwalk.resume({self.path!r}, density)." if self.path else ""
             lines.append(f"Stopped early: {self.ended or 'not all draws asked for are made'} "
