@@ -30,7 +30,8 @@ def density():
     uniforms, arrivals of a Poisson process (also backwards), ordered normals, det(R)^(eta - 1)."""
     pointer = types.CPointer(types.float64)
 
-    @cfunc(types.intc(types.uintp, pointer, pointer, pointer, types.voidptr))
+    # division by zero at an edge (a share that rounds to 0) is an infinity, as in C, and ends the path
+    @cfunc(types.intc(types.uintp, pointer, pointer, pointer, types.voidptr), error_model="numpy")
     def laws(d, point, value, gradient, context):
         x, g = carray(point, (24,)), carray(gradient, (24,))
         total = -0.6 * math.log(x[0]) - x[0] + 1.385 * math.log(x[1]) - x[1]

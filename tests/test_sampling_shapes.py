@@ -58,7 +58,7 @@ def ring_family(draws):
     [
         ("leapfrog, no-u-turn", 150_000, 0.07),
         ("surrogate, no-u-turn", 75_000, 0.09),
-        ("product semi-explicit, no-u-turn", 20_000, 0.25),
+        ("product semi-explicit, no-u-turn", 30_000, 0.25),
     ],
 )
 def test_rosenbrock(way, keep, smallest):

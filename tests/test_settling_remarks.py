@@ -38,7 +38,7 @@ def heading(f, start, **named):
 
 def test_a_start_too_far_out_for_the_plan_is_named():
     said = heading(valley, [1e3, 1e3], settle=300, seed=1)
-    assert "When settling of chain 2 ended, the log density still rose, by 2.18e+03 within its last 150 transitions" in said
+    assert "When settling of chain 2 ended, the log density still rose, by 2.18e+03 within its last 150" in said
     assert "Tried: 300 transitions, 1,417 gradients, 4 windows of scales, step sizes from 0.016 to 5.1." in said
     assert "chain 1 ended" not in said
 
@@ -50,7 +50,7 @@ def test_a_density_without_a_top_is_named():
 @pytest.mark.parametrize("settle", ["auto", 300])
 def test_a_coordinate_finer_than_its_numbers_is_named(settle):
     said = heading(pinned, [1e16 + 2, 0.0], settle=settle, seed=1)
-    assert "known more finely than its numbers are spaced" in said and "chain 1" in said and "chain 2" in said
+    assert said.count("known more finely than its numbers are spaced") == 2
 
 
 def facts(n, **columns):
@@ -63,7 +63,7 @@ def facts(n, **columns):
 
 def test_refused_steps_are_named():
     said = settling_remarks([facts(200, acceptance=0.05)], [{"step_size": 0.5, "windows": 0}], 0.8)
-    assert len(said) == 1 and "steps were still refused (acceptance 0.05, asked for 0.8)" in said[0]
+    assert ["steps were still refused (acceptance 0.05, asked for 0.8)" in line for line in said] == [True]
 
 
 @pytest.mark.parametrize(("correlation", "sd"), [(0.0, 100.0), (0.9, 100.0), (0.99, 3.0)])

@@ -44,7 +44,7 @@ def settling_remarks(settling: Sequence[NDArray], summaries: Sequence[dict[str, 
     """One sentence for each chain whose settling ended before it had come home; none where nothing is to be said.
 
     settling: facts of each chain's settling. summaries: what each chain found. acceptance: the rate asked for. The
-    second half of settling is looked at: does the log density still rise, do steps move anything, are they still refused?
+    second half of settling is looked at: does the log density still rise, do steps move anything, are they refused?
     """
     remarks = []
     for number, (facts, summary) in enumerate(zip(settling, summaries, strict=True), 1):
@@ -52,17 +52,18 @@ def settling_remarks(settling: Sequence[NDArray], summaries: Sequence[dict[str, 
         if len(late) < _LEAST:
             continue
         rise = _rise(late["log_density"])
-        refused = float(late["acceptance"][-len(late) // 2 :].mean())
+        accepted = float(late["acceptance"][-len(late) // 2 :].mean())
         if rise > 0.0:
-            what = (f"the log density still rose, by {rise:.3g} within its last {len(late)} transitions: its start lies far "
-                    "out, or the density has no top. Start nearer to where the draws should be, or give a longer settle=")
+            what = (f"the log density still rose, by {rise:.3g} within its last {len(late)} transitions: its start "
+                    "lies far out, or the density has no top. Start nearer to where the draws should be, or give a longer "
+                    "settle=")
         elif summary["step_size"] < _NOTHING:
-            what = (f"its step size had fallen to {summary['step_size']:.1g}, which moves nothing: a coordinate may be known "
-                    "more finely than its numbers are spaced (let the function take the distance from a constant instead), "
-                    "or the density jumps everywhere. See fellwalk.audit")
-        elif refused < 0.25 * acceptance:
-            what = (f"steps were still refused (acceptance {refused:.2g}, asked for {acceptance:.2g}): look at the density "
-                    "there with fellwalk.audit, or start elsewhere")
+            what = (f"its step size had fallen to {summary['step_size']:.1g}, which moves nothing: a coordinate may be "
+                    "known more finely than its numbers are spaced (let the function take the distance from a "
+                    "constant instead), or the density jumps everywhere. See fellwalk.audit")
+        elif accepted < 0.25 * acceptance:
+            what = (f"steps were still refused (acceptance {accepted:.2g}, asked for {acceptance:.2g}): look at the "
+                    "density there with fellwalk.audit, or start elsewhere")
         else:
             continue
         remarks.append(f"When settling of chain {number} ended, {what}. Tried: {_tried(facts, summary)}.")
