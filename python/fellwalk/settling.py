@@ -54,9 +54,9 @@ def settling_remarks(settling: Sequence[NDArray], summaries: Sequence[dict[str, 
         rise = _rise(late["log_density"])
         accepted = float(late["acceptance"][-len(late) // 2 :].mean())
         if rise > 0.0:
-            what = (f"the log density still rose, by {rise:.3g} within its last {len(late)} transitions: its start "
-                    "lies far out, or the density has no top. Start nearer to where the draws should be, or give a longer "
-                    "settle=")
+            what = (f"the log density still rose, by {rise:.3g} within its last {len(late)} transitions: "
+                    "its start lies far out, or the density has no top. Start nearer to where the draws should be, or "
+                    "give a longer settle=")
         elif summary["step_size"] < _NOTHING:
             what = (f"its step size had fallen to {summary['step_size']:.1g}, which moves nothing: a coordinate may be "
                     "known more finely than its numbers are spaced (let the function take the distance from a "
