@@ -229,8 +229,8 @@ def test_a_dense_normal_of_few_dimensions_is_learned_whole(seed):
 
 def test_six_spikes_among_500_scales_over_six_decades():
     """Six directions whose variances are 1e4, 3e3, 1e3, 1e-3, 3e-4, 1e-4, scales over six decades: below 10 after
-    10,000 gradients in at least 7 of 10 fixed seeds, and below 30 in all (square roots of condition numbers). Over 80
-    runs from four starts 83% were below 10 and the largest was 28; without directions it stays above 1,000."""
+    10,000 gradients (square roots of condition numbers) for each of ten fixed seeds. Over 24 runs of the benchmark the
+    largest was 3.7; without directions it stays above 1,000."""
     d, variances, seed = 500, np.array([1e4, 3e3, 1e3, 1e-3, 3e-4, 1e-4]), 20250
     rng = np.random.default_rng(seed)  # as random_spikes makes them
     directions = np.linalg.qr(rng.standard_normal((d, 6)))[0].T
@@ -245,14 +245,13 @@ def test_six_spikes_among_500_scales_over_six_decades():
             chain.block(1, draws=False)
         assert chain.summary["directions"] == 6
         found.append(spread(chain, root, scales))
-    assert np.sum(np.array(found) < 10.0) >= 7, found
-    assert max(found) < 30.0, found
+    assert max(found) < 10.0, found
 
 
 # ---- nothing to find ------------------------------------------------------------------------------------------------
 
-# This plan ends with a window of 200: 4 iterations of the climb, lead 10, windows 20, 30, 45, 67 and 200, tail 75.
-ENDS_WITH_200 = 451
+# This plan ends with a window of 200: 4 iterations of the climb, lead 10, windows 20, 26, 34, 45, 60, 80 and 200, tail 95.
+ENDS_WITH_200 = 574
 
 
 def independent(d):

@@ -3,6 +3,8 @@
 The rule has no stated rate of false alarms; they are counted for series of known correlation, with fixed seeds.
 """
 
+import re
+
 import numpy as np
 import pytest
 
@@ -37,14 +39,19 @@ def heading(f, start, **named):
 
 
 def test_a_start_too_far_out_for_the_plan_is_named():
-    said = heading(valley, [1e3, 1e3], settle=300, seed=1)
-    assert "When settling of chain 2 ended, the log density still rose, by 2.18e+03 within its last 150" in said
-    assert "Tried: 300 transitions, 1,417 gradients, 4 windows of scales, step sizes from 0.016 to 5.1." in said
-    assert "chain 1 ended" not in said
+    """From there the valley is half a million sds long, and even the open plan does not see its end."""
+    said = heading(valley, [1e3, 1e3], settle=150, seed=1)
+    for chain in (1, 2):
+        assert re.search(rf"When settling of chain {chain} ended, the log density still rose, by [\d.e+]+ within its last 75 "
+                         r"transitions.* Tried: 150 transitions, [\d,]+ gradients, \d windows of scales, step sizes from "
+                         r"[\d.e-]+ to [\d.]+\.", said)
+    assert "the log density still rose" in heading(valley, [1e3, 1e3], settle="auto", seed=1)
+    assert "When settling" not in heading(valley, [20.0, 20.0], settle="auto", seed=1)
 
 
-def test_a_density_without_a_top_is_named():
-    assert "or the density has no top" in heading(without_top, [0.0, 0.0], settle="auto", seed=1)
+@pytest.mark.parametrize("seed", range(1, 4))
+def test_a_density_without_a_top_is_named(seed):
+    assert "When settling" in heading(without_top, [0.0, 0.0], settle="auto", seed=seed)
 
 
 @pytest.mark.parametrize("settle", ["auto", 300])
@@ -66,9 +73,9 @@ def test_refused_steps_are_named():
     assert ["steps were still refused (acceptance 0.05, asked for 0.8)" in line for line in said] == [True]
 
 
-@pytest.mark.parametrize(("correlation", "sd"), [(0.0, 100.0), (0.9, 100.0), (0.99, 3.0)])
+@pytest.mark.parametrize(("correlation", "sd"), [(0.0, 100.0), (0.9, 100.0), (0.99, 2.0)])
 def test_steady_chains_are_left_alone(correlation, sd):
-    """400 series of 150 values each. With a correlation of 0.99, 150 values look like a trend, so only size tells."""
+    """400 series of 150 values each. With a correlation of 0.99 150 values look like a trend, so only size tells."""
     rng = np.random.default_rng(5)
     for _ in range(400):
         noise = rng.standard_normal(300)

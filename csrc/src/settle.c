@@ -1,9 +1,9 @@
 /* Settling: step size, scale, bend and the schedule that orders them.
  *
- * Lead: a few transitions that move the step size only. Windows: each gathers moments of draws and gradients, sets a
- * new scale and new directions at its end and is half as long again as the one before. Tail: the step size alone, over the final base
- * metric. Fixed plans fit the windows to the number asked for; open plans (least < most) go to the tail once two
- * windows in a row have hardly moved the base metric.
+ * Lead: a few transitions that move the step size only. Windows: each gathers moments of draws and gradients, sets
+ * a new scale and new directions at its end and is a third longer than the one before. Tail: the step size alone, over
+ * the final base metric. Fixed plans fit the windows to the number asked for; open plans (least < most) go to the tail
+ * once two windows in a row have hardly moved the base metric.
  */
 #include <float.h>
 #include <math.h>
@@ -28,11 +28,11 @@ static uint64_t tail_length(uint64_t most)
 /* Length of the window that begins now; 0: no room for one, the tail begins. */
 static uint64_t next_window(const fw_learn *learn)
 {
-    const uint64_t before = learn->window ? learn->window + learn->window / 2 : first_window;
+    const uint64_t before = learn->window ? learn->window + learn->window / 3 : first_window;
     const uint64_t end = learn->most - learn->tail, begun = learn->done < learn->lead ? learn->lead : learn->done;
     if (begun + before > end) return learn->window == 0 && end > begun + 4 ? end - begun : 0;
     /* a last window that would be cut short by the tail is joined to this one */
-    return begun + before + before + before / 2 > end ? end - begun : before;
+    return begun + before + before + before / 3 > end ? end - begun : before;
 }
 
 /* How boldly the averaging moves the step: first by the factor `reach`, then by 1 / gamma. Hoffman & Gelman 2014 have 10
@@ -378,11 +378,11 @@ void fw_learn_climbed(fw_chain *chain)
 
 /* ---- one settling transition --------------------------------------------------------------------------------------- */
 
-/* Long paths over a base metric that is still wrong buy little: window j allows 2^(3 + j/2) steps, the tail all. */
+/* Long paths over a base metric that is still wrong buy little: window j allows 2^(3 + j/3) steps, the tail all. */
 static unsigned allowed_doublings(const fw_chain *chain)
 {
     const unsigned most = chain->settings.doublings;
-    const uint64_t early = 3 + chain->learn.windows / 2;
+    const uint64_t early = 3 + chain->learn.windows / 3;
     if (chain->learn.settled || chain->learn.tail_left > 0 || early >= most) return most;
     return (unsigned)early;
 }

@@ -15,19 +15,17 @@ Array = NDArray[np.float64]
 _LEAST = 40  # transitions; fewer say nothing of a trend
 _NOTHING = 1e-9  # a step size, in units of the learned scale, that takes no path anywhere
 _RISE = 10.0  # nats of log density; less is no long way
-_STEADY = 2.9  # standard deviations
 
 
 def _rise(log_density: Array) -> float:
-    """How far the mean of the second half lies above that of the first, where that is a long and steady way; else 0.
+    """How far the last quarter lies above the first, by medians, if all of it does and the way is long; else 0.
 
-    (n,) values. A straight rise is sqrt(12) = 3.5 standard deviations of its second half; chance seldom gets near that.
+    (n,) values. A straight rise leaves a gap of two thirds of that between the quarters; chance seldom leaves any.
     """
-    half = len(log_density) // 2
-    early, late = log_density[-2 * half : -half], log_density[-half:]
-    with np.errstate(over="ignore", invalid="ignore"):  # a density without a top goes beyond all numbers
-        rise, spread = float(late.mean() - early.mean()), float(late.std())
-    return rise if rise > max(_RISE, _STEADY * spread) else 0.0
+    quarter = len(log_density) // 4
+    early, late = log_density[:quarter], log_density[-quarter:]
+    rise = float(np.median(late) - np.median(early))
+    return rise if rise > _RISE and late.min() - early.max() > 0.25 * rise else 0.0
 
 
 def _tried(facts: NDArray, summary: dict[str, Any]) -> str:
