@@ -250,7 +250,7 @@ def test_six_spikes_among_500_scales_over_six_decades():
 
 # ---- nothing to find ------------------------------------------------------------------------------------------------
 
-# This plan ends with a window of 200: 4 iterations of the climb, lead 10, windows 20, 26, 34, 45, 60, 80 and 200, tail 95.
+# This plan ends with a window of 200: climb 4, lead 10, windows of 20, 26, 34, 45, 60, 80 and 200, tail 95.
 ENDS_WITH_200 = 574
 
 

@@ -42,9 +42,9 @@ def test_a_start_too_far_out_for_the_plan_is_named():
     """From there the valley is half a million sds long, and even the open plan does not see its end."""
     said = heading(valley, [1e3, 1e3], settle=150, seed=1)
     for chain in (1, 2):
-        assert re.search(rf"When settling of chain {chain} ended, the log density still rose, by [\d.e+]+ within its last 75 "
-                         r"transitions.* Tried: 150 transitions, [\d,]+ gradients, \d windows of scales, step sizes from "
-                         r"[\d.e-]+ to [\d.]+\.", said)
+        assert re.search(rf"When settling of chain {chain} ended, the log density still rose, by [\d.e+]+ within its "
+                         r"last 75 transitions.* Tried: 150 transitions, [\d,]+ gradients, \d windows of scales, step "
+                         r"sizes from [\d.e-]+ to [\d.]+\.", said)
     assert "the log density still rose" in heading(valley, [1e3, 1e3], settle="auto", seed=1)
     assert "When settling" not in heading(valley, [20.0, 20.0], settle="auto", seed=1)
 
