@@ -2,8 +2,6 @@
 lie.
 """
 
-import json
-
 import numpy as np
 import pytest
 import sharpened_runs
@@ -15,10 +13,10 @@ from scipy.signal import lfilter
 
 import fellwalk as fw
 from fellwalk import autocorrelation as ac
-from fellwalk import lags, table
+from fellwalk import lags
 from fellwalk.errors import ArgumentError, OtherModelError
 from fellwalk.judge import judge
-from fellwalk.sharpen import CANDIDATES, Sharpener
+from fellwalk.sharpen import Sharpener
 from fellwalk.stein import HEAVY, Frame, tail_index
 from fellwalk.terms import Layout, Terms
 
@@ -42,8 +40,7 @@ def pima() -> fw.Result:
     return sharpened_runs.draw("Pima", 11)
 
 
-# ---- exact
-# ------------------------------------------------------------------------------------------------------------
+# ---- exact ----
 
 
 def test_means_of_a_normal_are_exact_with_linear_terms(normal):
@@ -80,8 +77,7 @@ def test_the_axis_of_the_funnel_is_exact_through_terms_with_heavy_tails():
     assert abs(e.estimate[0]) < 1e-7
 
 
-# ---- the terms
-# --------------------------------------------------------------------------------------------------------
+# ---- the terms ----
 
 
 @pytest.mark.parametrize("degree", [1, 2, 3])
@@ -150,8 +146,7 @@ def test_index_of_a_power_law():
     assert tail_index(x).mean() == pytest.approx(0.25, abs=4 * 0.073 / np.sqrt(200))
 
 
-# ---- fitting
-# ----------------------------------------------------------------------------------------------------------
+# ---- fitting ----
 
 
 @given(st.integers(1, 12), st.integers(8, 90))
@@ -221,16 +216,15 @@ def test_high_dimension_takes_the_coordinates_that_matter():
     assert one.error.max() < 1e-8 * one.raw.error.min()
 
 
-# ---- gains
-# ------------------------------------------------------------------------------------------------------------
+# ---- gains ----
 
 
-@pytest.mark.parametrize(("name", "runs"), [("Pima", 8), ("Australian", 5)])
+@pytest.mark.parametrize(("name", "runs"), [("Pima", 10), ("Australian", 16)])
 def test_gain_of_linear_and_quadratic_terms(name, runs):
     """Variance of posterior means over runs, plain over sharpened, median over coordinates: at least 10 and 100.
 
-    Measured over 400 runs with what won: see benchmarks/sharpened.md. A ratio of two variances of 5 runs is within a
-    factor of 16 of the truth with probability 98% (F with 4 and 4 degrees of freedom), a median of 15 far nearer.
+    Measured over 40 runs: Pima 106 and 7300, Australian 31 and 2000. A ratio of variances of 16 runs falls below a
+    third of the truth with chance 2% (F with 15 and 15 degrees of freedom), the median of 15 of them more rarely.
     """
     found = {"none": [], "linear": [], "quadratic": []}
     for seed in range(runs):
@@ -242,8 +236,7 @@ def test_gain_of_linear_and_quadratic_terms(name, runs):
     assert np.median(variance["none"] / variance["quadratic"]) >= 100
 
 
-# ---- estimates
-# --------------------------------------------------------------------------------------------------------
+# ---- estimates ----
 
 
 def test_plain_estimates_are_those_of_judge(pima):
@@ -342,8 +335,7 @@ def test_bounded_parameters_are_sharpened_in_free_coordinates():
     assert result.judgement.by["estimate"] == ("linear",)
 
 
-# ---- what must not be sharpened
-# ---------------------------------------------------------------------------------------
+# ---- what must not be sharpened ----
 
 
 def test_an_edge_with_density_on_it_is_not_sharpened():
@@ -395,54 +387,3 @@ def test_gradients_must_fit_the_draws():
     bad[1, 3, 0] = np.nan
     with pytest.raises(ArgumentError, match="draw 4 of chain 2"):
         judge(x, gradients=bad)
-
-
-# ---- table and verdict
-# ------------------------------------------------------------------------------------------------
-
-
-def test_the_table_marks_what_is_sharpened(pima):
-    j = pima.judgement
-    assert set(j.by["estimate"]) <= set(CANDIDATES)
-    assert "none" not in j.by["estimate"]
-    text = str(j)
-    assert max(map(len, text.splitlines())) <= table.WIDTH
-    rows = [line.split() for line in text.splitlines() if line.startswith("x[")]
-    assert len(rows) == 9 - 1
-    assert all(row[1].endswith("*") for row in rows)
-    assert "* sharpened by the gradients at the draws" in text
-    plain = [line for line in str(j.raw).splitlines() if line.startswith("x[")]
-    assert not any("*" in line for line in plain)
-    assert j.raw.verdict is j.verdict
-    np.testing.assert_array_equal(j.raw.estimate, judge(pima.draws).estimate)
-    said = json.loads(json.dumps(j.to_dict()))
-    assert said["parameters"][0]["by"]["estimate"] == j.by["estimate"][0]
-    assert said["raw"][0]["estimate"] == j.raw.estimate[0]
-    assert said["identities"] == {"checked": 360, "broken": 0, "why_not": ""}
-
-
-def test_worth_is_of_the_sharpened_estimate(pima):
-    j = pima.judgement
-    np.testing.assert_allclose(j.worth, (j.spread / j.error) ** 2)
-    assert j.worth.min() > 100 * j.raw.worth.max()
-
-
-def test_exact_estimates_keep_the_table_narrow(normal):
-    text = str(normal.judgement)
-    assert max(map(len, text.splitlines())) <= table.WIDTH
-    assert "*" in text
-
-
-def test_draws_needed_follow_the_sharpened_error():
-    # r = 0.6: 4 x 300 draws are worth 300 for the mean where 400 are asked. Sharpened the mean is exact; credited with
-    # twice its draws' worth it is enough, and only what is not sharpened so well still asks for more.
-    rng = np.random.default_rng(5)
-    x = lfilter([0.8], [1.0, -0.6], rng.standard_normal((4, 340, 2)), axis=1)[:, 40:]
-    sharpened, plain = judge(x, gradients=-x).verdict, judge(x).verdict
-    assert any("in its centre" in reason for reason in plain.reasons)
-    assert any("for its mean" in reason for reason in plain.reasons)
-    assert not any("in its centre" in reason or "for its mean" in reason for reason in sharpened.reasons)
-    assert (sharpened.draws_needed or 300) < plain.draws_needed
-    # Draws of which a chain holds less than half of what is asked do not pass on the strength of an exact mean.
-    few = judge(x[:, :120], gradients=-x[:, :120]).verdict
-    assert any("in its centre" in reason for reason in few.reasons)

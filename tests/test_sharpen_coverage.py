@@ -13,7 +13,7 @@ RUNS = {"Norris": 80, "mcmc01": 40, "eight schools": 24, "Pima": 24, "Australian
         "Rosenbrock": 20, "funnel": 12}
 FALSE_ALARM = 1e-4  # of one target, all its estimates together, if every interval covers with the least rate allowed
 LEAST_RATE = 0.92
-# Plain estimates of these do not cover 92% either, at any length tried: their squares have hardly a fourth moment.
+# Plain estimates of these do not cover 92% either, at any length tried: their squares have no third moment.
 HARD = {("eight schools", "sd", "mu"), ("eight schools", "sd", "tau")}
 
 
