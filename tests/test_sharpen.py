@@ -17,7 +17,8 @@ from fellwalk import lags
 from fellwalk.errors import ArgumentError, OtherModelError
 from fellwalk.judge import judge
 from fellwalk.sharpen import Sharpener
-from fellwalk.stein import HEAVY, Frame, tail_index
+from fellwalk.stein import Frame, count_terms, terms_at
+from fellwalk.tails import HEAVY, tail_index, tail_indices
 from fellwalk.terms import Layout, Terms
 
 
@@ -84,8 +85,10 @@ def test_the_axis_of_the_funnel_is_exact_through_terms_with_heavy_tails():
 def test_terms_are_laplacian_plus_gradient_product(degree):
     rng = np.random.default_rng(5)
     x, g = rng.standard_normal((60, 3)) * [1.0, 0.3, 7.0], rng.standard_normal((60, 3))
-    frame = Frame(x, g, mix=False)
-    rows, ends = frame.terms(degree, range(3), range(3))
+    frame = Frame(x, g)
+    np.testing.assert_allclose(frame.y.T * x.std(axis=0) + x.mean(axis=0), x, atol=1e-14)
+    np.testing.assert_allclose(frame.gy.T / x.std(axis=0), g, rtol=1e-14)
+    rows, ends = terms_at(frame.y, frame.gy, degree, range(3), range(3)), count_terms(degree, 3, 3)
     assert ends == [3, 9, 19][:degree]
     powers = [[1, 0, 0], [0, 1, 0], [0, 0, 1]]
     powers += [[2, 0, 0], [1, 1, 0], [1, 0, 1], [0, 2, 0], [0, 1, 1], [0, 0, 2]]
@@ -118,9 +121,10 @@ def test_terms_have_mean_zero(name):
     else:
         x = target.exact_draws(8000, rng).reshape(4, 2000, -1)
         g = gradients_at(target, x)
-    frame = Frame(x.reshape(-1, x.shape[2]), g.reshape(-1, x.shape[2]), mix=True)
+    frame = Frame(x.reshape(-1, x.shape[2]), g.reshape(-1, x.shape[2]))
+    frame.unmix()
     assert frame.mixed == (name == "normal")
-    rows, _ = frame.terms(2, range(len(frame)), range(len(frame)))
+    rows = terms_at(frame.y, frame.gy, 2, range(len(frame)), range(len(frame)))
     family = [stat_checks.compare_mean(row.reshape(x.shape[:2]), 0.0, what=f"term {k}") for k, row in enumerate(rows)]
     stat_checks.assert_all(family, 1e-4)
 
@@ -137,6 +141,8 @@ def test_tail_index_tells_variance_from_none():
     assert (tail_index(rng.standard_t(2, (50, 4000))) < HEAVY).sum() <= 20
     assert tail_index((rng.random(4000) < 0.05).astype(float)) == -np.inf
     assert tail_index(np.ones(4000)) == -np.inf
+    squares = tail_indices(heavy[:3], (1.0, 2.0))
+    np.testing.assert_allclose(squares, [tail_index(heavy[:3]), tail_index(heavy[:3] ** 2)], rtol=1e-10)
 
 
 def test_index_of_a_power_law():
@@ -149,23 +155,44 @@ def test_index_of_a_power_law():
 # ---- fitting ----
 
 
-@given(st.integers(1, 12), st.integers(8, 90))
-def test_folds_and_batches_cut_the_row(chains, n):
+@given(st.integers(1, 12), st.one_of(st.integers(8, 90), st.integers(900, 3000)))
+def test_blocks_folds_and_batches_cut_the_row(chains, n):
     layout = Layout(chains, n)
-    assert layout.folds[0].start == 0
-    assert layout.folds[-1].stop == chains * n
+    row = np.arange(chains * n, dtype=float)[None]
+    blocks, columns = layout.blocks(row)[0], layout.columns(row)[0]
+    np.testing.assert_allclose(blocks, columns.mean(axis=0), rtol=1e-14)
+    assert blocks.size == layout.count
+    # Blocks hold successive draws of one chain; all but a few draws at the start of a chain are in one.
+    np.testing.assert_array_equal(np.diff(columns, axis=0), 1)
+    assert np.all(columns[0] // n == columns[-1] // n)
+    assert chains * n - columns.size == chains * layout.skipped < chains * layout.pieces * layout.length
+    assert layout.length == 1 or layout.count >= 0.9 * min(4000, 100 * chains)
+    assert [(f.start, f.stop) for f in layout.folds][:: len(layout.folds) - 1] == [
+        (0, layout.folds[0].stop), (layout.folds[-1].start, layout.count)]
     for a, b in zip(layout.folds[:-1], layout.folds[1:], strict=True):
         assert a.stop == b.start
-    row = np.arange(chains * n, dtype=float)[None]
-    means = layout.means(row)[0]
-    assert layout.batches[-1].stop == len(means) == layout.count
+    means = layout.means(blocks[None])[0]
+    assert layout.batches[-1].stop == len(means)
     assert np.all(np.diff(means) > 0)
     for fold, batches in zip(layout.folds, layout.batches, strict=True):
-        inside = means[batches]
-        assert fold.start <= inside[0]
-        assert inside[-1] <= fold.stop - 1
-    # A batch is of one chain.
-    assert np.all(np.floor((means - (layout.length - 1) / 2) / n) == np.floor((means + (layout.length - 1) / 2) / n))
+        assert np.all((means[batches] >= blocks[fold.start]) & (means[batches] <= blocks[fold.stop - 1]))
+
+
+@pytest.mark.parametrize("degree", [2, 3])
+def test_terms_are_averaged_over_blocks_and_heavy_ones_are_known(degree):
+    rng = np.random.default_rng(7)
+    y, gy = rng.standard_normal((2, 16000)), rng.standard_normal((2, 16000))
+    gy[1] = rng.standard_cauchy(16000)
+    layout = Layout(4, 4000)
+    assert layout.length == 4
+    terms = Terms(layout.columns(y), layout.columns(gy), degree, range(2), range(2), layout)
+    rows = terms_at(y, gy, degree, range(2), range(2))
+    np.testing.assert_allclose(terms.blocks / terms.scale[:, None], layout.blocks(rows), rtol=1e-12, atol=1e-12)
+    np.testing.assert_allclose(terms.blocks.std(axis=1), 1, rtol=1e-12)
+    # Without the second gradient: g_0 and y_0 g_0 + 1, and y_0^2 g_0 + 2 y_0 of degree 3.
+    assert terms.light.sum() == degree
+    assert terms.chosen(2, heavy=False).tolist() == [0, 2]
+    assert terms.chosen(2, heavy=True).tolist() == [0, 1, 2, 3, 4]
 
 
 def test_coefficients_never_see_the_draws_they_are_applied_to(monkeypatch):
@@ -173,13 +200,14 @@ def test_coefficients_never_see_the_draws_they_are_applied_to(monkeypatch):
     monkeypatch.setattr("fellwalk.terms.PENALTIES", (1e-2,))
     rng = np.random.default_rng(4)
     x = rng.standard_normal((4, 300, 2))
-    frame, layout = Frame(x.reshape(-1, 2), -x.reshape(-1, 2), mix=False), Layout(4, 300)
-    terms = Terms(*frame.terms(2, range(2), range(2)), layout)
+    frame, layout = Frame(x.reshape(-1, 2), -x.reshape(-1, 2)), Layout(4, 300)
+    terms = Terms(layout.columns(frame.y), layout.columns(frame.gy), 2, range(2), range(2), layout)
     values = rng.standard_normal((1, 1200)) + x[..., 0].reshape(1, -1)
     changed = values.copy()
     changed[:, layout.folds[5]] += 100 * rng.standard_normal(150)
     every = list(range(len(layout.folds)))
-    for b, c, k in zip(terms.fit(values, 2, every), terms.fit(changed, 2, every), every, strict=True):
+    chosen = terms.chosen(2, heavy=False)
+    for b, c, k in zip(*(terms.fit(terms.products(v), chosen, every) for v in (values, changed)), every, strict=True):
         # To rounding: sums over all folds are taken and the fold's own, a hundred times as large, taken off again.
         assert np.allclose(b, c, rtol=1e-9, atol=1e-12) == (k == 5)
 

@@ -18,6 +18,7 @@ from fellwalk import table
 from fellwalk.errors import ArgumentError
 from fellwalk.identities import IdentityCheck
 from fellwalk.sharpen import CANDIDATES, Sharpener
+from fellwalk.tails import tail_indices
 
 Array = NDArray[np.float64]
 
@@ -181,8 +182,11 @@ class _Sharper:
         series[0] = y
         np.square(y - centre[:, None, None], out=series[1])
         for k, level in enumerate(self.at, start=2):
-            np.less_equal(y, np.quantile(ordered, level, axis=1)[:, None, None], out=series[k])
-        found = sharpener.sharpen(series.reshape(-1, *y.shape[1:]))
+            np.less_equal(y, _at_level(ordered, level)[:, None, None], out=series[k])
+        # A share of draws is bounded, an event too.
+        index = np.full(series.shape[:2], -np.inf)
+        index[:2, ~event] = tail_indices((y[~event] - centre[~event, None, None]).reshape(-1, y[0].size), (1.0, 2.0))
+        found = sharpener.sharpen(series.reshape(-1, *y.shape[1:]), index.reshape(-1))
         mean, error, by, plain = (a.reshape(len(series), count) for a in (found.mean, found.error, found.by, found.raw))
 
         won = by[0] > 0
@@ -203,7 +207,7 @@ class _Sharper:
             shifted = np.clip(level + plain[k] - mean[k], 0.0, 1.0)
             for i in np.flatnonzero(won):
                 worth = np.array([level * (1 - level) / max(error[k, i], 1e-12) ** 2])
-                value[part[i]] = np.ldexp(np.quantile(ordered[i], shifted[i]), exponent[i]) + origin[i]
+                value[part[i]] = np.ldexp(_at_level(ordered[i], shifted[i]), exponent[i]) + origin[i]
                 wide = ac.quantile_error(ordered[i : i + 1], float(np.clip(shifted[i], 1e-9, 1 - 1e-9)), worth)
                 value_error[part[i]] = np.ldexp(wide[0], exponent[i])
                 value_by[part[i]], value_worth[part[i]] = by[k, i], worth[0]
@@ -220,3 +224,11 @@ class _Sharper:
         return Estimates(raw.names, raw.chains, raw.draws_per_chain, numbers["estimate"], numbers["error"], worth,
                          words(self.by), numbers["spread"], numbers["spread_error"], words(self.spread_by), levels, raw,
                          raw.checked)
+
+
+def _at_level(ordered: Array, level: float) -> Array:
+    """Quantiles of sorted draws (..., N), between neighbours as `numpy.quantile` takes them."""
+    place = float(level) * (ordered.shape[-1] - 1)
+    below = min(int(place), ordered.shape[-1] - 2)
+    part = place - below
+    return ordered[..., below] * (1 - part) + ordered[..., below + 1] * part

@@ -16,7 +16,8 @@ from numpy.typing import NDArray
 from scipy import special
 
 from fellwalk import autocorrelation as ac
-from fellwalk.stein import HEAVY, Frame, tail_index
+from fellwalk.stein import Frame
+from fellwalk.tails import HEAVY, tail_index
 
 Array = NDArray[np.float64]
 
@@ -62,11 +63,14 @@ class IdentityCheck:
         return self.checked > 0 and not self.alarms
 
 
-def check_identities(x: Array, g: Array) -> IdentityCheck:
-    """Check draws x with gradients g, both (chains, n, dimension), of the same density in the same coordinates."""
+def check_identities(x: Array, g: Array, frame: Frame | None = None) -> IdentityCheck:
+    """Check draws x with gradients g, both (chains, n, dimension), of the same density in the same coordinates.
+
+    frame: `fellwalk.stein.Frame` of these, where it is at hand.
+    """
     chains, n, dimension = x.shape
     with np.errstate(all="ignore"):
-        frame = Frame(x.reshape(-1, dimension), g.reshape(-1, dimension), mix=False)
+        frame = frame or Frame(x.reshape(-1, dimension), g.reshape(-1, dimension))
         if not len(frame) or n < 2 * BATCHES:
             return IdentityCheck(0, 0, (), "too few draws, or none that differ")
         return _check(frame, chains, n)

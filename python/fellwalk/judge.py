@@ -27,6 +27,7 @@ from fellwalk.judge_input import (
 )
 from fellwalk.judgement import Judgement
 from fellwalk.sharpen import Sharpener
+from fellwalk.stein import Frame
 
 LEVELS = {"low": 0.05, "middle": 0.5, "high": 0.95}
 MOST_SHARPENED = 1000  # parameters: beyond, only what is asked for by `fellwalk.Result.estimate` is sharpened
@@ -249,12 +250,15 @@ def prepare(
     if failure is not None and np.isin(failure, EDGE_CODES).any():
         why = "paths met an edge of the support, where the identities that sharpening rests on need not hold"
         return IdentityCheck(0, 0, (), why), None, f"Not sharpened: {why}."
-    checked = check_identities(*pair)
+    x, g = pair
+    with np.errstate(all="ignore"):
+        frame = Frame(x.reshape(-1, x.shape[2]), g.reshape(-1, x.shape[2]))
+    checked = check_identities(x, g, frame)
     if checked.alarms:
         return checked, None, "Not sharpened: draws and gradients contradict each other (see the verdict)."
     if not checked.passed:
         return checked, None, "Not sharpened: too few effective draws to check draws and gradients against each other."
-    return checked, Sharpener(*pair, choice), ""
+    return checked, Sharpener(x, g, choice, frame), ""
 
 
 def _credited(numbers: dict[str, np.ndarray], best: Estimates) -> dict[str, np.ndarray]:

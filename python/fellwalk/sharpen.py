@@ -20,7 +20,8 @@ from scipy import special
 
 from fellwalk import autocorrelation as ac
 from fellwalk import lags
-from fellwalk.stein import HEAVY, Frame, tail_index
+from fellwalk.stein import Frame
+from fellwalk.tails import HEAVY, tail_index
 from fellwalk.terms import Layout, Terms
 
 Array = NDArray[np.float64]
@@ -59,11 +60,21 @@ class Sharpened:
 
 
 @dataclass(frozen=True, eq=False)
+class _Served:
+    """Terms, the folds that they may be applied to, and their products with the values."""
+
+    terms: Terms
+    serves: list[int]
+    products: tuple[Array, Array]
+
+
+@dataclass(frozen=True, eq=False)
 class _Try:
     """One candidate fitted to all values: its terms with the folds they serve, coefficients for each, what is left of
     the batch means (values, batches), and the variance that fitting adds to the mean."""
 
     level: int
+    heavy: bool
     served: list[tuple[Terms, list[int], Array]]
     left: Array
     fitting: Array
@@ -73,65 +84,65 @@ class Sharpener:
     """Fits terms made from draws and gradients, both (chains, n, dimension), in the coordinates of the gradients.
 
     choice: "auto" tries all candidates and takes the best; the name of one takes that, better or not, wherever there
-    are draws enough to fit it.
+    are draws enough to fit it. frame: that of these draws and gradients, where it is at hand; it is changed.
     """
 
-    def __init__(self, x: Array, g: Array, choice: str = "auto") -> None:
+    def __init__(self, x: Array, g: Array, choice: str = "auto", frame: Frame | None = None) -> None:
         self.chains, self.n, self.dimension = x.shape
         self.forced = choice != "auto"
         self.levels = [CANDIDATES.index(choice)] if self.forced else [1, 2, 3]
-        self._x, self._g = x.reshape(-1, self.dimension), g.reshape(-1, self.dimension)
         self.layout = Layout(self.chains, self.n)
-
-    @cached_property
-    def frame(self) -> Frame:
-        """Draws and gradients in coordinates fit for terms."""
         with np.errstate(all="ignore"):
-            return Frame(self._x, self._g, mix=self.dimension <= ALL_PAIRS)
+            frame = frame or Frame(x.reshape(-1, self.dimension), g.reshape(-1, self.dimension))
+            if self.dimension <= ALL_PAIRS:
+                frame.unmix()
+        self.coordinates = len(frame)
+        self._y, self._gy = self.layout.columns(frame.y), self.layout.columns(frame.gy)
 
     @cached_property
     def _all_terms(self) -> Terms:
-        every = range(len(self.frame))
+        every = range(self.coordinates)
         degree = min(max(self.levels), 3 if len(every) <= ALL_TRIPLES else 2)
-        return Terms(*self.frame.terms(degree, every, every), self.layout)
+        return Terms(self._y, self._gy, degree, every, every, self.layout)
 
     def _terms(self, values: Array) -> list[tuple[Terms, list[int]]]:
         """Terms with the folds that they may be applied to. Which coordinates matter is found out in other folds."""
         every = list(range(len(self.layout.folds)))
-        if len(self.frame) <= ALL_PAIRS:
+        if self.coordinates <= ALL_PAIRS:
             return [(self._all_terms, every)]
         made = []
         for parity in (0, 1):
             linear, paired = self._choose(values, every[1 - parity :: 2])
-            rows, ends = self.frame.terms(min(max(self.levels), 2), linear, paired)
-            made.append((Terms(rows, ends, self.layout), every[parity::2]))
+            terms = Terms(self._y, self._gy, min(max(self.levels), 2), linear, paired, self.layout)
+            made.append((terms, every[parity::2]))
         return made
 
     def _choose(self, values: Array, seen: list[int]) -> tuple[NDArray[np.int64], NDArray[np.int64]]:
-        """Coordinates for linear terms and for pairs: those whose own terms explain most of values in some folds."""
-        frame, folds = self.frame, [self.layout.folds[k] for k in seen]
-        f = _standard(np.concatenate([values[:, s] for s in folds], axis=1))
-        slopes = _standard(np.concatenate([frame.gy[:, s] for s in folds], axis=1))
-        squares = _standard(np.concatenate([frame.y[:, s] * frame.gy[:, s] for s in folds], axis=1))
-        count = f.shape[1]
-        straight = (((slopes @ f.T) / count) ** 2).max(axis=1)
-        curved = (((squares @ f.T) / count) ** 2).sum(axis=1)
+        """Coordinates for linear terms and for pairs: those whose own terms explain most of values (q, blocks) in some
+        folds, by one draw of each block."""
+        at = np.concatenate([np.arange(f.start, f.stop) for f in (self.layout.folds[k] for k in seen)])
+        y, gy = self._y[:, 0, at], self._gy[:, 0, at]
+        f = _standard(values[:, at])
+        straight = (((_standard(gy) @ f.T) / len(at)) ** 2).max(axis=1)
+        curved = (((_standard(y * gy) @ f.T) / len(at)) ** 2).sum(axis=1)
         order = np.argsort(-straight, kind="stable")[:MOST_LINEAR]
         return np.sort(order), np.sort(np.argsort(-curved, kind="stable")[:MOST_PAIRED])
 
-    def sharpen(self, values: Array) -> Sharpened:
-        """The means of values (q, chains, n) of the draws."""
+    def sharpen(self, values: Array, index: Array | None = None) -> Sharpened:
+        """The means of values (q, chains, n) of the draws; index: their tail indices, where these are at hand."""
         flat = values.reshape(len(values), -1)
-        centre = flat[:, 0] + np.mean(flat - flat[:, :1], axis=1)
-        f = flat - centre[:, None]
+        index = tail_index(flat) if index is None else index
+        centre, f = flat.mean(axis=1), self.layout.blocks(flat)
+        f -= centre[:, None]
         spread = np.sqrt(np.einsum("qn,qn->q", f, f) / f.shape[1])
+        spread[spread < 1e-13 * np.abs(centre)] = 0
         f /= np.where(spread > 0, spread, 1.0)[:, None]
         count = len(f)
         mean, error, by = np.zeros(count), np.full(count, np.nan), np.zeros(count, dtype=np.int64)
         taken, taken_error = np.zeros(count), np.zeros(count)
-        if f.shape[1] >= FEWEST and len(self.frame) and len(self.layout.folds) > 1:
-            plain, doubt = self._rate(self.layout.means(f)), _tailed(f)
-            for chosen, which in self._compete(f, plain, doubt):
+        if flat.shape[1] >= FEWEST and self.coordinates and len(self.layout.folds) > 1:
+            plain, doubt = self._rate(self.layout.means(f)), _doubt(index)
+            for chosen, which in self._compete(f, plain, doubt, (flat, centre, spread)):
                 parts = self._finish(f[which], chosen, which, doubt[which])
                 good = (spread[which] > 0) & (self.forced | (parts[1] < WORTHWHILE * plain[which])) & ~parts[4]
                 at = which[good]
@@ -141,77 +152,94 @@ class Sharpener:
         return Sharpened(centre + spread * mean, np.maximum(spread * error, floor), by, centre, spread * taken,
                          spread * taken_error)
 
-    def _compete(self, f: Array, plain: Array, doubt: Array) -> Iterator[tuple[_Try, NDArray[np.int64]]]:
+    def _compete(
+        self, f: Array, plain: Array, doubt: Array, draws: tuple[Array, Array, Array]
+    ) -> Iterator[tuple[_Try, NDArray[np.int64]]]:
         """The candidates that are best for some values, by the errors of held-out batches, with these values."""
         least, best = plain.copy(), np.full(len(f), -1)
         tries: list[_Try] = []
-        for terms, level in self._candidates(f):
-            tried = self._fit(f, terms, level)
+        batches = self.layout.means(f)
+        for terms, level, heavy in self._candidates(f):
+            tried = self._fit(batches, terms, level, heavy)
             if tried is None:
                 continue
             rated = np.sqrt(self._rate(tried.left) ** 2 + tried.fitting) * _skewed(tried.left) * doubt
             wins = (rated < WORTHWHILE * least) | (self.forced & (best < 0))
-            if terms[0][0].heavy and wins.any():
+            if heavy and wins.any():
                 # One by one such terms may have no variance; what is taken off in the end must show one.
-                wins[wins] = tail_index(f[wins] - self._series(f[wins], tried, np.flatnonzero(wins))) < HEAVY
+                which = np.flatnonzero(wins)
+                wins[wins] = tail_index(self._left_at_draws(tried, which, *draws)) < HEAVY
             least[wins], best[wins] = rated[wins], len(tries)
             tries.append(tried)
         for k, tried in enumerate(tries):
             if (best == k).any():
                 yield tried, np.flatnonzero(best == k)
 
-    def _candidates(self, f: Array) -> Iterator[tuple[list[tuple[Terms, list[int]]], int]]:
+    def _candidates(self, f: Array) -> Iterator[tuple[list[_Served], int, bool]]:
         """Terms and degrees, the poorer first; terms with heavy tails last, and only where there are any."""
-        terms = self._terms(f)
-        yield from ((terms, level) for level in self.levels)
-        if any(some.dropped for some, _ in terms):
-            again = [(Terms(some.rows, some.ends, self.layout, heavy=True), serves) for some, serves in terms]
-            yield from ((again, level) for level in self.levels)
+        terms = [_Served(some, serves, some.products(f)) for some, serves in self._terms(f)]
+        for heavy in (False, True) if any(some.terms.dropped for some in terms) else (False,):
+            yield from ((terms, level, heavy) for level in self.levels)
 
-    def _fit(self, f: Array, terms: list[tuple[Terms, list[int]]], level: int) -> _Try | None:
+    def _fit(self, batches: Array, terms: list[_Served], level: int, heavy: bool) -> _Try | None:
         """Coefficients up to a degree, or None where there are no such terms or too few draws for them."""
-        if any(level > len(some.sizes) or not self._affordable(some, level) for some, _ in terms):
+        if any(level > len(some.terms.sizes) or not self._affordable(some.terms, level, heavy) for some in terms):
             return None
-        batches, left = self.layout.means(f), np.empty((len(f), self.layout.count))
+        left = np.empty_like(batches)
         served, moved = [], []
-        for some, serves in terms:
-            p = some.sizes[level - 1]
-            coefficients = some.fit(f, level, serves)
-            average = some.batches[:p].mean(axis=1)
-            for b, k in zip(coefficients, serves, strict=True):
+        for some in terms:
+            coefficients = some.terms.fit(some.products, some.terms.chosen(level, heavy), some.serves)
+            mine = some.terms.batches[: coefficients.shape[1]]
+            average = mine.mean(axis=1)
+            for b, k in zip(coefficients, some.serves, strict=True):
                 part = self.layout.batches[k]
-                left[:, part] = batches[:, part] - b.T @ some.batches[:p, part]
+                left[:, part] = batches[:, part] - b.T @ mine[:, part]
                 moved.append(b.T @ average)
-            served.append((some, serves, coefficients))
+            served.append((some.terms, some.serves, coefficients))
         # How far the mean of all draws would move with coefficients from other folds: the jackknife's variance.
         moves = np.array(moved)
         fitting = (len(moves) - 1) / len(moves) * ((moves - moves.mean(axis=0)) ** 2).sum(axis=0)
-        return _Try(level, served, left, fitting)
+        return _Try(level, heavy, served, left, fitting)
 
-    def _affordable(self, terms: Terms, level: int) -> bool:
-        p = terms.sizes[level - 1]
-        poorer = terms.sizes[level - 2] if level > 1 else 0
-        return p > poorer and DRAWS_PER_TERM * p <= self.chains * self.n
+    def _affordable(self, terms: Terms, level: int, heavy: bool) -> bool:
+        p = len(terms.chosen(level, heavy))
+        poorer = len(terms.chosen(level - 1, heavy)) if level > 1 else 0
+        if heavy and p == len(terms.chosen(level, False)):
+            return False
+        return p > poorer and DRAWS_PER_TERM * p <= self.layout.count
 
     def _series(self, f: Array, tried: _Try, which: NDArray[np.int64]) -> Array:
-        """What is left of the values f (q, N), which stand at `which` among all, draw by draw."""
+        """What is left of the values f (q, blocks), which stand at `which` among all, block by block."""
         series = np.empty_like(f)
         for some, serves, coefficients in tried.served:
             for b, k in zip(coefficients, serves, strict=True):
                 fold = self.layout.folds[k]
-                np.subtract(f[:, fold], some.applied(b[:, which], fold), out=series[:, fold])
+                series[:, fold] = f[:, fold] - b[:, which].T @ some.blocks[: len(b), fold]
         return series
+
+    def _left_at_draws(
+        self, tried: _Try, which: NDArray[np.int64], flat: Array, centre: Array, spread: Array
+    ) -> Array:
+        """What is left of some values at the first draw of each block; flat, centre, spread: of all values."""
+        f = self.layout.first(flat[which]) - centre[which, None]
+        f /= np.where(spread > 0, spread, 1.0)[which, None]
+        for some, serves, coefficients in tried.served:
+            for b, k in zip(coefficients, serves, strict=True):
+                fold, top = self.layout.folds[k], len(b)
+                f[:, fold] -= (b[:, which] * some.scale[:top, None]).T @ some.sample[:top, fold]
+        return f
 
     def _finish(self, f: Array, tried: _Try, which: NDArray[np.int64], doubt: Array) -> tuple[Array, ...]:
         """Mean and error of what is left, mean and error of what was taken off, and if that contradicts the draws."""
         series = self._series(f, tried, which)
         mean = series.mean(axis=1)
         error = np.sqrt(self._error(series) ** 2 + tried.fitting[which]) * _skewed(tried.left[which]) * doubt
-        off, off_error = -mean, self._rate(self.layout.means(f) - tried.left[which])
+        taken = self.layout.means(f) - tried.left[which]
+        off, off_error = f.mean(axis=1) - mean, self._rate(taken)
         # If the mean of what was taken off is not zero within its error, then the draws do not belong to these
         # gradients, and a small error would only hide it.
         with np.errstate(all="ignore"):
-            chance = 2 * special.stdtr(self.layout.count / 4, -np.abs(off) / off_error)
+            chance = 2 * special.stdtr(taken.shape[1] / 4, -np.abs(off) / off_error)
         return mean, error, off, off_error, chance < FALSE_ALARM / max(len(tried.left), 1)
 
     def _rate(self, batches: Array) -> Array:
@@ -219,9 +247,9 @@ class Sharpener:
         return batches.std(axis=1, ddof=1) / np.sqrt(batches.shape[1])
 
     def _error(self, series: Array) -> Array:
-        """Monte Carlo standard errors of the means of series (q, chains * n), as `fellwalk.judge` has them."""
+        """Monte Carlo standard errors of the means of series (q, blocks), as `fellwalk.judge` has them."""
         with np.errstate(all="ignore"):
-            worth = lags.effective_size(ac.split(series.reshape(len(series), self.chains, self.n)))
+            worth = lags.effective_size(ac.split(series.reshape(len(series), self.chains, -1)))
         return series.std(axis=1, ddof=1) / np.sqrt(np.where(np.isfinite(worth), worth, 1.0))
 
 
@@ -243,13 +271,13 @@ def _skewed(batches: Array) -> Array:
     return 1 + np.maximum(lack, 0) / batches.shape[1]
 
 
-def _tailed(values: Array) -> Array:
-    """By what errors of sharpened means of values (q, N) must grow where the fourth moment of the values is in doubt.
+def _doubt(index: Array) -> Array:
+    """By what errors of sharpened means must grow where the fourth moment of the values is in doubt, by tail index.
 
     Without that moment a variance is known badly, and the candidate whose draws happened to meet no extreme looks best.
     Nothing up to the tail index 1/4, where the moment ends; three quarters as much again from 1/2 on.
     """
-    return 1 + TAIL_GROWTH * np.clip(tail_index(values) - 0.25, 0.0, 0.25)
+    return 1 + TAIL_GROWTH * np.clip(index - 0.25, 0.0, 0.25)
 
 
 def _standard(rows: Array) -> Array:

@@ -1,4 +1,4 @@
-"""Terms of mean zero arranged for fitting: folds of draws, their sums, and coefficients by ridge regression."""
+"""Terms of mean zero arranged for fitting: blocks and folds of draws, and coefficients by ridge regression."""
 
 from __future__ import annotations
 
@@ -7,125 +7,175 @@ from itertools import pairwise
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy import linalg
+from scipy.linalg import lapack
 
-from fellwalk.stein import HEAVY, tail_index
+from fellwalk.stein import count_terms, terms_at
+from fellwalk.tails import HEAVY, tail_index
 
 Array = NDArray[np.float64]
 
 FOLDS = 8
 BATCHES = 200
-# Penalties, as a share of the number of draws, on terms of variance one. The first only keeps the factorisation alive
+# Terms and values are averaged over blocks of successive draws, at least so many blocks where there are draws enough,
+# and so many in each chain. The mean and its error are those of the draws; a fit to blocks is a fit to what counts for
+# the mean, correlations included, and costs less by the length of a block.
+BLOCKS, BLOCKS_A_CHAIN = 4000, 100
+AT_ONCE = 512  # blocks, so that their terms stay in the cache
+# Penalties, as a share of the number of blocks, on terms of variance one. The first only keeps the factorisation alive
 # where terms repeat each other.
 PENALTIES = (1e-12, 1e-2, 1.0)
-# Coefficients are fitted on every k-th draw, k as large as leaves so many draws for each term, and so many in all: what
-# that adds to the variance, about one part in so many, is less than the time it saves.
-DRAWS_FITTED, LEAST_FITTED = 20, 4000
-TAILS_SEEN = 5000  # draws on which tails and variances of terms are looked at
 
 
 class Layout:
-    """How a row of chains * n draws is cut: chains into segments, these into folds (for fitting) and batches (for
-    errors).
+    """How chains of n draws are cut: chains into segments, these into blocks, a number of blocks into batches.
 
-    folds: slices of the row, about FOLDS; segments lie in one chain, and a fold is one segment, or where there are many
-    chains several of them. batches in one segment are equally long, about BATCHES in all.
+    length: draws in a block. count: blocks in all, chain after chain in time. folds: slices of the blocks, about FOLDS,
+    for fitting: a segment, or where there are many chains several chains. batches: for each fold its slice of the batch
+    means, about BATCHES in all, for errors. The first draws of a chain that fill no block (fewer than one block for
+    each segment) are left out.
     """
 
     def __init__(self, chains: int, n: int) -> None:
         self.chains, self.n = chains, n
-        pieces = 1 if chains >= FOLDS else max(2, -(-FOLDS // chains))
-        self.segment = n // pieces
-        self.pieces = pieces
-        starts = np.arange(chains)[:, None] * n + np.arange(pieces) * self.segment + (n - pieces * self.segment)
-        starts[:, 0] = np.arange(chains) * n  # the first piece of a chain takes what is left over
-        edges = [*starts.reshape(-1).tolist(), chains * n]
-        groups = np.array_split(np.arange(chains * pieces), min(FOLDS, chains)) if pieces == 1 else None
-        if groups is not None:
-            edges = [*(edges[group[0]] for group in groups), chains * n]
-        self.folds = [slice(a, b) for a, b in pairwise(edges)]
-        self.length = max(1, chains * pieces * self.segment // BATCHES)
-        each = self.segment // self.length
-        self.count = chains * pieces * each
-        sizes = [len(group) * each for group in groups] if groups is not None else [each] * len(self.folds)
-        ends = np.cumsum([0, *sizes]).tolist()
-        self.batches = [slice(a, b) for a, b in pairwise(ends)]
+        self.pieces = min(1 if chains >= FOLDS else max(2, -(-FOLDS // chains)), n)
+        self.length = max(1, min(chains * n // BLOCKS, n // BLOCKS_A_CHAIN))
+        self.segment = n // (self.pieces * self.length)  # blocks
+        self.count = chains * self.pieces * self.segment
+        self.skipped = n - self.pieces * self.segment * self.length
+        segments = np.arange(chains * self.pieces)
+        groups = np.array_split(segments, min(FOLDS, chains) if self.pieces == 1 else len(segments))
+        self.batch = max(1, self.count // BATCHES)
+        self.each = self.segment // self.batch
+        edges = [0, *(int(group[-1]) + 1 for group in groups)]
+        self.folds = [slice(a * self.segment, b * self.segment) for a, b in pairwise(edges)]
+        self.batches = [slice(a * self.each, b * self.each) for a, b in pairwise(edges)]
 
-    def means(self, rows: Array) -> Array:
-        """Batch means (rows, batches) of rows (rows, chains * n); batches of fold k are those at `batches[k]`."""
-        count = len(rows)
-        shaped = rows.reshape(count, self.chains, self.n)[:, :, self.n - self.pieces * self.segment :]
-        shaped = shaped.reshape(count, self.chains * self.pieces, self.segment)
-        each = self.segment // self.length
-        kept = shaped[:, :, self.segment - each * self.length :].reshape(count, self.count, self.length)
-        return kept.mean(axis=2)
+    def _shaped(self, rows: Array) -> Array:
+        kept = rows.reshape(len(rows), self.chains, self.n)[:, :, self.skipped :]
+        return kept.reshape(len(rows), self.chains, -1, self.length)
+
+    def columns(self, rows: Array) -> Array:
+        """(rows, length, count) of rows (rows, chains * n): [:, l] holds the draw number l of each block."""
+        moved = np.moveaxis(self._shaped(rows), 3, 1)
+        return np.ascontiguousarray(moved).reshape(len(rows), self.length, self.count)
+
+    def first(self, rows: Array) -> Array:
+        """The first draw of each block, (rows, count)."""
+        return self._shaped(rows)[..., 0].reshape(len(rows), self.count)
+
+    def blocks(self, rows: Array) -> Array:
+        """Block means (rows, count) of rows (rows, chains * n)."""
+        shaped = self._shaped(rows)
+        total = shaped[..., 0].copy()
+        for k in range(1, self.length):
+            total += shaped[..., k]
+        return total.reshape(len(rows), self.count) / self.length
+
+    def means(self, blocks: Array) -> Array:
+        """Batch means (rows, batches) of block means (rows, count); batches of fold k are those at `batches[k]`."""
+        count = len(blocks)
+        shaped = blocks.reshape(count, -1, self.segment)[:, :, self.segment - self.each * self.batch :]
+        return shaped.reshape(count, -1, self.batch).mean(axis=2)
 
 
 class Terms:
-    """Terms in the rows of one array (p, N), with sums over each fold of those that are used, at variance one.
+    """Block means (p, count) of terms, at variance one, with their sums over each fold.
 
-    ends: where the terms of degree 1, 2, ... end in the rows. sizes: how many of each degree and below are used. heavy:
-    use also terms with heavy tails; dropped: are there any, used or not.
+    y, gy: (coordinates, length, count) of `Layout.columns`; degree, linear and paired as for `fellwalk.stein.terms_at`.
+    light: which of the terms have a variance to speak of; dropped: are there any that have none.
     """
 
-    def __init__(self, rows: Array, ends: Sequence[int], layout: Layout, *, heavy: bool = False) -> None:
-        self.rows, self.ends, self.layout, self.heavy = rows, list(ends), layout, heavy
-        size = rows.shape[1]
-        thinned = rows[:, :: max(1, size // TAILS_SEEN)]
-        spread = thinned.std(axis=1)
-        sound = np.isfinite(spread) & (spread > 1e-10 * np.abs(thinned).max(axis=1, initial=0))
-        light = tail_index(thinned) < HEAVY
-        self.dropped = bool((sound & ~light).any())
-        self.used = np.flatnonzero(sound & (light | heavy))
-        self.scale = 1 / spread[self.used]
-        self.sizes = [int(np.searchsorted(self.used, end)) for end in ends]
-        self.batches = layout.means(rows)[self.used] * self.scale[:, None]
-        step = max(1, size // max(DRAWS_FITTED * len(self.used), LEAST_FITTED))
-        self.thin = [slice(f.start, f.stop, step) for f in layout.folds]
-        self.parts = [rows[self.used, f] * self.scale[:, None] for f in self.thin]
-        self.counts = np.array([part.shape[1] for part in self.parts])
-        self.sums = np.array([part.sum(axis=1) for part in self.parts])
-        self.grams = np.array([part @ part.T for part in self.parts])
+    def __init__(
+        self, y: Array, gy: Array, degree: int, linear: Sequence[int], paired: Sequence[int], layout: Layout
+    ) -> None:
+        self.layout = layout
+        ends = count_terms(degree, len(linear), len(paired))
+        self.sample, blocks = np.empty((2, ends[-1], layout.count))
+        for start in range(0, layout.count, AT_ONCE):
+            part = slice(start, start + AT_ONCE)
+            self.sample[:, part] = terms_at(y[:, 0, part], gy[:, 0, part], degree, linear, paired)
+            total = self.sample[:, part].copy()
+            for k in range(1, layout.length):
+                total += terms_at(y[:, k, part], gy[:, k, part], degree, linear, paired)
+            np.divide(total, layout.length, out=blocks[:, part])
+        spread = np.sqrt(np.maximum(np.einsum("pn,pn->p", blocks, blocks) / layout.count - blocks.mean(axis=1) ** 2, 0))
+        sound = np.isfinite(spread) & (spread > 1e-7 * np.abs(blocks).max(axis=1, initial=0))
+        self.sizes = [int(sound[:end].sum()) for end in ends]
+        if not sound.all():
+            blocks, spread, self.sample = blocks[sound], spread[sound], self.sample[sound]
+        self.scale = 1 / spread
+        blocks *= self.scale[:, None]
+        self.blocks = blocks
+        self.light = tail_index(self.sample) < HEAVY
+        self.dropped = bool((~self.light).any())
+        self.batches = layout.means(blocks)
+        self.counts = np.array([f.stop - f.start for f in layout.folds])
+        self.sums = np.array([blocks[:, f].sum(axis=1) for f in layout.folds])
+        self.grams = np.array([blocks[:, f] @ blocks[:, f].T for f in layout.folds])
 
-    def applied(self, coefficients: Array, fold: slice) -> Array:
-        """The terms of a fold times coefficients (p, q) of the first p used ones, (q, draws of the fold)."""
-        used = self.used[: len(coefficients)]
-        last = int(used[-1]) + 1
-        whole = np.zeros((coefficients.shape[1], last))
-        whole[:, used] = (coefficients * self.scale[: len(used), None]).T
-        return whole @ self.rows[:last, fold]
+    def chosen(self, level: int, heavy: bool) -> NDArray[np.int64]:
+        """The terms up to a degree, with those that have heavy tails or without."""
+        size = self.sizes[level - 1]
+        return np.arange(size) if heavy else np.flatnonzero(self.light[:size])
 
-    def fit(self, values: Array, level: int, serves: Sequence[int]) -> Array:
-        """Coefficients (folds served, p, q) for values (q, N) with terms up to a degree: each from all folds but its
-        own, and with the one penalty that leaves the least variance on the folds held out."""
-        p = self.sizes[level - 1]
-        parts = [np.ascontiguousarray(values[:, f]) for f in self.thin]
-        products = np.array([mine[:p] @ part.T for mine, part in zip(self.parts, parts, strict=True)])
-        totals = np.array([part.sum(axis=1) for part in parts])
-        grams, sums = self.grams[:, :p, :p], self.sums[:, :p]
-        whole = grams.sum(axis=0), sums.sum(axis=0), products.sum(axis=0), totals.sum(axis=0)
-        found = np.empty((len(PENALTIES), len(serves), p, len(values)))
+    def products(self, values: Array) -> tuple[Array, Array]:
+        """Sums over each fold of terms times block means of values (q, count), (folds, p, q), and of values."""
+        folds = self.layout.folds
+        return (np.array([self.blocks[:, f] @ values[:, f].T for f in folds]),
+                np.array([values[:, f].sum(axis=1) for f in folds]))
+
+    def fit(self, sums: tuple[Array, Array], chosen: NDArray[np.int64], serves: Sequence[int]) -> Array:
+        """Coefficients (folds served, p, q) for values, of which `products` are given, with the chosen terms; p is one
+        more than the last of these. Each from all folds but its own; with the one penalty that leaves the least
+        variance on held-out folds, every other one of them."""
+        top, q = int(chosen[-1]) + 1, sums[0].shape[2]
+        at = slice(0, top) if len(chosen) == top else chosen
+        grams = self.grams[:, at, at] if isinstance(at, slice) else self.grams[:, at[:, None], at]
+        parts = _Parts(grams, self.sums[:, at], sums[0][:, at], sums[1], self.counts)
+        found = {k: np.empty((len(PENALTIES), len(chosen), q)) for k in serves[::2]}
         # Less a part that is the same for all penalties.
-        left = np.zeros((len(PENALTIES), len(values)))
-        for at, k in enumerate(serves):
-            count, own = self.counts.sum() - self.counts[k], self.counts[k]
-            s, t = whole[1] - sums[k], whole[3] - totals[k]
-            gram = whole[0] - grams[k] - np.outer(s, s) / count
-            product = whole[2] - products[k] - np.outer(s, t) / count
-            own_gram = grams[k] - np.outer(sums[k], sums[k]) / own
-            own_product = products[k] - np.outer(sums[k], totals[k]) / own
+        left = np.zeros((len(PENALTIES), q))
+        for k, b in found.items():
+            count, gram, product = parts.without(k)
+            own_gram, own_product = parts.own(k)
             for which, penalty in enumerate(PENALTIES):
-                b = found[which, at] = _solve(gram, penalty * count, product)
-                left[which] += np.einsum("pq,pq->q", b, own_gram @ b - 2 * own_product)
-        each = np.arange(len(values))
-        return np.moveaxis(found[np.argmin(left, axis=0), :, :, each], 0, -1)
+                b[which] = _solve(gram, penalty * count, product)
+                left[which] += np.einsum("pq,pq->q", b[which], own_gram @ b[which] - 2 * own_product)
+        best = np.argmin(left, axis=0)
+        coefficients = np.zeros((len(serves), top, q))
+        for b, k in zip(coefficients, serves, strict=True):
+            if k in found:
+                b[at] = found[k][best, :, np.arange(q)].T
+                continue
+            solved = np.empty((len(chosen), q))
+            count, gram, product = parts.without(k)
+            for one in np.unique(best):
+                mine = np.flatnonzero(best == one)
+                solved[:, mine] = _solve(gram, PENALTIES[one] * count, product[:, mine])
+            b[at] = solved
+        return coefficients
+
+
+class _Parts:
+    """Centred sums over a fold, and over all folds but one."""
+
+    def __init__(self, grams: Array, sums: Array, products: Array, totals: Array, counts: NDArray[np.int64]) -> None:
+        self.each = (counts, grams, sums, products, totals)
+        self.whole = tuple(part.sum(axis=0) for part in self.each)
+
+    def own(self, k: int) -> tuple[Array, Array]:
+        count, gram, sums, product, total = (part[k] for part in self.each)
+        return gram - np.outer(sums, sums) / count, product - np.outer(sums, total) / count
+
+    def without(self, k: int) -> tuple[int, Array, Array]:
+        count, gram, sums, product, total = (all_of - part[k] for all_of, part in
+                                             zip(self.whole, self.each, strict=True))
+        return count, gram - np.outer(sums, sums) / count, product - np.outer(sums, total) / count
 
 
 def _solve(gram: Array, penalty: float, product: Array) -> Array:
     ridged = gram.copy()
-    ridged.flat[:: len(gram) + 1] += penalty
-    try:
-        factor = linalg.cho_factor(ridged, overwrite_a=True, check_finite=False)
-        return linalg.cho_solve(factor, product, check_finite=False)
-    except linalg.LinAlgError:
-        return np.zeros_like(product)  # leaves the value as it is
+    ridged[np.diag_indices(len(gram))] += penalty
+    # The transpose of a symmetric matrix, in the order that LAPACK works in.
+    _, solved, trouble = lapack.dposv(ridged.T, product, overwrite_a=True)
+    return solved if trouble == 0 else np.zeros_like(product)  # leaves the value as it is
