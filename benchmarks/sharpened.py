@@ -41,7 +41,8 @@ def outside(name: str, s: Study) -> list[str]:
     for i, k in zip(*np.nonzero(np.isfinite(s.true)), strict=True):
         if not (0.92 <= sharp[i, k] <= 0.98 and 0.92 <= raw[i, k] <= 0.98 and ratio[i, k] <= 1.05):
             said.append(f"- {name}, {KINDS[k]} of {s.names[i]}: sharpened {100 * sharp[i, k]:.1f}%, plain "
-                        f"{100 * raw[i, k]:.1f}%, squared error {ratio[i, k]:.2g} times the plain one")
+                        f"{100 * raw[i, k]:.1f}%, squared error {ratio[i, k]:.2g} times the plain one; called in doubt "
+                        f"in {100 * s.in_doubt[:, i, k].mean():.0f}% of the runs")
     return said
 
 

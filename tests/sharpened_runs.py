@@ -49,7 +49,8 @@ LEFT_OUT = {("funnel", "x1")}
 @dataclass
 class Study:
     """Arrays (runs, values, kinds), kinds as in KINDS; `true` is (values, kinds), NaN where nothing is known, and
-    `true_error` the error of that knowledge. by: names of the candidates, "none" for plain."""
+    `true_error` the error of that knowledge. by: names of the candidates, "none" for plain. in_doubt: was the error of
+    the plain estimate said to be without reliance, for means and sds."""
 
     names: list[str]
     true: np.ndarray
@@ -59,6 +60,7 @@ class Study:
     raw: np.ndarray
     raw_error: np.ndarray
     by: np.ndarray
+    in_doubt: np.ndarray
     broken: int
     gradients: float
 
@@ -136,6 +138,9 @@ def study(name: str, runs: int, seed: int = 0) -> Study:
         e = result.estimate(values, names, whole=True, quantiles=LEVELS)
         broken += bool(e.checked.alarms)
         gradients += result.spent["gradients"] / runs
-        found.append((*table(e), *table(e.raw or e)[:2]))
-    sharp, sharp_error, by, raw, raw_error = (np.array(part) for part in zip(*found, strict=True))
-    return Study(names, *known(target, names), sharp, sharp_error, raw, raw_error, by, broken, gradients)
+        raw = e.raw or e
+        doubt = np.zeros((len(names), len(KINDS)), dtype=bool)
+        doubt[:, 0], doubt[:, 1] = raw.in_doubt, raw.spread_in_doubt
+        found.append((*table(e), *table(raw)[:2], doubt))
+    sharp, sharp_error, by, raw, raw_error, doubt = (np.array(part) for part in zip(*found, strict=True))
+    return Study(names, *known(target, names), sharp, sharp_error, raw, raw_error, by, doubt, broken, gradients)

@@ -18,11 +18,13 @@ from fellwalk import table
 from fellwalk.errors import ArgumentError
 from fellwalk.identities import IdentityCheck
 from fellwalk.sharpen import CANDIDATES, Sharpener
-from fellwalk.tails import tail_indices
+from fellwalk.tails import widening
 
 Array = NDArray[np.float64]
 
 CHOICES = ("auto", *CANDIDATES)
+# Where so small a part of the plain error is left, heavy tails have gone with the rest.
+CERTAIN = 0.01
 # Values of so many parameters are fitted together.
 GROUP = 64
 
@@ -50,6 +52,8 @@ class Estimates:
     spread, spread_error: standard deviation and its error. quantiles: by level, each with value and error.
     by, spread_by: what the numbers come from: "none" (the draws alone), "linear", "quadratic" or "cubic" terms in the
         coordinates, fitted with the gradients at the draws.
+    in_doubt, spread_in_doubt: whether `error` and `spread_error` are themselves hardly known, since tails are heavy
+        (`fellwalk.tails`).
     raw: the same from the draws alone. checked: whether draws and gradients agree; None when no gradients were used.
     """
 
@@ -63,6 +67,8 @@ class Estimates:
     spread: Array
     spread_error: Array
     spread_by: tuple[str, ...]
+    in_doubt: NDArray[np.bool_]
+    spread_in_doubt: NDArray[np.bool_]
     quantiles: dict[float, Quantile]
     raw: Estimates | None = None
     checked: IdentityCheck | None = None
@@ -80,8 +86,9 @@ class Estimates:
     def __str__(self) -> str:
         rows = []
         for i, name in enumerate(self.names):
-            cells = [_cell(self.estimate[i], self.error[i], self.by[i]), _bare(self.error[i]),
-                     _cell(self.spread[i], self.spread_error[i], self.spread_by[i])]
+            doubt = [table.DOUBT * bool(there[i]) for there in (self.in_doubt, self.spread_in_doubt)]
+            cells = [_cell(self.estimate[i], self.error[i], self.by[i]), _bare(self.error[i]) + doubt[0],
+                     _cell(self.spread[i], self.spread_error[i], self.spread_by[i]) + doubt[1]]
             cells += [_cell(q.value[i], q.error[i], q.by[i]) for q in self.quantiles.values()]
             rows.append([name, *cells, table.worth_text(float(self.worth[i]))])
         head = ["value", "estimate", "error", "spread", *(f"{100 * level:g}%" for level in self.quantiles), "worth"]
@@ -91,6 +98,7 @@ class Estimates:
                  for row in [head, *rows]]
         used = {*self.by, *self.spread_by}.union(*(q.by for q in self.quantiles.values()))
         lines += table.wrap(table.SHARPENED) if used - {"none"} else []
+        lines += table.wrap(table.IN_DOUBT) if self.in_doubt.any() or self.spread_in_doubt.any() else []
         lines += table.wrap(self.why_not) if self.why_not else []
         return "\n".join(lines)
 
@@ -102,6 +110,7 @@ class Estimates:
         values = []
         for i, name in enumerate(self.names):
             one: dict[str, Any] = {"name": name, "by": self.by[i], "spread_by": self.spread_by[i]}
+            one |= {"in_doubt": bool(self.in_doubt[i]), "spread_in_doubt": bool(self.spread_in_doubt[i])}
             numbers = ("estimate", "error", "worth", "spread", "spread_error")
             one |= {key: plain(getattr(self, key)[i]) for key in numbers}
             one["quantiles"] = [
@@ -146,7 +155,7 @@ def estimate_all(
     nothing = ("none",) * count
     raw = Estimates(
         tuple(names), chains, n, numbers["estimate"], numbers["error"], worth, nothing, numbers["spread"],
-        numbers["spread_error"], nothing,
+        numbers["spread_error"], nothing, numbers["in_doubt"], numbers["spread_in_doubt"],
         {level: Quantile(level, value, np.where(still, 0.0, error), nothing, np.full(count, np.nan))
          for level, (value, error) in plain.items()},
         None, checked, why_not)
@@ -157,7 +166,7 @@ def estimate_all(
         part = np.arange(start, min(start + GROUP, count))
         part = part[~still[part]]
         if part.size:
-            out.take(part, x[:, :, part], numbers["event"][part], sharpener)
+            out.take(part, x[:, :, part], numbers["event"][part], widening(numbers["above_doubt"][part]), sharpener)
     return out.estimates(raw)
 
 
@@ -171,7 +180,10 @@ class _Sharper:
         self.at = {level: (q.value.copy(), q.error.copy(), np.zeros(count, int), q.worth.copy())
                    for level, q in raw.quantiles.items()}
 
-    def take(self, part: NDArray[np.int64], x: Array, event: NDArray[np.bool_], sharpener: Sharpener) -> None:
+    def take(
+        self, part: NDArray[np.int64], x: Array, event: NDArray[np.bool_], wider: Array, sharpener: Sharpener
+    ) -> None:
+        """Sharpen values `part`, of draws x (chains, n, values); wider: for errors of mean and sd, (values, 2)."""
         from fellwalk.judge import standardise
 
         y, origin, exponent = standardise(np.ascontiguousarray(np.moveaxis(x, 2, 0)))
@@ -183,11 +195,11 @@ class _Sharper:
         np.square(y - centre[:, None, None], out=series[1])
         for k, level in enumerate(self.at, start=2):
             np.less_equal(y, _at_level(ordered, level)[:, None, None], out=series[k])
-        # A share of draws is bounded, an event too.
-        index = np.full(series.shape[:2], -np.inf)
-        index[:2, ~event] = tail_indices((y[~event] - centre[~event, None, None]).reshape(-1, y[0].size), (1.0, 2.0))
-        found = sharpener.sharpen(series.reshape(-1, *y.shape[1:]), index.reshape(-1))
-        mean, error, by, plain = (a.reshape(len(series), count) for a in (found.mean, found.error, found.by, found.raw))
+        doubt = np.ones(series.shape[:2])
+        doubt[:2] = wider.T
+        found = sharpener.sharpen(series.reshape(-1, *y.shape[1:]), doubt.reshape(-1))
+        mean, error, by, plain, plain_error = (a.reshape(len(series), count) for a in (
+            found.mean, found.error, found.by, found.raw, found.raw_error))
 
         won = by[0] > 0
         at = part[won]
@@ -204,9 +216,12 @@ class _Sharper:
         for k, (level, (value, value_error, value_by, value_worth)) in enumerate(self.at.items(), start=2):
             won = (by[k] > 0) & ~event
             # The share of draws below the plain quantile is off by what sharpening says; so is the level to look at.
+            # The draws between the two say how far apart they are, and their share is off by an error of its own.
             shifted = np.clip(level + plain[k] - mean[k], 0.0, 1.0)
+            between = np.abs(shifted - level) * plain_error[k] ** 2 / (level * (1 - level))
+            share_error = np.sqrt(error[k] ** 2 + between)
             for i in np.flatnonzero(won):
-                worth = np.array([level * (1 - level) / max(error[k, i], 1e-12) ** 2])
+                worth = np.array([level * (1 - level) / max(share_error[i], 1e-12) ** 2])
                 value[part[i]] = np.ldexp(_at_level(ordered[i], shifted[i]), exponent[i]) + origin[i]
                 wide = ac.quantile_error(ordered[i : i + 1], float(np.clip(shifted[i], 1e-9, 1 - 1e-9)), worth)
                 value_error[part[i]] = np.ldexp(wide[0], exponent[i])
@@ -222,7 +237,9 @@ class _Sharper:
         levels = {level: Quantile(level, value, error, words(by), share_worth)
                   for level, (value, error, by, share_worth) in self.at.items()}
         return Estimates(raw.names, raw.chains, raw.draws_per_chain, numbers["estimate"], numbers["error"], worth,
-                         words(self.by), numbers["spread"], numbers["spread_error"], words(self.spread_by), levels, raw,
+                         words(self.by), numbers["spread"], numbers["spread_error"], words(self.spread_by),
+                         raw.in_doubt & (numbers["error"] > CERTAIN * raw.error),
+                         raw.spread_in_doubt & (numbers["spread_error"] > CERTAIN * raw.spread_error), levels, raw,
                          raw.checked)
 
 

@@ -28,6 +28,7 @@ from fellwalk.judge_input import (
 from fellwalk.judgement import Judgement
 from fellwalk.sharpen import Sharpener
 from fellwalk.stein import Frame
+from fellwalk.tails import excess, widening
 
 LEVELS = {"low": 0.05, "middle": 0.5, "high": 0.95}
 MOST_SHARPENED = 1000  # parameters: beyond, only what is asked for by `fellwalk.Result.estimate` is sharpened
@@ -115,7 +116,8 @@ def measure(x: np.ndarray) -> dict[str, np.ndarray]:
     """All numbers for each parameter, from finite draws (chains, n, dimension).
 
     Arrays (dimension,), and (dimension, chains) for "own_worth" (effective size of each chain taken alone) and
-    "stand" (longest run of equal successive draws). "heaviest" is the largest draw's share of all squared deviations.
+    "stand" (longest run of equal successive draws), (dimension, 2) for "above_doubt" (`fellwalk.tails.excess` of draws
+    and of their squares about the mean). "heaviest" is the largest draw's share of all squared deviations.
     Constant parameters have NaN for what is then undefined.
     """
     chains, n, dimension = x.shape
@@ -168,6 +170,9 @@ def _measure_group(x: np.ndarray) -> dict[str, np.ndarray]:
     spread_error = np.where(
         square_spread > 0, square_spread / np.sqrt(_known(square_worth, constant)) / (2 * spread), 0
     )
+    above = excess(deviation.reshape(p, -1), (1.0, 2.0)).T
+    above[constant] = -np.inf
+    error, spread_error = error * widening(above[:, 0]), spread_error * widening(above[:, 1])
     numbers = {"worth": worth, "worth_mean": worth_mean, "agreement": np.fmax(centre, folded)}
     tails = []
     for name, level in LEVELS.items():
@@ -188,6 +193,7 @@ def _measure_group(x: np.ndarray) -> dict[str, np.ndarray]:
     numbers["stand"] = ac.longest_stand(y)
     numbers["distinct"] = 1 + np.sum(ordered[:, 1:] != ordered[:, :-1], axis=-1)
     numbers["constant"] = constant
+    numbers["above_doubt"], numbers["in_doubt"], numbers["spread_in_doubt"] = above, above[:, 0] > 0, above[:, 1] > 0
     numbers["heaviest"] = square.max(axis=(1, 2)) / square.sum(axis=(1, 2))
     return numbers
 
@@ -279,7 +285,9 @@ def _bounded(sharpened: np.ndarray, plain: np.ndarray) -> np.ndarray:
 
 def _with_estimates(raw: Judgement, best: Estimates) -> Judgement:
     by = {"estimate": best.by, "spread": best.spread_by}
-    numbers = {"estimate": best.estimate, "error": best.error, "spread": best.spread, "spread_error": best.spread_error}
+    numbers: dict[str, Any] = {"in_doubt": best.in_doubt, "spread_in_doubt": best.spread_in_doubt}
+    numbers |= {"estimate": best.estimate, "error": best.error}
+    numbers |= {"spread": best.spread, "spread_error": best.spread_error}
     for name, level in LEVELS.items():
         quantile = best.quantiles[level]
         by[name], numbers[name], numbers[name + "_error"] = quantile.by, quantile.value, quantile.error

@@ -26,6 +26,8 @@ class Judgement:
     worth_mean: effective sample size for the mean of the draws as they are, on which `error` rests.
     agreement: rank-normalised split R-hat, the larger one of centre and spread; NaN for a constant.
     constant, event: which parameters never vary; which are truth values, with a probability as their estimate.
+    in_doubt, spread_in_doubt: whether `error` and `spread_error`, though made wider, are hardly known since tails are
+        so heavy that what is averaged may have no fourth moment (`fellwalk.tails`).
     energy_fraction: (chains,) energy fraction of missing information, or None without facts.
     failures: how many transitions met a failed step, by status code; failed_share: their share, NaN without facts.
     spent: what the run cost; gradients_per_worth, products_per_worth, seconds_per_worth: the same for one effective
@@ -40,7 +42,8 @@ class Judgement:
 
     NUMBERS: ClassVar[tuple[str, ...]] = (
         "estimate", "error", "spread", "spread_error", "low", "low_error", "middle", "middle_error", "high",
-        "high_error", "worth", "worth_tails", "worth_mean", "agreement", "constant", "event",
+        "high_error", "worth", "worth_tails", "worth_mean", "agreement", "constant", "event", "in_doubt",
+        "spread_in_doubt",
     )  # fmt: skip
 
     names: tuple[str, ...]
@@ -62,6 +65,8 @@ class Judgement:
     agreement: Array
     constant: Array
     event: Array
+    in_doubt: Array
+    spread_in_doubt: Array
     energy_fraction: Array | None
     failures: dict[int, int]
     judged_facts: bool

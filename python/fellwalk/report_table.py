@@ -10,7 +10,7 @@ import numpy as np
 
 from fellwalk.judge import MOST_CREDIT
 from fellwalk.judgement import Judgement
-from fellwalk.table import HEADINGS, ROWS, SHARPENED, TEXTBOOK, Row, _order, _unit_notes
+from fellwalk.table import HEADINGS, IN_DOUBT, ROWS, SHARPENED, TEXTBOOK, Row, _order, _unit_notes
 from fellwalk.verdict import AGREEMENT, FIT, WORTH_PER_CHAIN, Verdict
 
 if TYPE_CHECKING:
@@ -71,6 +71,8 @@ def table_notes(judgement: Judgement, indices: Iterable[int]) -> list[str]:
     notes = [TEXTBOOK]
     if any(row.sharpened for row in rows):
         notes.append(SHARPENED)
+    if any(row.in_doubt for row in rows):
+        notes.append(IN_DOUBT)
     if needs_attention(judgement).any():
         notes.append(f"▲ short of what is asked: {WORTH_PER_CHAIN} effective draws a chain in centre and tails, and "
                      f"agreement below {AGREEMENT}.")

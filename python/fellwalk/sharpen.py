@@ -21,7 +21,7 @@ from scipy import special
 from fellwalk import autocorrelation as ac
 from fellwalk import lags
 from fellwalk.stein import Frame
-from fellwalk.tails import HEAVY, tail_index
+from fellwalk.tails import HEAVY, excess, tail_index, widening
 from fellwalk.terms import Layout, Terms
 
 Array = NDArray[np.float64]
@@ -39,7 +39,6 @@ DRAWS_PER_TERM = 8
 WORTHWHILE = 0.9
 FEWEST = 40  # draws of all chains: with fewer nothing is fitted
 FALSE_ALARM = 0.01
-TAIL_GROWTH = 3.0
 
 
 @dataclass(frozen=True, eq=False)
@@ -47,14 +46,15 @@ class Sharpened:
     """Means of several values of the draws, arrays (values,).
 
     by: number in CANDIDATES of what won, 0 where the plain mean stays. mean, error: sharpened; the error is NaN where
-    the plain mean stays. raw: the plain mean. correction, correction_error: what was taken off on average, and the
-    error of that; its expectation is zero if the draws come from the density.
+    the plain mean stays. raw, raw_error: the plain mean, its error by batch means. correction, correction_error: what
+    was taken off on average, and the error of that; its expectation is zero if the draws come from the density.
     """
 
     mean: Array
     error: Array
     by: NDArray[np.int64]
     raw: Array
+    raw_error: Array
     correction: Array
     correction_error: Array
 
@@ -128,10 +128,11 @@ class Sharpener:
         order = np.argsort(-straight, kind="stable")[:MOST_LINEAR]
         return np.sort(order), np.sort(np.argsort(-curved, kind="stable")[:MOST_PAIRED])
 
-    def sharpen(self, values: Array, index: Array | None = None) -> Sharpened:
-        """The means of values (q, chains, n) of the draws; index: their tail indices, where these are at hand."""
+    def sharpen(self, values: Array, doubt: Array | None = None) -> Sharpened:
+        """The means of values (q, chains, n) of the draws; doubt: by what their errors are to be wider, where this is
+        at hand (`fellwalk.tails.widening`)."""
         flat = values.reshape(len(values), -1)
-        index = tail_index(flat) if index is None else index
+        doubt = widening(excess(flat)[0]) if doubt is None else doubt
         centre, f = flat.mean(axis=1), self.layout.blocks(flat)
         f -= centre[:, None]
         spread = np.sqrt(np.einsum("qn,qn->q", f, f) / f.shape[1])
@@ -140,8 +141,8 @@ class Sharpener:
         count = len(f)
         mean, error, by = np.zeros(count), np.full(count, np.nan), np.zeros(count, dtype=np.int64)
         taken, taken_error = np.zeros(count), np.zeros(count)
+        plain = self._rate(self.layout.means(f)) * doubt
         if flat.shape[1] >= FEWEST and self.coordinates and len(self.layout.folds) > 1:
-            plain, doubt = self._rate(self.layout.means(f)), _doubt(index)
             for chosen, which in self._compete(f, plain, doubt, (flat, centre, spread)):
                 parts = self._finish(f[which], chosen, which, doubt[which])
                 good = (spread[which] > 0) & (self.forced | (parts[1] < WORTHWHILE * plain[which])) & ~parts[4]
@@ -149,8 +150,8 @@ class Sharpener:
                 mean[at], error[at], taken[at], taken_error[at] = (part[good] for part in parts[:4])
                 by[at] = chosen.level
         floor = np.finfo(float).eps * (np.abs(centre) + spread)
-        return Sharpened(centre + spread * mean, np.maximum(spread * error, floor), by, centre, spread * taken,
-                         spread * taken_error)
+        return Sharpened(centre + spread * mean, np.maximum(spread * error, floor), by, centre, spread * plain,
+                         spread * taken, spread * taken_error)
 
     def _compete(
         self, f: Array, plain: Array, doubt: Array, draws: tuple[Array, Array, Array]
@@ -233,6 +234,8 @@ class Sharpener:
         """Mean and error of what is left, mean and error of what was taken off, and if that contradicts the draws."""
         series = self._series(f, tried, which)
         mean = series.mean(axis=1)
+        # What is left may have heavier tails than the values have.
+        doubt = np.maximum(doubt, widening(excess(series)[0]))
         error = np.sqrt(self._error(series) ** 2 + tried.fitting[which]) * _skewed(tried.left[which]) * doubt
         taken = self.layout.means(f) - tried.left[which]
         off, off_error = f.mean(axis=1) - mean, self._rate(taken)
@@ -269,15 +272,6 @@ def _skewed(batches: Array) -> Array:
     z = 1.96
     lack = (z**4 + 2 * z**2 - 3) / 18 * skewness**2 - (z**2 - 3) / 12 * excess
     return 1 + np.maximum(lack, 0) / batches.shape[1]
-
-
-def _doubt(index: Array) -> Array:
-    """By what errors of sharpened means must grow where the fourth moment of the values is in doubt, by tail index.
-
-    Without that moment a variance is known badly, and the candidate whose draws happened to meet no extreme looks best.
-    Nothing up to the tail index 1/4, where the moment ends; three quarters as much again from 1/2 on.
-    """
-    return 1 + TAIL_GROWTH * np.clip(index - 0.25, 0.0, 0.25)
 
 
 def _standard(rows: Array) -> Array:

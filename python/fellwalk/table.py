@@ -14,10 +14,14 @@ WIDTH = 80
 ROWS = 24  # about one screen; more parameters are shown worst first, up to this many
 WIDEST_NUMBER = 8  # columns; a longer number is written less a common offset or in another unit
 HEADINGS = ("parameter", "estimate", "error", "spread", "low", "middle", "high", "worth", "agreement")
-MARK = "*"
+MARK, DOUBT = "*", "?"
 SHARPENED = (
     f"{MARK} sharpened by the gradients at the draws, which have known averages; worth is then how many independent "
     "draws would give this error."
+)
+IN_DOUBT = (
+    f"{DOUBT} without a reliable error: tails so heavy that the error, though made wider, may still be too small; low, "
+    "middle and high do not suffer from this."
 )
 TEXTBOOK = (
     "Textbook names: posterior mean, its Monte Carlo standard error, posterior standard deviation, 5%, 50% and 95% "
@@ -51,6 +55,7 @@ class Row:
         self.errors = {"estimate": float(j.error[i]), "low": float(j.low_error[i]), "middle": float(j.middle_error[i])}
         self.errors |= {"high": float(j.high_error[i])}
         self.spread, self.spread_error = float(j.spread[i]), float(j.spread_error[i])
+        self.doubt = {"estimate": DOUBT * bool(j.in_doubt[i]), "spread": DOUBT * bool(j.spread_in_doubt[i])}
         self.is_event, self.is_constant = bool(j.event[i]), bool(j.constant[i])
         self.sharpened = {key for key, by in j.by.items() if by[i] != "none"}
         self.exponent, self.offset = 0, 0.0
@@ -59,6 +64,10 @@ class Row:
         self.worth = "-" if self.is_constant else worth_text(float(j.worth[i]))
         agreement = float(j.agreement[i])
         self.agreement = "constant" if self.is_constant else _agreement(agreement)
+
+    @property
+    def in_doubt(self) -> bool:
+        return any(self.doubt.values())
 
     def _shorten(self) -> None:
         """Choose the unit from the width of the distribution, and an offset where its place is far beyond its width."""
@@ -104,8 +113,8 @@ class Row:
         shifted = {key: value - self.offset for key, value in self.places.items()}
         mark = {key: MARK if key in self.sharpened else "" for key in ("estimate", "spread", "low", "middle", "high")}
         cells = [at(shifted["estimate"], self.errors["estimate"], bool(mark["estimate"])) + mark["estimate"]]
-        cells.append(self._error(self.errors["estimate"]))
-        cells.append(at(self.spread, self.spread_error, bool(mark["spread"])) + mark["spread"])
+        cells.append(self._error(self.errors["estimate"]) + self.doubt["estimate"])
+        cells.append(at(self.spread, self.spread_error, bool(mark["spread"])) + mark["spread"] + self.doubt["spread"])
         if self.is_event:
             return [*cells, "", "", ""]
         return cells + [at(shifted[key], self.errors[key]) + mark[key] for key in ("low", "middle", "high")]
@@ -215,6 +224,8 @@ def parameters(judgement: "Judgement", all_rows: bool = False) -> str:
     lines += wrap(TEXTBOOK)
     if any(row.sharpened for row in rows):
         lines += wrap(f"{SHARPENED} By the draws alone: .raw")
+    if any(row.in_doubt for row in rows):
+        lines += wrap(IN_DOUBT)
     lines += _unit_notes(rows, short)
     if any(row.is_event for row in rows):
         lines += wrap("The estimate of a truth value is its probability.")
@@ -225,9 +236,9 @@ def _aligned(body: list[list[str]]) -> list[list[str]]:
     """Cells in which digits stand under digits where only some of a column are marked, if there is room for that."""
     padded = [list(cells) for cells in body]
     for k in range(len(padded[0])):
-        if any(cells[k].endswith(MARK) for cells in padded):
-            for cells in padded:
-                cells[k] += "" if cells[k].endswith(MARK) else " "
+        marks = [len(cells[k]) - len(cells[k].rstrip(MARK + DOUBT)) for cells in padded]
+        for cells, marked in zip(padded, marks, strict=True):
+            cells[k] += " " * (max(marks) - marked)
     taken = sum(max(len(HEADINGS[k + 1]), *(len(cells[k]) for cells in padded)) + 1 for k in range(len(HEADINGS) - 1))
     return padded if taken + 8 <= WIDTH else body
 

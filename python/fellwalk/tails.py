@@ -15,6 +15,31 @@ Array = NDArray[np.float64]
 # 1.5 96%, of 1 3%; cube of a normal 1%, normal, its square, product of two, and exponential none.
 HEAVY = 0.4
 TAIL_SHARE, TAIL_LEAST, TAIL_MOST = 0.05, 20, 500
+FEWEST = 40  # draws: of fewer nothing is said
+
+# The error of an average is in doubt where the tail index of what is averaged is above this by more than its own error:
+# from 1/4 on there is no fourth moment, and a variance is then known badly and found too small by most samples.
+# Errors grow with the index, by three quarters at most; this, and how often they cover then, was measured with
+# 400 runs of each target in benchmarks/README.md.
+DOUBTFUL, WIDER, WIDEST = 0.2, 2.5, 0.25
+
+
+def count_in_tail(draws: int) -> int:
+    """How many of so many draws are looked at."""
+    return min(int(np.clip(TAIL_SHARE * draws, TAIL_LEAST, TAIL_MOST)), draws - 1)
+
+
+def excess(values: Array, powers: Sequence[float] = (1.0,)) -> Array:
+    """By how much the tail index of powers of |values| (..., N) is above doubt, (powers, ...); positive is in doubt."""
+    draws = values.shape[-1]
+    if draws < FEWEST:
+        return np.full((len(powers), *values.shape[:-1]), -np.inf)
+    return tail_indices(values, powers) - (DOUBTFUL + count_in_tail(draws) ** -0.5)
+
+
+def widening(above: Array) -> Array:
+    """By what the error of an average grows where the tail index of what is averaged is above doubt by so much."""
+    return 1 + WIDER * np.clip(above, 0.0, WIDEST)
 
 
 def tail_index(values: Array) -> Array:
@@ -30,7 +55,7 @@ def tail_indices(values: Array, powers: Sequence[float]) -> Array:
     """`tail_index` of several powers of |values|, (powers, ...), for the price of one."""
     size = np.abs(values)
     count = size.shape[-1]
-    k = min(int(np.clip(TAIL_SHARE * count, TAIL_LEAST, TAIL_MOST)), count - 1)
+    k = count_in_tail(count)
     top = np.partition(size, count - k - 1, axis=-1)[..., count - k - 1 :]
     least = top[..., :1]
     with np.errstate(all="ignore"):
