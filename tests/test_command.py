@@ -224,6 +224,14 @@ def test_no_page_when_none_is_wanted(record, tmp_path, capsys):
     assert (status, "could not be written" in err) == (1, True)
 
 
+def test_raw_numbers_on_demand(record, capsys):
+    judgement = fw.load(record).judgement
+    assert judgement.raw is not judgement
+    for options, shown in (((), judgement), (("--raw",), judgement.raw)):
+        status, out, _ = inside(capsys, "report", record, "--no-page", *options)
+        assert (status, str(shown) in out) == (0, True)
+
+
 def test_without_the_extra_the_table_is_printed_all_the_same(record, tmp_path, capsys, monkeypatch):
     for name in [name for name in sys.modules if name.startswith(("fellwalk.report", "fellwalk.figure"))]:
         monkeypatch.delitem(sys.modules, name)

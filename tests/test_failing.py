@@ -5,6 +5,7 @@ import pytest
 
 from fellwalk.facts import FACTS
 from fellwalk.judge import judge
+from fellwalk.motions import MAX_HALVINGS
 from fellwalk.verdict import FIT, NOT_TRUSTED
 
 CHAINS, DRAWS = 4, 1000
@@ -52,3 +53,20 @@ def test_too_few_failures_say_nothing_of_a_place():
     x = draws(4)
     lowest = np.argsort(x[:, :, 0].ravel())[:7]
     assert judge(x, facts=facts(lowest, 9)).verdict.kind == FIT
+
+
+@pytest.mark.parametrize(
+    ("settings", "rate", "halved"),
+    [
+        (None, "acceptance=0.95", "halvings=5"),
+        ({"acceptance": 0.8, "motion": {"name": "leapfrog", "halvings": 0}}, "acceptance=0.95", "halvings=5"),
+        ({"acceptance": 0.95, "motion": {"name": "leapfrog", "halvings": 6}}, "acceptance=0.975", "halvings=9"),
+        ({"acceptance": 0.99, "motion": {"halvings": MAX_HALVINGS}}, "acceptance=0.995", ""),
+    ],
+)
+def test_what_is_suggested_goes_further_than_the_run(settings, rate, halved):
+    x = draws(2)
+    lowest = np.argsort(x[:, :, 1].ravel())[:12]
+    text = " ".join(judge(x, facts=facts(lowest, 9), settings=settings).verdict.reasons)
+    assert f"smaller steps ({rate})" in text
+    assert ("halved" in text, halved in text) == (bool(halved), True)

@@ -238,6 +238,33 @@ def test_what_would_fix_draws_names_the_command_and_its_cost():
     assert "Run it again" in remedies(cases.stopped(), None)[0]
 
 
+def test_the_table_says_what_is_sharpened_and_by_what():
+    def log_gamma(x):
+        return 2 * x[1] - np.exp(x[1]) - 0.5 * x[0] ** 2, np.array([-x[0], 2 - np.exp(x[1])])
+
+    density = fw.Density(log_gamma, 2, names=["plain", "log"], start=[0.0, 0.0])
+    result = fw.run(density, keep=300, seed=4, executor="here", progress="off")
+    judgement = result.judgement
+    assert judgement.by["estimate"][0] == "linear"
+    assert judgement.by["spread"][0] == "quadratic"
+    page = result.report()
+    tables = re.findall(r"<table>.*?</table>", page)
+    sharp, raw = (table for table in tables if ">worth<" in table)
+    for i, name in enumerate(result.names):
+        row = sharp[sharp.index(f'<th scope="row">{name}') :].partition("</tr>")[0]
+        by = {key: words[i] for key, words in judgement.by.items()}
+        told = re.search(r'<td class="words">(.*?)</td>', row)[1]
+        for kind in {*by.values()} - {"none"}:
+            keys = ", ".join(key for key, word in by.items() if word == kind)
+            assert told == kind or f"{kind}: {keys}" in told
+        assert (told == "") == (set(by.values()) == {"none"})
+        assert row.count("*</td>") + row.count("*?</td>") == sum(word != "none" for word in by.values())
+    assert "sharpened by" not in raw
+    assert "*" not in raw
+    assert "The same from the draws alone" in page
+    assert "The same from the draws alone" not in cases.markup().report()
+
+
 # ---- models and costs -----------------------------------------------------------------------------------------------
 
 

@@ -19,7 +19,7 @@ from fellwalk.judge import judge
 from fellwalk.sharpen import Sharpener
 from fellwalk.stein import Frame, count_terms, terms_at
 from fellwalk.tails import HEAVY, tail_index, tail_indices
-from fellwalk.terms import Layout, Terms
+from fellwalk.terms import BLOCKS, Layout, Terms
 
 
 def run(target: targets.Target, start: list[float], keep: int = 500, seed: int = 3, **settings: object) -> fw.Result:
@@ -166,7 +166,7 @@ def test_blocks_folds_and_batches_cut_the_row(chains, n):
     np.testing.assert_array_equal(np.diff(columns, axis=0), 1)
     assert np.all(columns[0] // n == columns[-1] // n)
     assert chains * n - columns.size == chains * layout.skipped < chains * layout.pieces * layout.length
-    assert layout.length == 1 or layout.count >= 0.9 * min(4000, 100 * chains)
+    assert layout.length == 1 or layout.count >= 0.9 * min(BLOCKS, 100 * chains)
     assert [(f.start, f.stop) for f in layout.folds][:: len(layout.folds) - 1] == [
         (0, layout.folds[0].stop), (layout.folds[-1].start, layout.count)]
     for a, b in zip(layout.folds[:-1], layout.folds[1:], strict=True):
@@ -184,7 +184,7 @@ def test_terms_are_averaged_over_blocks_and_heavy_ones_are_known(degree):
     y, gy = rng.standard_normal((2, 16000)), rng.standard_normal((2, 16000))
     gy[1] = rng.standard_cauchy(16000)
     layout = Layout(4, 4000)
-    assert layout.length == 4
+    assert layout.length == 5
     terms = Terms(layout.columns(y), layout.columns(gy), degree, range(2), range(2), layout)
     rows = terms_at(y, gy, degree, range(2), range(2))
     np.testing.assert_allclose(terms.blocks / terms.scale[:, None], layout.blocks(rows), rtol=1e-12, atol=1e-12)

@@ -8,6 +8,7 @@ from fellwalk.audit import Audit, audit
 from fellwalk.chain import Block, Chain
 from fellwalk.density import Density
 from fellwalk.errors import FellwalkError
+from fellwalk.estimates import Estimates
 from fellwalk.judge import judge
 from fellwalk.judgement import Judgement
 from fellwalk.motions import Jittered, Lagrangian, Leapfrog, NoUTurn
@@ -25,6 +26,7 @@ __all__ = [
     "Block",
     "Chain",
     "Density",
+    "Estimates",
     "FellwalkError",
     "Jittered",
     "Judgement",

@@ -172,6 +172,8 @@ def _parser() -> tuple[argparse.ArgumentParser, argparse.ArgumentParser]:
     report.add_argument("--no-page", action="store_true", help="only print")
     report.add_argument("--model", help="as for run; left out: the model that the record names")
     report.add_argument("--no-model", action="store_true", help="leave the model out: run none of its code")
+    report.add_argument("--raw", action="store_true", help="print the numbers of the draws alone, not sharpened by the "
+                                                           "gradients at them; the page has both")
     report.add_argument("--all", action="store_true", help="print every parameter, however many there are")
     report.add_argument("--salvage", action="store_true", help="of a damaged record, what stands before the damage")
     report.set_defaults(action=_report)
@@ -281,9 +283,12 @@ def _report(options: argparse.Namespace) -> int:
     wanted = bool(options.output) or not (options.no_page or options.json)
     page = (options.output or f"{os.path.splitext(options.record)[0]}.html") if wanted else ""
     if not options.json:
-        print(result)
-        if options.all and result.judged:
-            print(f"\n{result.judgement.table(all=True)}")
+        judgement = result.judgement if result.judged else None
+        if judgement and options.raw:
+            judgement = judgement.raw
+        print(result.heading() + (f"\n\n{judgement}" if judgement else ""))
+        if options.all and judgement:
+            print(f"\n{judgement.table(all=True)}")
         sys.stdout.flush()
     if page and not _write_page(result, page, options):
         page = ""

@@ -111,7 +111,7 @@ def _series(frame: Frame, labels: NDArray[np.int64]) -> Array:
 
 def _by_batches(frame: Frame, chains: int, n: int) -> tuple[NDArray[np.int64], Array, Array, Array]:
     """Labels (p, 2) of all terms, and for each chain and in the last column for all: means, chances by Student's t of
-    the batch means alone, and effective draws by these, each (p, chains + 1)."""
+    the batch means alone, and effective draws by these, each (p, chains + 1); a chance is 1 below two errors."""
     count, length = len(frame), n // BATCHES
     kept = slice(n - length * BATCHES, n)
     y, gy = (a.reshape(count, chains, n)[:, :, kept].reshape(count, chains * BATCHES, length).transpose(1, 0, 2)
@@ -140,11 +140,14 @@ def _by_batches(frame: Frame, chains: int, n: int) -> tuple[NDArray[np.int64], A
                                batches.var(axis=1, ddof=1) / batches.shape[1]])
     mean = np.column_stack([each.mean(axis=2), batches.mean(axis=1)])
     freedom = np.array([*[BATCHES - 1.0] * chains, chains * BATCHES - 1.0])
-    chance = 2 * special.stdtr(freedom, -np.abs(mean) / np.sqrt(squared))
+    errors = np.abs(mean) / np.sqrt(squared)
+    # Chances are dear, and those of small distances are of no interest.
+    chance, far = np.ones(errors.shape), np.isfinite(errors) & (errors > 2)
+    chance[far] = 2 * special.stdtr(np.broadcast_to(freedom, errors.shape)[far], -errors[far])
     worth = spread[:, None] / np.column_stack([np.repeat(own.mean(axis=1)[:, None], chains, axis=1), squared[:, -1]])
     if chains == 1:
         worth[:, 0] = 0.0  # the same as all together
-    return labels, mean, np.where(squared > 0, chance, 1.0), np.where(squared > 0, worth, 0.0)
+    return labels, mean, chance, np.where(squared > 0, worth, 0.0)
 
 
 def _judged(rows: Array) -> tuple[Array, Array, Array]:

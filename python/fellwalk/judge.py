@@ -53,6 +53,7 @@ def judge(
     gradients: np.ndarray | None = None,
     free_draws: np.ndarray | None = None,
     coordinates: Sequence[str] | None = None,
+    settings: Mapping[str, Any] | None = None,
 ) -> Judgement:
     """Judge draws of one or more chains.
 
@@ -66,6 +67,7 @@ def judge(
         (`fellwalk.identities`).
     free_draws: the draws in the coordinates of the gradients, where these are not those of the draws; coordinates:
         their names.
+    settings: of the run that made the draws, as `fellwalk.Result` has them; what the verdict suggests goes further.
 
     Raises ArgumentError, naming the place, for anything else. Chains are counted from 1 in everything that is printed.
     """
@@ -79,7 +81,7 @@ def judge(
     pair = checked_gradients(x if free_draws is None else free_draws, gradients, (chains, n))
     if coordinates is None and free_draws is None:
         coordinates = names
-    return _assemble(x, names, numbers, energies, failure, spent, pair, coordinates)
+    return _assemble(x, names, numbers, energies, failure, spent, pair, coordinates, settings)
 
 
 def judge_function(
@@ -92,13 +94,14 @@ def judge_function(
     gradients: np.ndarray | None = None,
     free_draws: np.ndarray | None = None,
     coordinates: Sequence[str] | None = None,
+    settings: Mapping[str, Any] | None = None,
 ) -> Judgement:
     """Judge a function of the draws: what it is on average, how it spreads, and with what error.
 
     f: called once for each draw with one read-only vector (dimension,); returns a number, a truth value (the estimate
         is then its probability) or a short vector of either, of the same length every time.
-    names: one name for each number that f returns. draws, facts, spent, gradients, free_draws, coordinates: as for
-        `judge`.
+    names: one name for each number that f returns. draws, facts, spent, gradients, free_draws, coordinates, settings:
+        as for `judge`.
 
     Raises ArgumentError when values of f differ in shape, are not numbers or not finite; what f raises comes through.
     """
@@ -106,7 +109,7 @@ def judge_function(
     if gradients is not None and free_draws is None:
         free_draws = np.asarray(draws, dtype=np.float64)
     return judge(values, names, facts=facts, spent=spent, gradients=gradients, free_draws=free_draws,
-                 coordinates=coordinates)
+                 coordinates=coordinates, settings=settings)
 
 
 # ---- what is computed -----------------------------------------------------------------------------------------------
@@ -224,6 +227,7 @@ def _assemble(
     spent: dict[str, float],
     pair: tuple[np.ndarray, np.ndarray] | None,
     coordinates: Sequence[str] | None,
+    settings: Mapping[str, Any] | None,
 ) -> Judgement:
     chains, n, _ = x.shape
     fraction = None if energies is None else energy_fractions(energies)
@@ -234,7 +238,7 @@ def _assemble(
         credited = _credited(numbers, best)
     labels = coordinates or (None if pair is None else [f"free[{i}]" for i in range(pair[0].shape[2])])
     broken = [] if checked is None else describe(checked, labels)
-    verdict = verdict_module.decide(x, names, numbers, fraction, failure, credited, broken)
+    verdict = verdict_module.decide(x, names, numbers, fraction, failure, credited, broken, settings)
     shown = {key: value for key, value in numbers.items() if key in Judgement.NUMBERS}
     failures: dict[int, int] = {}
     if failure is not None:

@@ -158,7 +158,7 @@ def _notes(judgement: Judgement | None) -> list[str]:
 
 def _table(judgement: Judgement | None) -> dict[str, Any]:
     if judgement is None:
-        return {"table": "", "all_table": "", "table_notes": [], "hidden": 0, "not_listed": 0}
+        return {"table": "", "all_table": "", "raw_table": "", "table_notes": [], "hidden": 0, "not_listed": 0}
     order = by_need(judgement)
     count = len(order)
     first = np.arange(count) if count <= ROWS else order[:ROWS]
@@ -166,6 +166,7 @@ def _table(judgement: Judgement | None) -> dict[str, Any]:
     caption = f"The {ROWS} that need attention most, worst first" if count > ROWS else "All parameters"
     return {"table": Markup(html_table(judgement, first, caption)), "hidden": len(rest),
             "all_table": Markup(html_table(judgement, np.sort(rest), "The other parameters")) if len(rest) else "",
+            "raw_table": Markup(html_table(judgement.raw, first, caption)) if judgement.raw is not judgement else "",
             "table_notes": table_notes(judgement, order[:_TABLED]), "not_listed": max(count - _TABLED, 0)}
 
 

@@ -5,6 +5,7 @@ from __future__ import annotations
 import shlex
 from typing import TYPE_CHECKING
 
+from fellwalk.failing import further
 from fellwalk.figures import number
 from fellwalk.verdict import FIT, NOT_TRUSTED
 
@@ -90,11 +91,13 @@ def remedies(result: Result, judgement: Judgement | None) -> list[str]:
 
 def _further(result: Result) -> dict[str, str]:
     """Settings one step further than those of the run, as they are to be typed: shorter steps, more halving."""
-    now, halvings = float(result.settings["acceptance"]), int(result.settings["motion"].get("halvings") or 0)
-    rate = 0.95 if now < 0.95 else round(1 - (1 - now) / 2, 4)
-    if halvings:
-        return {"rate": f"`acceptance={rate:g}`", "halved": f"more halving (`halvings={halvings + 3}`)"}
-    return {"rate": f"`acceptance={rate:g}`", "halved": "halved steps (`halvings=5`)"}
+    rate, halvings = further(result.settings)
+    halved = f"halved steps (`{halvings}`)"
+    if not halvings:
+        halved = "a smaller step size"
+    elif result.settings["motion"].get("halvings"):
+        halved = f"more halving (`{halvings}`)"
+    return {"rate": f"`{rate}`", "halved": halved}
 
 
 def _resume(result: Result, keep: int | None = None) -> str:

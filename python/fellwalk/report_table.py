@@ -50,14 +50,29 @@ def needs_attention(judgement: Judgement) -> np.ndarray:
 def html_table(judgement: Judgement, indices: Iterable[int], caption: str = "") -> str:
     """A table with the headings and the numbers of the printed one; `indices` says which parameters, in which order."""
     short = needs_attention(judgement)
-    head = "".join(f'<th scope="col">{heading}</th>' for heading in HEADINGS)
+    sharpened = any(by != "none" for words in judgement.by.values() for by in words)
+    headings = [*HEADINGS, "sharpened by"] if sharpened else HEADINGS
+    head = "".join(f'<th scope="col">{heading}</th>' for heading in headings)
     rows = []
     for i in map(int, indices):
         cells = "".join(f"<td>{escape(cell).replace('-', '−')}</td>" for cell in Row(judgement, i).cells())
         kind, sign = (' class="short"', _SIGN) if short[i] else ("", "")
+        if sharpened:
+            cells += f'<td class="words">{escape(sharpened_by(judgement, i))}</td>'
         rows.append(f'<tr{kind}><th scope="row">{escape(shown(judgement.names[i]))}{sign}</th>{cells}</tr>')
     said = f"<caption>{escape(caption)}</caption>" if caption else ""
     return f"<table>{said}<thead><tr>{head}</tr></thead><tbody>{''.join(rows)}</tbody></table>"
+
+
+def sharpened_by(judgement: Judgement, i: int) -> str:
+    """With which terms the numbers of a parameter are sharpened, as a short text; empty where none is."""
+    kinds: dict[str, list[str]] = {}
+    for key, words in judgement.by.items():
+        kinds.setdefault(words[i], []).append(key)
+    kinds.pop("none", None)
+    if len(kinds) == 1:
+        return next(iter(kinds))
+    return "; ".join(f"{kind}: {', '.join(keys)}" for kind, keys in kinds.items())
 
 
 def shown(name: str) -> str:

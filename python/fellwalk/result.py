@@ -153,7 +153,7 @@ class Result:
     def _judged_with(self) -> dict[str, Any]:
         coordinates = self.names if self.parameters is None else self.parameters.coordinates
         return {"facts": self.facts, "spent": self.spent, "gradients": self.gradients, "free_draws": self.free_draws,
-                "coordinates": coordinates}
+                "coordinates": coordinates, "settings": self.settings}
 
     def _enough(self) -> None:
         if not self.judged:

@@ -38,6 +38,7 @@ DRAWS_PER_TERM = 8
 # errors is too small by chance, and an error of 400 effective draws is itself known to a few percent.
 WORTHWHILE = 0.9
 FEWEST = 40  # draws of all chains: with fewer nothing is fitted
+MUCH_LEFT = 0.5  # of the plain error
 FALSE_ALARM = 0.01
 
 
@@ -144,7 +145,7 @@ class Sharpener:
         plain = self._rate(self.layout.means(f)) * doubt
         if flat.shape[1] >= FEWEST and self.coordinates and len(self.layout.folds) > 1:
             for chosen, which in self._compete(f, plain, doubt, (flat, centre, spread)):
-                parts = self._finish(f[which], chosen, which, doubt[which])
+                parts = self._finish(f[which], chosen, which, plain[which], doubt[which])
                 good = (spread[which] > 0) & (self.forced | (parts[1] < WORTHWHILE * plain[which])) & ~parts[4]
                 at = which[good]
                 mean[at], error[at], taken[at], taken_error[at] = (part[good] for part in parts[:4])
@@ -222,7 +223,7 @@ class Sharpener:
         self, tried: _Try, which: NDArray[np.int64], flat: Array, centre: Array, spread: Array
     ) -> Array:
         """What is left of some values at the first draw of each block; flat, centre, spread: of all values."""
-        f = self.layout.first(flat[which]) - centre[which, None]
+        f = self.layout.first(flat, which) - centre[which, None]
         f /= np.where(spread > 0, spread, 1.0)[which, None]
         for some, serves, coefficients in tried.served:
             for b, k in zip(coefficients, serves, strict=True):
@@ -230,13 +231,17 @@ class Sharpener:
                 f[:, fold] -= (b[:, which] * some.scale[:top, None]).T @ some.sample[:top, fold]
         return f
 
-    def _finish(self, f: Array, tried: _Try, which: NDArray[np.int64], doubt: Array) -> tuple[Array, ...]:
+    def _finish(
+        self, f: Array, tried: _Try, which: NDArray[np.int64], plain: Array, doubt: Array
+    ) -> tuple[Array, ...]:
         """Mean and error of what is left, mean and error of what was taken off, and if that contradicts the draws."""
         series = self._series(f, tried, which)
         mean = series.mean(axis=1)
-        # What is left may have heavier tails than the values have.
-        doubt = np.maximum(doubt, widening(excess(series)[0]))
-        error = np.sqrt(self._error(series) ** 2 + tried.fitting[which]) * _skewed(tried.left[which]) * doubt
+        error = np.sqrt(self._error(series) ** 2 + tried.fitting[which]) * _skewed(tried.left[which])
+        # Where little is taken off, what is left has the tails of the values, and may show them more clearly.
+        much = error > MUCH_LEFT * plain
+        doubt = np.where(much, np.maximum(doubt, widening(excess(series)[0])), doubt)
+        error *= doubt
         taken = self.layout.means(f) - tried.left[which]
         off, off_error = f.mean(axis=1) - mean, self._rate(taken)
         # If the mean of what was taken off is not zero within its error, then the draws do not belong to these

@@ -20,8 +20,8 @@ SHARPENED = (
     "draws would give this error."
 )
 IN_DOUBT = (
-    f"{DOUBT} without a reliable error: tails so heavy that the error, though made wider, may still be too small; low, "
-    "middle and high do not suffer from this."
+    f"{DOUBT} without a reliable error: heavy tails, so that the error, though it has been made wider, is itself not "
+    "well known; low, middle and high do not suffer from this."
 )
 TEXTBOOK = (
     "Textbook names: posterior mean, its Monte Carlo standard error, posterior standard deviation, 5%, 50% and 95% "

@@ -19,8 +19,8 @@ BATCHES = 200
 # Terms and values are averaged over blocks of successive draws, at least so many blocks where there are draws enough,
 # and so many in each chain. The mean and its error are those of the draws; a fit to blocks is a fit to what counts for
 # the mean, correlations included, and costs less by the length of a block.
-BLOCKS, BLOCKS_A_CHAIN = 4000, 100
-AT_ONCE = 512  # blocks, so that their terms stay in the cache
+BLOCKS, BLOCKS_A_CHAIN = 3000, 100
+AT_ONCE = 768  # blocks, so that their terms stay in the cache
 # Penalties, as a share of the number of blocks, on terms of variance one. The first only keeps the factorisation alive
 # where terms repeat each other.
 PENALTIES = (1e-12, 1e-2, 1.0)
@@ -59,17 +59,13 @@ class Layout:
         moved = np.moveaxis(self._shaped(rows), 3, 1)
         return np.ascontiguousarray(moved).reshape(len(rows), self.length, self.count)
 
-    def first(self, rows: Array) -> Array:
-        """The first draw of each block, (rows, count)."""
-        return self._shaped(rows)[..., 0].reshape(len(rows), self.count)
+    def first(self, rows: Array, which: NDArray[np.int64]) -> Array:
+        """The first draw of each block for some of the rows, (which, count)."""
+        return self._shaped(rows)[..., 0][which].reshape(len(which), self.count)
 
     def blocks(self, rows: Array) -> Array:
         """Block means (rows, count) of rows (rows, chains * n)."""
-        shaped = self._shaped(rows)
-        total = shaped[..., 0].copy()
-        for k in range(1, self.length):
-            total += shaped[..., k]
-        return total.reshape(len(rows), self.count) / self.length
+        return (self._shaped(rows) @ np.full(self.length, 1 / self.length)).reshape(len(rows), self.count)
 
     def means(self, blocks: Array) -> Array:
         """Batch means (rows, batches) of block means (rows, count); batches of fold k are those at `batches[k]`."""

@@ -5,8 +5,9 @@ that more of the same draws would not cure (a chain that stands still, crawls, o
 steps)? Only when both are answered well are draws called fit for use.
 """
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from scipy import special
@@ -97,12 +98,13 @@ def decide(
     failure: np.ndarray | None,
     credited: dict[str, np.ndarray] | None = None,
     broken_identities: Sequence[str] = (),
+    settings: Mapping[str, Any] | None = None,
 ) -> Verdict:
     """The verdict on finite draws (chains, n, dimension) with the numbers of `fellwalk.judge.measure`.
 
     fraction: energy fraction of each chain, failure: codes (chains, n); None where nothing is known of them.
     credited: the numbers with the worths that sharpened estimates are credited with, by which more draws are asked for.
-    broken_identities: sentences on what draws and gradients contradict.
+    broken_identities: sentences on what draws and gradients contradict. settings: of the run, where they are known.
     """
     chains, n, dimension = x.shape
     varying = np.flatnonzero(~numbers["constant"])
@@ -112,7 +114,7 @@ def decide(
         broken += [f for f in _apart(x, names, numbers, varying) if f.index not in at_fault]
         at_fault |= {finding.index for finding in broken}
         broken += [f for f in _crawling(names, numbers, varying) if f.index not in at_fault]
-        reasons = _summaries(broken, len(varying)) + failing(x, names, failure) + list(broken_identities)
+        reasons = _summaries(broken, len(varying)) + failing(x, names, failure, settings) + list(broken_identities)
         if dimension and not varying.size and not numbers["event"].any():
             reasons.append("No parameter differs between any two draws: nothing moved.")
         at_fault |= {finding.index for finding in broken}
