@@ -1,19 +1,30 @@
 """What sharpening by gradients is worth, and whether its errors are honest.
 
     python benchmarks/sharpened.py coverage [RUNS] [TARGET ...]     400 runs each: about 20 minutes of one core
-    python benchmarks/sharpened.py worth [TARGET ...]               effective draws per 1000 gradients: a minute
+    python benchmarks/sharpened.py worth [TARGET ...]               effective draws per 1000 gradients: two minutes
+    python benchmarks/sharpened.py cost                             share of the demo: half a minute
 
 Coverage: share of runs whose interval of 1.96 errors to each side holds the known value, for sharpened and for plain
 estimates, lowest and highest over the values of a target, and the largest ratio of mean squared errors. Worth: the
 square of the sd over the squared error (for the sd as the estimate: that many draws of a normal), settling included.
-Targets and settings: `CASES` in tests/sharpened_runs.py. What was measured stands in sharpened.md.
+Cost: processor time of sharpening and of the check, as a share of the demo's run. Targets and settings: `CASES` in
+tests/sharpened_runs.py. What was measured stands in README.md.
 """
 
 import sys
+from time import process_time
 
 import numpy as np
 from common import busy, machine
 from sharpened_runs import CASES, KINDS, Study, draw, study
+
+from fellwalk import Leapfrog, Result, run
+from fellwalk.demo import hives
+from fellwalk.demo.show import density
+from fellwalk.estimates import estimate_all
+from fellwalk.judge import LEVELS, measure, prepare
+
+SEEDS = 5
 
 
 def coverage_lines(name: str, s: Study) -> list[str]:
@@ -64,23 +75,49 @@ def coverage(runs: int, names: list[str]) -> None:
 
 def worth(names: list[str]) -> None:
     print(f"{machine()}; {busy()}\n")
-    print("Effective draws per 1000 gradients, of the value with the least:\n")
+    print(f"Effective draws per 1000 gradients, of the value with the least, median of {SEEDS} seeds:\n")
     print("| target | mean, plain | mean, sharpened | sd, plain | sd, sharpened |")
     print("|---|---|---|---|---|")
     for name in names:
-        result = draw(name, 1)
-        cells = []
-        e = result.estimate()
-        per = 1000 / result.spent["gradients"]
-        for values, errors in (("spread", "error"), ("spread", "spread_error")):
-            for which in (e.raw, e):
-                w = (getattr(which, values) / getattr(which, errors)) ** 2 / (1 if errors == "error" else 2)
-                cells.append(f"{per * w.min():.3g}")
-        print(f"| {name} | {' | '.join(cells)} |", flush=True)
+        found = np.array([one_worth(draw(name, seed)) for seed in range(SEEDS)])
+        print(f"| {name} | {' | '.join(f'{w:.3g}' for w in np.median(found, axis=0))} |", flush=True)
+
+
+def one_worth(result: Result) -> list[float]:
+    """Effective draws per 1000 gradients: for means, plain and sharpened, then for sds."""
+    e, per = result.estimate(), 1000 / result.spent["gradients"]
+    return [per * float(np.min((which.spread / getattr(which, error)) ** 2)) / share
+            for error, share in (("error", 1), ("spread_error", 2)) for which in (e.raw, e)]
+
+
+def cost() -> None:
+    """The demo: its run, its table from the draws alone, and what gradients add to that, the least of some repeats."""
+    print(f"{machine()}; {busy()}\n")
+    model, names = density(), list(hives.names)
+    started = process_time()
+    result = run(model, motion=Leapfrog(halvings=8), acceptance=0.9, keep=14_000, seed=23, executor="here",
+                 progress="off")
+    ran = process_time() - started
+    x, pair = hives.natural(result.draws), (result.free_draws, result.gradients)
+    measured, sharpened = [], []
+    for _ in range(10):
+        started = process_time()
+        numbers = measure(x)
+        measured.append(process_time() - started)
+        numbers["event"] = np.zeros(len(names), dtype=bool)
+        started = process_time()
+        checked, sharpener, _ = prepare(pair, result.facts["failure"])
+        e = estimate_all(x, names, numbers, list(LEVELS.values()), sharpener, checked)
+        sharpened.append(process_time() - started)
+    words = [*e.by, *e.spread_by, *(word for q in e.quantiles.values() for word in q.by)]
+    count = len(words) - words.count("none")
+    print(f"run {ran:.2f} s, table {min(measured):.3f} s, sharpening {min(sharpened):.3f} s (median "
+          f"{np.median(sharpened):.3f} s): {100 * min(sharpened) / ran:.1f}% of the run, {count} numbers sharpened, "
+          f"{checked.checked} identities checked")
 
 
 if __name__ == "__main__":
     what, *rest = sys.argv[1:] or ["worth"]
     number = int(rest.pop(0)) if rest and rest[0].isdigit() else 400
     chosen = rest or list(CASES)
-    coverage(number, chosen) if what == "coverage" else worth(chosen)
+    {"coverage": lambda: coverage(number, chosen), "cost": cost}.get(what, lambda: worth(chosen))()

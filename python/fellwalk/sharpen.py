@@ -118,14 +118,31 @@ class Sharpener:
             made.append((terms, every[parity::2]))
         return made
 
+    @cached_property
+    def _own(self) -> tuple[tuple[Array, Array, Array], ...]:
+        """Each coordinate's terms of degree 1 and 2 at one draw of each block (coordinates, blocks), with sums and sums
+        of squares over each fold (folds, coordinates)."""
+        folds = self.layout.folds
+        terms = self._gy[:, 0], self._y[:, 0] * self._gy[:, 0]
+        return tuple((h, np.array([h[:, f].sum(axis=1) for f in folds]),
+                      np.array([np.einsum("in,in->i", h[:, f], h[:, f]) for f in folds])) for h in terms)
+
     def _choose(self, values: Array, seen: list[int]) -> tuple[NDArray[np.int64], NDArray[np.int64]]:
         """Coordinates for linear terms and for pairs: those whose own terms explain most of values (q, blocks) in some
         folds, by one draw of each block."""
-        at = np.concatenate([np.arange(f.start, f.stop) for f in (self.layout.folds[k] for k in seen)])
-        y, gy = self._y[:, 0, at], self._gy[:, 0, at]
-        f = _standard(values[:, at])
-        straight = (((_standard(gy) @ f.T) / len(at)) ** 2).max(axis=1)
-        curved = (((_standard(y * gy) @ f.T) / len(at)) ** 2).sum(axis=1)
+        folds = [self.layout.folds[k] for k in seen]
+        count = sum(f.stop - f.start for f in folds)
+        f = [values[:, fold] for fold in folds]
+        mean = np.sum([part.sum(axis=1) for part in f], axis=0) / count
+        f = [part - mean[:, None] for part in f]
+        square = np.sum([np.einsum("qn,qn->q", part, part) for part in f], axis=0)
+        explained = []
+        for h, total, squares in self._own:
+            spread = np.maximum(squares[seen].sum(axis=0) - total[seen].sum(axis=0) ** 2 / count, 0)
+            product = np.sum([h[:, fold] @ part.T for fold, part in zip(folds, f, strict=True)], axis=0)
+            scale = np.outer(spread, square)
+            explained.append(product**2 / np.where(scale > 0, scale, np.inf))
+        straight, curved = explained[0].max(axis=1), explained[1].sum(axis=1)
         order = np.argsort(-straight, kind="stable")[:MOST_LINEAR]
         return np.sort(order), np.sort(np.argsort(-curved, kind="stable")[:MOST_PAIRED])
 
@@ -277,9 +294,3 @@ def _skewed(batches: Array) -> Array:
     z = 1.96
     lack = (z**4 + 2 * z**2 - 3) / 18 * skewness**2 - (z**2 - 3) / 12 * excess
     return 1 + np.maximum(lack, 0) / batches.shape[1]
-
-
-def _standard(rows: Array) -> Array:
-    away = rows - rows.mean(axis=1, keepdims=True)
-    spread = away.std(axis=1, keepdims=True)
-    return away / np.where(spread > 0, spread, 1.0)
