@@ -18,7 +18,6 @@ from fellwalk import table
 from fellwalk.errors import ArgumentError
 from fellwalk.identities import IdentityCheck
 from fellwalk.sharpen import CANDIDATES, Sharpener
-from fellwalk.tails import widening
 
 Array = NDArray[np.float64]
 
@@ -166,7 +165,7 @@ def estimate_all(
         part = np.arange(start, min(start + GROUP, count))
         part = part[~still[part]]
         if part.size:
-            out.take(part, x[:, :, part], numbers["event"][part], widening(numbers["above_doubt"][part]), sharpener)
+            out.take(part, x[:, :, part], numbers["event"][part], numbers["above_doubt"][part], sharpener)
     return out.estimates(raw)
 
 
@@ -181,9 +180,10 @@ class _Sharper:
                    for level, q in raw.quantiles.items()}
 
     def take(
-        self, part: NDArray[np.int64], x: Array, event: NDArray[np.bool_], wider: Array, sharpener: Sharpener
+        self, part: NDArray[np.int64], x: Array, event: NDArray[np.bool_], above: Array, sharpener: Sharpener
     ) -> None:
-        """Sharpen values `part`, of draws x (chains, n, values); wider: for errors of mean and sd, (values, 2)."""
+        """Sharpen values `part`, of draws x (chains, n, values); above: `fellwalk.tails.excess` for mean and sd,
+        (values, 2)."""
         from fellwalk.judge import standardise
 
         y, origin, exponent = standardise(np.ascontiguousarray(np.moveaxis(x, 2, 0)))
@@ -195,9 +195,9 @@ class _Sharper:
         np.square(y - centre[:, None, None], out=series[1])
         for k, level in enumerate(self.at, start=2):
             np.less_equal(y, _at_level(ordered, level)[:, None, None], out=series[k])
-        doubt = np.ones(series.shape[:2])
-        doubt[:2] = wider.T
-        found = sharpener.sharpen(series.reshape(-1, *y.shape[1:]), doubt.reshape(-1))
+        tails = np.full(series.shape[:2], -np.inf)  # a share of draws has none
+        tails[:2] = above.T
+        found = sharpener.sharpen(series.reshape(-1, *y.shape[1:]), tails.reshape(-1))
         mean, error, by, plain, plain_error = (a.reshape(len(series), count) for a in (
             found.mean, found.error, found.by, found.raw, found.raw_error))
 

@@ -38,7 +38,7 @@ DRAWS_PER_TERM = 8
 # errors is too small by chance, and an error of 400 effective draws is itself known to a few percent.
 WORTHWHILE = 0.9
 FEWEST = 40  # draws of all chains: with fewer nothing is fitted
-MUCH_LEFT = 0.5  # of the plain error
+MUCH_LEFT, TAILED = 0.5, -0.15  # of the plain error; tail index less what is in doubt
 FALSE_ALARM = 0.01
 
 
@@ -146,11 +146,11 @@ class Sharpener:
         order = np.argsort(-straight, kind="stable")[:MOST_LINEAR]
         return np.sort(order), np.sort(np.argsort(-curved, kind="stable")[:MOST_PAIRED])
 
-    def sharpen(self, values: Array, doubt: Array | None = None) -> Sharpened:
-        """The means of values (q, chains, n) of the draws; doubt: by what their errors are to be wider, where this is
-        at hand (`fellwalk.tails.widening`)."""
+    def sharpen(self, values: Array, above: Array | None = None) -> Sharpened:
+        """The means of values (q, chains, n) of the draws; above: by how much their tail indices are above doubt, where
+        this is at hand (`fellwalk.tails.excess`)."""
         flat = values.reshape(len(values), -1)
-        doubt = widening(excess(flat)[0]) if doubt is None else doubt
+        above = excess(flat)[0] if above is None else above
         centre, f = flat.mean(axis=1), self.layout.blocks(flat)
         f -= centre[:, None]
         spread = np.sqrt(np.einsum("qn,qn->q", f, f) / f.shape[1])
@@ -159,10 +159,11 @@ class Sharpener:
         count = len(f)
         mean, error, by = np.zeros(count), np.full(count, np.nan), np.zeros(count, dtype=np.int64)
         taken, taken_error = np.zeros(count), np.zeros(count)
+        doubt = widening(above)
         plain = self._rate(self.layout.means(f)) * doubt
         if flat.shape[1] >= FEWEST and self.coordinates and len(self.layout.folds) > 1:
             for chosen, which in self._compete(f, plain, doubt, (flat, centre, spread)):
-                parts = self._finish(f[which], chosen, which, plain[which], doubt[which])
+                parts = self._finish(f[which], chosen, which, plain[which], above[which])
                 good = (spread[which] > 0) & (self.forced | (parts[1] < WORTHWHILE * plain[which])) & ~parts[4]
                 at = which[good]
                 mean[at], error[at], taken[at], taken_error[at] = (part[good] for part in parts[:4])
@@ -249,16 +250,15 @@ class Sharpener:
         return f
 
     def _finish(
-        self, f: Array, tried: _Try, which: NDArray[np.int64], plain: Array, doubt: Array
+        self, f: Array, tried: _Try, which: NDArray[np.int64], plain: Array, above: Array
     ) -> tuple[Array, ...]:
         """Mean and error of what is left, mean and error of what was taken off, and if that contradicts the draws."""
         series = self._series(f, tried, which)
         mean = series.mean(axis=1)
         error = np.sqrt(self._error(series) ** 2 + tried.fitting[which]) * _skewed(tried.left[which])
-        # Where little is taken off, what is left has the tails of the values, and may show them more clearly.
-        much = error > MUCH_LEFT * plain
-        doubt = np.where(much, np.maximum(doubt, widening(excess(series)[0])), doubt)
-        error *= doubt
+        # Where little is taken off values with tails, what is left has these too, and may show them more clearly.
+        much = (error > MUCH_LEFT * plain) & (above > TAILED)
+        error *= widening(np.where(much, np.maximum(above, excess(series)[0]), above))
         taken = self.layout.means(f) - tried.left[which]
         off, off_error = f.mean(axis=1) - mean, self._rate(taken)
         # If the mean of what was taken off is not zero within its error, then the draws do not belong to these
