@@ -9,8 +9,8 @@ import sharpened_runs
 from scipy import stats
 from sharpened_runs import study
 
-RUNS = {"Norris": 80, "mcmc01": 40, "eight schools": 24, "Pima": 24, "Australian": 12, "Student t5": 40, "ring": 60,
-        "Rosenbrock": 20, "funnel": 12}
+RUNS = {"Norris": 40, "mcmc01": 24, "eight schools": 16, "Pima": 16, "Australian": 10, "Student t5": 24, "ring": 30,
+        "Rosenbrock": 16, "funnel": 12}
 FALSE_ALARM = 1e-4  # of one target, all its estimates together, if every interval covers with the least rate allowed
 LEAST_RATE = 0.92
 # Errors that were called unreliable in more than half of the runs are not held to their word.
