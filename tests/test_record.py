@@ -683,7 +683,13 @@ def saved_draws_are_true(path: str, size: int = 5, stop: int = 60) -> int:
         for chain in record.counts():
             draws = record.chain_draws(chain)
             assert draws.tobytes() == expected_draws(chain, len(draws), size).tobytes()
-            assert len(record.facts(chain)) == len(draws)
+            try:
+                facts = len(record.facts(chain))
+            except DamagedRecordError as error:  # the layout of all facts is one entry, which nothing can replace
+                said = str(error)
+            else:
+                said = None
+            assert facts == len(draws) if said is None else "the entry 'facts'" in said
             saved += len(draws)
         assert saved == 3 * stop or record.damage
         return saved

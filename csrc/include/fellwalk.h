@@ -161,6 +161,10 @@ typedef struct fw_output {
     int64_t *failure_index;   /* transition number in this call */
     int32_t *failure_code;    /* status */
     double *failure_position; /* failures_room x d */
+    const size_t *watched; /* NULL: all of a draw; else rows of draws and failure_position are these coordinates */
+    size_t watched_count;
+    double *mean, *squares; /* d each, in and out: running mean of the draws, and sum of squared deviations from it */
+    uint64_t gathered;      /* in and out: draws in them */
 } fw_output;
 
 /* Sets *chain. target and random are copied; strings in settings are not kept. */

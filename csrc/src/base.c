@@ -87,30 +87,6 @@ void fw_base_kick2_drift(const fw_base *base, double kc, double kh, double step,
     drift_along_directions(base, step, p);
 }
 
-void fw_base_leave(const fw_base *base, double kick, double step, fw_point *p)
-{
-    if (base->k == 0)
-        fw_kick_drift_gradient(base->d, kick, p->g, step, base->r, p->w, p->x);
-    else
-        fw_base_kick_drift(base, kick, step, p);
-}
-
-void fw_base_arrive_kick(const fw_base *base, double kick, fw_point *p)
-{
-    double sums[3];
-    if (base->k == 0) {
-        fw_kick_gradient(base->d, kick, base->r, p->g, p->w, sums);
-        p->ww = sums[0];
-        p->cc = sums[1];
-        return;
-    }
-    fw_base_gradient(base, p->g, p->c);
-    fw_axpy(base->d, kick, p->c, p->w);
-    fw_gram2(base->d, p->w, p->c, sums);
-    p->ww = sums[0];
-    p->cc = sums[2];
-}
-
 void fw_base_arrive(const fw_base *base, fw_point *p)
 {
     double sums[3];

@@ -262,18 +262,29 @@ static int transition(fw_chain *chain, fw_facts *facts)
     return FW_OK;
 }
 
+static void write_row(const fw_output *out, size_t d, const double *x, size_t row, double *to)
+{
+    if (!to) return;
+    if (!out->watched) {
+        memcpy(to + row * d, x, d * sizeof(double));
+        return;
+    }
+    to += row * out->watched_count;
+    for (size_t j = 0; j < out->watched_count; ++j) to[j] = x[out->watched[j]];
+}
+
 static void write_out(const fw_chain *chain, size_t i, const fw_facts *facts, fw_output *out)
 {
     const size_t d = chain->walk.d;
-    if (out->draws) memcpy(out->draws + i * d, chain->x, d * sizeof(double));
+    write_row(out, d, chain->x, i, out->draws);
+    if (out->mean) fw_gather_moments(d, (double)++out->gathered, chain->x, out->mean, out->squares);
     if (out->gradients) memcpy(out->gradients + i * d, chain->g, d * sizeof(double));
     if (out->facts) out->facts[i] = *facts;
     if (facts->failure && out->failures < out->failures_room) {
         const size_t row = out->failures++;
         if (out->failure_index) out->failure_index[row] = (int64_t)i;
         if (out->failure_code) out->failure_code[row] = facts->failure;
-        if (out->failure_position)
-            memcpy(out->failure_position + row * d, chain->walk.failed_at, d * sizeof(double));
+        write_row(out, d, chain->walk.failed_at, row, out->failure_position);
     }
 }
 

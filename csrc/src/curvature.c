@@ -40,7 +40,7 @@ static int ask(fw_walk *walk, const fw_point *at, const double *p, double pp, in
 /* walk->product from what was asked to H~ p; with learned directions, where nothing is fused. */
 static void whiten_product(fw_walk *walk, const fw_point *at, double h)
 {
-    if (differs(walk)) fw_difference_over(walk->d, walk->product, at->g, h, walk->product);
+    if (differs(walk)) fw_difference_over(walk->d, walk->product, at->g, 1.0 / h, walk->product);
     fw_base_gradient(&walk->base, walk->product, walk->product);
 }
 
@@ -72,7 +72,7 @@ int fw_curve_gradient(fw_walk *walk, fw_point *p)
     if (spread) {
         fw_whiten_product(d, base->r, walk->product, p->c, p->hc, sums);
     } else if (fused) {
-        fw_whiten_difference(d, h, base->r, walk->product, p->g, p->hc, sums);
+        fw_whiten_difference(d, 1.0 / h, base->r, walk->product, p->g, p->hc, sums);
     } else {
         whiten_product(walk, p, h);
         fw_copy(d, walk->product, p->hc);
@@ -96,7 +96,7 @@ int fw_curve_velocity(fw_walk *walk, const fw_point *p, int spread, double *whw)
         whiten_product(walk, p, h);
         *whw = fw_dot(walk->d, p->w, walk->product);
     } else if (differs(walk)) {
-        *whw = fw_difference_dot(walk->d, h, base->r, walk->product, p->g, p->w);
+        *whw = fw_difference_dot(walk->d, 1.0 / h, base->r, walk->product, p->g, p->w);
     } else {
         *whw = fw_product_dot(walk->d, base->r, walk->product, p->w);
     }
@@ -119,7 +119,7 @@ int fw_curve_velocity_all(fw_walk *walk, const fw_point *p, double sums[4])
         sums[2] = fw_dot(d, walk->product, p->hc);
         sums[3] = fw_dot(d, p->w, p->hc);
     } else if (differs(walk)) {
-        fw_difference_sums(d, h, base->r, walk->product, p->g, p->w, p->hc, sums);
+        fw_difference_sums(d, 1.0 / h, base->r, walk->product, p->g, p->w, p->hc, sums);
     } else {
         fw_product_sums(d, base->r, walk->product, p->w, p->c, p->hc, sums);
     }

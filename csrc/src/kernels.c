@@ -151,7 +151,7 @@ FW_CLONES void fw_axpy(size_t n, double k, const double *restrict a, double *res
 
 FW_CLONES void fw_drift(size_t n, double k, const double *restrict r, const double *restrict w, double *restrict x)
 {
-    for (size_t i = 0; i < n; ++i) x[i] += k * (r[i] * w[i]);
+    SWEEP(n, PUT(x, GET(x) + k * (GET(r) * GET(w))););
 }
 
 FW_CLONES void fw_scale(size_t n, double k, double *y)
@@ -186,21 +186,14 @@ void fw_gram(size_t n, size_t rows, const double *const *vectors, double *out)
 FW_CLONES void fw_kick_drift(size_t n, double kick, const double *restrict c, double step, const double *restrict r,
                              double *restrict w, double *restrict x)
 {
-    for (size_t i = 0; i < n; ++i) {
-        const double t = w[i] + kick * c[i];
-        w[i] = t;
-        x[i] += step * (r[i] * t);
-    }
+    SWEEP(n, const group t = GET(w) + kick * GET(c); PUT(w, t); PUT(x, GET(x) + step * (GET(r) * t)););
 }
 
 FW_CLONES void fw_kick_drift_gradient(size_t n, double kick, const double *restrict g, double step,
                                       const double *restrict r, double *restrict w, double *restrict x)
 {
-    for (size_t i = 0; i < n; ++i) {
-        const double t = w[i] + kick * (r[i] * g[i]);
-        w[i] = t;
-        x[i] += step * (r[i] * t);
-    }
+    SWEEP(n, const group s = GET(r); const group t = GET(w) + kick * (s * GET(g)); PUT(w, t);
+          PUT(x, GET(x) + step * (s * t)););
 }
 
 FW_CLONES void fw_kick_gradient(size_t n, double kick, const double *restrict r, const double *restrict g,
@@ -327,9 +320,9 @@ FW_CLONES void fw_probe(size_t n, double h, const double *restrict x, const doub
     for (size_t i = 0; i < n; ++i) out[i] = x[i] + h * (r[i] * p[i]);
 }
 
-FW_CLONES void fw_difference_over(size_t n, const double *a, const double *b, double h, double *out)
+FW_CLONES void fw_difference_over(size_t n, const double *a, const double *b, double rate, double *out)
 {
-    for (size_t i = 0; i < n; ++i) out[i] = (a[i] - b[i]) / h;
+    for (size_t i = 0; i < n; ++i) out[i] = (a[i] - b[i]) * rate;
 }
 
 FW_CLONES void fw_whiten_product(size_t n, const double *restrict r, const double *restrict q, const double *restrict c,
@@ -342,12 +335,12 @@ FW_CLONES void fw_whiten_product(size_t n, const double *restrict r, const doubl
     sums[1] = FOLD(yy);
 }
 
-FW_CLONES void fw_whiten_difference(size_t n, double h, const double *restrict r, const double *restrict q,
+FW_CLONES void fw_whiten_difference(size_t n, double rate, const double *restrict r, const double *restrict q,
                                     const double *restrict g, double *restrict y, double sums[2])
 {
     SUM(cy);
     SUM(yy);
-    SWEEP(n, const group s = GET(r); const group b = GET(g); const group e = s * ((GET(q) - b) / h); PUT(y, e);
+    SWEEP(n, const group s = GET(r); const group b = GET(g); const group e = s * ((GET(q) - b) * rate); PUT(y, e);
           ADD(cy, s * b * e); ADD(yy, e * e););
     sums[0] = FOLD(cy);
     sums[1] = FOLD(yy);
@@ -360,11 +353,11 @@ FW_CLONES double fw_product_dot(size_t n, const double *restrict r, const double
     return FOLD(s);
 }
 
-FW_CLONES double fw_difference_dot(size_t n, double h, const double *restrict r, const double *restrict q,
+FW_CLONES double fw_difference_dot(size_t n, double rate, const double *restrict r, const double *restrict q,
                                    const double *restrict g, const double *restrict w)
 {
     SUM(s);
-    SWEEP(n, ADD(s, GET(w) * (GET(r) * ((GET(q) - GET(g)) / h))););
+    SWEEP(n, ADD(s, GET(w) * (GET(r) * ((GET(q) - GET(g)) * rate))););
     return FOLD(s);
 }
 
@@ -383,7 +376,7 @@ FW_CLONES void fw_product_sums(size_t n, const double *restrict r, const double 
     sums[3] = FOLD(wp);
 }
 
-FW_CLONES void fw_difference_sums(size_t n, double h, const double *restrict r, const double *restrict q,
+FW_CLONES void fw_difference_sums(size_t n, double rate, const double *restrict r, const double *restrict q,
                                   const double *restrict g, const double *restrict w, const double *restrict p,
                                   double sums[4])
 {
@@ -391,7 +384,7 @@ FW_CLONES void fw_difference_sums(size_t n, double h, const double *restrict r, 
     SUM(yc);
     SUM(yp);
     SUM(wp);
-    SWEEP(n, const group s = GET(r); const group b = GET(g); const group y = s * ((GET(q) - b) / h);
+    SWEEP(n, const group s = GET(r); const group b = GET(g); const group y = s * ((GET(q) - b) * rate);
           const group t = GET(w); const group f = GET(p); ADD(yw, y * t); ADD(yc, y * (s * b)); ADD(yp, y * f);
           ADD(wp, t * f););
     sums[0] = FOLD(yw);
@@ -449,6 +442,17 @@ FW_CLONES void fw_gather(size_t n, double count, const double *restrict a, doubl
         const double away = a[i] - mean[i];
         roots[i] += counts * sqrt(fabs(away));
         mean[i] += away / count;
+    }
+}
+
+FW_CLONES void fw_gather_moments(size_t n, double count, const double *restrict a, double *restrict mean,
+                                 double *restrict squares)
+{
+    const double share = 1.0 / count;
+    for (size_t i = 0; i < n; ++i) {
+        const double away = a[i] - mean[i], now = mean[i] + away * share;
+        squares[i] += away * (a[i] - now);
+        mean[i] = now;
     }
 }
 

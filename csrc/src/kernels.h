@@ -102,19 +102,19 @@ void fw_whiten_coarsest(size_t n, const double *r, const double *g, const double
 double fw_coarsest(size_t n, const double *r, const double *x); /* largest |x|/r */
 /* out = x + h r*p */
 void fw_probe(size_t n, double h, const double *x, const double *r, const double *p, double *out);
-/* out = (a - b)/h */
-void fw_difference_over(size_t n, const double *a, const double *b, double h, double *out);
-/* y = r*q; sums: c.y, y.y. Then with y = r*(q - g)/h and c = r*g. */
+/* out = (a - b) rate */
+void fw_difference_over(size_t n, const double *a, const double *b, double rate, double *out);
+/* y = r*q; sums: c.y, y.y. Then with y = r*(q - g) rate and c = r*g. */
 void fw_whiten_product(size_t n, const double *r, const double *q, const double *c, double *y, double sums[2]);
-void fw_whiten_difference(size_t n, double h, const double *r, const double *q, const double *g, double *y,
+void fw_whiten_difference(size_t n, double rate, const double *r, const double *q, const double *g, double *y,
                           double sums[2]);
 /* w.y of the same y, which are not kept */
 double fw_product_dot(size_t n, const double *r, const double *q, const double *w);
-double fw_difference_dot(size_t n, double h, const double *r, const double *q, const double *g, const double *w);
+double fw_difference_dot(size_t n, double rate, const double *r, const double *q, const double *g, const double *w);
 /* y.w, y.c, y.p, w.p of the same y */
 void fw_product_sums(size_t n, const double *r, const double *q, const double *w, const double *c, const double *p,
                      double sums[4]);
-void fw_difference_sums(size_t n, double h, const double *r, const double *q, const double *g, const double *w,
+void fw_difference_sums(size_t n, double rate, const double *r, const double *q, const double *g, const double *w,
                         const double *p, double sums[4]);
 
 /* metric operations: v/delta etc. with one rank-one term; see metric.c */
@@ -127,6 +127,9 @@ void fw_momentum_out(size_t n, const double *delta, const double *z, double k, c
 
 /* A value more: roots += sqrt|a - mean| (from the second value on), then mean takes it in. count: values with this. */
 void fw_gather(size_t n, double count, const double *a, double *mean, double *roots);
+
+/* A value more: mean and sum of squared deviations take it in (Welford 1962). count: values with this. */
+void fw_gather_moments(size_t n, double count, const double *a, double *mean, double *squares);
 
 /* out = a + b; sums: a.b, a.a */
 void fw_add_pair(size_t n, const double *a, const double *b, double *out, double sums[2]);

@@ -1,6 +1,7 @@
 /* Leapfrog over the constant base metric: kick, drift, kick. Volume is kept, so the log-Jacobian is 0. */
 #include <math.h>
 
+#include "kernels.h"
 #include "walk.h"
 
 static void refresh(const fw_walk *walk, fw_point *p)
@@ -15,12 +16,37 @@ static int complete(fw_walk *walk, fw_point *p)
     return isfinite(p->energy) ? FW_OK : FW_ENERGY_BAD;
 }
 
+/* Without learned directions c = r g is made again where it is needed, and neither read nor kept. */
+static void leave(const fw_base *base, double step, fw_point *p)
+{
+    if (base->k == 0)
+        fw_kick_drift_gradient(base->d, 0.5 * step, p->g, step, base->r, p->w, p->x);
+    else
+        fw_base_kick_drift(base, 0.5 * step, step, p);
+}
+
+static void arrive(const fw_base *base, double step, fw_point *p)
+{
+    double sums[3];
+    if (base->k == 0) {
+        fw_kick_gradient(base->d, 0.5 * step, base->r, p->g, p->w, sums);
+        p->ww = sums[0];
+        p->cc = sums[1];
+        return;
+    }
+    fw_base_gradient(base, p->g, p->c);
+    fw_axpy(base->d, 0.5 * step, p->c, p->w);
+    fw_gram2(base->d, p->w, p->c, sums);
+    p->ww = sums[0];
+    p->cc = sums[2];
+}
+
 static int step(fw_walk *walk, fw_point *p, double step)
 {
-    fw_base_leave(&walk->base, 0.5 * step, step, p);
+    leave(&walk->base, step, p);
     const int status = fw_evaluate(walk, p->x, &p->value, p->g);
     if (status != FW_OK) return status;
-    fw_base_arrive_kick(&walk->base, 0.5 * step, p);
+    arrive(&walk->base, step, p);
     return isfinite(p->cc) ? complete(walk, p) : FW_GRADIENT_BAD;
 }
 

@@ -92,9 +92,6 @@ void fw_base_gradient(const fw_base *base, const double *g, double *c);    /* c 
 void fw_base_kick_drift(const fw_base *base, double kick, double step, fw_point *p);
 /* w += kc c + kh hc, ww; x += step S w */
 void fw_base_kick2_drift(const fw_base *base, double kc, double kh, double step, fw_point *p);
-/* c = S^T g; w += kick c; ww and cc. Without learned directions c is neither kept nor, by the first, read. */
-void fw_base_leave(const fw_base *base, double kick, double step, fw_point *p);
-void fw_base_arrive_kick(const fw_base *base, double kick, fw_point *p);
 /* c = S^T g; sums of p */
 void fw_base_arrive(const fw_base *base, fw_point *p);
 

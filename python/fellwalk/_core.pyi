@@ -78,6 +78,10 @@ class Stream:
     state: bytes
     def __new__(cls, seed_sequence: np.random.SeedSequence) -> Self: ...
     def rewind(self) -> None: ...
+    def normals(self, n: int) -> _Vector: ...
+    def uniforms(self, n: int) -> _Vector: ...
+
+def gather(moments: object, rows: _Vector) -> None: ...
 
 class Engine:
     @property
@@ -97,6 +101,8 @@ class Engine:
         failure_index: NDArray[np.int64] | None = None,
         failure_code: NDArray[np.int32] | None = None,
         failure_position: _Vector | None = None,
+        watched: NDArray[np.uintp] | None = None,
+        moments: object | None = None,
     ) -> tuple[int, int, int, BaseException | None]: ...
     def integrate(
         self,

@@ -110,12 +110,15 @@ def is_unwritten(double x):
     return memcmp(&x, &marked, sizeof(double)) == 0
 
 
+# Padding keeps what two threads write at every step out of one line of the cache.
 cdef struct calls:
+    char before[64]
     fw_density density
     void *density_context
     fw_hessian_product product
     void *product_context
     uint64_t gradients, products
+    char after[64]
 
 
 cdef int counted_density(size_t d, const double *x, double *value, double *gradient, void *context) noexcept nogil:
@@ -157,9 +160,8 @@ cdef class Target:
         self.product = product
         self.compiled = is_compiled(function)
         self.keeps_gil = not self.compiled and dimension <= 1000
-        self.x = np.empty(dimension)
-        self.p = np.empty(dimension)
-        self.out = np.empty(dimension)
+        # made at the first call of a Python function; a compiled one needs none
+        self.x = self.p = self.out = None
         if self.compiled:
             self.user.density = <fw_density>compiled_pointer(function, DENSITY_SIGNATURE, "log density", &context)
             self.user.density_context = context
@@ -334,8 +336,10 @@ cdef extern from "stream.h":
 
 
 cdef struct numbers:
+    char before[64]
     fw_stream own
     bitgen_t outer  # the same, for NumPy's distributions
+    char after[64]
 
 
 cdef uint64_t stream_uint64(void *state) noexcept nogil:
@@ -410,6 +414,23 @@ cdef class Stream:
         low, high, inc_low, inc_high = (int.from_bytes(given[i : i + 8], "little") for i in range(0, 32, 8))
         self.c.own.low, self.c.own.high, self.c.own.inc_low, self.c.own.inc_high = low, high, inc_low, inc_high
         stream_mark(&self.c)
+
+
+cdef extern from "kernels.h":
+    void fw_gather_moments(size_t n, double count, const double *a, double *mean, double *squares) noexcept nogil
+
+
+def gather(moments, const double[:, ::1] rows not None):
+    """Add rows to an object with mean, squares and count, as the core adds draws."""
+    cdef double[::1] mean = moments.mean, squares = moments.squares
+    cdef uint64_t count = moments.count
+    cdef Py_ssize_t row
+    if mean.shape[0] != rows.shape[1] or squares.shape[0] != rows.shape[1]:
+        raise ShapeError(f"the moments are of {mean.shape[0]} values, the rows have {rows.shape[1]}")
+    for row in range(rows.shape[0]):
+        count += 1
+        fw_gather_moments(<size_t>rows.shape[1], <double>count, &rows[row, 0], &mean[0], &squares[0])
+    moments.count = count
 
 
 # ---- the chain -------------------------------------------------------------------------------------------------------
@@ -517,11 +538,15 @@ cdef class Engine:
             self.leave(FW_OK)
 
     def run(self, size_t n, double[:, ::1] draws=None, facts=None, double[:, ::1] gradients=None,
-            int64_t[::1] failure_index=None, int32_t[::1] failure_code=None, double[:, ::1] failure_position=None):
+            int64_t[::1] failure_index=None, int32_t[::1] failure_code=None, double[:, ::1] failure_position=None,
+            const size_t[::1] watched=None, moments=None):
         """(status, transitions done, failure rows used, the exception a Python function raised or None).
 
-        Arrays have n rows, or are None. Completed transitions stand whatever the status.
+        Arrays have n rows, or are None. Completed transitions stand whatever the status. watched: coordinates that the
+        rows of draws and failure_position are, all when None; moments: an object with mean, squares and count, which
+        take the draws in.
         """
+        cdef double[::1] mean, squares
         cdef fw_output out
         cdef size_t done = 0
         cdef int status = FW_OK
@@ -537,6 +562,16 @@ cdef class Engine:
         out.failure_index = &failure_index[0] if out.failures_room else NULL
         out.failure_code = &failure_code[0] if out.failures_room else NULL
         out.failure_position = &failure_position[0, 0] if out.failures_room else NULL
+        out.watched = NULL
+        out.watched_count = 0
+        out.mean = out.squares = NULL
+        out.gathered = 0
+        if watched is not None:
+            out.watched = &watched[0]
+            out.watched_count = <size_t>watched.shape[0]
+        if moments is not None:
+            mean, squares, out.gathered = moments.mean, moments.squares, moments.count
+            out.mean, out.squares = &mean[0], &squares[0]
         self.enter()
         try:
             if self.target.keeps_gil:
@@ -548,6 +583,8 @@ cdef class Engine:
                 self.stream.rewind()
         finally:
             self.leave(status)
+        if moments is not None:
+            moments.count = out.gathered
         error, self.target.error = self.target.error, None
         return status, done, out.failures, error
 

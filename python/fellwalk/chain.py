@@ -14,6 +14,7 @@ from fellwalk.errors import ArgumentError, SettleError, StartError, StateError
 from fellwalk.motions import Leapfrog, Motion, NoUTurn, Path, whole
 from fellwalk.settings import Settings
 from fellwalk.settled import SettledChain
+from fellwalk.watch import Moments, Watching
 
 __all__ = ["Block", "Chain"]
 
@@ -27,9 +28,10 @@ _FAILURE_ROOM = 32  # positions of failed steps kept in one block; every failure
 class Block:
     """Transitions of one phase ("settle" or "keep") in the order they happened.
 
-    draws (n, dimension); gradients (n, dimension) or None, of the log density at the draws; facts (n,) of dtype
-    ``fellwalk.facts.FACTS``; failures: (index, code, position) of the first failed steps; error: the exception that
-    ended the block early, or None.
+    draws (n, dimension), or (n, watched) of a run that watches; gradients (n, dimension) or None, of the log density
+    at the draws; facts (n,) of dtype ``fellwalk.facts.FACTS``; failures: (index, code, position) of the first failed
+    steps; error: the exception that ended the block early, or None; moments: of the chain's draws so far, in all
+    coordinates, of a run that watches.
     """
 
     phase: str
@@ -38,6 +40,7 @@ class Block:
     facts: NDArray[np.void]
     failures: tuple[NDArray[np.int64], NDArray[np.int32], NDArray[np.float64]]
     error: BaseException | None = None
+    moments: Moments | None = None
 
     def __len__(self) -> int:
         return len(self.facts)
@@ -187,8 +190,11 @@ class Chain:
             raise block.error
         return block
 
-    def block(self, most: int, *, draws: bool = True, gradients: bool = False) -> Block:
+    def block(self, most: int, *, draws: bool = True, gradients: bool = False, watching: Watching | None = None
+              ) -> Block:
         """Up to `most` transitions of the phase the chain is in; errors are returned in the block, not raised.
+
+        watching: keeps of each draw what it says, and gathers the moments of all.
 
         Errors: ArgumentError when the chain has settled without a step size.
         """
@@ -199,24 +205,33 @@ class Chain:
         rows = _PIECE if phase == "settle" else most
         parts: list[Block] = []
         while most > 0 and self.phase == phase and not (parts and parts[-1].error is not None):
-            parts.append(self._rows(phase, min(most, rows), draws, gradients))
+            parts.append(self._rows(phase, min(most, rows), draws, gradients, watching))
             most -= len(parts[-1])
         return _joined(phase, parts, self.density.dimension)
 
-    def _rows(self, phase: str, n: int, want_draws: bool, want_gradients: bool) -> Block:
+    def _rows(self, phase: str, n: int, want_draws: bool, want_gradients: bool, watching: Watching | None) -> Block:
         """Up to n transitions, in pieces between which Python may answer a Ctrl-C."""
         d = self.density.dimension
-        draws = np.empty((n if want_draws else 0, d))
+        draws = np.empty((n if want_draws else 0, watching.width if watching else d))
+        whole_rows = None if watching is None or watching.direct else np.empty((watching.rows(n), d))
+        most = _PIECE if whole_rows is None else min(_PIECE, len(whole_rows))
         gradients = np.empty((n, d)) if want_gradients else None
         facts = np.empty(n, dtype=FACTS)
         failures, done, error = [], 0, None
         while done < n and error is None and self.phase == phase:
-            piece = slice(done, min(n, done + _PIECE))
+            piece = slice(done, min(n, done + most))
             room = min(piece.stop - done, _FAILURE_ROOM)
-            index, code, position = np.empty(room, np.int64), np.empty(room, np.int32), np.empty((room, d))
+            index, code = np.empty(room, np.int64), np.empty(room, np.int32)
+            position = np.empty((room, d if whole_rows is not None else draws.shape[1]))
+            into = (draws[piece] if whole_rows is None else whole_rows) if want_draws else None
+            picked = watching.picked(want_draws) if watching else (None, None)
             status, made, rows, error = self._engine.run(
-                piece.stop - done, draws[piece] if want_draws else None, facts[piece],
-                None if gradients is None else gradients[piece], index, code, position)
+                piece.stop - done, into, facts[piece], None if gradients is None else gradients[piece], index, code,
+                position, *picked)
+            if watching and whole_rows is not None:
+                if want_draws:
+                    draws[done : done + made] = watching.take(whole_rows[:made])
+                position = watching.place(position[:rows])
             failures.append((index[:rows] + done, code[:rows], position[:rows].copy()))
             done += made
             self._count()

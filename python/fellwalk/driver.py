@@ -17,11 +17,15 @@ from fellwalk.record import Record
 from fellwalk.result import Result
 from fellwalk.run_record import ChainResult, record_block
 from fellwalk.settings import Settings
+from fellwalk.watch import Watch
 from fellwalk.work import Done, Job
 
 __all__ = ["Driver"]
 
 _BLOCK_SECONDS = 0.5
+# Unpacking a state, packing and checking it and writing it to a record takes about 15 ns a byte, once a block; a block
+# of this many seconds a byte makes that two parts in a hundred.
+_BLOCK_SECONDS_A_BYTE, _LONGEST_BLOCK = 7.5e-7, 10.0
 _BLOCK_BYTES = 32_000_000
 _COMMIT_SHARE = 20  # commits are grouped so that they take at most one part in so many of the driver's time
 
@@ -34,7 +38,8 @@ class Driver:
     """
 
     def __init__(self, plan: dict[str, Any], states: list[bytes], parts: list[ChainResult], workers: Workers,
-                 record: Record | None, progress: Progress, seconds: float | None) -> None:
+                 record: Record | None, progress: Progress, seconds: float | None, watch: Watch | None = None) -> None:
+        self.watch = watch
         self.plan, self.states, self.parts = plan, states, parts
         self.workers, self.record, self.progress = workers, record, progress
         self.settle_most = Settings.from_json(plan["settings"]).settle_bounds()[1]
@@ -97,15 +102,20 @@ class Driver:
 
     def _job(self, chain: int) -> Job:
         keeping = self.parts[chain].summary.get("settled", self.settle_most == 0)
-        seconds = _BLOCK_SECONDS
+        seconds = min(max(_BLOCK_SECONDS, _BLOCK_SECONDS_A_BYTE * len(self.states[chain])), _LONGEST_BLOCK)
         if self.limit is not None:
             seconds = min(seconds, max(0.01, 0.5 * (self.limit - time.monotonic())))
         most = min(self._left(chain), self._most(chain)) if keeping else self._most(chain)
-        return Job(chain, self.states[chain], most, self.plan["gradients"], seconds)
+        return Job(chain, self.states[chain], most, self.plan["gradients"], seconds, self.watch,
+                   self.parts[chain].moments)
 
     def _most(self, chain: int) -> int:
         """Transitions in a block, for memory's sake; but of draws at least as many bytes as the state has."""
-        return max(_BLOCK_BYTES, len(self.states[chain])) // (16 * self.plan["dimension"]) + 1
+        return max(_BLOCK_BYTES, len(self.states[chain])) // (16 * self._width()) + 1
+
+    def _width(self) -> int:
+        """Numbers kept of a draw."""
+        return self.plan["dimension"] if self.watch is None else len(self.watch.names)
 
     def _submit(self, chain: int, again: Job | None = None) -> None:
         """Send the next block of a chain, or one `again`, to a worker that lacked the density."""

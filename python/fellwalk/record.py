@@ -160,16 +160,18 @@ class Record(RecordReader):
 
     def append_block(self, chain: int, phase: str, start: int, *, facts: np.ndarray, state: bytes,
                      draws: np.ndarray | None = None, failures: tuple[np.ndarray, np.ndarray, np.ndarray] | None = None,
-                     gradients: np.ndarray | None = None, note: dict[str, Any] | None = None) -> None:
+                     gradients: np.ndarray | None = None, note: dict[str, Any] | None = None,
+                     moments: bytes | None = None) -> None:
         """Add a finished block and the chain's new state; when this returns, they survive a kill and a power cut.
 
         `start` is the number of the block's first draw in its phase and must follow the last one without gap or
         overlap. `facts`: FACTS array (n,). `draws`: float64 (n, dimension) when keeping, None when settling.
         `gradients`: float64 (n, dimension), in all blocks kept of a chain or in none. `failures`: (index, code,
         position), whole numbers (m,) counting draws inside the block, codes (m,), float64 (m, dimension). `note`: any
-        JSON values. After an error nothing of the block is in the record, and the same call may be made again.
+        JSON values. `moments`: bytes about all draws of the chain so far, in place of the last. After an error nothing
+        of the block is in the record, and the same call may be made again.
         """
-        self.append_blocks([Block(chain, phase, start, facts, state, draws, failures, gradients, note)])
+        self.append_blocks([Block(chain, phase, start, facts, state, draws, failures, gradients, note, moments)])
 
     def append_blocks(self, blocks: Iterable[Block]) -> None:
         """Add several blocks, of one chain or many, in one transaction: all or none; see `append_block`."""
@@ -201,6 +203,11 @@ class Record(RecordReader):
         for piece, pieces, chunk, checksum in split(f"state {chain} {block.phase} {stop}", block.state):
             connection.execute("INSERT INTO states VALUES (?, ?, ?, ?, ?, ?, ?)",
                                (chain, piece, pieces, block.phase, stop, chunk, checksum))
+        if block.moments is not None:
+            connection.execute("DELETE FROM moments WHERE chain = ?", (chain,))
+            for piece, pieces, chunk, checksum in split(f"moments {chain} {stop}", block.moments):
+                connection.execute("INSERT INTO moments VALUES (?, ?, ?, ?, ?, ?)",
+                                   (chain, piece, pieces, stop, chunk, checksum))
         self._memory["tail", chain] = _Tail(block.phase, stop, "gradients" in ids)
         self._memory["dimension"] = dimension if dimension is not None else self._memory.get("dimension")
 

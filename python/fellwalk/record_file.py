@@ -40,6 +40,8 @@ CREATE TABLE arrays (id INTEGER PRIMARY KEY, piece INTEGER NOT NULL, pieces INTE
     checksum BLOB NOT NULL);
 CREATE TABLE states (chain INTEGER NOT NULL, piece INTEGER NOT NULL, pieces INTEGER NOT NULL, phase TEXT NOT NULL,
     start INTEGER NOT NULL, data BLOB NOT NULL, checksum BLOB NOT NULL, PRIMARY KEY (chain, piece));
+CREATE TABLE moments (chain INTEGER NOT NULL, piece INTEGER NOT NULL, pieces INTEGER NOT NULL, start INTEGER NOT NULL,
+    data BLOB NOT NULL, checksum BLOB NOT NULL, PRIMARY KEY (chain, piece));
 CREATE TABLE parts (name TEXT NOT NULL, piece INTEGER NOT NULL, pieces INTEGER NOT NULL, data BLOB NOT NULL,
     checksum BLOB NOT NULL, PRIMARY KEY (name, piece));
 """

@@ -54,6 +54,7 @@ class Block:
     failures: tuple[np.ndarray, np.ndarray, np.ndarray] | None = None
     gradients: np.ndarray | None = None
     note: dict[str, Any] | None = None
+    moments: bytes | None = None
 
 
 class Row(NamedTuple):

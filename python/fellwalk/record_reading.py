@@ -189,6 +189,19 @@ class RecordReader:
                     position.append(table["position"])
             return Failures(np.concatenate(draw), np.concatenate(code), np.concatenate(position))
 
+    def moments(self, chain: int) -> bytes | None:
+        """What the last kept block of a chain said about all draws so far; None without, and where a salvaged record
+        has lost blocks since."""
+        with self._reading() as connection:
+            query = "SELECT start, piece, pieces, data, checksum FROM moments WHERE chain = ? ORDER BY piece"
+            rows = connection.execute(query, (chain,)).fetchall()
+            if not rows or (self._sound is not None and rows[0][0] != self.count(chain, "keep")):
+                return None
+            data = join(f"moments {chain} {rows[0][0]}", [row[1:] for row in rows])
+            if data is None:
+                raise self._damaged(f"the running moments of chain {chain}")
+            return data
+
     def notes(self, chain: int, phase: str = "keep") -> list[dict[str, Any] | None]:
         """The note of each block of one chain and phase, in order."""
         with self._reading():
@@ -203,7 +216,9 @@ class RecordReader:
             problems += more
             names = [name for (name,) in connection.execute("SELECT name FROM entries").fetchall()]
             parts = [name for (name,) in connection.execute("SELECT DISTINCT name FROM parts").fetchall()]
-            for read, choices in ((self.get_entry, names), (self.part, parts), (self.latest_state, [*self.counts()])):
+            chains = [*self.counts()]
+            for read, choices in ((self.get_entry, names), (self.part, parts), (self.latest_state, chains),
+                                  (self.moments, chains)):
                 for choice in choices:
                     try:
                         read(choice)

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import os
 from collections.abc import Callable, Sequence
+from dataclasses import replace
 from functools import cached_property
 from typing import TYPE_CHECKING, Any
 
@@ -21,6 +22,7 @@ from fellwalk.run_record import ChainResult, plan_of, read_parts, read_states
 from fellwalk.settled import Settled
 from fellwalk.settling import settling_remarks
 from fellwalk.table import wrap
+from fellwalk.watch import Moments, judged_only
 
 if TYPE_CHECKING:
     import pandas
@@ -42,6 +44,8 @@ class Result:
     settling: the facts of settling, one array a chain. failures: (chain, draw, code, position) arrays of the failed
     steps whose position was kept, while keeping. names, seed, settings: as the run was given them. chains: what each
     chain found while settling (step size, bend, ...). spent: gradients, products and seconds, settling included.
+    Of a run that watches (``watch=`` of `run`), names and draws are those of the watched values only, free_draws cannot
+    be had, and positions in failures hold the watched values; moments: means and variances of all coordinates.
     finished: were all draws asked for made; ended: why not. versions: of what made them.
     """
 
@@ -50,7 +54,8 @@ class Result:
         self.plan = plan
         self.versions: dict[str, Any] = current_versions() if versions is None else versions
         self._states = list(states)
-        self.names: list[str] = plan["names"]
+        self.watched: dict[str, Any] | None = plan.get("watch")
+        self.names: list[str] = self.watched["names"] if self.watched else plan["names"]
         self.parameters = Parameters.from_json(plan["parameters"]) if plan.get("parameters") else None
         self.settings: dict[str, Any] = plan["settings"]
         self.seed = plan["seed"]
@@ -73,21 +78,29 @@ class Result:
 
     @cached_property
     def free_draws(self) -> NDArray[np.float64]:
-        """(chains, draws, dimension): the draws in the coordinates that the chains moved in."""
+        """(chains, draws, dimension): the draws in the coordinates that the chains moved in.
+
+        Errors: ArgumentError for a run that kept only watched values.
+        """
+        if self.watched:
+            raise ArgumentError(f"this run kept {len(self.names)} watched values of each draw, not the whole draws; "
+                                'run it with watch="all" to keep them')
         return self._stack(lambda part: part.draws, (self.plan["dimension"],), np.float64)
 
     @cached_property
     def draws(self) -> NDArray[np.float64]:
         """(chains, draws, parameters), in natural values; without `fellwalk.Parameters` these are `free_draws`."""
+        if self.watched:
+            return self._stack(lambda part: part.draws, (len(self.names),), np.float64)
         return self.free_draws if self.parameters is None else self.parameters.natural(self.free_draws)
 
     def __getitem__(self, name: str) -> NDArray[np.float64]:
         """Natural draws of one parameter, (chains, draws, *its shape). Errors: ArgumentError for an unknown name."""
-        if self.parameters is not None and name in self.parameters.kinds:
+        if self.parameters is not None and name in self.parameters.kinds and not self.watched:
             return self.parameters.pick(name, self.draws)
         if name in self.names:
             return self.draws[..., self.names.index(name)]
-        known = self.names if self.parameters is None else self.parameters.kinds
+        known = self.names if self.parameters is None or self.watched else self.parameters.kinds
         raise ArgumentError(f"there is no parameter {name!r}; there are {', '.join(list(known)[:20])}")
 
     @cached_property
@@ -113,7 +126,8 @@ class Result:
         rows = [(np.full(len(draw), c), draw, code, position)
                 for c, part in enumerate(self._parts) for draw, code, position in part.failures]
         if not rows:
-            rows = [(np.empty(0, int), np.empty(0, int), np.empty(0, int), np.empty((0, self.plan["dimension"])))]
+            width = len(self.names) if self.watched else self.plan["dimension"]
+            rows = [(np.empty(0, int), np.empty(0, int), np.empty(0, int), np.empty((0, width)))]
         chain, draw, code, position = (np.concatenate(column) for column in zip(*rows, strict=True))
         return chain, draw, code, position
 
@@ -121,6 +135,19 @@ class Result:
     def settled(self) -> Settled:
         """What settling has found, for the ``settled=`` of another run. Errors: SettleError before settling ends."""
         return Settled.of_states(self._states, self.plan["dimension"])
+
+    @cached_property
+    def moments(self) -> list[Moments] | None:
+        """Mean, sum of squared deviations and count of every chain, of all natural coordinates (``plan["names"]``),
+        watched or not. None before the first draw, and of a salvaged record that lost draws."""
+        if not self.watched:
+            found = [Moments.of(self.draws.shape[2]) for _ in self._parts]
+            for moments, draws in zip(found, self.draws, strict=True):
+                if len(draws):
+                    moments.add(draws)
+            return found if self._shortest else None
+        kept = [part.moments for part in self._parts]
+        return None if any(moments is None for moments in kept) else kept
 
     @property
     def finished(self) -> bool:
@@ -148,9 +175,16 @@ class Result:
     def judgement(self) -> Judgement:
         """What `judge` says of the draws. Errors: ArgumentError with fewer than four draws a chain."""
         self._enough()
-        return judge(self.draws, self.names, **self._judged_with())
+        if not self.watched:
+            return judge(self.draws, self.names, **self._judged_with())
+        draws = self.draws.astype(bool) if self.watched["events"] else self.draws
+        found = judge(draws, self.names, facts=self.facts, spent=self.spent)
+        note = judged_only(self.watched, len(self.plan["names"]))
+        return replace(found, verdict=replace(found.verdict, notes=(*found.verdict.notes, note)))
 
     def _judged_with(self) -> dict[str, Any]:
+        if self.watched:
+            return {"facts": self.facts, "spent": self.spent}
         coordinates = self.names if self.parameters is None else self.parameters.coordinates
         return {"facts": self.facts, "spent": self.spent, "gradients": self.gradients, "free_draws": self.free_draws,
                 "coordinates": coordinates, "settings": self.settings}
@@ -161,8 +195,8 @@ class Result:
                                 + (f": fellwalk.resume({self.path!r}, density)" if self.path else ""))
 
     def of(self, f: Callable[[NDArray[np.float64]], Any], names: Sequence[str] | None = None) -> Judgement:
-        """Judge a function of the draws: ``f(x)`` with x of shape (dimension,) gives a number, a truth value (its
-        mean is a probability) or a short vector."""
+        """Judge a function of the draws: ``f(x)`` with x of shape (dimension,), or the watched values, gives a number,
+        a truth value (its mean is a probability) or a short vector."""
         self._enough()
         return judge_function(self.draws, f, names, **self._judged_with())
 

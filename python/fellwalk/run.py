@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import os
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping, Sequence
 from concurrent.futures import Executor
 from dataclasses import replace as replace_settings
 from typing import Any
@@ -27,6 +27,7 @@ from fellwalk.run_record import ChainResult, begin, plan_of, read_check, read_pa
 from fellwalk.settings import Settings
 from fellwalk.settled import Settled
 from fellwalk.starts import starting_points
+from fellwalk.watch import Watch, watch_again, watch_of
 from fellwalk.work import Check
 
 __all__ = ["resume", "run"]
@@ -51,6 +52,7 @@ def run(
     rank: int | str = "auto",
     settled: Result | Settled | None = None,
     gradients: bool | None = None,
+    watch: str | int | Sequence[str | int] | Callable[[np.ndarray], Any] | None = None,
     executor: Executor | str | None = None,
     record: str | os.PathLike[str] | None = None,
     replace: bool = False,
@@ -70,7 +72,11 @@ def run(
     rank: directions of large or small variance that the base metric learns beside its diagonal: a number, or "auto":
         those that stand out, at most 16. settled: another result (or its ``settled``), whose settled parts are used in
         turn in the place of settling; the plan keeps their hash.
-    gradients: keep the gradient at every draw (default: up to 1,000 dimensions).
+    gradients: keep the gradient at every draw (default: up to 1,000 dimensions, and not with ``watch``).
+    watch: keep of each draw only these: names of coordinates or parameters, numbers of coordinates, or a function of
+        one draw (parameters,), read-only, that gives a number, a truth value or a vector; of all other coordinates
+        running means and variances are kept (``result.moments``), and the verdict says what it judged. Default: all up
+        to 20,000 coordinates, beyond that 1,000 of them spread evenly; "all" keeps every draw whole in any dimension.
     executor: who makes the blocks: any concurrent.futures.Executor (the density then goes to its workers by pickling,
         or by `Density.factory`), "here", "threads", "processes", or None: threads for compiled densities; for Python
         ones worker processes where they save time, else this process. Draws do not depend on it. An executor that was
@@ -105,6 +111,7 @@ def run(
         "keep": keep,
         "seed": seed,
         "gradients": density.dimension <= _GRADIENTS_UP_TO if gradients is None else bool(gradients),
+        "watch": None,
         "model": density.model,
         "settled": None if taken is None else taken.hash,
         "parameters": None if density.parameters is None else density.parameters.to_json(),
@@ -120,6 +127,7 @@ def run(
         if audit:
             glance_at_start(density)
         raise
+    watching = _watch(plan, watch, density, points[0], gradients)
     states = _first_states(density, settings, points, seed, scale, taken)
     if audit:
         glance(density, points[-1])
@@ -128,17 +136,34 @@ def run(
     transitions = chains * (keep + min(_SETTLE, settings.settle_bounds()[1]))
     with Workers(executor, density, chains, transitions, check) as workers:
         if record is None:
-            return _drive(plan, states, parts, workers, None, progress, seconds)
+            return _drive(plan, states, parts, workers, None, progress, seconds, watching)
         with Record.create(record, plan, replace=replace) as file:
             begin(file, states, check)
-            return _drive(plan, states, parts, workers, file, progress, seconds)
+            return _drive(plan, states, parts, workers, file, progress, seconds, watching)
 
 
 def _drive(plan: dict[str, Any], states: list[bytes], parts: list[ChainResult], workers: Workers, file: Record | None,
-           progress: object, seconds: float | None) -> Result:
+           progress: object, seconds: float | None, watch: Watch | None) -> Result:
     told = choose_progress(progress, plan["keep"], [part.count("keep") for part in parts])
     told.say(workers.why)
-    return Driver(plan, states, parts, workers, file, told, seconds).go()
+    return Driver(plan, states, parts, workers, file, told, seconds, watch).go()
+
+
+def _watch(plan: dict[str, Any], watch: object, density: Density, point: np.ndarray, gradients: bool | None
+           ) -> Watch | None:
+    """What to watch, noted in the plan."""
+    natural = _natural(density, point)
+    found = watch_of(watch, density, natural)
+    if found is not None:
+        if gradients:
+            raise ArgumentError('gradients are kept at whole draws; leave out gradients=True, or say watch="all"')
+        plan["gradients"] = False
+        plan["watch"] = found.to_json(natural)
+    return found
+
+
+def _natural(density: Density, point: np.ndarray) -> np.ndarray:
+    return point if density.parameters is None else density.parameters.natural(point)
 
 
 def _first_states(density: Density, settings: Settings, points: np.ndarray, seed: int,
@@ -169,6 +194,7 @@ def resume(
     density: Density | None = None,
     *,
     keep: int | None = None,
+    watch: Callable[[np.ndarray], Any] | None = None,
     executor: Executor | str | None = None,
     progress: object = None,
     seconds: float | None = None,
@@ -178,6 +204,7 @@ def resume(
     density: that of the run; may be left out when the record names a model that can be imported. At the first starting
         point of the run it is evaluated again and must agree with the record.
     keep: draws a chain in all, when more are wanted than at first; the bits are those of having asked at first.
+    watch: the function that the run watched, where it was one; it must agree at the first starting point, too.
     executor, progress, seconds: as in `run`; they need not be those of the first time.
     Errors: OtherModelError when the density does not agree; RecordError and its kinds; and as `run`.
     """
@@ -194,13 +221,15 @@ def resume(
                 raise ArgumentError(f"{file.path}: this run keeps {plan['keep']} draws a chain already; keep= can only "
                                     f"ask for more, not for {keep}")
             plan = {**plan, "keep": keep}
+        natural = _natural(density, check.position)
+        watching = watch_again(plan.get("watch"), watch, density, natural, file.path)
         parts, states = read_parts(file), read_states(file)
         left = sum(plan["keep"] - part.count("keep") + _SETTLE * (not part.summary.get("settled")) for part in parts)
         with Workers(executor, density, plan["chains"], left, check) as workers:
             if keep is not None:
                 file.set_entry("settings", plan)
             file.append_event("resumed")
-            return _drive(plan, states, parts, workers, file, progress, seconds)
+            return _drive(plan, states, parts, workers, file, progress, seconds, watching)
 
 
 def _named(file: Record, plan: dict[str, Any]) -> Density:

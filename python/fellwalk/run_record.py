@@ -12,6 +12,7 @@ from fellwalk.errors import RecordError
 from fellwalk.record import Block as RecordBlock
 from fellwalk.record import Record
 from fellwalk.settings import Settings
+from fellwalk.watch import Moments
 from fellwalk.work import Check, Done
 
 __all__ = ["ChainResult", "begin", "plan_of", "read_check", "read_parts", "read_states", "record_block"]
@@ -30,6 +31,7 @@ class ChainResult:
     seconds: float = 0.0
     summary: dict[str, Any] = field(default_factory=dict)
     counts: dict[str, int] = field(default_factory=lambda: {"settle": 0, "keep": 0})
+    moments: Moments | None = None  # of all coordinates, of a run that watches
 
     def count(self, phase: str) -> int:
         """Transitions finished in a phase."""
@@ -42,6 +44,7 @@ class ChainResult:
         self.add_facts(block.phase, block.facts)
         self.seconds += done.seconds
         self.summary = done.summary
+        self.moments = block.moments or self.moments
         if block.phase == "keep":
             self.draws.append(block.draws)
             self.gradients.extend([] if block.gradients is None else [block.gradients])
@@ -70,7 +73,8 @@ def record_block(done: Done, part: ChainResult) -> RecordBlock:
     return RecordBlock(done.chain, block.phase, part.count(block.phase), block.facts, done.state,
                        draws=block.draws if keeping else None, failures=block.failures,
                        gradients=block.gradients if keeping else None,
-                       note={"seconds": done.seconds, "summary": done.summary})
+                       note={"seconds": done.seconds, "summary": done.summary},
+                       moments=None if block.moments is None else block.moments.packed())
 
 
 def plan_of(record: Record) -> dict[str, Any]:
@@ -128,5 +132,7 @@ def read_parts(record: Record) -> list[ChainResult]:
             gradients = record.gradients(chain)
             part.gradients.extend([] if gradients is None else [gradients])
             part.failures.append(tuple(record.failures(chain)))
+            kept = record.moments(chain)
+            part.moments = None if kept is None else Moments.unpacked(kept)
         parts.append(part)
     return parts

@@ -21,6 +21,7 @@ from numpy.typing import NDArray
 from fellwalk.chain import Block, Chain, _joined
 from fellwalk.density import Density, brief
 from fellwalk.errors import BusyError, RemoteError, WorkerError
+from fellwalk.watch import Moments, Watch, Watching
 
 __all__ = ["Check", "Done", "Job", "Live", "Parcel", "Reply", "make_block", "make_block_elsewhere"]
 
@@ -37,6 +38,8 @@ class Job:
     most: int
     gradients: bool
     seconds: float = 0.5
+    watch: Watch | None = None
+    moments: Moments | None = None  # of the draws before, of a run that watches
 
 
 @dataclass(frozen=True)
@@ -94,19 +97,30 @@ def make_block(density: Density, job: Job, live: Live | None = None) -> Done:
     begun = time.perf_counter()
     chain = Chain.from_state(density, job.state)
     keeping, phase = chain.settled, chain.phase
+    watching = None
+    if job.watch is not None:
+        moments = Moments.of(len(density.names)) if job.moments is None else job.moments.copy()
+        watching = Watching(job.watch, density, moments)
     parts: list[Block] = []
     moving = time.perf_counter()
     seconds = max(job.seconds, 4 * (moving - begun))  # in millions of dimensions, unpacking a state takes its time
     done, size, elapsed = 0, 1, 0.0
     with live.holding(chain):
         while done < job.most and elapsed < seconds and chain.settled == keeping and not live.stopped:
-            parts.append(chain.block(min(size, job.most - done), draws=keeping, gradients=keeping and job.gradients))
+            try:
+                parts.append(chain.block(min(size, job.most - done), draws=keeping, gradients=keeping and job.gradients,
+                                         watching=watching))
+            except Exception as error:  # of the watched function: the chain is beyond the draws it was asked about
+                block = replace(_joined(phase, [], density.dimension), error=error)
+                return Done(job.chain, block, job.state, time.perf_counter() - begun, chain.summary)
             done += len(parts[-1])
             if parts[-1].error is not None:
                 break
             elapsed = time.perf_counter() - moving
             size = max(1, min(8 * size, int(done * (seconds / elapsed - 1))))
     block = _joined(phase, parts, density.dimension)
+    if watching is not None and keeping:
+        block = replace(block, moments=watching.moments)
     return Done(job.chain, block, chain.state, time.perf_counter() - begun, chain.summary)
 
 
