@@ -81,10 +81,18 @@ void fw_base_kick_drift(const fw_base *base, double kick, double step, fw_point 
     drift_along_directions(base, step, p);
 }
 
-void fw_base_kick2_drift(const fw_base *base, double kc, double kh, double step, fw_point *p)
+void fw_base_kick2_drift(const fw_base *base, double kc, double kh, double step, int spacing, fw_point *p)
 {
+    double sums[2];
+    if (spacing && base->k == 0) {
+        fw_kick2_drift_coarsest(base->d, kc, p->c, kh, p->hc, step, base->r, p->w, p->x, sums);
+        p->ww = sums[0];
+        p->coarsest = sums[1];
+        return;
+    }
     p->ww = fw_kick2_drift(base->d, kc, p->c, kh, p->hc, step, base->r, p->w, p->x);
     drift_along_directions(base, step, p);
+    if (spacing) p->coarsest = fw_coarsest(base->d, base->r, p->x);
 }
 
 void fw_base_arrive(const fw_base *base, fw_point *p)

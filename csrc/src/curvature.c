@@ -53,13 +53,10 @@ int fw_curve_gradient(fw_walk *walk, fw_point *p)
     if (spread) {
         p->cc = fw_whiten_spread(d, base->r, p->g, p->c, walk->natural);
     } else if (fused) {
-        fw_whiten_coarsest(d, base->r, p->g, p->x, p->c, sums);
-        p->cc = sums[0];
-        p->coarsest = sums[1];
+        p->cc = fw_whiten_square(d, base->r, p->g, p->c);
     } else {
         fw_base_gradient(base, p->g, p->c);
         p->cc = fw_dot(d, p->c, p->c);
-        p->coarsest = fw_coarsest(d, base->r, p->x);
     }
     if (!isfinite(p->cc)) return FW_GRADIENT_BAD;
     p->chc = p->hchc = 0.0;

@@ -249,6 +249,33 @@ FW_CLONES double fw_kick2_drift(size_t n, double kc, const double *restrict c, d
     return FOLD(ww);
 }
 
+/* Maxima need no order, but a lane each keeps the passes in vectors. */
+FW_CLONES void fw_kick2_drift_coarsest(size_t n, double kc, const double *restrict c, double kh,
+                                       const double *restrict h, double step, const double *restrict r,
+                                       double *restrict w, double *restrict x, double sums[2])
+{
+    double ww[LANES] = {0}, most[LANES] = {0};
+    size_t i = 0;
+    for (; i + LANES <= n; i += LANES)
+        for (size_t j = 0; j < LANES; ++j) {
+            const double t = w[i + j] + (kc * c[i + j] + kh * h[i + j]), at = x[i + j] + step * (r[i + j] * t);
+            const double spacing = fabs(at) / r[i + j];
+            w[i + j] = t;
+            x[i + j] = at;
+            ww[j] += t * t;
+            most[j] = spacing > most[j] ? spacing : most[j];
+        }
+    for (size_t j = 0; i < n; ++i, ++j) {
+        const double t = w[i] + (kc * c[i] + kh * h[i]), at = x[i] + step * (r[i] * t), spacing = fabs(at) / r[i];
+        w[i] = t;
+        x[i] = at;
+        ww[j] += t * t;
+        most[j] = spacing > most[j] ? spacing : most[j];
+    }
+    sums[0] = fold(ww);
+    sums[1] = largest(most);
+}
+
 FW_CLONES void fw_kick2(size_t n, double kc, const double *restrict c, double kh, const double *restrict h,
                         double *restrict w, double sums[3])
 {
@@ -281,27 +308,11 @@ FW_CLONES double fw_whiten_spread(size_t n, const double *restrict r, const doub
     return FOLD(cc);
 }
 
-/* Maxima need no order, but a lane each keeps the passes in vectors. */
-FW_CLONES void fw_whiten_coarsest(size_t n, const double *restrict r, const double *restrict g, const double *restrict x,
-                                  double *restrict c, double sums[2])
+FW_CLONES double fw_whiten_square(size_t n, const double *restrict r, const double *restrict g, double *restrict c)
 {
-    double s[LANES] = {0}, most[LANES] = {0};
-    size_t i = 0;
-    for (; i + LANES <= n; i += LANES)
-        for (size_t j = 0; j < LANES; ++j) {
-            const double e = r[i + j] * g[i + j], spacing = fabs(x[i + j]) / r[i + j];
-            c[i + j] = e;
-            s[j] += e * e;
-            most[j] = spacing > most[j] ? spacing : most[j];
-        }
-    for (size_t j = 0; i < n; ++i, ++j) {
-        const double e = r[i] * g[i], spacing = fabs(x[i]) / r[i];
-        c[i] = e;
-        s[j] += e * e;
-        most[j] = spacing > most[j] ? spacing : most[j];
-    }
-    sums[0] = fold(s);
-    sums[1] = largest(most);
+    SUM(cc);
+    SWEEP(n, const group e = GET(r) * GET(g); PUT(c, e); ADD(cc, e * e););
+    return FOLD(cc);
 }
 
 FW_CLONES double fw_coarsest(size_t n, const double *restrict r, const double *restrict x)

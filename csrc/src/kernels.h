@@ -4,22 +4,23 @@
  * forbids contraction of a*b+c, so a result has the same bits on every processor and in every function clone.
  *
  * Beyond the caches a step costs what it moves. Vectors of d numbers read + written in one step, the caller's functions
- * apart, without learned directions (each adds 3 to a leapfrog step); "least": every pass between two calls, or between
- * two sums that the next pass needs, reads each vector once and writes only what has changed.
+ * apart, without learned directions (each adds 3 to a leapfrog step). A step begins and ends with a whole state (x, w, c,
+ * g and, where H is asked, H c; leapfrog does without c), because paths weigh, test and keep states. "Least": then
+ * between two calls, or two sums that the next pass needs, each vector is read once and only what has changed is written.
  *
  *   motion                            passes                                                       moved   least
  *   leapfrog                          kick and drift 6, kick 4                                        10      10
  *   surrogate, either scheme          kick and drift 6, whiten 4, kick 3                              13      13
- *   product, split                    kick and drift 7, whiten 4, H c 4, kick 6, H w 3, kick 3        27      27
+ *   product, split                    kick and drift 7, whiten 4, H c 4, kick 6, H w 3, kick 3        27      26
  *   product, semi-explicit            S w 3, H w 5, kick and drift 7, whiten 4, H c 4, S w 3,         35      34
  *                                     H w 5, kick 4
- *   difference, split                 kick and drift 7, whiten 4, probe 4, H c 4, kick 4, probe 4,    34      33
+ *   difference, split                 kick and drift 7, whiten 3, probe 4, H c 4, kick 4, probe 4,    33      33
  *                                     H w 4, kick 3
- *   difference, semi-explicit         probe 4, H w 5, kick and drift 7, whiten 4, probe 4, H c 4,     41      40
+ *   difference, semi-explicit         probe 4, H w 5, kick and drift 7, whiten 3, probe 4, H c 4,     40      39
  *                                     probe 4, H w 5, kick 4
  *
- * What is left: in the third the S w of the second half could go with H c; in the last two the coarsest spacing could
- * be found while drifting, at the price of a division an element in every motion.
+ * What is left, one vector each: in the third row H c as the caller gave it could be kept in the place of H c whitened;
+ * in both semi-explicit rows the S w or the probe of the second half could go with H c.
  */
 #ifndef FW_KERNELS_H
 #define FW_KERNELS_H
@@ -90,6 +91,9 @@ void fw_gram2(size_t n, const double *w, const double *c, double sums[3]);
 /* w += kc c + kh h; x += step r*w; returns w.w */
 double fw_kick2_drift(size_t n, double kc, const double *c, double kh, const double *h, double step, const double *r,
                       double *w, double *x);
+/* the same; sums: w.w, largest |x|/r */
+void fw_kick2_drift_coarsest(size_t n, double kc, const double *c, double kh, const double *h, double step,
+                             const double *r, double *w, double *x, double sums[2]);
 /* w += kc c + kh h; sums: w.w, w.c, w.h */
 void fw_kick2(size_t n, double kc, const double *c, double kh, const double *h, double *w, double sums[3]);
 /* the same, and v = r*w; sums: w.w, w.h */
@@ -97,8 +101,8 @@ void fw_kick2_spread(size_t n, double kc, const double *c, double kh, const doub
                      double *v, double sums[2]);
 /* c = r*g; v = r*c; returns c.c */
 double fw_whiten_spread(size_t n, const double *r, const double *g, double *c, double *v);
-/* c = r*g; sums: c.c, largest |x|/r */
-void fw_whiten_coarsest(size_t n, const double *r, const double *g, const double *x, double *c, double sums[2]);
+/* c = r*g; returns c.c */
+double fw_whiten_square(size_t n, const double *r, const double *g, double *c);
 double fw_coarsest(size_t n, const double *r, const double *x); /* largest |x|/r */
 /* out = x + h r*p */
 void fw_probe(size_t n, double h, const double *x, const double *r, const double *p, double *out);

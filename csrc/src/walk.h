@@ -74,7 +74,7 @@ int fw_evaluate(fw_walk *walk, const double *x, double *value, double *g);
 int fw_evaluate_probe(fw_walk *walk);
 int fw_multiply(fw_walk *walk, const double *x);
 
-/* curvature.c: from x and g of the point: c, cc, hc, chc, hchc, coarsest. */
+/* curvature.c: from x, g and, for differences, coarsest of the point: c, cc, hc, chc, hchc. */
 int fw_curve_gradient(fw_walk *walk, fw_point *p);
 /* w.H~w at the point, ww set. spread: walk->natural is S w already. */
 int fw_curve_velocity(fw_walk *walk, const fw_point *p, int spread, double *whw);
@@ -90,8 +90,8 @@ void fw_base_whiten_velocity(const fw_base *base, const double *v, double *w);
 void fw_base_gradient(const fw_base *base, const double *g, double *c);    /* c = S^T g */
 /* w += kick c; x += step S w */
 void fw_base_kick_drift(const fw_base *base, double kick, double step, fw_point *p);
-/* w += kc c + kh hc, ww; x += step S w */
-void fw_base_kick2_drift(const fw_base *base, double kc, double kh, double step, fw_point *p);
+/* w += kc c + kh hc, ww; x += step S w; spacing: coarsest of the new x, too */
+void fw_base_kick2_drift(const fw_base *base, double kc, double kh, double step, int spacing, fw_point *p);
 /* c = S^T g; sums of p */
 void fw_base_arrive(const fw_base *base, fw_point *p);
 
