@@ -13,8 +13,12 @@ from pathlib import Path
 
 HERE = Path(__file__).resolve().parent
 SPEED = ("speed", "against_numpy", "threads", "memory", "storage", "step_time", "driver_time", "bounded_parameters")
-STATISTICS = ("directions", "turn_test", "effective_draws")
-TAKES_QUICK = ("speed", "against_numpy", "step_time")
+
+
+def others() -> list[str]:
+    """Benchmarks that are not about speed: every other file here that runs by itself and needs no argument."""
+    found = sorted(file for file in HERE.glob("*.py") if "if __name__" in file.read_text(encoding="utf-8"))
+    return [file.stem for file in found if file.stem not in (*SPEED, "run_all", "compare")]
 
 
 def main() -> int:
@@ -22,15 +26,16 @@ def main() -> int:
     parser.add_argument("--quick", action="store_true", help="rough answers, and of speed only")
     parser.add_argument("names", nargs="*", metavar="NAME")
     options = parser.parse_args()
-    names = options.names or (SPEED if options.quick else SPEED + STATISTICS)
+    known = [*SPEED, *others()]
+    names = options.names or (SPEED if options.quick else known)
     wrong = []
     for name in names:
         file = HERE / f"{name}.py"
-        if not file.exists():
-            parser.error(f"there is no benchmark {name!r}; there are {', '.join(SPEED + STATISTICS)}")
+        if name not in known:
+            parser.error(f"there is no benchmark {name!r}; there are {', '.join(known)}")
         print(f"\n==== {name}\n", flush=True)
         begun = time.monotonic()
-        quick = ["--quick"] if options.quick and name in TAKES_QUICK else []
+        quick = ["--quick"] if options.quick and '"--quick"' in file.read_text(encoding="utf-8") else []
         if subprocess.run([sys.executable, str(file), *quick], check=False).returncode:
             wrong.append(name)
         print(f"\n({time.monotonic() - begun:.0f} s)", flush=True)

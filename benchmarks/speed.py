@@ -1,10 +1,10 @@
 """What the package adds to the user's function: small d, Python functions, memory traffic, growth with d.
 
-    python benchmarks/speed.py            all of it, five minutes of one processor
+    python benchmarks/speed.py            all of it, six minutes of one processor
     python benchmarks/speed.py --quick    d up to 1e5, shorter repeats, half a minute
 
 Every line has its bound beside it and says whether it was kept. Net times leave out the density's own calls, timed
-alone in the same run; of repeats the least is taken, as everything that disturbs a time makes it longer.
+alone in turn with the rest, and are medians of the repeats; processor time, of the thread that works.
 """
 
 import argparse
@@ -20,7 +20,21 @@ from functools import cache
 from pathlib import Path
 
 import numpy as np
-from common import HERE, _build, _repeat, busy, fw, machine, rounds_for, short_time, table, targets
+from common import (
+    HERE,
+    Callback,
+    _build,
+    _repeat,
+    busy,
+    fw,
+    interleaved,
+    machine,
+    rounds_for,
+    short_time,
+    table,
+    targets,
+    timer,
+)
 from scipy import LowLevelCallable
 
 # Vectors read and written in one step: the table in csrc/src/kernels.h, which tests/test_speed_counts.py checks.
@@ -30,20 +44,9 @@ MOVED = {
     "surrogate": (fw.Lagrangian(curvature="surrogate"), 13, 5),
     "product, split": (fw.Lagrangian(curvature="product"), 27, 8),
     "product, semi-explicit": (fw.Lagrangian(curvature="product", scheme="semi-explicit"), 35, 8),
-    "difference, split": (fw.Lagrangian(curvature="difference"), 34, 8),
-    "difference, semi-explicit": (fw.Lagrangian(curvature="difference", scheme="semi-explicit"), 41, 8),
+    "difference, split": (fw.Lagrangian(curvature="difference"), 33, 8),
+    "difference, semi-explicit": (fw.Lagrangian(curvature="difference", scheme="semi-explicit"), 40, 8),
 }
-
-
-def least(work: Callable[[int], object], seconds: float, repeats: int = 7) -> float:
-    """Least seconds of one of n rounds of work(n), n chosen for about `seconds`."""
-    n = rounds_for(work, seconds)
-    found = []
-    for _ in range(repeats):
-        begun = time.thread_time()
-        work(n)
-        found.append((time.thread_time() - begun) / n)
-    return min(found)
 
 
 # ---- compiled densities in three makes -------------------------------------------------------------------------------
@@ -83,8 +86,8 @@ def numba_normal() -> LowLevelCallable:
     return LowLevelCallable(normal.ctypes, signature="int (size_t, double *, double *, double *, void *)")
 
 
-def own_time(function: LowLevelCallable, d: int, seconds: float) -> float:
-    """Seconds of a bare call from C."""
+def calls_of(function: LowLevelCallable, d: int) -> Callable[[int], None]:
+    """A function of n that makes n bare calls from C."""
     api = ctypes.pythonapi
     api.PyCapsule_GetName.restype = ctypes.c_char_p
     api.PyCapsule_GetName.argtypes = [ctypes.py_object]
@@ -98,72 +101,141 @@ def own_time(function: LowLevelCallable, d: int, seconds: float) -> float:
     def calls(n: int) -> None:
         _repeat().repeat_density(pointer, ctypes.c_long(n), ctypes.c_size_t(d), *arrays, None)
 
-    return least(calls, seconds)
+    calls.held = (function, x, value, gradient)
+    return calls
 
 
-def small(seconds: float) -> str:
-    """d = 10: everything included, per step."""
+def kept(value: float, bound: float) -> str:
+    """Was it?"""
+    return "yes" if value <= bound else "NO"
+
+
+def ns(value: float) -> str:
+    """Nanoseconds, whole."""
+    return f"{1e9 * value:.0f}"
+
+
+# ---- small d ---------------------------------------------------------------------------------------------------------
+
+KINDS = [(motion, bound, path) for motion, bound in ((fw.Leapfrog(), 100), (fw.Lagrangian(bend=0.5), 200))
+         for path in (fw.Jittered(16), fw.NoUTurn())]
+
+
+def small(seconds: float, repeats: int) -> str:
+    """d = 10: everything included, per step, while keeping and while settling."""
     d, rows = 10, []
     makes = {"C": targets.standard_normal(d).density, "Numba": numba_normal(), "Cython": cython_normal()}
     for make, function in makes.items():
-        own = own_time(function, d, seconds)
-        for motion, bound in ((fw.Leapfrog(), 100), (fw.Lagrangian(bend=0.5), 200)):
-            for path in (fw.Jittered(16), fw.NoUTurn()):
-                chain = fw.Chain(fw.Density(function, d), np.full(d, 0.1), motion=motion, path=path, seed=3, settle=300)
-                chain.settle()
-                draws, found = 2000, []
-                for _ in range(15):
-                    begun = time.thread_time()
-                    facts = chain.advance(draws).facts
-                    spent = time.thread_time() - begun
-                    found.append((spent - facts["gradients"].sum() * own) / facts["steps"].sum())
-                net, a_draw = 1e9 * min(found), facts["steps"].mean()
-                rows.append([make, motion.name, type(path).__name__, f"{a_draw:.1f}", f"{1e9 * own:.1f}", f"{net:.0f}",
-                             str(bound), "yes" if net <= bound else "NO"])
-    return table(["density", "motion", "path", "steps a draw", "own ns", "beyond, ns", "bound", "kept"], rows)
+        density = fw.Density(function, d)
+        for motion, bound, path in KINDS:
+            def fresh(density: fw.Density = density, motion: fw.Motion = motion, path: fw.Path = path) -> fw.Chain:
+                return fw.Chain(density, np.full(d, 0.1), motion=motion, path=path, seed=3, settle=1000)
+
+            chain, counted = fresh(), {}
+            chain.settle()
+
+            def keeping(chain: fw.Chain = chain, counted: dict = counted) -> float:
+                begun = time.thread_time()
+                facts = chain.advance(3000).facts
+                spent = time.thread_time() - begun
+                counted["keeping"] = facts["gradients"].sum() / facts["steps"].sum()
+                counted["steps"] = facts["steps"].mean()
+                return spent / facts["steps"].sum()
+
+            def settling(fresh: Callable = fresh, counted: dict = counted) -> float:
+                new = fresh()
+                begun = time.thread_time()
+                facts = new.block(2**62).facts
+                spent = time.thread_time() - begun
+                counted["settling"] = facts["gradients"].sum() / facts["steps"].sum()
+                return spent / facts["steps"].sum()
+
+            found = interleaved({"own": timer(calls_of(function, d), seconds / 4), "keeping": keeping,
+                                 "settling": settling}, repeats)
+            net = {phase: np.median(found[phase] - counted[phase] * found["own"]) for phase in ("keeping", "settling")}
+            rows.append([make, motion.name, type(path).__name__, f"{counted['steps']:.1f}",
+                         f"{1e9 * np.median(found['own']):.1f}", ns(net["keeping"]), ns(net["settling"]), str(bound),
+                         kept(1e9 * net["keeping"], bound), kept(1e9 * net["settling"], bound)])
+    return table(["density", "motion", "path", "steps a draw", "own ns", "keeping, ns", "settling, ns", "bound",
+                  "kept while keeping", "settling"], rows)
+
+
+def whole_run(repeats: int) -> str:
+    """d = 10 by `run`: what a step takes of all processor time of the process, without a record and with one."""
+    d, few, many, rows = 10, 2_000, 102_000, []
+    function = numba_normal()
+    density = fw.Density(function, d, start=np.full(d, 0.1))
+    for motion, bound, path in KINDS:
+        ratio = [1.0, 1.0]
+        with tempfile.TemporaryDirectory() as folder:
+            def spent(keep: int, record: bool, motion: fw.Motion = motion, path: fw.Path = path,
+                      folder: str = folder) -> tuple[float, int, int]:
+                begun = time.process_time()
+                found = fw.run(density, motion=motion, path=path, chains=1, keep=keep, seed=3, settle=300,
+                               executor="here", progress="off", audit=False, replace=True,
+                               record=f"{folder}/{keep}.fell" if record else None).facts
+                return time.process_time() - begun, int(found["steps"].sum()), int(found["gradients"].sum())
+
+            def a_step(record: bool, spent: Callable = spent, ratio: list = ratio) -> Callable[[], float]:
+                def timed() -> float:
+                    one, more = spent(few, record), spent(many, record)
+                    whole, steps, gradients = (b - a for a, b in zip(one, more, strict=True))
+                    ratio[:] = [gradients / steps, steps / (many - few)]
+                    return whole / steps
+
+                return timed
+
+            found = interleaved({"own": timer(calls_of(function, d), 0.01), "none": a_step(False),
+                                 "record": a_step(True)}, repeats)
+        none, record = (np.median(found[key] - ratio[0] * found["own"]) for key in ("none", "record"))
+        rows.append([motion.name, type(path).__name__, f"{ratio[1]:.1f}", ns(none), ns(record),
+                     ns((record - none) * ratio[1]), str(bound), kept(1e9 * none, bound), kept(1e9 * record, bound)])
+    return table(["motion", "path", "steps a draw", "no record, ns", "record, ns", "record, ns a draw", "bound",
+                  "kept without", "with"], rows)
 
 
 # ---- Python functions ------------------------------------------------------------------------------------------------
 
 
-def python_calls(seconds: float) -> str:
+def python_calls(seconds: float, repeats: int) -> str:
     """Nanoseconds of a chain's step beyond the bare call of the Python function that it calls once."""
     rows = []
     for d in (2, 10, 100):
-        x, gradient, kept = np.linspace(-1.0, 1.0, d), np.empty(d), -np.linspace(-1.0, 1.0, d)
+        x, gradient, same = np.linspace(-1.0, 1.0, d), np.empty(d), -np.linspace(-1.0, 1.0, d)
 
-        def in_place(x: np.ndarray, gradient: np.ndarray, kept: np.ndarray = kept) -> float:
-            gradient[:] = kept
+        def in_place(x: np.ndarray, gradient: np.ndarray, same: np.ndarray = same) -> float:
+            gradient[:] = same
             return -1.5
 
-        def pair(x: np.ndarray, kept: np.ndarray = kept) -> tuple[float, np.ndarray]:
-            return -1.5, kept
+        def pair(x: np.ndarray, same: np.ndarray = same) -> tuple[float, np.ndarray]:
+            return -1.5, same
 
         for form, function, arguments, bound in (("in place", in_place, (x, gradient), 300), ("pair", pair, (x,), 700)):
             def bare(n: int, function: Callable = function, arguments: tuple = arguments) -> None:
                 for _ in range(n):
                     function(*arguments)
 
-            density = fw.Density(function, d, in_place=form == "in place")
-            chain = fw.Chain(density, x, path=fw.Jittered(32), seed=1, step_size=1e-3)
-            whole = []
-            for _ in range(15):
+            chain = fw.Chain(fw.Density(function, d, in_place=form == "in place"), x, path=fw.Jittered(32), seed=1,
+                             step_size=1e-3)
+
+            def a_step(chain: fw.Chain = chain) -> float:
                 begun = time.thread_time()
                 facts = chain.advance(200).facts
-                whole.append((time.thread_time() - begun) / facts["gradients"].sum())
-            own = least(bare, seconds)
-            beyond = 1e9 * (min(whole) - own)
-            rows.append([form, f"{d}", f"{1e9 * own:.0f}", f"{beyond:.0f}", str(bound),
-                         "yes" if beyond <= bound else "NO"])
+                return (time.thread_time() - begun) / facts["gradients"].sum()
+
+            found = interleaved({"bare": timer(bare, seconds / 4), "step": a_step}, repeats)
+            beyond = 1e9 * np.median(found["step"] - found["bare"])
+            rows.append([form, f"{d}", ns(np.median(found["bare"])), f"{beyond:.0f}", str(bound), kept(beyond, bound)])
     return table(["form", "d", "bare, ns", "step beyond, ns", "bound of the call", "kept"], rows)
 
 
 # ---- memory ----------------------------------------------------------------------------------------------------------
 
 
-def step_times(name: str, d: int, seconds: float, repeats: int) -> tuple[float, float]:
-    """(net seconds a step, seconds of one copy of d numbers), interleaved. The copies go round as many vectors as a
-    step has, so that both find theirs in the same level of memory."""
+def step_times(name: str, d: int, seconds: float, repeats: int) -> tuple[np.ndarray, np.ndarray]:
+    """(net seconds a step, seconds of one copy of d numbers), a number each repeat. The copies go round as many vectors
+    as a step has, so that both find theirs in the same level of memory; the callbacks are timed over and over at the
+    same place, where they are quickest, so that net times are on the long side."""
     motion, _, different = MOVED[name]
     target = targets.standard_normal(d)
     density = fw.Density(target.density, d, hessian_product=target.hessian_product)
@@ -172,53 +244,45 @@ def step_times(name: str, d: int, seconds: float, repeats: int) -> tuple[float, 
     ring = [rng.standard_normal(d) for _ in range(different)]
     spent = {"gradients": 0, "products": 0}
 
-    def go(steps: int) -> None:
+    def go(steps: int) -> float:
+        begun = time.thread_time()
         end = fw.integrate(density, x, v, motion=motion, step_size=0.05, steps=steps, scale=scale, beta=1.0 / d)
         if end.status:
             raise RuntimeError(end.sentence)
         spent["gradients"], spent["products"] = end.gradients, end.products
+        return time.thread_time() - begun
 
     def copies(n: int) -> None:
         for i in range(n):
             np.copyto(ring[i % different], ring[i % different - 1])
 
-    from common import Callback
-
     callback = Callback(target, "standard_normal")
     # Making the chain of a path touches fresh pages: enough steps that their own time stands out.
-    n, m = max(6 if d > 1_000_000 else 30, rounds_for(go, seconds)), max(2 * different, rounds_for(copies, seconds))
-    k = max(1, rounds_for(callback.gradients, seconds))
+    n = max(6 if d > 1_000_000 else 30, rounds_for(go, seconds))
     go(1)
     few = dict(spent)
     go(1 + n)
     calls = {key: (spent[key] - few[key]) / n for key in spent}
-    times: dict[str, list[float]] = {key: [] for key in ("one", "more", "copy", "gradient", "product")}
-    for _ in range(repeats):
-        marks = [time.thread_time()]
-        for work in (lambda: go(1), lambda: go(1 + n), lambda: copies(m), lambda: callback.gradients(k),
-                     lambda: callback.products(k)):
-            work()
-            marks.append(time.thread_time())
-        one, more, copied, gradients, products = np.diff(marks)
-        times["one"].append(one)
-        times["more"].append(more)
-        times["copy"].append(copied / m)
-        times["gradient"].append(gradients / k)
-        times["product"].append(products / k)
-    best = {key: min(found) for key, found in times.items()}
-    net = (best["more"] - best["one"]) / n - calls["gradients"] * best["gradient"] - calls["products"] * best["product"]
-    return net, best["copy"]
+    works = {"step": lambda: (go(1 + n) - go(1)) / n, "copy": timer(copies, max(seconds, 1e-9 * d)),
+             "gradient": timer(callback.gradients, seconds / 2)}
+    if calls["products"]:
+        works["product"] = timer(callback.products, seconds / 2)
+    found = interleaved(works, repeats)
+    net = found["step"] - calls["gradients"] * found["gradient"]
+    return net - calls["products"] * found["product"] if calls["products"] else net, found["copy"]
 
 
-def traffic(seconds: float, repeats: int) -> str:
-    """d = 1e6: net time of a step over the time that its bytes take at the bandwidth of a copy."""
-    d, rows = 1_000_000, []
-    for name, (_, vectors, _) in MOVED.items():
-        net, copy = step_times(name, d, seconds, repeats)
-        ratio = net / (vectors * copy / 2)  # a copy reads one vector and writes one
-        rows.append([name, str(vectors), short_time(net), f"{16 * d / copy / 1e9:.1f}",
-                     f"{8 * d * vectors / net / 1e9:.1f}", f"{ratio:.2f}", "1.3", "yes" if ratio <= 1.3 else "NO"])
-    head = ["motion", "vectors", "net a step", "copy, GB/s", "step, GB/s", "ratio", "bound", "kept"]
+def traffic(sizes: tuple[int, ...], seconds: float, repeats: int) -> str:
+    """Net time of a step over the time that its bytes take at the bandwidth of a copy, both in one run."""
+    rows = []
+    for d in sizes:
+        for name, (_, vectors, _) in MOVED.items():
+            net, copy = step_times(name, d, seconds, repeats)
+            ratio = np.median(net / (vectors * copy / 2))  # a copy reads one vector and writes one
+            rows.append([name, f"{d:.0e}".replace("+0", ""), str(vectors), short_time(np.median(net)),
+                         f"{16e-9 * d / np.median(copy):.1f}", f"{8e-9 * d * vectors / np.median(net):.1f}",
+                         f"{ratio:.2f}", "1.3", kept(ratio, 1.3)])
+    head = ["motion", "d", "vectors", "net a step", "copy, GB/s", "step, GB/s", "ratio", "bound", "kept"]
     return table(head, rows)
 
 
@@ -227,13 +291,43 @@ def growth(sizes: tuple[int, ...], seconds: float, repeats: int) -> str:
     rows = []
     for name in ("leapfrog", "surrogate"):
         _, vectors, different = MOVED[name]
-        found = {d: step_times(name, d, seconds, repeats) for d in sizes}
-        for d, (net, copy) in found.items():
-            rows.append([name, f"{d:g}", f"{8 * d * different / 2**20:.3g}", f"{1e9 * net / d:.2f}",
-                         f"{16 * d / copy / 1e9:.1f}", f"{8 * d * vectors / net / 1e9:.1f}",
-                         f"{net / (vectors * copy / 2):.2f}"])
+        for d in sizes:
+            net, copy = step_times(name, d, seconds, repeats)
+            rows.append([name, f"{d:g}", f"{8 * d * different / 2**20:.3g}", f"{1e9 * np.median(net) / d:.2f}",
+                         f"{16e-9 * d / np.median(copy):.1f}", f"{8e-9 * d * vectors / np.median(net):.1f}",
+                         f"{np.median(net / (vectors * copy / 2)):.2f}"])
     head = ["motion", "d", "its vectors, MiB", "net, ns an element", "copy, GB/s", "step, GB/s", "ratio"]
     return table(head, rows)
+
+
+def paths(sizes: tuple[int, ...], repeats: int) -> str:
+    """Whole transitions: what a step takes beyond the callback with everything that a path does around it."""
+    rows = []
+    for d in sizes:
+        target = targets.standard_normal(d)
+        density, callback = fw.Density(target.density, d), Callback(target, "standard_normal")
+        for motion in (fw.Leapfrog(), fw.Lagrangian(bend=0.5)):
+            name = "leapfrog" if motion.name == "leapfrog" else "surrogate"
+            pure, _ = step_times(name, d, 0.05, repeats)
+            for path in (fw.Jittered(16), fw.NoUTurn()):
+                chain = fw.Chain(density, np.zeros(d) + 0.1, motion=motion, path=path, seed=3, rank=0, beta=0.5 / d,
+                                 step_size=0.6 * d**-0.25, scale=np.ones(d), adapt_scale=False)
+                draws, counted = max(3, 3_000_000 // d), {}
+
+                def a_step(chain: fw.Chain = chain, draws: int = draws, counted: dict = counted) -> float:
+                    begun = time.thread_time()
+                    facts = chain.block(draws, draws=False).facts
+                    spent = time.thread_time() - begun
+                    counted["gradients"] = facts["gradients"].sum() / facts["steps"].sum()
+                    counted["steps"] = facts["steps"].mean()
+                    return spent / facts["steps"].sum()
+
+                found = interleaved({"gradient": timer(callback.gradients, 0.02), "step": a_step}, repeats)
+                net = np.median(found["step"] - counted["gradients"] * found["gradient"])
+                rows.append([motion.name, type(path).__name__, f"{d:g}", f"{counted['steps']:.0f}",
+                             short_time(np.median(found["gradient"])), short_time(np.median(pure)), short_time(net),
+                             f"{net / np.median(pure):.2f}"])
+    return table(["motion", "path", "d", "steps a draw", "callback", "step alone", "in a path", "path / alone"], rows)
 
 
 def main() -> None:
@@ -241,13 +335,15 @@ def main() -> None:
     parser.add_argument("--quick", action="store_true", help="d up to 1e5, shorter repeats")
     quick = parser.parse_args().quick
     seconds, repeats = (0.02, 5) if quick else (0.1, 9)
-    print(f"{machine()}\nProcessor time, least of repeats, one thread; {busy()} before.\n")
-    print(f"Small d: beyond the callbacks, per step, everything included\n\n{small(seconds)}\n")
-    print(f"Python functions\n\n{python_calls(seconds)}\n")
+    print(f"{machine()}\nProcessor time, medians of {repeats} interleaved repeats, one thread; {busy()} before.\n")
+    print(f"Small d: beyond the callbacks, per step, everything included\n\n{small(seconds, 2 * repeats + 1)}\n")
+    print(f"The same by run, into memory and into a record on disk\n\n{whole_run(3 if quick else 5)}\n")
+    print(f"Python functions\n\n{python_calls(seconds, 2 * repeats + 1)}\n", flush=True)
     if not quick:
-        print(f"Memory traffic, d = 1e6\n\n{traffic(seconds, repeats)}\n")
-    sizes = (100, 1_000, 10_000, 100_000) + (() if quick else (1_000_000, 10_000_000))
-    print(f"Growth with d\n\n{growth(sizes, seconds, repeats)}\n\n{busy()} after.")
+        print(f"Memory traffic\n\n{traffic((1_000_000, 10_000_000), seconds, 5)}\n", flush=True)
+    sizes = (100, 1_000, 10_000, 100_000) + (() if quick else (1_000_000, 10_000_000, 30_000_000))
+    print(f"Growth with d\n\n{growth(sizes, seconds, 5)}\n", flush=True)
+    print(f"Steps in their paths\n\n{paths((1_000, 100_000), 5)}\n\n{busy()} after.")
 
 
 if __name__ == "__main__":
