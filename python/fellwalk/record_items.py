@@ -75,12 +75,12 @@ class Row(NamedTuple):
 
 
 def checksum_of(label: str, data: Any = b"") -> bytes:
-    # BLAKE2b, not CRC-32: 16 bytes leave no chance for unnoticed damage (CRC-32: one in 4e9), its time is small beside
-    # the sync's, and the same function names parts by their content. The label makes a swapped blob as visible as a
-    # broken one.
-    digest = hashlib.blake2b(label.encode(errors="backslashreplace") + b"\0", digest_size=16)
+    # Not CRC-32: 16 bytes leave no chance for unnoticed damage (CRC-32: one in 4e9). SHA-256, as processors have
+    # instructions for it: half the time of BLAKE2b where they do, and no more where they do not. The label makes a
+    # swapped blob as visible as a broken one.
+    digest = hashlib.sha256(label.encode(errors="backslashreplace") + b"\0", usedforsecurity=False)
     digest.update(data)
-    return digest.digest()
+    return digest.digest()[:16]
 
 
 def row_checksum(*values: Any) -> bytes:
