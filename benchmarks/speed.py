@@ -128,7 +128,7 @@ def small(seconds: float, repeats: int) -> str:
     for make, function in makes.items():
         density = fw.Density(function, d)
         for motion, bound, path in KINDS:
-            def fresh(density: fw.Density = density, motion: fw.Motion = motion, path: fw.Path = path) -> fw.Chain:
+            def fresh(density: fw.Density = density, motion: fw.motions.Motion = motion, path: fw.motions.Path = path) -> fw.Chain:
                 return fw.Chain(density, np.full(d, 0.1), motion=motion, path=path, seed=3, settle=1000)
 
             chain, counted = fresh(), {}
@@ -168,7 +168,7 @@ def whole_run(repeats: int) -> str:
     for motion, bound, path in KINDS:
         ratio = [1.0, 1.0]
         with tempfile.TemporaryDirectory() as folder:
-            def spent(keep: int, record: bool, motion: fw.Motion = motion, path: fw.Path = path,
+            def spent(keep: int, record: bool, motion: fw.motions.Motion = motion, path: fw.motions.Path = path,
                       folder: str = folder) -> tuple[float, int, int]:
                 begun = time.process_time()
                 found = fw.run(density, motion=motion, path=path, chains=1, keep=keep, seed=3, settle=300,

@@ -16,7 +16,7 @@
 #include "kernels.h"
 #include "small.h"
 
-#define ROWS FW_WINDOW_ROWS
+#define ROWS FW_WINDOW_ROWS /* at most FW_SMALL_MOST */
 #define SPAN 60                      /* dimensions of the span: fewer than rows, or covariances in it are singular */
 #define WIDE (2 * ROWS + FW_MAX_DIRECTIONS) /* rows of the Gram matrix: y, c, directions known before */
 
@@ -49,13 +49,13 @@ static size_t leading(const double *w, size_t n, size_t from, size_t to, size_t 
     }
     for (size_t i = 0; i < m; ++i)
         for (size_t j = 0; j < m; ++j) k[i * m + j] = w[(from + i) * n + from + j] - mean[i] - mean[j] + whole;
-    fw_small_eigen(m, k, values, v);
+    const size_t r = fw_small_range(m, k, values, v);
     size_t count = 0;
-    while (count < most && count < m && values[count] > 1e-10 * values[0] && values[count] > 0.0) {
+    while (count < most && count < r && values[count] > 1e-10 * values[0] && values[count] > 0.0) {
         double sum = 0.0;
         memset(out[count], 0, sizeof out[count]);
-        for (size_t i = 0; i < m; ++i) sum += v[i * m + count] / (double)m;
-        for (size_t i = 0; i < m; ++i) out[count][from + i] = (v[i * m + count] - sum) / sqrt(values[count]);
+        for (size_t i = 0; i < m; ++i) sum += v[i * r + count] / (double)m;
+        for (size_t i = 0; i < m; ++i) out[count][from + i] = (v[i * r + count] - sum) / sqrt(values[count]);
         ++count;
     }
     return count;
@@ -64,10 +64,7 @@ static size_t leading(const double *w, size_t n, size_t from, size_t to, size_t 
 /* product[i] = sum_j w[i][j] row[j] */
 static void times(const double *w, size_t n, const double *row, double *product)
 {
-    for (size_t i = 0; i < n; ++i) {
-        product[i] = 0.0;
-        for (size_t j = 0; j < n; ++j) product[i] += w[i * n + j] * row[j];
-    }
+    for (size_t i = 0; i < n; ++i) product[i] = fw_dot(n, w + i * n, row);
 }
 
 /* Orthonormal basis of the span of `count` combinations, in place; nearly dependent parts are dropped. */
@@ -76,21 +73,17 @@ static size_t orthonormal(const double *w, size_t n, size_t count, double rows[]
     double gram[SPAN * SPAN], v[SPAN * SPAN], values[SPAN], old[SPAN][WIDE], product[WIDE];
     for (size_t a = 0; a < count; ++a) {
         times(w, n, rows[a], product);
-        for (size_t b = 0; b < count; ++b) {
-            gram[a * count + b] = 0.0;
-            for (size_t i = 0; i < n; ++i) gram[a * count + b] += product[i] * rows[b][i];
-        }
+        for (size_t b = 0; b < count; ++b) gram[a * count + b] = fw_dot(n, product, rows[b]);
         memcpy(old[a], rows[a], sizeof old[a]);
     }
     for (size_t a = 0; a < count; ++a)
         for (size_t b = 0; b < a; ++b)
             gram[a * count + b] = gram[b * count + a] = 0.5 * (gram[a * count + b] + gram[b * count + a]);
-    fw_small_eigen(count, gram, values, v);
+    const size_t r = fw_small_range(count, gram, values, v);
     size_t kept = 0;
-    for (; kept < count && values[kept] > 1e-6; ++kept) {
+    for (; kept < r && values[kept] > 1e-6; ++kept) {
         memset(rows[kept], 0, sizeof rows[kept]);
-        for (size_t a = 0; a < count; ++a)
-            for (size_t i = 0; i < n; ++i) rows[kept][i] += v[a * count + kept] / sqrt(values[kept]) * old[a][i];
+        for (size_t a = 0; a < count; ++a) fw_axpy(n, v[a * r + kept] / sqrt(values[kept]), old[a], rows[kept]);
     }
     return kept;
 }
@@ -108,9 +101,7 @@ static void covariance(const double *w, size_t n, size_t first, size_t m, size_t
     double trace = 0.0;
     for (size_t a = 0; a < r; ++a)
         for (size_t b = 0; b <= a; ++b) {
-            double sum = 0.0;
-            for (size_t i = 0; i < m; ++i) sum += t[a][i] * t[b][i];
-            c[a * r + b] = c[b * r + a] = sum / (double)(m - 1);
+            c[a * r + b] = c[b * r + a] = fw_dot(m, t[a], t[b]) / (double)(m - 1);
             if (a == b) trace += c[a * r + a];
         }
     for (size_t a = 0; a < r; ++a) c[a * r + a] += 1e-13 * trace;
@@ -189,8 +180,7 @@ static void estimate(const window *win, size_t from, size_t to, size_t most, dou
         if (fabs(log(values[j])) < threshold) return;
         double *rows = out->rows[out->count];
         memset(rows, 0, sizeof out->rows[0]);
-        for (size_t a = 0; a < r; ++a)
-            for (size_t i = 0; i < win->n; ++i) rows[i] += v[a * r + j] * basis[a][i];
+        for (size_t a = 0; a < r; ++a) fw_axpy(win->n, v[a * r + j], basis[a], rows);
         out->log_lambda[out->count++] = log(values[j]);
     }
 }

@@ -63,6 +63,48 @@ void fw_small_eigen(size_t n, double *a, double *values, double *v)
     }
 }
 
+/* a = l l^T with the largest diagonal entry left as each pivot (Golub & Van Loan, section 4.2.8); l is n x n, its first
+ * r columns are used. */
+static size_t pivoted(size_t n, double *a, double *l)
+{
+    double first = 0.0;
+    for (size_t r = 0; r < n; ++r) {
+        size_t p = 0;
+        for (size_t i = 1; i < n; ++i)
+            if (a[i * n + i] > a[p * n + p]) p = i;
+        const double pivot = a[p * n + p];
+        if (r == 0) first = pivot;
+        if (!(pivot > 1e-14 * first)) return r;
+        const double root = sqrt(pivot);
+        for (size_t i = 0; i < n; ++i) l[i * n + r] = a[i * n + p] / root;
+        for (size_t i = 0; i < n; ++i)
+            for (size_t j = 0; j < n; ++j) a[i * n + j] -= l[i * n + r] * l[j * n + r];
+        a[p * n + p] = 0.0;
+    }
+    return n;
+}
+
+/* With a = l l^T, the eigenvalues are those of l^T l, and l takes its eigenvectors to those of a. */
+size_t fw_small_range(size_t n, double *a, double *values, double *v)
+{
+    double l[FW_SMALL_MOST * FW_SMALL_MOST], inner[FW_SMALL_MOST * FW_SMALL_MOST];
+    const size_t r = pivoted(n, a, l);
+    for (size_t p = 0; p < r; ++p)
+        for (size_t q = 0; q <= p; ++q) {
+            double sum = 0.0;
+            for (size_t i = 0; i < n; ++i) sum += l[i * n + p] * l[i * n + q];
+            a[p * r + q] = a[q * r + p] = sum;
+        }
+    fw_small_eigen(r, a, values, inner);
+    for (size_t i = 0; i < n; ++i)
+        for (size_t j = 0; j < r; ++j) {
+            double sum = 0.0;
+            for (size_t p = 0; p < r; ++p) sum += l[i * n + p] * inner[p * r + j];
+            v[i * r + j] = sum / sqrt(values[j]);
+        }
+    return r;
+}
+
 int fw_small_cholesky(size_t n, double *a)
 {
     for (size_t j = 0; j < n; ++j) {
