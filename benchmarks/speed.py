@@ -128,7 +128,8 @@ def small(seconds: float, repeats: int) -> str:
     for make, function in makes.items():
         density = fw.Density(function, d)
         for motion, bound, path in KINDS:
-            def fresh(density: fw.Density = density, motion: fw.motions.Motion = motion, path: fw.motions.Path = path) -> fw.Chain:
+            def fresh(density: fw.Density = density, motion: fw.motions.Motion = motion,
+                      path: fw.motions.Path = path) -> fw.Chain:
                 return fw.Chain(density, np.full(d, 0.1), motion=motion, path=path, seed=3, settle=1000)
 
             chain, counted = fresh(), {}

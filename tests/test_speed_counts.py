@@ -21,7 +21,8 @@ MOVES = {
     "fw_kick_drift_gradient": (4, 2), "fw_kick_gradient": (3, 1), "fw_kick_drift": (4, 2), "fw_whiten": (3, 1),
     "fw_kick": (2, 1), "fw_kick2_drift": (5, 2), "fw_whiten_spread": (2, 2), "fw_whiten_product": (3, 1),
     "fw_kick2_spread": (4, 2), "fw_product_dot": (3, 0), "fw_scale_by": (2, 1), "fw_product_sums": (5, 0),
-    "fw_kick2": (3, 1), "fw_whiten_square": (2, 1), "fw_kick2_drift_coarsest": (5, 2), "fw_probe": (3, 1), "fw_whiten_difference": (3, 1),
+    "fw_kick2": (3, 1), "fw_whiten_square": (2, 1), "fw_kick2_drift_coarsest": (5, 2),
+    "fw_probe": (3, 1), "fw_whiten_difference": (3, 1),
     "fw_difference_dot": (4, 0), "fw_difference_sums": (5, 0),
 }  # fmt: skip
 
