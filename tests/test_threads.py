@@ -1,6 +1,8 @@
 """Chains and threads: the same bits on any number, one thread a chain, no GIL in compiled calls, no memory left."""
 
 import gc
+import subprocess
+import sys
 import threading
 import tracemalloc
 from concurrent.futures import ThreadPoolExecutor
@@ -8,6 +10,7 @@ from pathlib import Path
 
 import numpy as np
 import pytest
+import targets
 from compiled_densities import DENSITY_SIGNATURE, Curved, Plan, ctypes_function
 
 import fellwalk as fw
@@ -70,6 +73,29 @@ def test_chains_in_two_threads_share_one_density(in_place):
     expected = [one(seed) for seed in range(6)]
     with ThreadPoolExecutor(2) as pool:
         np.testing.assert_array_equal(list(pool.map(one, range(6))), expected)
+
+
+@pytest.mark.parametrize("compiled", [True, False])
+def test_no_call_is_missing_from_the_counts_of_a_shared_density(compiled):
+    """Without a lock of the interpreter additions that threads make at once get mixed up; with it that is rare."""
+    density = fw.Density(targets.standard_normal(3).density if compiled else normal, 3)
+
+    def one(seed):
+        chain = fw.Chain(density, START, seed=seed, step_size=0.5)
+        for _ in range(400):
+            chain.advance(1)
+        return chain.counts["gradients"]
+
+    with ThreadPoolExecutor(4) as pool:
+        assert sum(pool.map(one, range(4))) == density.gradients
+
+
+@pytest.mark.skipif(getattr(sys, "_is_gil_enabled", lambda: True)(), reason="this interpreter has a lock of its own")
+def test_importing_leaves_the_lock_of_the_interpreter_off():
+    """A module that does not promise to do without it turns it on, with a warning."""
+    code = "import sys, fellwalk; print(sys._is_gil_enabled())"
+    said = subprocess.run([sys.executable, "-W", "error", "-c", code], capture_output=True, text=True, check=True)
+    assert said.stdout == "False\n"
 
 
 def held_chain():

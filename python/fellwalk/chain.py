@@ -160,8 +160,7 @@ class Chain:
 
     def _count(self) -> None:
         now = (self._target.gradients, self._target.products)
-        self.density.gradients += now[0] - self._told[0]
-        self.density.products += now[1] - self._told[1]
+        self.density.count(now[0] - self._told[0], now[1] - self._told[1])
         self._told = now
 
     # ---- moving -------------------------------------------------------------------------------------------------

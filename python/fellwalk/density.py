@@ -1,5 +1,6 @@
 """The user's log density: what is called, how, and how often."""
 
+import threading
 from collections.abc import Callable, Mapping, Sequence
 from typing import Any, SupportsIndex
 
@@ -21,6 +22,8 @@ from fellwalk.motions import whole
 from fellwalk.parameters import ByName, Parameters
 
 __all__ = ["Density"]
+
+_counting = threading.Lock()  # held for a few additions, which an interpreter without a lock of its own could mix up
 
 
 def as_vector(value: object, dimension: int, what: str) -> NDArray[np.float64]:
@@ -154,7 +157,7 @@ class Density:
         try:
             answer, value = target.evaluate(point, gradient)
         finally:
-            self.gradients += target.gradients
+            self.count(target.gradients)
         if answer < 0:
             raise DensityError(f"the compiled log density returned {answer} (it asked to stop) at {brief(point)}")
         if answer > 0:
@@ -174,13 +177,18 @@ class Density:
         try:
             answer = target.multiply(point, vector, out)
         finally:
-            self.gradients += target.gradients
-            self.products += target.products
+            self.count(target.gradients, target.products)
         if answer:
             raise DensityError(f"the compiled Hessian product returned {answer} at {brief(point)}")
         if any(map(is_unwritten, out)):
             raise stopped(-2, "the Hessian product", self, point)
         return out
+
+    def count(self, gradients: int, products: int = 0) -> None:
+        """Add calls that were made; chains in several threads may share a density."""
+        with _counting:
+            self.gradients += gradients
+            self.products += products
 
     def __reduce_ex__(self, protocol: SupportsIndex) -> str | tuple[Any, ...]:
         if self.made_by is not None:

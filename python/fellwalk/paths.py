@@ -82,8 +82,7 @@ def integrate(
         status, done, value, log_jacobian, log_ratio, gradients, products = engine.integrate(
             position, velocity, size, count, *rows)
     finally:
-        density.gradients += target.gradients
-        density.products += target.products
+        density.count(target.gradients, target.products)
     if status < 0:
         raise stopped(status, f"after {done} of {count} steps", density, engine.failed_at())
     if status > 0:
