@@ -129,6 +129,16 @@ def test_the_verdict_says_what_it_judged(whole):
     np.testing.assert_array_equal(kept.judgement.worth, bare.worth[:7])
 
 
+@pytest.mark.parametrize("watch", [["x[0]", 2], lambda x: x[:2] > 0.0])
+def test_a_report_is_made_of_what_was_watched(watch, tmp_path):
+    found = fw.run(fw.Density(half_space, 3, start=np.zeros(3)), **RUN, watch=watch)
+    found.report(tmp_path / "a.html")
+    page = (tmp_path / "a.html").read_text(encoding="utf-8")
+    assert all(name in page for name in found.names)
+    assert "this run kept watched values, and the model can only be asked at whole draws" in page
+    assert "Judged: " in page
+
+
 def test_truth_values_give_probabilities():
     found = fw.run(density(), **RUN, watch=lambda x: x[0] > 0)
     assert found.judgement.event.all()

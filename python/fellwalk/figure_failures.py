@@ -84,8 +84,10 @@ class Trouble:
     """
 
     def __init__(self, result: Result) -> None:
-        self.names = result.names if result.parameters is None else result.parameters.coordinates
-        self.draws = result.free_draws.reshape(-1, len(self.names))
+        natural = result.watched or result.parameters is None  # of a run that watches, places are watched values
+        self.names = result.names if natural else result.parameters.coordinates
+        draws = result.draws if natural else result.free_draws
+        self.draws = draws.reshape(-1, len(self.names))
         failure = result.facts["failure"]
         edge, one_way = np.isin(failure, EDGE_CODES), np.isin(failure, HARMLESS_CODES) & ~np.isin(failure, EDGE_CODES)
         failed = (failure != 0) & ~edge & ~one_way
@@ -96,8 +98,8 @@ class Trouble:
         _, _, code, position = result.failures
         finite = np.isfinite(position).all(axis=1)
         at_edge = np.isin(code, EDGE_CODES)
-        kinds = ((PATHS, result.free_draws[failed]), (STEPS, position[finite & ~np.isin(code, HARMLESS_CODES)]),
-                 (EDGES, position[finite & at_edge]), (HALVED, result.free_draws[halved]))
+        kinds = ((PATHS, draws[failed]), (STEPS, position[finite & ~np.isin(code, HARMLESS_CODES)]),
+                 (EDGES, position[finite & at_edge]), (HALVED, draws[halved]))
         self.places = [Places.of(word, rows, self.draws) for word, rows in kinds if len(rows)]
 
     def sentences(self) -> list[str]:

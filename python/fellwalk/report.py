@@ -134,6 +134,8 @@ def _subject(result: Result) -> str:
 
 def _model(result: Result, density: Density | None, find: bool) -> tuple[Density | None, str]:
     """The density of the run, or None and why it is not at hand."""
+    if result.watched:
+        return None, "this run kept watched values, and the model can only be asked at whole draws."
     name = result.plan["model"]
     if density is None and not name:
         return None, "the run does not name its model; give it to the report (density=, or --model in the command)."
