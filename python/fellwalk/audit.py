@@ -142,7 +142,7 @@ def audit(density: Density, x: ArrayLike | Mapping[str, ArrayLike] | None = None
             findings += checks.threads(density, near)
     if value is not None:
         findings += _value_alone(probe, y, sight, value)
-    density.gradients += probe.calls
+    density.count_calls(probe.calls, 0)
     seconds = checks.speed(probe, y, value) if sight.finite else {}
     findings.sort(key=lambda finding: _WEIGHTS.index(finding.weight))
     return Audit(tuple(findings), tuple((p.label, probe.x_of(p.y)) for p in points), density.dimension,
@@ -306,7 +306,7 @@ def glance(density: Density, y: NDArray[np.float64]) -> None:
     try:
         _glance(density, probe, y)
     finally:
-        density.gradients += probe.calls
+        density.count_calls(probe.calls, 0)
 
 
 def glance_at_start(density: Density) -> None:

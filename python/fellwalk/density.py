@@ -1,5 +1,6 @@
 """The user's log density: what is called, how, and how often."""
 
+import threading
 from collections.abc import Callable, Mapping, Sequence
 from typing import Any, SupportsIndex
 
@@ -100,6 +101,7 @@ class Density:
         self.made_by: tuple[Callable[..., object], tuple[object, ...]] | None = None
         self.gradients = 0
         self.products = 0
+        self._counting = threading.Lock()
         self.target()  # a wrong signature is said here, not at the first chain
 
     @classmethod
@@ -138,6 +140,12 @@ class Density:
         natural = MappedTarget(self.function, self.natural_size, in_place=self.in_place, product=self.hessian_product)
         return natural.see_through(self.parameters.maps())
 
+    def count_calls(self, gradients: int, products: int) -> None:
+        """Add to the calls made so far; chains in several threads may share a density."""
+        with self._counting:
+            self.gradients += gradients
+            self.products += products
+
     @property
     def compiled(self) -> bool:
         """Is the log density called without Python?"""
@@ -154,7 +162,7 @@ class Density:
         try:
             answer, value = target.evaluate(point, gradient)
         finally:
-            self.gradients += target.gradients
+            self.count_calls(target.gradients, 0)
         if answer < 0:
             raise DensityError(f"the compiled log density returned {answer} (it asked to stop) at {brief(point)}")
         if answer > 0:
@@ -174,8 +182,7 @@ class Density:
         try:
             answer = target.multiply(point, vector, out)
         finally:
-            self.gradients += target.gradients
-            self.products += target.products
+            self.count_calls(target.gradients, target.products)
         if answer:
             raise DensityError(f"the compiled Hessian product returned {answer} at {brief(point)}")
         if any(map(is_unwritten, out)):
@@ -189,7 +196,12 @@ class Density:
         return super().__reduce_ex__(protocol)
 
     def __getstate__(self) -> dict[str, object]:
-        return {**self.__dict__, "gradients": 0, "products": 0}
+        kept = {name: value for name, value in self.__dict__.items() if name != "_counting"}
+        return {**kept, "gradients": 0, "products": 0}
+
+    def __setstate__(self, state: dict[str, object]) -> None:
+        self.__dict__.update(state)
+        self._counting = threading.Lock()
 
     def __repr__(self) -> str:
         kind = "compiled" if self.compiled else "in place" if self.in_place else "(value, gradient)"

@@ -136,8 +136,7 @@ class Line:
         steps = int(min(max(np.median(result.facts["steps"][chain]), 2), _LONGEST))
         rows = [np.full((steps + 1, width), np.nan) for width in (density.dimension, density.dimension, 3)]
         status, done, *_ = engine.integrate(start.copy(), v.copy(), part.step_size, steps, *rows)
-        density.gradients += target.gradients
-        density.products += target.products
+        density.count_calls(target.gradients, target.products)
         positions = rows[0][: done + 1]
         return cls(positions, np.array([density(x)[1] for x in positions]), status, part.step_size, beta, part)
 
@@ -180,7 +179,7 @@ class Slice:
             point[pair] = places
             answer, value = target.evaluate(point, gradient)
             values.append(value if answer == 0 and np.isfinite(value) else -np.inf)
-        density.gradients += target.gradients
+        density.count_calls(target.gradients, 0)
         shape = tuple(len(axis) for axis in reversed(axes))
         found = np.array(values).reshape(shape)
         return cls(pair, centre, axes, found - found.max(), chain)
