@@ -5,6 +5,8 @@
  * exp(log density) invariant. It allocates once per chain, prints nothing, keeps no global state, and depends on
  * libc and libm only.
  *
+ * Structs that the caller fills may get members at their ends, whose zero means what was before: begin with zeros.
+ *
  * Ownership: the caller owns every array it passes and everything behind a context pointer; fw_chain_new makes a
  * chain, fw_chain_free (NULL is fine) ends it. A chain must be used by one thread at a time; different chains are
  * independent.
