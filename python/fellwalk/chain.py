@@ -6,6 +6,7 @@ import struct
 import time
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass, replace
+from typing import TYPE_CHECKING
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
@@ -16,6 +17,9 @@ from fellwalk.errors import ArgumentError, SettleError, StartError, StateError
 from fellwalk.motions import Leapfrog, Motion, NoUTurn, Path, real, whole
 from fellwalk.settings import Settings
 from fellwalk.settled import SettledChain
+
+if TYPE_CHECKING:
+    from fellwalk._core import Summary
 
 __all__ = ["Block", "Chain"]
 
@@ -282,8 +286,9 @@ class Chain:
             if status < 0 and error is None:
                 error = stopped(status, f"transition {self._engine.summary()['transitions'] + 1}", self.density,
                                 self._engine.failed_at())
-        joined = tuple(np.concatenate(column) for column in zip(*failures, strict=True))
-        return Block(phase, draws[:done], None if gradients is None else gradients[:done], facts[:done], joined, error)
+        index, code, position = (np.concatenate(column) for column in zip(*failures, strict=True))
+        return Block(phase, draws[:done], None if gradients is None else gradients[:done], facts[:done],
+                     (index, code, position), error)
 
     def _ready(self) -> str:
         """The phase, of a chain that can move."""
@@ -354,9 +359,9 @@ class Chain:
         return {"transitions": found["transitions"], "gradients": found["gradients"], "products": found["products"]}
 
     @property
-    def summary(self) -> dict[str, object]:
+    def summary(self) -> "Summary":
         """What settling has found: step size, bend, beta, ceiling of acceptance, windows; and the workspace's size."""
-        return dict(self._engine.summary())
+        return self._engine.summary()
 
     # ---- state --------------------------------------------------------------------------------------------------
 

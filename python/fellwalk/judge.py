@@ -226,9 +226,9 @@ def _assemble(
         best = estimate_all(x, names, numbers, list(LEVELS.values()), sharpener, checked)
         credited = _credited(numbers, best)
     labels = coordinates or (None if pair is None else [f"free[{i}]" for i in range(pair[0].shape[2])])
-    broken = [] if checked is None else describe(checked, labels)
+    broken = [] if checked is None else describe(checked, labels or [])
     verdict = verdict_module.decide(x, names, numbers, fraction, failure, credited, broken)
-    shown = {key: value for key, value in numbers.items() if key in Judgement.NUMBERS}
+    shown: dict[str, Any] = {key: value for key, value in numbers.items() if key in Judgement.NUMBERS}
     failures: dict[int, int] = {}
     if failure is not None:
         codes, counts = np.unique(failure[failure != 0], return_counts=True)
@@ -275,7 +275,8 @@ def _bounded(sharpened: np.ndarray, plain: np.ndarray) -> np.ndarray:
 
 def _with_estimates(raw: Judgement, best: Estimates) -> Judgement:
     by = {"estimate": best.by, "spread": best.spread_by}
-    numbers = {"estimate": best.estimate, "error": best.error, "spread": best.spread, "spread_error": best.spread_error}
+    numbers: dict[str, Any] = {"estimate": best.estimate, "error": best.error, "spread": best.spread,
+                               "spread_error": best.spread_error}
     for name, level in LEVELS.items():
         quantile = best.quantiles[level]
         by[name], numbers[name], numbers[name + "_error"] = quantile.by, quantile.value, quantile.error

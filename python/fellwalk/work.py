@@ -107,7 +107,7 @@ def make_block(density: Density, job: Job, live: Live | None = None) -> Done:
             elapsed = time.perf_counter() - moving
             size = max(1, min(8 * size, int(done * (seconds / elapsed - 1))))
     block = _joined(phase, parts, density.dimension)
-    return Done(job.chain, block, chain.state, time.perf_counter() - begun, chain.summary)
+    return Done(job.chain, block, chain.state, time.perf_counter() - begun, dict(chain.summary))
 
 
 # ---- in another process ---------------------------------------------------------------------------------------------
