@@ -22,9 +22,10 @@ def python_route(density, start):
 
 for which in ("bent", "linked"):
     start = np.array([0.731, -0.468, 1.117, 0.292])
-    draws, values, state = walker.walk(which, SEED, start, SETTLE, KEEP)
-    assert len(np.unique(draws[:, 0])) > KEEP / 2, "the chain hardly moved"
     compiled = fw.Density(LowLevelCallable.from_cython(walker, which), 4)
+    plan = fw.Chain(compiled, start, settle=SETTLE).settings.core()
+    draws, values, state = walker.walk(which, SEED, start, plan, KEEP)
+    assert len(np.unique(draws[:, 0])) > KEEP / 2, "the chain hardly moved"
     plain = fw.Density(lambda x, which=which: walker.evaluate(which, x), 4)
     assert compiled.compiled
     assert not plain.compiled

@@ -69,21 +69,21 @@ cdef double uniform(void *state) noexcept nogil:
 
 # ---- the chain ------------------------------------------------------------------------------------------------------
 
-cdef fw_settings settings(size_t settle) noexcept nogil:
+cdef fw_settings settings(dict plan):
+    """Leapfrog motion, no-U-turn paths; numbers by name."""
     cdef fw_settings s
     memset(&s, 0, sizeof(s))
     s.motion, s.path = "leapfrog", "no-u-turn"
     s.scheme, s.curvature, s.turn = FW_SPLIT, FW_SURROGATE, FW_TURN_BASE
-    s.beta = -1.0
-    s.steps, s.doublings = 1, 10
-    s.halving_bound, s.acceptance = 1.0, 0.8
-    s.settle_least = s.settle_most = settle
-    s.rank = FW_MAX_DIRECTIONS
-    s.adapt_step = s.adapt_scale = 1
+    s.bend, s.beta, s.steps, s.doublings = plan["bend"], plan["beta"], plan["steps"], plan["doublings"]
+    s.halvings, s.halving_bound = plan["halvings"], plan["halving_bound"]
+    s.step_size, s.acceptance = plan["step_size"], plan["acceptance"]
+    s.settle_least, s.settle_most = plan["settle_least"], plan["settle_most"]
+    s.rank, s.rank_fixed, s.adapt_step, s.adapt_scale = FW_MAX_DIRECTIONS, 0, 1, 1
     return s
 
 
-def walk(str which, seed, double[::1] start not None, size_t settle, size_t keep):
+def walk(str which, seed, double[::1] start not None, dict plan not None, size_t keep):
     """(draws (keep, d), log densities (keep,), state bytes) of a chain that settles, then keeps; all without the GIL."""
     generator = np.random.PCG64DXSM(np.random.SeedSequence(seed))
     draws, state = np.empty((keep, start.shape[0])), None
@@ -92,7 +92,7 @@ def walk(str which, seed, double[::1] start not None, size_t settle, size_t keep
     cdef char[::1] raw = facts.view(np.int8), bytes_
     cdef fw_target target
     cdef fw_random random
-    cdef fw_settings plan = settings(settle)
+    cdef fw_settings set_ = settings(plan)
     cdef fw_chain *chain = NULL
     cdef fw_output out
     cdef size_t done = 0
@@ -107,11 +107,11 @@ def walk(str which, seed, double[::1] start not None, size_t settle, size_t keep
     random.state = PyCapsule_GetPointer(generator.capsule, "BitGenerator")
     out.draws, out.facts = &to[0, 0], <fw_facts *>&raw[0]
     with nogil:
-        status = fw_chain_new(&target, &random, &plan, &chain)
+        status = fw_chain_new(&target, &random, &set_, &chain)
         if status == FW_OK:
             status = fw_chain_start(chain, &start[0])
         if status == FW_OK:
-            status = fw_chain_run(chain, settle, NULL, &done)
+            status = fw_chain_run(chain, set_.settle_most, NULL, &done)
         if status == FW_OK:
             status = fw_chain_run(chain, keep, &out, &done)
     if status == FW_OK:
