@@ -86,7 +86,7 @@ static int right(const char *what, const double *draws, size_t d, size_t column,
 {
     double sum = 0.0;
     for (size_t i = 0; i < keep; ++i) sum += draws[i * d + column];
-    const double mean = sum / keep;
+    const double mean = sum / (double)keep;
     printf("%s %zu %a\n", what, column, mean);
     if (fabs(mean - expected) <= allowed) return 1;
     fprintf(stderr, "%s %zu: mean %g, expected %g within %g\n", what, column, mean, expected, allowed);
