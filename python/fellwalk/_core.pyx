@@ -9,8 +9,7 @@ import numpy as np
 cimport numpy as cnp
 from cpython.mem cimport PyMem_Free, PyMem_Malloc
 from cpython.pycapsule cimport PyCapsule_GetContext, PyCapsule_GetName, PyCapsule_GetPointer
-from cpython.pythread cimport (PyThread_acquire_lock, PyThread_allocate_lock, PyThread_free_lock,
-                               PyThread_get_thread_ident, PyThread_release_lock, PyThread_type_lock, WAIT_LOCK)
+from cpython.pythread cimport PyThread_get_thread_ident
 from cpython.ref cimport PyObject
 from libc.stdint cimport int32_t, int64_t, uint32_t, uint64_t
 from libc.string cimport memcmp, memcpy
@@ -330,10 +329,17 @@ cdef extern from "stream.h":
     double fw_stream_uniform(fw_stream *stream) noexcept nogil
 
 
+cdef extern from "lock.h" nogil:
+    ctypedef struct fw_lock:
+        pass
+    void fw_lock_take(fw_lock *lock)
+    void fw_lock_give(fw_lock *lock)
+
+
 cdef struct view:
     # What any thread may read while the chain runs: all of it as the last completed transition left it. The lock is held
     # for copies only, and nothing that is done under it waits for the interpreter.
-    PyThread_type_lock lock
+    fw_lock lock
     fw_chain *chain
     double *x
     double *gradient
@@ -379,9 +385,9 @@ cdef void stream_mark(void *state) noexcept nogil:
     cdef view *seen = (<numbers *>state).seen
     own.marked_low, own.marked_high = own.low, own.high
     if seen != NULL:
-        PyThread_acquire_lock(seen.lock, WAIT_LOCK)
+        fw_lock_take(&seen.lock)
         renew(seen)
-        PyThread_release_lock(seen.lock)
+        fw_lock_give(&seen.lock)
 
 
 cdef class Stream:
@@ -482,9 +488,6 @@ cdef class Engine:
         if status != FW_OK:
             raise ArgumentError(f"a chain with these settings cannot be made: {sentence(status)} ({settings})")
         fw_chain_watch(self.chain, &self.flag)
-        self.seen.lock = PyThread_allocate_lock()
-        if self.seen.lock == NULL:
-            raise MemoryError("no memory for the lock of a chain")
         self.seen_arrays = np.zeros((2, self.dimension))
         self.seen.x = <double *>cnp.PyArray_DATA(<cnp.ndarray>self.seen_arrays)
         self.seen.gradient = self.seen.x + self.dimension
@@ -492,18 +495,16 @@ cdef class Engine:
         renew(&self.seen)
 
     def __dealloc__(self):
-        if self.seen.lock != NULL:
-            PyThread_free_lock(self.seen.lock)
         fw_chain_free(self.chain)
 
     cdef enter(self):
         """From here to `leave` the chain is this call's alone."""
-        PyThread_acquire_lock(self.seen.lock, WAIT_LOCK)
+        fw_lock_take(&self.seen.lock)
         cdef bint refused = self.seen.busy
         if not refused:
             self.seen.busy = 1
             self.seen.owner = <unsigned long>PyThread_get_thread_ident()
-        PyThread_release_lock(self.seen.lock)
+        fw_lock_give(&self.seen.lock)
         if refused:
             raise BusyError("this chain is already running in another call; use one chain per thread")
         self.stream.c.seen = &self.seen
@@ -512,10 +513,10 @@ cdef class Engine:
         self.stream.c.seen = NULL
         if status == FW_INTERRUPTED:
             self.flag = 0
-        PyThread_acquire_lock(self.seen.lock, WAIT_LOCK)
+        fw_lock_take(&self.seen.lock)
         renew(&self.seen)
         self.seen.busy = 0
-        PyThread_release_lock(self.seen.lock)
+        fw_lock_give(&self.seen.lock)
 
     cdef int go(self, size_t n, uint64_t most_gradients, fw_output *out, size_t *done) noexcept nogil:
         """fw_chain_run of up to n transitions, ended by the one that brings their gradients to most_gradients (0: no
@@ -557,14 +558,14 @@ cdef class Engine:
         cdef double[::1] scale = np.empty(self.dimension), l = np.empty(FW_MAX_DIRECTIONS)
         cdef double[:, ::1] e = np.empty((self.seen.summary.directions, self.dimension))
         cdef size_t k = 0, room = <size_t>e.shape[0]
-        PyThread_acquire_lock(self.seen.lock, WAIT_LOCK)
+        fw_lock_take(&self.seen.lock)
         # Directions come and go inside a call, so of another thread's call they cannot be seen.
         cdef bint refused = self.seen.busy and self.seen.owner != <unsigned long>PyThread_get_thread_ident()
         if not refused:
             k = fw_chain_base(self.chain, &scale[0], NULL, NULL)
             if 0 < k <= room:
                 fw_chain_base(self.chain, NULL, &e[0, 0], &l[0])
-        PyThread_release_lock(self.seen.lock)
+        fw_lock_give(&self.seen.lock)
         if refused:
             raise BusyError("another thread is moving this chain; its base metric can be read between calls")
         if k > room:
@@ -663,11 +664,11 @@ cdef class Engine:
         cdef double *to_x = <double *>cnp.PyArray_DATA(<cnp.ndarray>x)
         cdef double *to_g = <double *>cnp.PyArray_DATA(<cnp.ndarray>g)
         cdef size_t size = <size_t>self.dimension * sizeof(double)
-        PyThread_acquire_lock(self.seen.lock, WAIT_LOCK)
+        fw_lock_take(&self.seen.lock)
         memcpy(to_x, self.seen.x, size)
         memcpy(to_g, self.seen.gradient, size)
         cdef double value = self.seen.value
-        PyThread_release_lock(self.seen.lock)
+        fw_lock_give(&self.seen.lock)
         return x, g, value
 
     def failed_at(self):
@@ -678,9 +679,9 @@ cdef class Engine:
         return x
 
     def summary(self):
-        PyThread_acquire_lock(self.seen.lock, WAIT_LOCK)
+        fw_lock_take(&self.seen.lock)
         cdef fw_summary s = self.seen.summary
-        PyThread_release_lock(self.seen.lock)
+        fw_lock_give(&self.seen.lock)
         return {"gradients": s.gradients, "products": s.products, "transitions": s.transitions,
                 "settled_transitions": s.settled_transitions, "windows": s.windows, "step_size": s.step_size,
                 "beta": s.beta, "bend": s.bend, "ceiling": s.ceiling, "change": s.change, "directions": s.directions,
