@@ -190,6 +190,7 @@ def test_a_density_reads_its_own_chain(form):
 def test_many_threads_on_one_chain_do_each_transition_once():
     """Eight threads try at the same moments; each try is done or refused, and what was done, in turn, is one chain."""
     chain, expected = (fw.Chain(compiled_normal(), START, seed=9, step_size=0.4) for _ in range(2))
+    assert chain.density.gradients == 1
     rounds, done, refused = 30, [], []
     gate = threading.Barrier(8)
 
@@ -211,6 +212,7 @@ def test_many_threads_on_one_chain_do_each_transition_once():
     draws = expected.advance(40 * len(done)).draws.reshape(len(done), 40, 3)
     assert {block.tobytes() for block in done} == {block.tobytes() for block in draws}
     assert chain.state == expected.state
+    assert chain.density.gradients == chain.counts["gradients"]
 
 
 def test_chains_in_threads_count_the_calls_of_the_density_they_share():

@@ -174,9 +174,11 @@ class Chain:
         return StartError(f"{what} at the starting point {brief(x)}; start inside the support, where both are finite")
 
     def _count(self) -> None:
-        now = (self._target.gradients, self._target.products)
-        self.density.count_calls(now[0] - self._told[0], now[1] - self._told[1])
-        self._told = now
+        with self.density.counting:
+            now = (self._target.gradients, self._target.products)
+            self.density.gradients += now[0] - self._told[0]
+            self.density.products += now[1] - self._told[1]
+            self._told = now
 
     # ---- moving -------------------------------------------------------------------------------------------------
 

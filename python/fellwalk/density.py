@@ -103,7 +103,7 @@ class Density:
         self.made_by: tuple[Callable[..., object], tuple[object, ...]] | None = None
         self.gradients = 0
         self.products = 0
-        self._counting = threading.Lock()
+        self.counting = threading.Lock()  # held while the two are added to
         self.target()  # a wrong signature is said here, not at the first chain
 
     @classmethod
@@ -144,7 +144,7 @@ class Density:
 
     def count_calls(self, gradients: int, products: int) -> None:
         """Add to the calls made so far; chains in several threads may share a density."""
-        with self._counting:
+        with self.counting:
             self.gradients += gradients
             self.products += products
 
@@ -198,12 +198,12 @@ class Density:
         return super().__reduce_ex__(protocol)
 
     def __getstate__(self) -> dict[str, object]:
-        kept = {name: value for name, value in self.__dict__.items() if name != "_counting"}
+        kept = {name: value for name, value in self.__dict__.items() if name != "counting"}
         return {**kept, "gradients": 0, "products": 0}
 
     def __setstate__(self, state: dict[str, object]) -> None:
         self.__dict__.update(state)
-        self._counting = threading.Lock()
+        self.counting = threading.Lock()
 
     def __repr__(self) -> str:
         kind = "compiled" if self.compiled else "in place" if self.in_place else "(value, gradient)"
