@@ -55,6 +55,7 @@ def test_every_public_name_is_there_and_listed():
     for name in fw.__all__:
         assert getattr(fw, name) is not None
     assert "__version__" in dir(fw)
+    assert fw.facts.FACTS.names is not None  # modules too
     with pytest.raises(AttributeError, match="no attribute 'runn'"):
         _ = fw.runn
 

@@ -6,6 +6,7 @@ modules are imported when one of their names is first asked for; the benchmark `
 
 import sys
 from importlib import import_module
+from importlib.util import find_spec
 from pathlib import Path
 from types import ModuleType
 from typing import TYPE_CHECKING
@@ -81,6 +82,8 @@ else:
             found = version("fellwalk")
         elif name in _WHERE:
             found = getattr(import_module(f"fellwalk.{_WHERE[name]}"), name)
+        elif not name.startswith("_") and find_spec(f"fellwalk.{name}") is not None:
+            found = import_module(f"fellwalk.{name}")
         else:
             raise AttributeError(f"module 'fellwalk' has no attribute {name!r}")
         globals()[name] = found
