@@ -198,8 +198,9 @@ class Chain:
         Of several bounds the first that is reached ends the block. A transition that has begun is completed, so
         gradients and seconds are passed by no more than one transition takes (at most 0.1 s of small ones). The bounds
         decide how many draws there are and nothing else about them.
-        Raises what the density raises; the chain is then as before that transition. Errors: SettleError before settling
-        has ended; ArgumentError without a step size, or without a bound.
+        Raises what the density raises; the chain is then as before that transition, and this call's draws before it are
+        not returned (`block` returns both). Errors: SettleError before settling has ended; ArgumentError without a step
+        size, or without a bound.
         """
         if draws is None and gradients is None and seconds is None:
             raise ArgumentError("say how far: advance(draws=...), advance(gradients=...) or advance(seconds=...)")
@@ -217,7 +218,8 @@ class Chain:
         """Kept transitions in pieces, short ones where the clock decides, until the first bound is reached."""
         self._ready()
         parts: list[Block] = []
-        piece, begun, made, spent = (1 if end else _PIECE), time.perf_counter(), 0, 0
+        most = max(1, min(_PIECE, 2**24 // self.density.dimension))  # rows of at most 128 MB are made ahead
+        piece, begun, made, spent = (most if end is None else 1), time.perf_counter(), 0, 0
         while made < count and not (parts and parts[-1].error is not None):
             now = time.perf_counter()
             if end is not None:
@@ -225,7 +227,7 @@ class Chain:
                     break
                 if made:
                     each = max((now - begun) / made, 1e-9)
-                    piece = int(min(4 * piece, _PIECE, max(1.0, 0.5 * min(end - now, 0.2) / each)))
+                    piece = int(min(4 * piece, most, max(1.0, 0.5 * min(end - now, 0.2) / each)))
             left = _ENDLESS if budget is None else budget - max(spent, made)
             if left <= 0:
                 break
