@@ -9,6 +9,7 @@ from setuptools import Extension, setup
 from setuptools.command.build_ext import build_ext
 from setuptools.command.build_py import build_py
 from setuptools.command.sdist import sdist
+from setuptools.modified import newer_group
 
 # setuptools wants paths relative to this file, with forward slashes, and runs with this folder as the current one.
 PACKAGE = Path("python/fellwalk")
@@ -25,6 +26,7 @@ UNIX_FLAGS = [
     "-fno-trapping-math",
     "-fvisibility=hidden",
 ]
+# cl has no function clones and no vector types: kernels.c then runs its portable loops, operations in the same order.
 MSVC_FLAGS = ["/std:c11", "/O2", "/fp:precise"]
 
 
@@ -34,14 +36,43 @@ def listed(folder: Path, pattern: str) -> list[str]:
 
 
 class BuildExtension(build_ext):
-    """Chooses the flags once the compiler is known."""
+    """Chooses the flags once the compiler is known, and makes the core a static library: the extension is linked with
+    it, and it is shipped beside the headers for programs in C and Cython."""
 
     def build_extensions(self) -> None:
         msvc = self.compiler.compiler_type == "msvc"
+        flags = MSVC_FLAGS if msvc else UNIX_FLAGS
+        library = self._core(flags)
         for extension in self.extensions:
-            extension.extra_compile_args = MSVC_FLAGS if msvc else UNIX_FLAGS
+            extension.extra_compile_args = flags
+            extension.extra_objects = [str(library)]
+            extension.depends.append(str(library))
             extension.libraries = ["npyrandom"] if msvc else ["npyrandom", "m"]
         super().build_extensions()
+
+    def _library(self) -> Path:
+        return Path(self.build_lib) / "fellwalk" / "lib" / self.compiler.library_filename("fellwalk")
+
+    def _core(self, flags: list[str]) -> Path:
+        library = self._library()
+        sources = listed(SOURCES, "*.c")
+        inputs = [*sources, *listed(SOURCES, "*.h"), *listed(HEADERS, "*.h"), "setup.py"]
+        if self.force or newer_group(inputs, str(library)):
+            library.unlink(missing_ok=True)
+            objects = self.compiler.compile(
+                sources, output_dir=self.build_temp, include_dirs=[str(HEADERS), str(SOURCES)], extra_preargs=flags
+            )
+            self.compiler.create_static_lib(objects, "fellwalk", output_dir=str(library.parent))
+        return library
+
+    def copy_extensions_to_source(self) -> None:
+        super().copy_extensions_to_source()
+        (PACKAGE / "lib").mkdir(exist_ok=True)
+        shutil.copy2(self._library(), PACKAGE / "lib")
+
+    def get_outputs(self) -> list[str]:
+        library = [] if self.inplace else [str(path) for path in Path(self.build_lib).glob("fellwalk/lib/*")]
+        return [*super().get_outputs(), *library]
 
 
 class BuildPackage(build_py):
@@ -80,7 +111,7 @@ class SourceArchive(sdist):
 numpy_random = Path(numpy.__file__).parent / "random" / "lib"
 core = Extension(
     "fellwalk._core",
-    sources=[(PACKAGE / "_core.pyx").as_posix(), *listed(SOURCES, "*.c")],
+    sources=[(PACKAGE / "_core.pyx").as_posix()],
     include_dirs=[HEADERS.as_posix(), SOURCES.as_posix(), numpy.get_include()],
     library_dirs=[str(numpy_random)],
     depends=[
@@ -88,7 +119,7 @@ core = Extension(
         *listed(PACKAGE, "*.pxd"),
         *listed(PACKAGE, "*.pxi"),
         *listed(HEADERS, "*.h"),
-        *listed(SOURCES, "*.h"),
+        *listed(SOURCES, "*.[ch]"),
     ],
 )
 

@@ -90,12 +90,14 @@ def processor_levels():
 @pytest.fixture(scope="module")
 def builds(tmp_path_factory):
     """Shared libraries: "clones" as it ships; without function clones "plain", and for whole processor levels
-    "v3" and "v4" where this processor has them; "counted" allocations."""
+    "v3" and "v4" where this processor has them; "scalar" without vector types, as compilers other than GCC and clang
+    build it; "counted" allocations."""
     folder = tmp_path_factory.mktemp("core")
     shared = ["-shared", "-fPIC", "-fvisibility=hidden", *INCLUDES, *FLOATS]
     options = {
         "clones": ["-O3", *STRICT],
         "plain": ["-O3", "-DFW_NO_CLONES", *STRICT],
+        "scalar": ["-O2", "-DFW_NO_CLONES", "-DFW_NO_VECTORS", *STRICT],
         **{level: ["-O3", "-DFW_NO_CLONES", f"-march=x86-64-{level}"] for level in processor_levels()},
         "counted": ["-O0", "-DFW_NO_CLONES", "-DHARNESS_ALLOCATIONS"],
     }
@@ -259,6 +261,27 @@ def test_the_core_needs_little_of_libc_and_has_no_state_of_its_own(tmp_path):
     assert not writable, f"the core keeps state in {writable}"
     exported = {name for kind, name in symbols if kind == "T"}
     assert all(name.startswith("fw_") for name in exported)
+
+
+def test_random_numbers_without_wide_integers(tmp_path):
+    """The way of compilers without 128-bit integers gives the numbers of NumPy's PCG64DXSM too."""
+    source = tmp_path / "numbers.c"
+    source.write_text(
+        '#include <stdio.h>\n#include <stdlib.h>\n#include "stream.h"\n'
+        "int main(int n, char **w)\n{\n"
+        "    uint64_t a[4];\n    if (n != 5) return 1;\n"
+        "    for (int i = 0; i < 4; ++i) a[i] = strtoull(w[i + 1], NULL, 10);\n"
+        "    fw_stream s = {a[0], a[1], a[2], a[3], 0, 0};\n"
+        '    for (int i = 0; i < 2000; ++i) printf("%llu\\n", (unsigned long long)fw_stream_next(&s));\n'
+        "    return 0;\n}\n", encoding="ascii")
+    state = np.random.PCG64DXSM(2385).state["state"]
+    words = [str(state[key] >> shift & (2**64 - 1)) for key in ("state", "inc") for shift in (0, 64)]
+    expected = np.random.PCG64DXSM(2385).random_raw(2000).tolist()
+    for name, flags in {"wide": [], "narrow": ["-U__SIZEOF_INT128__"]}.items():
+        out = tmp_path / name
+        compile_("-O2", *FLOATS, *STRICT, *INCLUDES, *flags, source, "-o", out)
+        said = subprocess.run([str(out), *words], capture_output=True, text=True, check=True).stdout
+        assert [int(line) for line in said.split()] == expected
 
 
 @pytest.mark.skipif(shutil.which("g++") is None, reason="g++ is not installed")

@@ -12,17 +12,21 @@ import subprocess
 import sys
 import tarfile
 import tomllib
+import venv
 import zipfile
 from importlib.resources import files
 from pathlib import Path, PurePosixPath
 
+import consumers
+import numpy
 import pytest
 
 import fellwalk
 
 TREE = Path(__file__).resolve().parents[1]
-LEFT_OUT = (".*", "build", "dist", "venv", "*.egg-info", "*.so", "*.pyd", "__pycache__", "*.pyc", "*.fell*")
-EXTENSION_SUFFIXES = (".so", ".pyd")
+COMPILED_SUFFIXES = (".so", ".pyd", ".a", ".lib")
+LEFT_OUT = (".*", "build", "dist", "venv", "*.egg-info", "__pycache__", "*.pyc", "*.fell*",
+            *(f"*{suffix}" for suffix in COMPILED_SUFFIXES))
 
 
 def project():
@@ -76,12 +80,26 @@ def unpacked(wheel, tmp_path_factory):
     return place
 
 
+@pytest.fixture(scope="module")
+def fresh(wheel, tmp_path_factory):
+    """The interpreter of a new environment in which pip has installed the wheel. NumPy and the build tools are those of
+    the environment of the tests, behind everything of its own, so that nothing need be downloaded."""
+    folder = tmp_path_factory.mktemp("fresh") / "venv"
+    venv.EnvBuilder(with_pip=False, symlinks=os.name != "nt").create(folder)
+    python = folder / ("Scripts/python.exe" if os.name == "nt" else "bin/python")
+    said = consumers.run([python, "-c", "import sysconfig; print(sysconfig.get_path('purelib'))"], folder)
+    (Path(said.strip()) / "tools.pth").write_text(f"{Path(numpy.__file__).parents[1]}\n", encoding="utf-8")
+    pip = [sys.executable, "-m", "pip", "-q", "--disable-pip-version-check", "--python", python]
+    consumers.run([*pip, "install", "--no-index", "--no-deps", "--force-reinstall", wheel], folder)
+    return python
+
+
 def test_sdist_holds_every_source_and_the_tests(sdist):
     with tarfile.open(sdist) as archive:
         names = {name.partition("/")[2] for name in archive.getnames()}
     expected = shipped_sources("csrc", "python", "tests") | {"pyproject.toml", "setup.py", "README.md", "LICENSE"}
     assert expected - names == set()
-    assert [name for name in names if name.endswith((".so", ".pyd", ".pyc", ".o", ".fell"))] == []
+    assert [name for name in names if name.endswith((*COMPILED_SUFFIXES, ".pyc", ".o", ".fell"))] == []
 
 
 @pytest.mark.slow
@@ -93,9 +111,11 @@ def test_wheel_holds_modules_stubs_data_and_headers_only(wheel):
         name.removeprefix("python/") for name in shipped_sources("python") if not name.endswith((".pyx", ".pxi"))
     }
     headers = {f"fellwalk/include/{path.name}" for path in (TREE / "csrc/include").glob("*.h")}
-    compiled = {name for name in names if name.endswith(EXTENSION_SUFFIXES)}
+    compiled = {name for name in names if name.endswith(COMPILED_SUFFIXES)}
     assert names - compiled == package | headers
-    assert [PurePosixPath(name).name.split(".")[0] for name in compiled] == ["_core"]
+    stems = sorted(PurePosixPath(name).name.split(".")[0] for name in compiled)
+    assert [stem.removeprefix("lib") for stem in stems] == ["_core", "fellwalk"]
+    assert not [name for name in names if name.endswith((".pyx", ".pxi", ".c")) or "test" in name]
 
 
 @pytest.mark.slow
@@ -150,3 +170,16 @@ def test_the_extra_for_people_at_a_terminal_stays_light():
     assert set(extras) == {"report", "test", "bench", "cluster", "all"}
     wanted = {requirement.split(">=")[0].split("[")[0] for requirement in extras["all"] + extras["report"]}
     assert wanted == {"fellwalk", "tqdm", "matplotlib", "Jinja2", "loky", "threadpoolctl"}
+
+
+@pytest.mark.slow
+def test_a_consumer_in_c_and_cython_of_the_installed_wheel(fresh, tmp_path):
+    """tests/consumer, built by its own setup.py in the fresh environment: the draws of its chain in C are those of the
+    Python route, bit for bit; and the plain C program is linked with the library of the wheel."""
+    found = consumers.built_and_compared(fresh, tmp_path)
+    package = Path(found["fellwalk"]).parent
+    assert package.is_relative_to(fresh.parents[1])
+    assert Path(found["include"]) == package / "include"
+    assert Path(found["library"]) == package / "lib"
+    words = [f"-I{found['include']}", f"-L{found['library']}", "-lfellwalk"]
+    assert len(consumers.run([consumers.plain_program(tmp_path, *words)], tmp_path).splitlines()) == 9

@@ -5,6 +5,8 @@
  * exp(log density) invariant. It allocates once per chain, prints nothing, keeps no global state, and depends on
  * libc and libm only.
  *
+ * Structs that the caller fills may get members at their ends, whose zero means what was before: begin with zeros.
+ *
  * Ownership: the caller owns every array it passes and everything behind a context pointer; fw_chain_new makes a
  * chain, fw_chain_free (NULL is fine) ends it. A chain must be used by one thread at a time; different chains are
  * independent.
@@ -182,6 +184,11 @@ FW_API size_t fw_chain_base(const fw_chain *chain, double *scale, double *direct
 
 /* Evaluate at x and make it the current point. On failure the chain keeps what it had. */
 FW_API int fw_chain_start(fw_chain *chain, const double *x);
+
+/* The density is another one from now on: evaluate it anew, at x or (x NULL) at the current point. A chain that is
+ * settling begins its plan anew, from the base metric it has; a settled one keeps what it has found. On failure the
+ * chain keeps what it had. */
+FW_API int fw_chain_density_changed(fw_chain *chain, const double *x);
 
 /* A new plan of settling that begins now, from whatever the chain has learned so far. */
 FW_API int fw_chain_settle(fw_chain *chain, size_t least, size_t most);

@@ -210,6 +210,15 @@ int fw_chain_settle(fw_chain *chain, size_t least, size_t most)
     return FW_OK;
 }
 
+int fw_chain_density_changed(fw_chain *chain, const double *x)
+{
+    if (!x && !chain->started) return FW_NOT_STARTED;
+    const int status = fw_chain_start(chain, x ? x : chain->x);
+    if (status != FW_OK || chain->learn.settled) return status;
+    if (chain->learn.climbing) chain->learn.climbed = 0; /* the points it remembers are of the old density */
+    return fw_chain_settle(chain, (size_t)chain->learn.least, (size_t)chain->learn.most);
+}
+
 int fw_chain_settled(const fw_chain *chain) { return chain->learn.settled != 0; }
 
 /* ---- transitions --------------------------------------------------------------------------------------------------- */

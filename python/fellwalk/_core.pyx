@@ -4,13 +4,12 @@
 
 Nothing here decides anything; the decisions are in the core below and in the Python modules above.
 """
-import ctypes
-
 import numpy as np
 
 cimport numpy as cnp
 from cpython.mem cimport PyMem_Free, PyMem_Malloc
 from cpython.pycapsule cimport PyCapsule_GetContext, PyCapsule_GetName, PyCapsule_GetPointer
+from cpython.pythread cimport PyThread_get_thread_ident
 from cpython.ref cimport PyObject
 from libc.stdint cimport int32_t, int64_t, uint32_t, uint64_t
 from libc.string cimport memcmp, memcpy
@@ -19,7 +18,7 @@ from numpy.random.c_distributions cimport random_standard_normal_fill
 
 from fellwalk.core cimport *
 
-from fellwalk.errors import ArgumentError, DensityError, ShapeError
+from fellwalk.errors import ArgumentError, BusyError, DensityError, ShapeError
 
 cnp.import_array()
 
@@ -144,7 +143,7 @@ cdef class Target:
     cdef fw_target c
     cdef calls user
     cdef object function, product
-    cdef object x, p, out
+    cdef object x, p, out  # None until a Python function needs them
     cdef object error
     cdef readonly Py_ssize_t dimension
     cdef readonly bint compiled
@@ -335,11 +334,37 @@ cdef extern from "stream.h":
     double fw_stream_uniform(fw_stream *stream) noexcept nogil
 
 
+cdef extern from "lock.h" nogil:
+    ctypedef struct fw_lock:
+        pass
+    void fw_lock_take(fw_lock *lock)
+    void fw_lock_give(fw_lock *lock)
+
+
+cdef struct view:
+    # What any thread may read while the chain runs: all of it as the last completed transition left it. The lock is held
+    # for copies only, and nothing that is done under it waits for the interpreter.
+    fw_lock lock
+    fw_chain *chain
+    double *x
+    double *gradient
+    double value
+    fw_summary summary
+    int busy
+    unsigned long owner  # the thread that runs the chain
+
+
+cdef inline void renew(view *seen) noexcept nogil:
+    fw_chain_point(seen.chain, seen.x, seen.gradient, &seen.value)
+    fw_chain_summary(seen.chain, &seen.summary)
+
+
 cdef struct numbers:
     char before[64]
     fw_stream own
     bitgen_t outer  # the same, for NumPy's distributions
     char after[64]
+    view *seen      # renewed as each transition begins; NULL unless a chain runs
 
 
 cdef uint64_t stream_uint64(void *state) noexcept nogil:
@@ -364,7 +389,12 @@ cdef double stream_uniform(void *state) noexcept nogil:
 
 cdef void stream_mark(void *state) noexcept nogil:
     cdef fw_stream *own = &(<numbers *>state).own
+    cdef view *seen = (<numbers *>state).seen
     own.marked_low, own.marked_high = own.low, own.high
+    if seen != NULL:
+        fw_lock_take(&seen.lock)
+        renew(seen)
+        fw_lock_give(&seen.lock)
 
 
 cdef class Stream:
@@ -438,13 +468,15 @@ def gather(moments, const double[:, ::1] rows not None):
 cdef class Engine:
     """One compiled chain. `settings` is a dict with the members of fw_settings by name; see fellwalk.h.
 
-    Calls return (status, ...) and raise only what the user's function raised; the modules above say it in words.
+    Calls return (status, ...) and raise only what the user's function raised; the modules above say it in words. One
+    thread at a time may move the chain; position, gradient, log density and summary can be read by any.
     """
     cdef fw_chain *chain
     cdef Target target
     cdef Stream stream
     cdef int flag
-    cdef int busy
+    cdef view seen
+    cdef object seen_arrays
     cdef readonly Py_ssize_t dimension
 
     def __cinit__(self, Target target not None, Stream stream not None, dict settings not None):
@@ -480,20 +512,57 @@ cdef class Engine:
         if status != FW_OK:
             raise ArgumentError(f"a chain with these settings cannot be made: {sentence(status)} ({settings})")
         fw_chain_watch(self.chain, &self.flag)
+        self.seen_arrays = np.zeros((2, self.dimension))
+        self.seen.x = <double *>cnp.PyArray_DATA(<cnp.ndarray>self.seen_arrays)
+        self.seen.gradient = self.seen.x + self.dimension
+        self.seen.chain = self.chain
+        renew(&self.seen)
 
     def __dealloc__(self):
         fw_chain_free(self.chain)
 
     cdef enter(self):
-        if self.busy:
-            from fellwalk.errors import BusyError
+        """From here to `leave` the chain is this call's alone."""
+        fw_lock_take(&self.seen.lock)
+        cdef bint refused = self.seen.busy
+        if not refused:
+            self.seen.busy = 1
+            self.seen.owner = <unsigned long>PyThread_get_thread_ident()
+        fw_lock_give(&self.seen.lock)
+        if refused:
             raise BusyError("this chain is already running in another call; use one chain per thread")
-        self.busy = 1
+        self.stream.c.seen = &self.seen
 
     cdef leave(self, int status):
-        self.busy = 0
+        self.stream.c.seen = NULL
         if status == FW_INTERRUPTED:
             self.flag = 0
+        fw_lock_take(&self.seen.lock)
+        renew(&self.seen)
+        self.seen.busy = 0
+        fw_lock_give(&self.seen.lock)
+
+    cdef int go(self, size_t n, uint64_t most_gradients, fw_output *out, size_t *done) noexcept nogil:
+        """fw_chain_run of up to n transitions, ended by the one that brings their gradients to most_gradients (0: no
+        such bound). One that takes none, because no path can leave, counts as one."""
+        cdef fw_output row = out[0]
+        cdef size_t one = 1, i, before
+        cdef uint64_t begun = self.seen.summary.gradients
+        cdef int status = FW_OK, settled = self.seen.summary.settled
+        if most_gradients == 0:
+            return fw_chain_run(self.chain, n, out, done)
+        while (one and status == FW_OK and done[0] < min(n, most_gradients)
+               and self.seen.summary.gradients - begun < most_gradients and self.seen.summary.settled == settled):
+            i, before = done[0], row.failures
+            row.draws = out.draws + i * <size_t>self.dimension if out.draws != NULL else NULL
+            row.gradients = out.gradients + i * <size_t>self.dimension if out.gradients != NULL else NULL
+            row.facts = out.facts + i if out.facts != NULL else NULL
+            status = fw_chain_run(self.chain, 1, &row, &one)
+            done[0] += one
+            if row.failures > before and row.failure_index != NULL:
+                row.failure_index[before] += <int64_t>i
+        out.failures = row.failures
+        return status
 
     def interrupt(self):
         """Ask the running call, or else the next one, to stop inside the transition in hand; from any thread."""
@@ -510,14 +579,22 @@ cdef class Engine:
             self.leave(FW_OK)
 
     def base(self):
-        cdef double[::1] scale = np.empty(self.dimension)
-        cdef size_t k = fw_chain_base(self.chain, &scale[0], NULL, NULL)
-        directions, lambdas = np.empty((k, self.dimension)), np.empty(k)
-        cdef double[:, ::1] e = directions
-        cdef double[::1] l = lambdas
-        if k:
-            fw_chain_base(self.chain, NULL, &e[0, 0], &l[0])
-        return np.asarray(scale), directions, lambdas
+        cdef double[::1] scale = np.empty(self.dimension), l = np.empty(FW_MAX_DIRECTIONS)
+        cdef double[:, ::1] e = np.empty((self.seen.summary.directions, self.dimension))
+        cdef size_t k = 0, room = <size_t>e.shape[0]
+        fw_lock_take(&self.seen.lock)
+        # Directions come and go inside a call, so of another thread's call they cannot be seen.
+        cdef bint refused = self.seen.busy and self.seen.owner != <unsigned long>PyThread_get_thread_ident()
+        if not refused:
+            k = fw_chain_base(self.chain, &scale[0], NULL, NULL)
+            if 0 < k <= room:
+                fw_chain_base(self.chain, NULL, &e[0, 0], &l[0])
+        fw_lock_give(&self.seen.lock)
+        if refused:
+            raise BusyError("another thread is moving this chain; its base metric can be read between calls")
+        if k > room:
+            return self.base()
+        return np.asarray(scale), np.asarray(e)[:k].copy(), np.asarray(l)[:k].copy()
 
     def start(self, const double[::1] x not None):
         cdef int status = FW_OK
@@ -525,9 +602,22 @@ cdef class Engine:
         try:
             with nogil:
                 status = fw_chain_start(self.chain, &x[0])
+            self.target.raise_error()
         finally:
             self.leave(status)
-        self.target.raise_error()
+        return status
+
+    def density_changed(self, const double[::1] x=None):
+        """Evaluate anew, at x or where the chain stands; the status."""
+        cdef int status = FW_OK
+        cdef const double *to = &x[0] if x is not None else NULL
+        self.enter()
+        try:
+            with nogil:
+                status = fw_chain_density_changed(self.chain, to)
+            self.target.raise_error()
+        finally:
+            self.leave(status)
         return status
 
     def settle(self, size_t least, size_t most):
@@ -539,12 +629,13 @@ cdef class Engine:
 
     def run(self, size_t n, double[:, ::1] draws=None, facts=None, double[:, ::1] gradients=None,
             int64_t[::1] failure_index=None, int32_t[::1] failure_code=None, double[:, ::1] failure_position=None,
-            const size_t[::1] watched=None, moments=None):
+            const size_t[::1] watched=None, moments=None, uint64_t most_gradients=0):
         """(status, transitions done, failure rows used, the exception a Python function raised or None).
 
         Arrays have n rows, or are None. Completed transitions stand whatever the status. watched: coordinates that the
         rows of draws and failure_position are, all when None; moments: an object with mean, squares and count, which
-        take the draws in.
+        take the draws in. most_gradients: no transition begins once those of this call have taken so many gradients; 0:
+        no such bound.
         """
         cdef double[::1] mean, squares
         cdef fw_output out
@@ -575,17 +666,17 @@ cdef class Engine:
         self.enter()
         try:
             if self.target.keeps_gil:
-                status = fw_chain_run(self.chain, n, &out, &done)
+                status = self.go(n, most_gradients, &out, &done)
             else:
                 with nogil:
-                    status = fw_chain_run(self.chain, n, &out, &done)
+                    status = self.go(n, most_gradients, &out, &done)
             if status < 0:
                 self.stream.rewind()
+            error, self.target.error = self.target.error, None
         finally:
             self.leave(status)
         if moments is not None:
             moments.count = out.gathered
-        error, self.target.error = self.target.error, None
         return status, done, out.failures, error
 
     def integrate(self, double[::1] x not None, double[::1] v not None, double step_size, size_t steps,
@@ -601,17 +692,22 @@ cdef class Engine:
         try:
             with nogil:
                 status = fw_chain_integrate(self.chain, &x[0], &v[0], step_size, steps, &out)
+            self.target.raise_error()
         finally:
             self.leave(status)
-        self.target.raise_error()
         return status, out.steps_done, out.log_density, out.log_jacobian, out.log_ratio, out.gradients, out.products
 
     def point(self):
-        """(position, gradient, log density), copies."""
+        """(position, gradient, log density), copies; while another call runs, as its last transition left them."""
         x, g = np.empty(self.dimension), np.empty(self.dimension)
-        cdef double[::1] vx = x, vg = g
-        cdef double value = 0.0
-        fw_chain_point(self.chain, &vx[0], &vg[0], &value)
+        cdef double *to_x = <double *>cnp.PyArray_DATA(<cnp.ndarray>x)
+        cdef double *to_g = <double *>cnp.PyArray_DATA(<cnp.ndarray>g)
+        cdef size_t size = <size_t>self.dimension * sizeof(double)
+        fw_lock_take(&self.seen.lock)
+        memcpy(to_x, self.seen.x, size)
+        memcpy(to_g, self.seen.gradient, size)
+        cdef double value = self.seen.value
+        fw_lock_give(&self.seen.lock)
         return x, g, value
 
     def failed_at(self):
@@ -622,8 +718,9 @@ cdef class Engine:
         return x
 
     def summary(self):
-        cdef fw_summary s
-        fw_chain_summary(self.chain, &s)
+        fw_lock_take(&self.seen.lock)
+        cdef fw_summary s = self.seen.summary
+        fw_lock_give(&self.seen.lock)
         return {"gradients": s.gradients, "products": s.products, "transitions": s.transitions,
                 "settled_transitions": s.settled_transitions, "windows": s.windows, "step_size": s.step_size,
                 "beta": s.beta, "bend": s.bend, "ceiling": s.ceiling, "change": s.change, "directions": s.directions,

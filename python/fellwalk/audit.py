@@ -24,6 +24,9 @@ from fellwalk.table import wrap
 
 __all__ = ["Audit", "Finding", "audit", "glance", "glance_at_start"]
 
+Array = NDArray[np.float64]
+Places = NDArray[np.intp]
+
 _ALL = 300  # up to so many coordinates each is looked at by itself; beyond, in groups, and those of a bad group
 _WEIGHTS = ("mistake", "caution", "note")
 
@@ -151,9 +154,9 @@ def audit(density: Density, x: ArrayLike | Mapping[str, ArrayLike] | None = None
 
 
 def _point(density: Density, x: Any, rng: np.random.Generator) -> NDArray[np.float64]:
-    given = density.start if x is None else x
+    given: Any = density.start if x is None else x
     if density.parameters is not None:
-        return free_starts(density, given, 1, rng).reshape(-1)
+        return free_starts(density, density.parameters, given, 1, rng).reshape(-1)
     if given is not None:
         return as_vector(given, density.dimension, "x")
     for size in (0.0, 1.0, 1.0, 0.1, 10.0):
@@ -173,7 +176,7 @@ def _refuse(density: Density, probe: Probe, y: NDArray[np.float64], sight: Sight
     raise StartError(f"{what} at the point to audit, {brief(probe.x_of(y))}; give x inside the support")
 
 
-def _filled(reach: NDArray, y: NDArray, sight: Sight, which: NDArray) -> NDArray:
+def _filled(reach: Array, y: Array, sight: Sight, which: Places) -> Array:
     """Reaches of the coordinates not looked at: from the gradient, or the median of the others."""
     usual = float(np.median(reach[which]))
     slope = np.abs(sight.gradient)
@@ -181,8 +184,8 @@ def _filled(reach: NDArray, y: NDArray, sight: Sight, which: NDArray) -> NDArray
     return np.where(np.isfinite(reach), reach, np.minimum(rest, 100.0 * usual))
 
 
-def _places(density: Density, y: NDArray, reach: NDArray, inside: NDArray | None, rng: np.random.Generator
-            ) -> list[tuple[str, NDArray]]:
+def _places(density: Density, y: Array, reach: Array, inside: Array | None, rng: np.random.Generator
+            ) -> list[tuple[str, Array]]:
     n = rng.standard_normal
     places = [("the point given", y)]
     places += [(f"random point {k + 1}", y + size * reach * n(len(y))) for k, size in enumerate((1.0, 1.0, 3.0))]
@@ -209,7 +212,7 @@ def _towards_bounds(kind: Kind) -> NDArray[np.float64]:
     return (np.isfinite(kind.bounds("low")) | np.isfinite(kind.bounds("high"))).astype(float)
 
 
-def _compared(probe: Probe, places: list[tuple[str, NDArray]], reach: NDArray, which: NDArray, rng: np.random.Generator
+def _compared(probe: Probe, places: list[tuple[str, Array]], reach: Array, which: Places, rng: np.random.Generator
               ) -> tuple[list[Compared], list[Finding]]:
     d = len(reach)
     if d > len(which):
@@ -288,7 +291,7 @@ def _largest_share(points: list[Compared]) -> float:
     return float(max((part.max() for part in known if len(part)), default=math.nan))
 
 
-def _value_alone(probe: Probe, y: NDArray, sight: Sight, value: Callable[[NDArray], float]) -> list[Finding]:
+def _value_alone(probe: Probe, y: Array, sight: Sight, value: Callable[[Array], float]) -> list[Finding]:
     alone = float(value(probe.x_of(y)))
     if abs(alone - sight.value) <= 1e-9 * (1.0 + abs(sight.value)):
         return []

@@ -9,6 +9,7 @@ import time
 import warnings
 from collections.abc import Callable
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -18,6 +19,8 @@ from fellwalk.audit_differences import Probe, Sight
 from fellwalk.density import Density, brief
 
 __all__ = ["Finding", "far_out", "forms", "repeats", "speed", "threads", "written"]
+
+Array = NDArray[np.float64]
 
 _MARK = 12345.678
 _DISTANCES = (10.0, 100.0, 1e3, 1e6, 1e12, 1e150)
@@ -102,9 +105,10 @@ def forms(probe: Probe, y: NDArray[np.float64]) -> list[Finding]:
             warnings.simplefilter("ignore")
             if density.compiled:
                 probe.natural.evaluate(given, out)
-                answer: object = None
+                answer: Any = None
             else:
-                answer = density.function(given, out) if density.in_place else density.function(given)
+                function: Any = density.function
+                answer = function(given, out) if density.in_place else function(given)
     except Exception:
         return []  # said by the checks that look at exceptions
     found = []
@@ -165,8 +169,9 @@ def far_out(probe: Probe, y: NDArray[np.float64], reach: NDArray[np.float64], rn
     axes = np.linspace(0, len(y) - 1, min(len(y), 12)).astype(int)
     rays = [sign * scale * np.eye(1, len(y), i)[0] for i in axes for sign in (1.0, -1.0)]
     rays += [scale * rng.standard_normal(len(y)) for _ in range(6)]
-    names, found, inside = probe.density.coordinates, {}, None
-    counts = {distance: {} for distance in _DISTANCES}
+    names, inside = probe.density.coordinates, None
+    found: dict[str, Any] = {}
+    counts: dict[float, dict[str, Any]] = {distance: {} for distance in _DISTANCES}
     rising, tried = 0, 0
     here = probe.at(y).value + probe.log_jacobian(y)
     for number, ray in enumerate(rays):
@@ -248,8 +253,8 @@ def threads(density: Density, points: NDArray[np.float64]) -> list[Finding]:
 
     def work(which: int) -> None:
         mine = slice(which, None, 2)
-        arrays = (np.ascontiguousarray(part[mine]) for part in (points, values, gradients))
-        wrong[which] = count_disagreements(density.target(), *arrays, rounds)
+        a, b, c = (np.ascontiguousarray(part[mine]) for part in (points, values, gradients))
+        wrong[which] = count_disagreements(density.target(), a, b, c, rounds)
 
     for _ in range(_THREAD_TRIES):
         pair = [threading.Thread(target=work, args=(which,)) for which in (0, 1)]
@@ -266,7 +271,7 @@ def threads(density: Density, points: NDArray[np.float64]) -> list[Finding]:
                     "static or global variable, or in a context that chains share. Use local variables.")]
 
 
-def speed(probe: Probe, y: NDArray[np.float64], value: Callable[[NDArray], float] | None) -> dict[str, float]:
+def speed(probe: Probe, y: NDArray[np.float64], value: Callable[[Array], float] | None) -> dict[str, float]:
     """Seconds a call: "gradient" through the core, "function" called directly, "product", "value" when given."""
     density, x = probe.density, probe.x_of(y)
     target = density.target()
@@ -274,8 +279,9 @@ def speed(probe: Probe, y: NDArray[np.float64], value: Callable[[NDArray], float
     found = {"gradient": _timed(lambda n: count_disagreements(target, y[None, :], *nothing, n))}
     out = np.empty(density.natural_size)
     if not density.compiled:
-        call = (lambda: density.function(x.copy(), out)) if density.in_place else (lambda: density.function(x.copy()))
-        found["function"] = _timed(lambda n: [call() for _ in range(n)])
+        function: Any = density.function
+        also = (out,) if density.in_place else ()
+        found["function"] = _timed(lambda n: [function(x.copy(), *also) for _ in range(n)])
     if density.hessian_product is not None:
         p, product = np.ones(len(y)), np.empty(len(y))
         with contextlib.suppress(Exception):  # what it raises is a finding already

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
@@ -77,7 +78,7 @@ def reaches(probe: Probe, y: NDArray[np.float64], sight: Sight, which: NDArray[n
     return out
 
 
-def _line(probe: Probe, y: NDArray[np.float64], i: int):
+def _line(probe: Probe, y: NDArray[np.float64], i: int) -> Callable[[float], float]:
     def f(t: float) -> float:
         moved = y.copy()
         moved[i] = y[i] + t

@@ -13,6 +13,8 @@ from fellwalk.audit_gradient import Compared, _line
 
 __all__ = ["guess"]
 
+Array = NDArray[np.float64]
+
 NO_PATTERN = ("The difference follows no pattern known here: take the log density apart, audit one term at a time, and "
               "the term that fails alone is the one to look at.")
 
@@ -31,7 +33,7 @@ def guess(probe: Probe, points: Sequence[Compared], i: int) -> str:
     return NO_PATTERN
 
 
-def _factor(seen: Sequence[Compared], i: int, g: NDArray, r: NDArray, tolerance: NDArray) -> str | None:
+def _factor(seen: Sequence[Compared], i: int, g: Array, r: Array, tolerance: Array) -> str | None:
     if np.all(np.abs(g) <= tolerance):
         return "It is 0 at every point tried: this entry seems never to be filled. Look for it in your function."
     best = int(np.argmax(np.abs(r)))
@@ -75,7 +77,7 @@ def _exchanged(seen: Sequence[Compared], i: int) -> str | None:
     return None
 
 
-def _constant(g: NDArray, r: NDArray, tolerance: NDArray) -> str | None:
+def _constant(g: Array, r: Array, tolerance: Array) -> str | None:
     apart = g - r
     middle = float(apart[np.argmin(tolerance)])
     if len(g) < 2 or np.ptp(r) <= 0.01 * np.max(np.abs(r)) or not np.all(np.abs(apart - middle) <= 2 * tolerance):
@@ -89,7 +91,7 @@ def _constant(g: NDArray, r: NDArray, tolerance: NDArray) -> str | None:
             "log-Jacobian, stands in the value or in the gradient only.")
 
 
-def _variable(probe: Probe, i: int, y: NDArray, g: NDArray, r: NDArray, tolerance: NDArray) -> str | None:
+def _variable(probe: Probe, i: int, y: Array, g: Array, r: Array, tolerance: Array) -> str | None:
     if len(g) < 2 or not np.all(np.abs(r) > 0):
         return None
     if probe.maps is not None:
@@ -114,6 +116,8 @@ def _variable(probe: Probe, i: int, y: NDArray, g: NDArray, r: NDArray, toleranc
 def _own_slope(probe: Probe, y: float, i: int) -> float:
     """d natural / d free of an elementwise coordinate, from the log-Jacobian-free pull-back of a unit gradient."""
     parameters = probe.density.parameters
+    assert parameters is not None
+    assert probe.maps is not None
     for name, where in parameters.slices(free=True).items():
         if where.start <= i < where.stop:
             kind = parameters.kinds[name]
@@ -125,8 +129,8 @@ def _own_slope(probe: Probe, y: float, i: int) -> float:
     return math.nan
 
 
-def _prior(probe: Probe, seen: Sequence[Compared], i: int, y: NDArray, apart: NDArray,
-           tolerance: NDArray) -> str | None:
+def _prior(probe: Probe, seen: Sequence[Compared], i: int, y: Array, apart: Array,
+           tolerance: Array) -> str | None:
     natural = y if probe.maps is None else np.array([probe.x_of(p.y)[_natural_place(probe, i)] for p in seen])
     slopes = np.ones(len(y)) if probe.maps is None else np.array([_own_slope(probe, at, i) for at in y])
     if np.all(np.isfinite(slopes)) and len(y) >= 3:
@@ -146,13 +150,14 @@ def _prior(probe: Probe, seen: Sequence[Compared], i: int, y: NDArray, apart: ND
 
 def _natural_place(probe: Probe, i: int) -> int:
     parameters = probe.density.parameters
+    assert parameters is not None
     for name, where in parameters.slices(free=True).items():
         if where.start <= i < where.stop:
             return parameters.slices()[name].start + i - where.start
     return 0
 
 
-def _alone(probe: Probe, seen: Sequence[Compared], i: int, apart: NDArray, tolerance: NDArray) -> bool:
+def _alone(probe: Probe, seen: Sequence[Compared], i: int, apart: Array, tolerance: Array) -> bool:
     """With this coordinate held and all others moved, does the difference stay?"""
     rng = np.random.default_rng(i)
     base = seen[0]

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import math
 import warnings
+from collections.abc import Callable
 
 import numpy as np
 from numpy.typing import NDArray
@@ -12,6 +13,8 @@ from fellwalk.audit_checks import Finding
 from fellwalk.audit_differences import Probe, noise_at
 
 __all__ = ["products"]
+
+Array = NDArray[np.float64]
 
 _LEVELS = 6
 
@@ -46,7 +49,7 @@ def products(probe: Probe, y: NDArray[np.float64], reach: NDArray[np.float64],
     return _against_gradient(probe, y, directions, found) + _symmetry(directions, found)
 
 
-def _symmetry(directions: list[NDArray], found: list[NDArray]) -> list[Finding]:
+def _symmetry(directions: list[Array], found: list[Array]) -> list[Finding]:
     worst = 0.0
     for a in range(3):
         for b in range(a):
@@ -59,8 +62,8 @@ def _symmetry(directions: list[NDArray], found: list[NDArray]) -> list[Finding]:
                     "of their size. A second derivative stands in one place of a pair only, or the two orders differ.")]
 
 
-def _against_gradient(probe: Probe, y: NDArray, directions: list[NDArray], found: list[NDArray]) -> list[Finding]:
-    def gradient(t: float, p: NDArray) -> NDArray:
+def _against_gradient(probe: Probe, y: Array, directions: list[Array], found: list[Array]) -> list[Finding]:
+    def gradient(t: float, p: Array) -> Array:
         at = y + t * p
         slope = np.full(len(y), np.nan)
         with np.errstate(all="ignore"), warnings.catch_warnings():
@@ -94,10 +97,10 @@ def _against_gradient(probe: Probe, y: NDArray, directions: list[NDArray], found
     return finding
 
 
-def _extrapolated(f, noise: NDArray) -> tuple[NDArray, NDArray]:
+def _extrapolated(f: Callable[[float], Array], noise: Array) -> tuple[Array, Array]:
     """(derivative, error) of a vector function at 0, every entry with its own best level of extrapolation."""
     best, best_error = np.full(len(noise), np.nan), np.full(len(noise), np.inf)
-    table: list[NDArray] = []
+    table: list[Array] = []
     h = 0.5
     for _ in range(_LEVELS + 4):
         row = [(f(h) - f(-h)) / (2.0 * h)]

@@ -3,7 +3,10 @@
 import hashlib
 import json
 import struct
+import time
+from collections.abc import Callable, Mapping
 from dataclasses import dataclass, replace
+from typing import TYPE_CHECKING
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
@@ -11,15 +14,20 @@ from numpy.typing import ArrayLike, NDArray
 from fellwalk._core import FACTS, Engine, Stream
 from fellwalk.density import Density, as_vector, brief, stopped
 from fellwalk.errors import ArgumentError, SettleError, StartError, StateError
-from fellwalk.motions import Leapfrog, Motion, NoUTurn, Path, whole
+from fellwalk.motions import Leapfrog, Motion, NoUTurn, Path, real, whole
 from fellwalk.settings import Settings
 from fellwalk.settled import SettledChain
 from fellwalk.watch import Moments, Watching
 
+if TYPE_CHECKING:
+    from fellwalk._core import Summary
+
 __all__ = ["Block", "Chain"]
 
+Bytes = bytes | bytearray | memoryview
 _STATE_MAGIC = b"fellwalk chain 1\n"
 _CHECKSUM_BYTES = 16  # of the SHA-256 of all that stands before it
+_ENDLESS = 2**62
 _PIECE = 1024  # transitions between two looks of Python
 _FAILURE_ROOM = 32  # positions of failed steps kept in one block; every failure is counted in the facts
 
@@ -47,7 +55,10 @@ class Block:
 
 
 class Chain:
-    """A chain over a density. It prints nothing, starts no thread, installs no signal handler.
+    """A chain over a density. It prints nothing, starts no thread, installs no signal handler, keeps no global.
+
+    One thread at a time moves a chain (BusyError otherwise); `position`, `gradient`, `log_density`, `counts` and
+    `summary` can be read at any time and from any thread: they are those of the last completed transition.
 
     start: position of shape (dimension,), where log density and gradient are finite; with `fellwalk.Parameters` in
         natural values, flat or a dict, while positions and draws of the chain are in free coordinates
@@ -61,7 +72,7 @@ class Chain:
     def __init__(
         self,
         density: Density,
-        start: ArrayLike,
+        start: ArrayLike | Mapping[str, ArrayLike],
         *,
         motion: Motion | None = None,
         path: Path | None = None,
@@ -79,7 +90,7 @@ class Chain:
                             step_size=step_size, adapt_scale=adapt_scale, beta=beta, rank=rank)
         self._make(density, settings if settled is None else self._reused(settings, settled), seed)
         self._set_base(scale, settled)
-        self._start(start if density.parameters is None else density.parameters.free(start))
+        self._start(self._free(start))
 
     def _make(self, density: Density, settings: Settings, seed: int | np.random.SeedSequence | None) -> None:
         if not isinstance(density, Density):
@@ -132,14 +143,21 @@ class Chain:
             raise ArgumentError("scale must hold finite numbers > 0 (variances, one a coordinate), and a settled part "
                                 "no more directions than rank allows")
 
-    def _start(self, start: ArrayLike) -> None:
+    def _free(self, start: ArrayLike | Mapping[str, ArrayLike]) -> object:
+        """A start in the coordinates that the chain moves in, not yet looked at."""
+        return start if self.density.parameters is None else self.density.parameters.free(start)
+
+    def _start(self, start: object) -> None:
+        self._put(start, self._engine.start)
+
+    def _put(self, start: object, move: Callable[[NDArray[np.float64]], int]) -> None:
         x = as_vector(start, self.density.dimension, "the starting point")
         if not np.all(np.isfinite(x)):
             bad = int(np.flatnonzero(~np.isfinite(x))[0])
             raise StartError(f"the starting point is {x[bad]} in {self.density.coordinates[bad]}; start from finite "
                              "numbers")
         try:
-            status = self._engine.start(x)
+            status = move(x)
         finally:
             self._count()
         if status == -7:
@@ -171,18 +189,68 @@ class Chain:
         self._engine.settle(*plan.settle_bounds())
         if self.settled:
             return _joined("settle", [], self.density.dimension)
-        return self._raised(self.block(2**62))
+        return self._raised(self.block(_ENDLESS))
 
-    def advance(self, draws: int) -> Block:
-        """Make `draws` kept transitions. Raises what the density raises; the chain is then as before that transition.
+    def advance(
+        self, draws: int | None = None, *, gradients: int | None = None, seconds: float | None = None
+    ) -> Block:
+        """Make kept transitions: `draws` of them, or until they have taken `gradients`, or for `seconds`.
 
-        Errors: SettleError before settling has ended; ArgumentError without a step size.
+        Of several bounds the first that is reached ends the block. A transition that has begun is completed, so
+        gradients and seconds are passed by no more than one transition takes (at most 0.1 s of small ones). The bounds
+        decide how many draws there are and nothing else about them.
+        Raises what the density raises; the chain is then as before that transition, and this call's draws before it are
+        not returned (`block` returns both). Errors: SettleError before settling has ended; ArgumentError without a step
+        size, or without a bound.
         """
-        count = whole("draws", draws, 0, 2**40)
+        if draws is None and gradients is None and seconds is None:
+            raise ArgumentError("say how far: advance(draws=...), advance(gradients=...) or advance(seconds=...)")
+        count = _ENDLESS if draws is None else whole("draws", draws, 0, 2**40)
+        budget = None if gradients is None else whole("gradients", gradients, 1, 2**40)
+        end = None if seconds is None else time.perf_counter() + real("seconds", seconds, 0.0, 1e9)
         if not self.settled:
             raise SettleError("this chain has not settled; call settle() first, or make it with settle=0 and a "
                               "step_size")
-        return self._raised(self.block(count))
+        if budget is None and end is None:
+            return self._raised(self.block(count))
+        return self._raised(self._bounded(count, budget, end))
+
+    def _bounded(self, count: int, budget: int | None, end: float | None) -> Block:
+        """Kept transitions in pieces, short ones where the clock decides, until the first bound is reached."""
+        self._ready()
+        parts: list[Block] = []
+        most = max(1, min(_PIECE, 2**24 // self.density.dimension))  # rows of at most 128 MB are made ahead
+        piece, begun, made, spent = (most if end is None else 1), time.perf_counter(), 0, 0
+        while made < count and not (parts and parts[-1].error is not None):
+            now = time.perf_counter()
+            if end is not None:
+                if now >= end:
+                    break
+                if made:
+                    each = max((now - begun) / made, 1e-9)
+                    piece = int(min(4 * piece, most, max(1.0, 0.5 * min(end - now, 0.2) / each)))
+            left = _ENDLESS if budget is None else budget - max(spent, made)
+            if left <= 0:
+                break
+            parts.append(self._rows("keep", min(piece, count - made, left), True, False,
+                                    most_gradients=0 if budget is None else left))
+            made += len(parts[-1])
+            spent += int(parts[-1].facts["gradients"].sum(dtype=np.int64))
+        return _joined("keep", parts, self.density.dimension)
+
+    def density_changed(self, position: ArrayLike | Mapping[str, ArrayLike] | None = None) -> None:
+        """Say that the density is another one from now on, because its data have changed.
+
+        Its value and gradient are evaluated anew where the chain stands, or at `position` (as ``start``). A chain that
+        is settling begins its plan anew, from the base metric it has; one that has settled keeps base metric and step
+        size, so call `settle` as well where the new density is of another scale.
+        Errors: StartError where the new density is not finite, and the chain is then as it was, over the old values:
+        give a position inside the support.
+        """
+        if position is None:
+            self._put(self.position, lambda _: self._engine.density_changed())
+        else:
+            self._put(self._free(position), self._engine.density_changed)
 
     def _raised(self, block: Block) -> Block:
         if block.error is not None:
@@ -197,9 +265,7 @@ class Chain:
 
         Errors: ArgumentError when the chain has settled without a step size.
         """
-        phase = self.phase
-        if phase == "keep" and not self.step_size > 0:
-            raise ArgumentError("this chain has no step size: call settle() first, or give step_size=")
+        phase = self._ready()
         # How long settling goes on is not known, so its arrays grow; those of kept draws are made once.
         rows = _PIECE if phase == "settle" else most
         parts: list[Block] = []
@@ -208,16 +274,17 @@ class Chain:
             most -= len(parts[-1])
         return _joined(phase, parts, self.density.dimension)
 
-    def _rows(self, phase: str, n: int, want_draws: bool, want_gradients: bool, watching: Watching | None) -> Block:
-        """Up to n transitions, in pieces between which Python may answer a Ctrl-C."""
+    def _rows(self, phase: str, n: int, want_draws: bool, want_gradients: bool, watching: Watching | None = None,
+              most_gradients: int = 0) -> Block:
+        """Up to n transitions, in pieces between which Python may answer a Ctrl-C; with most_gradients in one."""
         d = self.density.dimension
         draws = np.empty((n if want_draws else 0, watching.width if watching else d))
         whole_rows = None if watching is None or watching.direct else np.empty((watching.rows(n), d))
         most = _PIECE if whole_rows is None else min(_PIECE, len(whole_rows))
         gradients = np.empty((n, d)) if want_gradients else None
         facts = np.empty(n, dtype=FACTS)
-        failures, done, error = [], 0, None
-        while done < n and error is None and self.phase == phase:
+        failures, done, error, ended = [], 0, None, False
+        while done < n and error is None and self.phase == phase and not ended:
             piece = slice(done, min(n, done + most))
             room = min(piece.stop - done, _FAILURE_ROOM)
             index, code = np.empty(room, np.int64), np.empty(room, np.int32)
@@ -226,19 +293,27 @@ class Chain:
             picked = watching.picked(want_draws) if watching else (None, None)
             status, made, rows, error = self._engine.run(
                 piece.stop - done, into, facts[piece], None if gradients is None else gradients[piece], index, code,
-                position, *picked)
+                position, *picked, most_gradients)
             if watching and whole_rows is not None:
                 if want_draws:
                     draws[done : done + made] = watching.take(whole_rows[:made])
                 position = watching.place(position[:rows])
+            ended = most_gradients > 0
             failures.append((index[:rows] + done, code[:rows], position[:rows].copy()))
             done += made
             self._count()
             if status < 0 and error is None:
                 error = stopped(status, f"transition {self._engine.summary()['transitions'] + 1}", self.density,
                                 self._engine.failed_at())
-        joined = tuple(np.concatenate(column) for column in zip(*failures, strict=True))
-        return Block(phase, draws[:done], None if gradients is None else gradients[:done], facts[:done], joined, error)
+        index, code, position = (np.concatenate(column) for column in zip(*failures, strict=True))
+        return Block(phase, draws[:done], None if gradients is None else gradients[:done], facts[:done],
+                     (index, code, position), error)
+
+    def _ready(self) -> str:
+        """The phase, of a chain that can move."""
+        if self.phase == "keep" and not self.step_size > 0:
+            raise ArgumentError("this chain has no step size: call settle() first, or give step_size=")
+        return self.phase
 
     def interrupt(self) -> None:
         """Abandon the transition in hand; may be called from another thread."""
@@ -303,9 +378,9 @@ class Chain:
         return {"transitions": found["transitions"], "gradients": found["gradients"], "products": found["products"]}
 
     @property
-    def summary(self) -> dict[str, object]:
+    def summary(self) -> "Summary":
         """What settling has found: step size, bend, beta, ceiling of acceptance, windows; and the workspace's size."""
-        return dict(self._engine.summary())
+        return self._engine.summary()
 
     # ---- state --------------------------------------------------------------------------------------------------
 
@@ -317,7 +392,7 @@ class Chain:
         return whole_state + _checksum(whole_state)
 
     @state.setter
-    def state(self, given: bytes) -> None:
+    def state(self, given: Bytes) -> None:
         settings, core = _split_state(given)
         if settings != self.settings:
             raise StateError(f"the stored state belongs to a chain of other settings ({settings}); use "
@@ -325,8 +400,8 @@ class Chain:
         self._import(core)
 
     @classmethod
-    def from_state(cls, density: Density, state: bytes) -> "Chain":
-        """The chain that `state` was taken from, over the same density. Errors: StateError."""
+    def from_state(cls, density: Density, state: Bytes) -> "Chain":
+        """The chain that `state` (bytes, or a view of such) was taken from, over its density. Errors: StateError."""
         settings, core = _split_state(state)
         self = cls.__new__(cls)
         self._make(density, settings, 0)
@@ -347,9 +422,13 @@ def _checksum(given: bytes) -> bytes:
     return hashlib.sha256(given, usedforsecurity=False).digest()[:_CHECKSUM_BYTES]
 
 
-def _split_state(given: bytes) -> tuple[Settings, bytes]:
+def _split_state(stored: Bytes) -> tuple[Settings, bytes]:
     start = len(_STATE_MAGIC) + 4
-    if not isinstance(given, bytes) or given[: len(_STATE_MAGIC)] != _STATE_MAGIC:
+    try:
+        given = bytes(memoryview(stored))
+    except TypeError:
+        raise StateError(f"a chain state is bytes; this is {type(stored).__name__}") from None
+    if given[: len(_STATE_MAGIC)] != _STATE_MAGIC:
         raise StateError("this is not a chain state of fellwalk: it does not begin as one")
     state, checksum = given[:-_CHECKSUM_BYTES], given[-_CHECKSUM_BYTES:]
     if len(state) < start or _checksum(state) != checksum:

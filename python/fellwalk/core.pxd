@@ -123,11 +123,12 @@ cdef extern from "fellwalk.h" nogil:
 
     int fw_chain_new(const fw_target *target, const fw_random *random, const fw_settings *settings, fw_chain **chain)
     void fw_chain_free(fw_chain *chain)
-    void fw_chain_watch(fw_chain *chain, const int *flag)
+    void fw_chain_watch(fw_chain *chain, const volatile int *flag)
     int fw_chain_set_base(fw_chain *chain, const double *scale, size_t count, const double *directions,
                           const double *lambda_)
     size_t fw_chain_base(const fw_chain *chain, double *scale, double *directions, double *lambda_)
     int fw_chain_start(fw_chain *chain, const double *x)
+    int fw_chain_density_changed(fw_chain *chain, const double *x)
     int fw_chain_settle(fw_chain *chain, size_t least, size_t most)
     int fw_chain_settled(const fw_chain *chain)
     int fw_chain_run(fw_chain *chain, size_t n, fw_output *output, size_t *done)

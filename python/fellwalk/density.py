@@ -2,7 +2,7 @@
 
 import threading
 from collections.abc import Callable, Mapping, Sequence
-from typing import Any, SupportsIndex
+from typing import Any, SupportsIndex, cast
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
@@ -24,6 +24,7 @@ from fellwalk.parameters import ByName, Parameters
 __all__ = ["Density"]
 
 _counting = threading.Lock()  # held for a few additions, which an interpreter without a lock of its own could mix up
+Function = Callable[..., object] | tuple[object, ...]  # a scipy.LowLevelCallable is a tuple
 
 
 def as_vector(value: object, dimension: int, what: str) -> NDArray[np.float64]:
@@ -66,11 +67,11 @@ class Density:
 
     def __init__(
         self,
-        function: Callable[..., object],
+        function: Function,
         dimension: int | Parameters,
         *,
         in_place: bool = False,
-        hessian_product: Callable[..., object] | None = None,
+        hessian_product: Function | None = None,
         names: Sequence[str] | None = None,
         start: ArrayLike | Mapping[str, ArrayLike] | None = None,
         by_name: bool = False,
@@ -130,9 +131,9 @@ class Density:
             raise ArgumentError("by_name=True needs Parameters in place of the dimension")
         if is_compiled(self.function) or (self.hessian_product is not None and is_compiled(self.hessian_product)):
             raise ArgumentError("by_name=True is for Python functions; a compiled one sees the flat natural values")
-        self.function = ByName(self.function, self.parameters, "fill" if self.in_place else "call")
+        self.function = ByName(_python(self.function), self.parameters, "fill" if self.in_place else "call")
         if self.hessian_product is not None:
-            self.hessian_product = ByName(self.hessian_product, self.parameters, "multiply")
+            self.hessian_product = ByName(_python(self.hessian_product), self.parameters, "multiply")
 
     def target(self) -> Target:
         """A fresh set of call arrays around the functions; each chain needs its own."""
@@ -202,6 +203,11 @@ class Density:
     def __repr__(self) -> str:
         kind = "compiled" if self.compiled else "in place" if self.in_place else "(value, gradient)"
         return f"<Density of {self.dimension} coordinates, {kind}{', Hessian product' if self.hessian_product else ''}>"
+
+
+def _python(function: Function) -> Callable[..., object]:
+    """A function known not to be a compiled one, as what it is."""
+    return cast(Callable[..., object], function)
 
 
 def _checked_names(names: Sequence[str] | None, dimension: int) -> list[str]:

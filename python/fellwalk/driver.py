@@ -45,8 +45,8 @@ class Driver:
         self.settle_most = Settings.from_json(plan["settings"]).settle_bounds()[1]
         self.limit = None if seconds is None else time.monotonic() + seconds
         self.ready = deque(chain for chain in range(len(states)) if self._left(chain))
-        self.flying: dict[Future, tuple[Job, Executor]] = {}
-        self.arrived: SimpleQueue[Future | None] = SimpleQueue()
+        self.flying: dict[Future[Any], tuple[Job, Executor]] = {}
+        self.arrived: SimpleQueue[Future[Any] | None] = SimpleQueue()
         self.finished: list[Done] = []
         self.written, self.writing = float("-inf"), 0.0  # when the last commit ended, how long it took
         self.errors: list[tuple[int, str, BaseException]] = []
@@ -147,7 +147,7 @@ class Driver:
             if future in self.flying:  # and was not called back; None only wakes
                 self._take(future, *self.flying.pop(future))
 
-    def _take(self, future: Future, job: Job, executor: Executor) -> None:
+    def _take(self, future: Future[Any], job: Job, executor: Executor) -> None:
         try:
             done = self.workers.opened(future.result())
         except BaseException as error:

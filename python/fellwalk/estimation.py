@@ -76,6 +76,7 @@ def _values(
     if f in result.names:
         return result[f][..., None] if result[f].ndim == 2 else result[f], [f]
     values = result[f]  # a name with several elements, or a sentence
+    assert result.parameters is not None  # else it had no such name
     where = result.parameters.slices()[f]
     flat = result.draws[..., where]
     return flat, result.names[where] if values.size else []

@@ -38,7 +38,7 @@ def save_npz(path: str | os.PathLike[str], draws: np.ndarray, names: Sequence[st
     if facts is not None:
         arrays["facts"] = facts
     with _whole_file(path) as file:
-        np.savez(file, **arrays)
+        np.savez(file, allow_pickle=False, **arrays)
 
 
 def save_csv(path: str | os.PathLike[str], draws: np.ndarray, names: Sequence[str], *,
@@ -50,7 +50,7 @@ def save_csv(path: str | os.PathLike[str], draws: np.ndarray, names: Sequence[st
     when the disk refuses.
     """
     draws, names, facts = _checked(draws, names, facts)
-    fields = [] if facts is None else list(facts.dtype.names)
+    fields = [] if facts is None else list(facts.dtype.names or ())
     header = ["chain", "draw", *names, *(f"facts.{field}" for field in fields)]
     if len(set(header)) != len(header):
         raise ArgumentError("a parameter is named chain, draw or facts.FIELD, as columns of the file are: rename it")
@@ -87,11 +87,12 @@ def save_netcdf(path: str | os.PathLike[str], draws: np.ndarray, names: Sequence
         raise ArgumentError(f"{chains} x {count} draws are too many for classic netCDF (2 GB a parameter): write "
                             "a .npz file")
     columns: dict[str, tuple[np.ndarray, str]] = {}
-    fields = () if facts is None else facts.dtype.names
+    fields = () if facts is None else facts.dtype.names or ()
     taken = {"chain", "draw", *(f"facts_{field}" for field in fields)}
     for column, name in enumerate(names):
         columns[_safe(name, taken)] = (draws[:, :, column], name)
-    columns |= {f"facts_{field}": (facts[field], field) for field in fields}
+    if facts is not None:
+        columns |= {f"facts_{field}": (facts[field], field) for field in fields}
     with _whole_file(path) as file:
         out = netcdf_file(_Kept(file), "w", version=2)
         out.title = _text(title)

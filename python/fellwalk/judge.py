@@ -237,9 +237,9 @@ def _assemble(
         best = estimate_all(x, names, numbers, list(LEVELS.values()), sharpener, checked)
         credited = _credited(numbers, best)
     labels = coordinates or (None if pair is None else [f"free[{i}]" for i in range(pair[0].shape[2])])
-    broken = [] if checked is None else describe(checked, labels)
+    broken = [] if checked is None else describe(checked, labels or [])
     verdict = verdict_module.decide(x, names, numbers, fraction, failure, credited, broken, settings)
-    shown = {key: value for key, value in numbers.items() if key in Judgement.NUMBERS}
+    shown: dict[str, Any] = {key: value for key, value in numbers.items() if key in Judgement.NUMBERS}
     failures: dict[int, int] = {}
     if failure is not None:
         codes, counts = np.unique(failure[failure != 0], return_counts=True)

@@ -22,7 +22,7 @@ def values_of(
     chains, n, _ = x.shape
     view = x.view()
     view.flags.writeable = False
-    values: np.ndarray | None = None
+    values: Any = None
     is_scalar = False
     for chain in range(chains):
         for draw in range(n):

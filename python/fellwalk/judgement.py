@@ -5,13 +5,14 @@ from dataclasses import dataclass, field
 from typing import Any, ClassVar
 
 import numpy as np
+from numpy.typing import NDArray
 
 from fellwalk import table
 from fellwalk.errors import ArgumentError
 from fellwalk.identities import IdentityCheck
 from fellwalk.verdict import Verdict
 
-Array = np.ndarray
+Array = NDArray[np.float64]
 
 
 @dataclass(frozen=True, eq=False)
@@ -63,10 +64,10 @@ class Judgement:
     worth_tails: Array
     worth_mean: Array
     agreement: Array
-    constant: Array
-    event: Array
-    in_doubt: Array
-    spread_in_doubt: Array
+    constant: NDArray[np.bool_]
+    event: NDArray[np.bool_]
+    in_doubt: NDArray[np.bool_]
+    spread_in_doubt: NDArray[np.bool_]
     energy_fraction: Array | None
     failures: dict[int, int]
     judged_facts: bool

@@ -27,7 +27,7 @@ def find_model(name: str) -> Density:
         raise ArgumentError(f"a model is named module:object or file.py:object, for example hives.py:density; "
                             f"got {name!r}")
     module = _from_file(Path(place)) if place.endswith(".py") else _from_module(place)
-    found = module
+    found: object = module
     for part in attribute.split("."):
         if not hasattr(found, part):
             have = [key for key, value in vars(module).items() if isinstance(value, Density)]

@@ -33,8 +33,8 @@ class Kind:
     word: str
     shape: tuple[int, ...]
     repeats: tuple[int, ...] = ()
-    low: tuple | float | None = None
-    high: tuple | float | None = None
+    low: tuple[Any, ...] | float | None = None
+    high: tuple[Any, ...] | float | None = None
 
     @property
     def joint(self) -> bool:

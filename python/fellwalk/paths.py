@@ -18,7 +18,8 @@ __all__ = ["Trajectory", "integrate"]
 class Trajectory:
     """The end of one path.
 
-    position, velocity: (dimension,), natural units. log_jacobian: of the map from start to end, in (x, v).
+    position, velocity: (dimension,), in the coordinates that chains move in (with `fellwalk.Parameters` the free ones;
+    ``density.parameters.natural(path.position)`` maps them). log_jacobian: of the map from start to end, in (x, v).
     log_ratio: energy at the start minus energy at the end plus log_jacobian: the log of what an accept test compares.
     status: 0, or the code of the step that failed (position and velocity are then the given ones), said in `sentence`.
     gradients, products: calls made. trace: with ``trace=True``, a dict of arrays with one row a state, start
@@ -56,6 +57,8 @@ def integrate(
 ) -> Trajectory:
     """Move (x, v), both of shape (dimension,), by `steps` steps of `step_size`; a negative step goes back in time.
 
+    x and v are in the coordinates that chains move in: with `fellwalk.Parameters` in free coordinates, not in natural
+    values (``density.parameters.free(values)`` gives x). velocity is dx / dt; log densities include the log-Jacobian.
     scale: diagonal of the inverse base metric, shape (dimension,), default ones; beta: strength of the rank-one term
     of the Lagrangian motion's metric, G = diag(1/scale) + beta g g'. Raises what the density raises.
     """

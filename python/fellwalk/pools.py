@@ -11,6 +11,7 @@ import sys
 import threading
 import time
 import warnings
+from collections.abc import Callable
 from concurrent.futures import BrokenExecutor, Executor, Future, ThreadPoolExecutor
 from typing import Any
 
@@ -42,9 +43,9 @@ class Here(Executor):
 
     _max_workers = 1
 
-    def submit(self, function, /, *args, **kwargs) -> Future:
+    def submit(self, function: Callable[..., Any], /, *args: Any, **kwargs: Any) -> Future[Any]:
         """Run now; the future that comes back is finished."""
-        future: Future = Future()
+        future: Future[Any] = Future()
         try:
             future.set_result(function(*args, **kwargs))
         except BaseException as error:
@@ -92,7 +93,7 @@ class Workers:
         else:
             self.why = f"blocks run on the {type(given).__name__} given"
         self.kind = kind if self.ours else "given"
-        self.executor = given if not self.ours else self._own()
+        self.executor: Any = given if not self.ours else self._own()
         self.here = isinstance(self.executor, Here)
         self.local = self.here or (isinstance(self.executor, ThreadPoolExecutor)
                                    and type(self.executor).__name__ != "InterpreterPoolExecutor")
@@ -175,12 +176,12 @@ class Workers:
         except Exception as error:
             raise self.lost(error) from error
 
-    def _send(self, parcel: Parcel | None, job: Job | None) -> Future:
+    def _send(self, parcel: Parcel | None, job: Job | None) -> Future[Any]:
         if self.local:
             return self.executor.submit(make_block, self.density, job, self.live)
         return self.executor.submit(make_block_elsewhere, parcel, job, **self.options)
 
-    def submit(self, job: Job, *, whole: bool = False) -> Future:
+    def submit(self, job: Job, *, whole: bool = False) -> Future[Any]:
         """A future of `Done` (local) or `Reply`; `whole`: send the density too, as the worker lacked it."""
         parcel = self.parcel if whole or self.parcel is None else self.parcel.light()
         return self._send(parcel, job)

@@ -58,7 +58,7 @@ class Result:
         self.names: list[str] = self.watched["names"] if self.watched else plan["names"]
         self.parameters = Parameters.from_json(plan["parameters"]) if plan.get("parameters") else None
         self.settings: dict[str, Any] = plan["settings"]
-        self.seed = plan["seed"]
+        self.seed: int = plan["seed"]
         self.path = path
         self.ended = ended
         self._parts = list(parts)
@@ -68,7 +68,7 @@ class Result:
     def _shortest(self) -> int:
         return min(part.count("keep") for part in self._parts)
 
-    def _stack(self, pick: Callable[[ChainResult], list[NDArray]], shape: tuple[int, ...], dtype: Any) -> NDArray:
+    def _stack(self, pick: Callable[[ChainResult], list[Any]], shape: tuple[int, ...], dtype: Any) -> NDArray[Any]:
         n = self._shortest
         out = np.empty((len(self._parts), n, *shape), dtype)
         for row, part in zip(out, self._parts, strict=True):
@@ -111,17 +111,17 @@ class Result:
         return self._stack(lambda part: part.gradients, (self.plan["dimension"],), np.float64)
 
     @cached_property
-    def facts(self) -> NDArray:
+    def facts(self) -> NDArray[np.void]:
         """(chains, draws) of dtype ``fellwalk.facts.FACTS``."""
         return self._stack(lambda part: part.facts["keep"], (), FACTS)
 
     @cached_property
-    def settling(self) -> list[NDArray]:
+    def settling(self) -> list[NDArray[np.void]]:
         """Facts of settling, one array a chain."""
         return [np.concatenate(part.facts["settle"] or [np.empty(0, FACTS)]) for part in self._parts]
 
     @cached_property
-    def failures(self) -> tuple[NDArray, NDArray, NDArray, NDArray]:
+    def failures(self) -> tuple[NDArray[np.int64], NDArray[np.int64], NDArray[np.int32], NDArray[np.float64]]:
         """(chain, draw, code, position) of failed steps whose position was kept, while keeping."""
         rows = [(np.full(len(draw), c), draw, code, position)
                 for c, part in enumerate(self._parts) for draw, code, position in part.failures]
@@ -152,7 +152,7 @@ class Result:
     @property
     def finished(self) -> bool:
         """Has every chain made all the draws asked for?"""
-        return self._shortest >= self.plan["keep"]
+        return bool(self._shortest >= self.plan["keep"])
 
     @cached_property
     def spent(self) -> dict[str, float]:

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import os
+import secrets
 from collections.abc import Callable, Mapping, Sequence
 from concurrent.futures import Executor
 from dataclasses import replace as replace_settings
@@ -17,7 +18,7 @@ from fellwalk.density import Density, brief
 from fellwalk.driver import Driver
 from fellwalk.errors import ArgumentError, NotWrittenError, OtherModelError, StartError
 from fellwalk.model import find_model
-from fellwalk.motions import Motion, Path, real, whole
+from fellwalk.motions import Leapfrog, Motion, NoUTurn, Path, real, whole
 from fellwalk.parameters import Parameters
 from fellwalk.pools import Workers
 from fellwalk.progress import choose_progress
@@ -26,7 +27,7 @@ from fellwalk.result import Result
 from fellwalk.run_record import ChainResult, begin, plan_of, read_check, read_parts, read_states
 from fellwalk.settings import Settings
 from fellwalk.settled import Settled
-from fellwalk.starts import starting_points
+from fellwalk.starts import Starts, starting_points
 from fellwalk.watch import Watch, watch_again, watch_of
 from fellwalk.work import Check
 
@@ -38,7 +39,7 @@ _SETTLE = 400  # transitions that settling takes about, for guessing how long a 
 
 def run(
     density: Density,
-    starts: ArrayLike | None = None,
+    starts: Starts | None = None,
     *,
     motion: Motion | None = None,
     path: Path | None = None,
@@ -102,7 +103,7 @@ def run(
         settings = replace_settings(settings, settle=0, step_size=taken.chains[0].step_size)
     chains, keep = whole("chains", chains, 1, 2**20), whole("keep", keep, 1, 2**40)
     seconds = None if seconds is None else real("seconds", seconds, 0.0, 1e12)
-    seed = int(np.random.SeedSequence().entropy) if seed is None else whole("seed", seed, 0, 2**128)
+    seed = secrets.randbits(128) if seed is None else whole("seed", seed, 0, 2**128)
     plan = {
         "settings": settings.to_json(),
         "names": density.names,
@@ -182,8 +183,8 @@ def _first_states(density: Density, settings: Settings, points: np.ndarray, seed
 
 def _settings(motion: Motion | None, path: Path | None, settle: int | str, acceptance: float,
               step_size: float | None, rank: int | str) -> Settings:
-    chosen = {key: value for key, value in (("motion", motion), ("path", path)) if value is not None}
-    settings = Settings(settle=settle, acceptance=acceptance, step_size=step_size, rank=rank, **chosen)
+    settings = Settings(motion=Leapfrog() if motion is None else motion, path=NoUTurn() if path is None else path,
+                        settle=settle, acceptance=acceptance, step_size=step_size, rank=rank)
     if settings.settle_bounds()[1] == 0 and step_size is None:
         raise ArgumentError("with settle=0 nothing finds a step size; give step_size=, or let the chains settle")
     return settings

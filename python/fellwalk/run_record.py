@@ -26,8 +26,8 @@ class ChainResult:
 
     draws: list[NDArray[np.float64]] = field(default_factory=list)
     gradients: list[NDArray[np.float64]] = field(default_factory=list)
-    facts: dict[str, list[NDArray]] = field(default_factory=lambda: {"settle": [], "keep": []})
-    failures: list[tuple[NDArray, NDArray, NDArray]] = field(default_factory=list)
+    facts: dict[str, list[NDArray[Any]]] = field(default_factory=lambda: {"settle": [], "keep": []})
+    failures: list[tuple[NDArray[Any], NDArray[Any], NDArray[Any]]] = field(default_factory=list)
     seconds: float = 0.0
     summary: dict[str, Any] = field(default_factory=dict)
     counts: dict[str, int] = field(default_factory=lambda: {"settle": 0, "keep": 0})
@@ -50,7 +50,7 @@ class ChainResult:
             self.gradients.extend([] if block.gradients is None else [block.gradients])
             self.failures.append((block.failures[0] + start, *block.failures[1:]))
 
-    def add_facts(self, phase: str, facts: NDArray) -> None:
+    def add_facts(self, phase: str, facts: NDArray[Any]) -> None:
         """Add the facts of finished transitions, and count them."""
         self.facts[phase].append(facts)
         self.counts[phase] += len(facts)
@@ -125,13 +125,15 @@ def read_parts(record: Record) -> list[ChainResult]:
             if counts.get(chain, {}).get(phase):
                 part.add_facts(phase, record.facts(chain, phase))
             for note in record.notes(chain, phase):
-                part.seconds += note["seconds"]
-                part.summary = note["summary"]
+                if note is not None:
+                    part.seconds += note["seconds"]
+                    part.summary = note["summary"]
         if part.count("keep"):
             part.draws.append(record.chain_draws(chain))
             gradients = record.gradients(chain)
             part.gradients.extend([] if gradients is None else [gradients])
-            part.failures.append(tuple(record.failures(chain)))
+            draw, code, position = record.failures(chain)
+            part.failures.append((draw, code, position))
             kept = record.moments(chain)
             part.moments = None if kept is None else Moments.unpacked(kept)
         parts.append(part)

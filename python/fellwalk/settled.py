@@ -40,11 +40,11 @@ class SettledChain:
         found = chain.summary
         if not found["settled"] or not found["step_size"] > 0:
             raise SettleError("a chain has not settled yet, so it has no settled part to use again")
-        return cls(*chain.base_metric, float(found["step_size"]), float(found["beta"]))
+        return cls(*chain.base_metric, found["step_size"], found["beta"])
 
     def to_bytes(self) -> bytes:
         """All numbers as little-endian float64, in the order of the fields."""
-        numbers = [self.scale, self.directions.ravel(), self.variances, [self.step_size, self.beta]]
+        numbers = [self.scale, self.directions.ravel(), self.variances, np.array([self.step_size, self.beta])]
         return np.concatenate(numbers).astype("<f8").tobytes()
 
 

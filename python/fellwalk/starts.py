@@ -1,6 +1,7 @@
 """Starting points: one for every chain, inside the support."""
 
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping, Sequence
+from typing import Any
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
@@ -11,11 +12,12 @@ from fellwalk.parameters import Parameters
 
 __all__ = ["starting_points"]
 
+Starts = ArrayLike | Mapping[str, ArrayLike] | Sequence[Mapping[str, ArrayLike]] | Callable[[np.random.Generator], Any]
 _HALVINGS = 60
 
 
 def starting_points(
-    density: Density, starts: ArrayLike, chains: int, rng: np.random.Generator
+    density: Density, starts: Starts | None, chains: int, rng: np.random.Generator
 ) -> NDArray[np.float64]:
     """(chains, dimension) starting points, in the coordinates the chains move in, from one point (dimension,) or from
     one point a chain (chains, dimension).
@@ -27,7 +29,7 @@ def starting_points(
     StartError says so. Points given one a chain are taken as they are.
     """
     if density.parameters is not None:
-        starts = free_starts(density, starts, chains, rng)
+        starts = free_starts(density, density.parameters, starts, chains, rng)
     try:
         given = np.asarray(starts, dtype=np.float64)
     except (TypeError, ValueError):
@@ -67,25 +69,26 @@ def _near(density: Density, first: NDArray[np.float64], value: float, spread: ND
                      "a chain")
 
 
-def free_starts(density: Density, starts: object, chains: int, rng: np.random.Generator) -> NDArray[np.float64]:
+def free_starts(
+    density: Density, parameters: Parameters, starts: Starts | None, chains: int, rng: np.random.Generator
+) -> NDArray[np.float64]:
     """Free coordinates of starts given in natural values: flat, a dict of shaped values, one of these a chain, or a
     function ``starts(rng)`` that draws one (from the prior, say). None: drawn normal in the free coordinates, with
     standard deviation 1, then 1/2, 1/4, ... until log density and gradient are finite.
     """
-    parameters = density.parameters
     if callable(starts):
         return np.array([_free_point(parameters, starts(rng), f" that starts drew for chain {c + 1}")
                          for c in range(chains)])
     if starts is None:
         return np.array([_drawn(density, rng) for _ in range(chains)])
-    if isinstance(starts, list | tuple) and len(starts) == chains and all(isinstance(one, Mapping) for one in starts):
-        return np.array([_free_point(parameters, one, f" of chain {c + 1}") for c, one in enumerate(starts)])
-    if np.ndim(starts) == 2:
-        return np.array([_free_point(parameters, one, f" of chain {c + 1}") for c, one in enumerate(starts)])
+    points: Any = starts
+    by_name = isinstance(points, list | tuple) and all(isinstance(one, Mapping) for one in points)
+    if (by_name and len(points) == chains) or np.ndim(points) == 2:
+        return np.array([_free_point(parameters, one, f" of chain {c + 1}") for c, one in enumerate(points)])
     return _free_point(parameters, starts, "")
 
 
-def _free_point(parameters: Parameters, natural: object, whose: str) -> NDArray[np.float64]:
+def _free_point(parameters: Parameters, natural: Any, whose: str) -> NDArray[np.float64]:
     try:
         return parameters.free(natural)
     except StartError as error:

@@ -5,7 +5,7 @@ that more of the same draws would not cure (a chain that stands still, crawls, o
 steps)? Only when both are answered well are draws called fit for use.
 """
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass
 from typing import Any
 
@@ -142,7 +142,7 @@ def _round_up(count: float) -> int | None:
     return int(np.ceil(count / unit)) * unit
 
 
-def _chain_list(indices: Sequence[int]) -> str:
+def _chain_list(indices: Iterable[int | np.integer]) -> str:
     numbers = [str(int(i) + 1) for i in indices]
     if len(numbers) == 1:
         return f"chain {numbers[0]}"
@@ -180,7 +180,8 @@ def _standing(names: Sequence[str], numbers: dict[str, np.ndarray], n: int) -> l
     for i in np.flatnonzero((long.any(axis=1) & many_valued & ~numbers["constant"]) | everywhere):
         where = np.flatnonzero(long[i])
         worst = int(stand[i, where].max())
-        text = f"{_chain_list(where).capitalize()} stood still in {names[i]}: up to {worst:,} of {n:,} draws are equal."
+        name = names[int(i)]
+        text = f"{_chain_list(where).capitalize()} stood still in {name}: up to {worst:,} of {n:,} draws are equal."
         findings.append(_Finding(f"standing {where}", int(i), worst, text))
     return findings
 
@@ -237,7 +238,7 @@ def _groups(means: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
 def _crawling(names: Sequence[str], numbers: dict[str, np.ndarray], varying: np.ndarray) -> list[_Finding]:
     own = numbers["own_worth"]
     chains = own.shape[1]
-    findings = []
+    findings: list[_Finding] = []
     if chains < 2:
         return findings
     lacks = ~(numbers["agreement"] < AGREEMENT) | (numbers["worth"] < WORTH_PER_CHAIN * chains)
@@ -329,7 +330,7 @@ def _unseen_events(names: Sequence[str], numbers: dict[str, np.ndarray], draws: 
     for i in np.flatnonzero(numbers["event"] & numbers["constant"]):
         said = "true" if numbers["estimate"][i] == 1 else "false"
         sentences.append(
-            f"{names[i]} was {said} in all {draws:,} draws: its probability is too near the end to be told."
+            f"{names[int(i)]} was {said} in all {draws:,} draws: its probability is too near the end to be told."
         )
     return sentences
 

@@ -121,7 +121,7 @@ def make_block(density: Density, job: Job, live: Live | None = None) -> Done:
     block = _joined(phase, parts, density.dimension)
     if watching is not None and keeping:
         block = replace(block, moments=watching.moments)
-    return Done(job.chain, block, chain.state, time.perf_counter() - begun, chain.summary)
+    return Done(job.chain, block, chain.state, time.perf_counter() - begun, dict(chain.summary))
 
 
 # ---- in another process ---------------------------------------------------------------------------------------------
