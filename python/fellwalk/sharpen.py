@@ -38,6 +38,9 @@ DRAWS_PER_TERM = 8
 # errors is too small by chance, and an error of 400 effective draws is itself known to a few percent.
 WORTHWHILE = 0.9
 FEWEST = 40  # draws of all chains: with fewer nothing is fitted
+# No error is said to be smaller, as a share of the spread: what is left of an exact estimate is rounding, and differs
+# with the place of arrays in memory.
+EXACT = 1e-12
 MUCH_LEFT, TAILED = 0.5, -0.15  # of the plain error; tail index less what is in doubt
 FALSE_ALARM = 0.01
 
@@ -168,7 +171,7 @@ class Sharpener:
                 at = which[good]
                 mean[at], error[at], taken[at], taken_error[at] = (part[good] for part in parts[:4])
                 by[at] = chosen.level
-        floor = np.finfo(float).eps * (np.abs(centre) + spread)
+        floor = np.finfo(float).eps * np.abs(centre) + EXACT * spread
         return Sharpened(centre + spread * mean, np.maximum(spread * error, floor), by, centre, spread * plain,
                          spread * taken, spread * taken_error)
 
