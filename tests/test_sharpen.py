@@ -309,7 +309,7 @@ def test_names_functions_and_events(pima):
     assert pima.estimate("x[3]").estimate[0] == pima.estimate().estimate[3]
     event = pima.estimate(lambda x: x[..., 0] > -1.0, whole=True)
     assert event.by[0] != "none"
-    assert event.raw.estimate[0] == np.mean(pima.draws[..., 0] > -1.0)
+    assert event.raw.estimate[0] == pytest.approx(np.mean(pima.draws[..., 0] > -1.0), abs=2e-16)
     assert abs(event.estimate[0] - event.raw.estimate[0]) < 4 * event.raw.error[0]
 
 

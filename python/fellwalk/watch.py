@@ -12,7 +12,6 @@ from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
-import cloudpickle
 import numpy as np
 from numpy.typing import NDArray
 
@@ -90,10 +89,14 @@ class Watch:
     by_default: bool = False
 
     def __getstate__(self) -> dict[str, Any]:
+        import cloudpickle  # only what is sent needs it
+
         packed = None if self.function is None else cloudpickle.dumps(self.function)
         return {**self.__dict__, "function": packed}
 
     def __setstate__(self, state: dict[str, Any]) -> None:
+        import cloudpickle
+
         packed = state["function"]
         self.__dict__.update(state, function=None if packed is None else cloudpickle.loads(packed))
 

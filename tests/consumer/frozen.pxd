@@ -115,6 +115,11 @@ cdef extern from "fellwalk.h" nogil:
         int64_t *failure_index
         int32_t *failure_code
         double *failure_position
+        const size_t *watched
+        size_t watched_count
+        double *mean
+        double *squares
+        uint64_t gathered
 
     int fw_chain_new(const fw_target *target, const fw_random *random, const fw_settings *settings, fw_chain **chain)
     void fw_chain_free(fw_chain *chain)

@@ -147,6 +147,7 @@ def whole_run(density: fw.Density) -> None:
     result.save_npz("walk.npz")
     result.save_csv(Path("walk.csv"))
     result.save_netcdf("walk.nc")
+    assert_type(result.estimate("a", quantiles=[0.1]), fw.Estimates)
     assert_type(result.estimate("a", quantiles=[0.1]).estimate, Array)
     judged = result.of(lambda x: x[0] > 1)
     judged = fw.judge(result.draws, result.names, facts=result.facts, spent=result.spent, gradients=result.gradients)
