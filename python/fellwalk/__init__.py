@@ -10,7 +10,7 @@ from fellwalk.density import Density
 from fellwalk.errors import FellwalkError
 from fellwalk.judge import judge
 from fellwalk.judgement import Judgement
-from fellwalk.motions import Jittered, Lagrangian, Leapfrog, NoUTurn
+from fellwalk.motions import Isokinetic, Jittered, Lagrangian, Leapfrog, NoUTurn
 from fellwalk.parameter_kinds import between, correlation, free, increasing, positive, shares
 from fellwalk.parameters import Parameters
 from fellwalk.paths import Trajectory, integrate
@@ -26,6 +26,7 @@ __all__ = [
     "Chain",
     "Density",
     "FellwalkError",
+    "Isokinetic",
     "Jittered",
     "Judgement",
     "Lagrangian",

@@ -22,6 +22,7 @@ class _Summary(TypedDict):
     ceiling: float
     change: float
     directions: int
+    steps: int
     workspace_vectors: int
     workspace_bytes: int
     started: bool

@@ -17,7 +17,7 @@ from fellwalk.demo.show import show
 from fellwalk.errors import ArgumentError, FellwalkError
 from fellwalk.interrupts import watching
 from fellwalk.model import find_model
-from fellwalk.motions import MOTIONS, PATHS, Jittered, Lagrangian, Leapfrog, Motion, NoUTurn, Path
+from fellwalk.motions import MOTIONS, PATHS, Isokinetic, Jittered, Lagrangian, Leapfrog, Motion, NoUTurn, Path
 from fellwalk.result import Result, load
 from fellwalk.run import resume, run
 
@@ -135,7 +135,8 @@ def _parser() -> tuple[argparse.ArgumentParser, argparse.ArgumentParser]:
         help="lagrangian motion: the integrator")
     add("--halvings", type=_whole(0), metavar="N", default=0, help="a step may be done as up to 2^N smaller ones")
     add("--path", choices=sorted(PATHS), default="no-u-turn", help="how far it is moved")
-    add("--steps", type=_whole(1), metavar="N", default=Jittered.steps, help="jittered path: steps drawn from 1..N")
+    add("--steps", type=_steps, metavar="N", default=Jittered.steps,
+        help='jittered path: steps drawn from 1..N, or "auto": settling finds N')
     add("--doublings", type=_whole(1), metavar="N", default=NoUTurn.doublings,
         help="no-u-turn path: at most 2^N steps")
     add("--acceptance", type=float, metavar="RATE", default=0.8, help="rate that settling aims the step size at")
@@ -207,6 +208,10 @@ def _settle(text: str) -> int | str:
     return text if text == "auto" else _whole(0)(text)
 
 
+def _steps(text: str) -> int | str:
+    return text if text == "auto" else _whole(1)(text)
+
+
 def _start(text: str | np.ndarray | None) -> np.ndarray | None:
     if text is None or isinstance(text, np.ndarray):  # a settings file gives numbers as they are
         return text
@@ -224,6 +229,8 @@ def _start(text: str | np.ndarray | None) -> np.ndarray | None:
 def _motion(options: argparse.Namespace) -> Motion:
     if options.motion == "leapfrog":
         return Leapfrog(halvings=options.halvings)
+    if options.motion == "isokinetic":
+        return Isokinetic(halvings=options.halvings)
     return Lagrangian(bend=options.bend, curvature=options.curvature, scheme=options.scheme, halvings=options.halvings)
 
 

@@ -17,7 +17,7 @@ from fellwalk.density import Density, brief
 from fellwalk.driver import Driver
 from fellwalk.errors import ArgumentError, NotWrittenError, OtherModelError, StartError
 from fellwalk.model import find_model
-from fellwalk.motions import Motion, Path, real, whole
+from fellwalk.motions import Jittered, Motion, Path, real, whole
 from fellwalk.parameters import Parameters
 from fellwalk.pools import Workers
 from fellwalk.progress import choose_progress
@@ -161,6 +161,9 @@ def _settings(motion: Motion | None, path: Path | None, settle: int | str, accep
     settings = Settings(settle=settle, acceptance=acceptance, step_size=step_size, rank=rank, **chosen)
     if settings.settle_bounds()[1] == 0 and step_size is None:
         raise ArgumentError("with settle=0 nothing finds a step size; give step_size=, or let the chains settle")
+    if settings.settle_bounds()[1] == 0 and isinstance(settings.path, Jittered) and settings.path.steps == "auto":
+        raise ArgumentError('with settle=0 nothing finds the length of paths; give Jittered(steps), or let the chains '
+                            'settle')
     return settings
 
 
