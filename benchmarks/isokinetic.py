@@ -63,8 +63,9 @@ def main() -> None:
             runs = [one_run(target, motion, path, seed, budget) for seed in range(seeds)]
             values = np.array([value for value, _ in runs])
             base = values if base is None else base
+            ratio = "1" if base is values else interval(values, base)
             rows.append([f"{name}: {way}", f"{np.median(values):.3g}", f"{values.min():.3g} to {values.max():.3g}",
-                         "1" if base is values else interval(values, base), f"{np.median([settling for _, settling in runs]):.0f}"])
+                         ratio, f"{np.median([settling for _, settling in runs]):.0f}"])
     print(f"{machine()}\nMedians of {seeds} seeds, {budget} gradients each; {time.process_time() - begun:.0f} s of "
           f"processor time; {before} before, {busy()} after.\n")
     print(table(["target and way", "in 1000", "least to most", "ratio (95%)", "gradients settling"], rows))

@@ -17,6 +17,7 @@ from fellwalk.paths import Trajectory, integrate
 from fellwalk.result import Result, load
 from fellwalk.run import resume, run
 from fellwalk.settled import Settled, SettledChain
+from fellwalk.trial import Trial, trial
 
 __version__ = version("fellwalk")
 
@@ -37,6 +38,7 @@ __all__ = [
     "Settled",
     "SettledChain",
     "Trajectory",
+    "Trial",
     "audit",
     "between",
     "correlation",
@@ -52,6 +54,7 @@ __all__ = [
     "resume",
     "run",
     "shares",
+    "trial",
 ]
 
 

@@ -27,6 +27,8 @@ from fellwalk.run_record import ChainResult, begin, plan_of, read_check, read_pa
 from fellwalk.settings import Settings
 from fellwalk.settled import Settled
 from fellwalk.starts import starting_points
+from fellwalk.trial import Trial, budget_for
+from fellwalk.trial_rounds import Competition, settle_leaders
 from fellwalk.work import Check
 
 __all__ = ["resume", "run"]
@@ -39,7 +41,7 @@ def run(
     density: Density,
     starts: ArrayLike | None = None,
     *,
-    motion: Motion | None = None,
+    motion: Motion | str | None = None,
     path: Path | None = None,
     settle: int | str = "auto",
     keep: int = 1000,
@@ -49,7 +51,7 @@ def run(
     step_size: float | None = None,
     scale: ArrayLike | None = None,
     rank: int | str = "auto",
-    settled: Result | Settled | None = None,
+    settled: Result | Settled | Trial | None = None,
     gradients: bool | None = None,
     executor: Executor | str | None = None,
     record: str | os.PathLike[str] | None = None,
@@ -66,10 +68,13 @@ def run(
         natural values, flat or dicts by name; also a function ``starts(rng)`` that draws one; left out, and without a
         ``start`` of the density, they are drawn (`fellwalk.starts.free_starts`).
     settle: settling transitions a chain, or "auto": until the scale has stabilised, between stated bounds.
+    motion: what moves a point, by default `fellwalk.Leapfrog()`; "auto": what a trial (`fellwalk.trial`) finds best, on
+        chains settled first in this process, with a budget of 0.15 of what the run would cost. The plan, and so the
+        record and the result, keeps its table; what was drawn during the trial is not kept.
     acceptance: the rate that settling aims the step size at. step_size, scale: where settling starts from.
     rank: directions of large or small variance that the base metric learns beside its diagonal: a number, or "auto":
         those that stand out, at most 16. settled: another result (or its ``settled``), whose settled parts are used in
-        turn in the place of settling; the plan keeps their hash.
+        turn in the place of settling; the plan keeps their hash. A `fellwalk.Trial` gives motion, path and starts, too.
     gradients: keep the gradient at every draw (default: up to 1,000 dimensions).
     executor: who makes the blocks: any concurrent.futures.Executor (the density then goes to its workers by pickling,
         or by `Density.factory`), "here", "threads", "processes", or None: threads for compiled densities; for Python
@@ -88,8 +93,14 @@ def run(
     if not isinstance(density, Density):
         raise ArgumentError(f"the first argument must be a fellwalk.Density; it is {type(density).__name__}: wrap your "
                             "function as fellwalk.Density(function, dimension)")
+    auto = isinstance(motion, str)
+    if isinstance(motion, str):
+        _only_auto(motion, {"path": path, "step_size": step_size, "scale": scale, "settled": settled}, settle, rank)
+        motion = None
+    if isinstance(settled, Trial):
+        motion, path = motion or settled.motion, path or settled.path
     settings = _settings(motion, path, settle, acceptance, step_size, rank)
-    taken = settled.settled if isinstance(settled, Result) else settled
+    taken = settled.settled if isinstance(settled, Result | Trial) else settled
     if taken is not None:
         if settle not in ("auto", 0):
             raise ArgumentError(f"settled= takes the place of settling; leave settle out (it is {settle!r})")
@@ -111,18 +122,31 @@ def run(
     }
     if notes:
         plan["notes"] = dict(notes)
-    if starts is None and density.start is None and density.parameters is None:
+    again = settled.positions if starts is None and isinstance(settled, Trial) else None
+    if starts is None and again is None and density.start is None and density.parameters is None:
         raise ArgumentError("this density has no start of its own; give starts: a point (dimension,) in the support")
     try:
-        points = starting_points(density, density.start if starts is None else starts, chains,
-                                 np.random.default_rng([seed, 1]))
+        if again is not None:
+            points = again[np.arange(chains) % len(again)]
+        else:
+            points = starting_points(density, density.start if starts is None else starts, chains,
+                                     np.random.default_rng([seed, 1]))
     except (NotWrittenError, StartError):
         if audit:
             glance_at_start(density)
         raise
-    states = _first_states(density, settings, points, seed, scale, taken)
-    if audit:
-        glance(density, points[-1])
+    if auto:
+        if audit:
+            glance(density, points[-1])
+        found = _tried(density, points, seed, acceptance, keep)
+        states = [chain.state for chain in found.chains]
+        settings = replace_settings(settings, motion=found.motion, path=found.path, settle=0,
+                                    step_size=found.chains[0].step_size)
+        plan |= {"settings": settings.to_json(), "settled": found.settled.hash, "trial": found.to_json()}
+    else:
+        states = _first_states(density, settings, points, seed, scale, taken)
+        if audit:
+            glance(density, points[-1])
     parts = [ChainResult() for _ in states]
     check = Check.of(density, points[0])
     transitions = chains * (keep + min(_SETTLE, settings.settle_bounds()[1]))
@@ -139,6 +163,20 @@ def _drive(plan: dict[str, Any], states: list[bytes], parts: list[ChainResult], 
     told = choose_progress(progress, plan["keep"], [part.count("keep") for part in parts])
     told.say(workers.why)
     return Driver(plan, states, parts, workers, file, told, seconds).go()
+
+
+def _only_auto(motion: str, given: Mapping[str, Any], settle: int | str, rank: int | str) -> None:
+    if motion != "auto":
+        raise ArgumentError(f'motion must be a motion, as fellwalk.Leapfrog(), or "auto"; it is {motion!r}')
+    named = [name for name, value in given.items() if value is not None]
+    named += [name for name, value in (("settle", settle), ("rank", rank)) if value != "auto"]
+    if named:
+        raise ArgumentError(f'motion="auto" finds what {named[0]}= would fix; leave it out')
+
+
+def _tried(density: Density, points: np.ndarray, seed: int, acceptance: float, keep: int) -> Trial:
+    leaders = settle_leaders(density, points, seed, acceptance)
+    return Competition(density, leaders, budget_for(leaders, keep * len(points)), seed, acceptance, 1.0).go()
 
 
 def _first_states(density: Density, settings: Settings, points: np.ndarray, seed: int,
