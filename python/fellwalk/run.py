@@ -27,8 +27,8 @@ from fellwalk.run_record import ChainResult, begin, plan_of, read_check, read_pa
 from fellwalk.settings import Settings
 from fellwalk.settled import Settled
 from fellwalk.starts import starting_points
-from fellwalk.trial import Trial, budget_for
-from fellwalk.trial_rounds import Competition, settle_leaders
+from fellwalk.trial_result import Trial
+from fellwalk.trial_rounds import Competition, budget_for, settle_leaders
 from fellwalk.work import Check
 
 __all__ = ["resume", "run"]
@@ -176,7 +176,9 @@ def _only_auto(motion: str, given: Mapping[str, Any], settle: int | str, rank: i
 
 def _tried(density: Density, points: np.ndarray, seed: int, acceptance: float, keep: int) -> Trial:
     leaders = settle_leaders(density, points, seed, acceptance)
-    return Competition(density, leaders, budget_for(leaders, keep * len(points)), seed, acceptance, 1.0).go()
+    draws = keep * len(points)
+    budget = budget_for(leaders.gradients, draws, leaders.per_draw)
+    return Competition(density, leaders, budget, seed, acceptance, 1.0, draws).go()
 
 
 def _first_states(density: Density, settings: Settings, points: np.ndarray, seed: int,

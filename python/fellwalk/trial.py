@@ -10,12 +10,9 @@ from fellwalk.errors import ArgumentError
 from fellwalk.motions import real, whole
 from fellwalk.starts import starting_points
 from fellwalk.trial_result import Entry, Trial
-from fellwalk.trial_rounds import Competition, Leaders, settle_leaders
+from fellwalk.trial_rounds import Competition, settle_leaders
 
-__all__ = ["Entry", "Trial", "budget_for", "trial"]
-
-# A run pays for its trial with at most about so much of what it costs without: settling and keeping its draws.
-_SHARE = 0.15
+__all__ = ["Entry", "Trial", "trial"]
 
 
 def trial(
@@ -55,8 +52,3 @@ def trial(
                              np.random.default_rng([seed, 1]))
     leaders = settle_leaders(density, points, seed, acceptance)
     return Competition(density, leaders, budget, seed, acceptance, product_cost).go()
-
-
-def budget_for(leaders: Leaders, draws: int) -> float:
-    """What a run that keeps so many draws in all spends on its trial, by what the leader's draws have cost."""
-    return _SHARE * (leaders.gradients + draws * leaders.per_draw)

@@ -20,10 +20,12 @@ from fellwalk.trial_candidates import LEADER, Candidate, Contender, candidates_f
 from fellwalk.trial_result import Entry, Trial
 from fellwalk.trial_tuning import Tuner, steepness
 
-__all__ = ["Competition", "Leaders", "settle_leaders"]
+__all__ = ["Competition", "Leaders", "budget_for", "settle_leaders"]
 
+_SHARE = 0.15  # of what a run costs without its trial, settling and draws
 _CHAINS = 2  # chains of every candidate but the leader, which has all
-_ROUNDS = (0.5, 0.25, 0.25)  # shares of the budget
+_ROUNDS = (0.5, 0.5, 1.0)  # shares of what is left of the budget
+_MOST_IN_BLOCK = 1000
 _AT_LEAST = 1.1  # a candidate takes the leader's place only where it is worth so many times as much,
 _ERRORS = 1.0  # and by so many standard errors of the logarithm
 _SHY = 4.0  # standard errors by which a tail visited too rarely disqualifies: chance does it to one tail in 30,000
@@ -32,6 +34,11 @@ _FAILED = 0.01  # share of failed paths beyond the leader's that disqualifies
 _FEW = 10.0  # effective draws below which nothing can be told
 _ONE_STEP = Candidate("one step", Leapfrog(), Jittered("auto"))
 _ROUGH = 1e-3  # energy error of a step a thousandth as long as the settled one: smooth densities have 1e-9
+
+
+def budget_for(settling: float, draws: int, per_draw: float) -> float:
+    """What a run that keeps so many draws in all spends on its trial."""
+    return _SHARE * (settling + draws * per_draw)
 
 
 @dataclass(frozen=True)
@@ -60,10 +67,15 @@ def settle_leaders(density: Density, points: NDArray[np.float64], seed: int, acc
 
 
 class Competition:
-    """The rounds of a trial, from settled chains of the leader to the winner's chains."""
+    """The rounds of a trial, from settled chains of the leader to the winner's chains.
+
+    draws: those that the run, which makes the trial, is to keep; where a better candidate takes less for a draw than
+    the leader, the run will be cheaper, and the budget with it. 0: the budget stands.
+    """
 
     def __init__(self, density: Density, leaders: Leaders, budget: float, seed: int, acceptance: float,
-                 product_cost: float) -> None:
+                 product_cost: float, draws: int = 0) -> None:
+        self.draws = draws
         self.density, self.budget, self.seed, self.acceptance = density, float(budget), seed, acceptance
         self.product_cost, self.settling = product_cost, leaders.gradients
         self.parts = [SettledChain.of(chain) for chain in leaders.chains]
@@ -85,7 +97,10 @@ class Competition:
         self._look_for_noise()
         live = [self.leader, *self.others]
         for number, share in enumerate(_ROUNDS):
-            allowance = share * self.budget / len(live)
+            left = self.budget - self._spent()
+            if left <= 0.0:
+                break
+            allowance = share * left / len(live)
             for contender in list(live):
                 if not self._give(contender, allowance, number):
                     live.remove(contender)
@@ -93,7 +108,14 @@ class Competition:
                 if contender is self.leader and number == 0:
                     self.spread = np.maximum(self.leader.stacked().var(axis=(0, 1)), 1e-300)
             live = self._weigh(live, number, last=number == len(_ROUNDS) - 1)
+            best = live[0]
+            if self.draws > 0:
+                per_draw = best.drawing / best.transitions
+                self.budget = min(self.budget, budget_for(self.settling, self.draws, per_draw))
         return self._end(live)
+
+    def _spent(self) -> float:
+        return sum(c.spent for c in (self.leader, *self.others))
 
     # ---- drawing ------------------------------------------------------------------------------------------------
 
@@ -110,11 +132,20 @@ class Competition:
         fewest = trial_merit.FEWEST * len(contender.chains)
         while contender.spent < until or contender.transitions < fewest:
             for c, chain in enumerate(contender.chains):
-                block = chain._raised(chain.block(4, gradients=contender is self.leader and number == 0))
+                block = chain._raised(chain.block(self._block_size(contender, until),
+                                                  gradients=contender is self.leader and number == 0))
                 contender.take(block, c, self._price(block))
                 if block.gradients is not None:
                     self.gradients.append(block.gradients)
         return True
+
+    def _block_size(self, contender: Contender, until: float) -> int:
+        """Transitions of the next block of each chain: the fewest first, then as many as the rest may pay for."""
+        chains = len(contender.chains)
+        if contender.transitions < trial_merit.FEWEST * chains:
+            return trial_merit.FEWEST
+        each = contender.drawing / contender.transitions
+        return int(np.clip((until - contender.spent) / (each * chains), 1, _MOST_IN_BLOCK))
 
     def _enter(self, contender: Contender, allowance: float) -> bool:
         """Tune a candidate on its first chain. Where the surrogate field caps its acceptance the cheapest field that is
@@ -223,9 +254,8 @@ class Competition:
         entries += [self._entry(c, why) for c, why in sorted(measured, key=lambda pair: -self._score(pair[0]))]
         entries += [Entry(c.candidate.name, 0.0, 0.0, 0.0, 0.0, "", "", 1.0, 0.0, 0, c.spent, 0, why)
                     for c, why in self.out if c.candidate.name not in self.worths]
-        spent = sum(c.spent for c in (self.leader, *self.others))
         return Trial(tuple(entries), tuple(self.remarks), told, best.candidate.motion, best.candidate.path,
-                     tuple(best.chains), self.budget, spent, self.settling, tuple(self.blocks))
+                     tuple(best.chains), self.budget, self._spent(), self.settling, tuple(self.blocks))
 
     def _entry(self, contender: Contender, why: str) -> Entry:
         worth = self.worths[contender.candidate.name]
