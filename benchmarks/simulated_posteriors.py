@@ -102,22 +102,19 @@ def mixture(n: int = 200, seed: int = 2) -> fw.Density:
 
 @cache
 def cox(side: int = 32, seed: int = 3) -> fw.Density:
-    """Counts of a log-Gaussian Cox field on side x side cells: Poisson(exp(1 + f)), f = L z with exponential covariance
-    exp(-distance / 0.1) on the unit square, z standard normal: x = z."""
+    """Counts of a log-Gaussian Cox field on side x side cells: Poisson(exp(1 + f)), f = L z L' with the covariance
+    exp(-|dx| / 0.1 - |dy| / 0.1) on the unit square, z standard normal: x = z, side^2 numbers."""
     at = (np.arange(side) + 0.5) / side
-    place = np.stack(np.meshgrid(at, at), -1).reshape(-1, 2)
-    distance = np.sqrt(((place[:, None] - place[None]) ** 2).sum(-1))
-    lower = np.ascontiguousarray(np.linalg.cholesky(np.exp(-distance / 0.1) + 1e-10 * np.eye(side * side)))
-    upper = np.ascontiguousarray(lower.T)
+    lower = np.linalg.cholesky(np.exp(-np.abs(at[:, None] - at) / 0.1))
     rng = np.random.default_rng(seed)
-    counts = rng.poisson(np.exp(1.0 + lower @ rng.standard_normal(side * side))).astype(float)
+    counts = rng.poisson(np.exp(1.0 + lower @ rng.standard_normal((side, side)) @ lower.T)).astype(float)
 
-    def log_density(z: np.ndarray, gradient: np.ndarray) -> float:
-        field = 1.0 + lower @ z
+    def log_density(x: np.ndarray, gradient: np.ndarray) -> float:
+        field = 1.0 + lower @ x.reshape(side, side) @ lower.T
         if field.max() > 600.0:
             return -np.inf
         rate = np.exp(field)
-        gradient[:] = upper @ (counts - rate) - z
-        return float(counts @ field - rate.sum() - 0.5 * z @ z)
+        gradient[:] = (lower.T @ (counts - rate) @ lower).ravel() - x
+        return float((counts * field).sum() - rate.sum() - 0.5 * x @ x)
 
     return fw.Density(log_density, side * side, in_place=True, start=np.zeros(side * side))

@@ -1,5 +1,6 @@
 """Trials: what they measure, what they choose, and what they say when nothing can be told."""
 
+import html
 import json
 
 import numpy as np
@@ -180,7 +181,7 @@ def test_decisions_follow_from_what_is_recorded(on_normal):
         per = {c["name"]: c["effective"] / c["drawing"] for c in block["candidates"]}
         ruled_out = {e.name for e in found.entries if "round" not in e.why and e.why}
         order = sorted((name for name in per if name not in ruled_out), key=per.get, reverse=True)
-        assert set(block["kept"]) == {*order[: max(2, len(per) // 2)], "leapfrog"}
+        assert set(block["kept"]) == {*order[: max(2, len(per) // 2)], *({"leapfrog", "leapfrog, rank 0"} & set(per))}
     assert found.to_json()["entries"][0]["name"] == found.winner
     assert found.winner in str(found)
     assert "times leapfrog per cost" in told_in_words(found.to_json())
@@ -209,6 +210,11 @@ def test_a_run_that_finds_its_motion_itself(tmp_path):
     assert loaded.trial == json.loads(json.dumps(result.trial))
     assert loaded.draws.tobytes() == result.draws.tobytes()
     assert result.trial["entries"][0]["name"] in str(loaded)
+    assert "Settled in a trial of motions: step size" in str(loaded)
+    page = loaded.report()
+    assert "Why this motion?" in page
+    assert html.escape(result.trial["reasons"][0]) in page
+    assert "motion=&#34;auto&#34;" in page
     assert result.spent["gradients"] >= result.trial["spent"] + result.trial["settling"]
     assert result.spent["gradients"] == pytest.approx(density.gradients, abs=60)
     on = fw.resume(path, density, keep=500, progress="off", executor="here")

@@ -228,7 +228,9 @@ class Result:
             settled = [part.count("settle") for part in self._parts]
             sizes = [chain["step_size"] for chain in self.chains]
             how = f"Settled in {_range(settled, 'd')} transitions"
-            if self.plan.get("settled"):
+            if self.trial:
+                how = "Settled in a trial of motions"
+            elif self.plan.get("settled"):
                 how = f"Settled part {self.plan['settled']} taken over"
             lines.append(f"{how}: step size {_range(sizes, '.3g')}{self._bend_line()}.")
             lines += settling_remarks(self.settling, self.chains, self.settings["acceptance"])

@@ -142,7 +142,7 @@ def run(
         states = [chain.state for chain in found.chains]
         settings = replace_settings(settings, motion=found.motion, path=found.path, settle=0,
                                     step_size=found.chains[0].step_size)
-        plan |= {"settings": settings.to_json(), "settled": found.settled.hash, "trial": found.to_json()}
+        plan |= {"settings": settings.to_json(), "trial": found.to_json()}
     else:
         states = _first_states(density, settings, points, seed, scale, taken)
         if audit:

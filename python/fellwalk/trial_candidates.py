@@ -60,7 +60,7 @@ def with_rank(part: SettledChain, rank: int | None) -> SettledChain:
                    variances=part.variances[kept])
 
 
-@dataclass
+@dataclass(eq=False)
 class Contender:
     """A candidate with its chains and draws, and what it has spent: `spent` in all, `drawing` for the draws."""
 

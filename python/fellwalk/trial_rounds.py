@@ -83,6 +83,7 @@ class Competition:
         directions = max(len(part.variances) for part in self.parts)
         self.leader = Contender(LEADER, list(leaders.chains), [[] for _ in leaders.chains])
         self.others = [Contender(c) for c in candidates_for(density.dimension, directions)[1:]]
+        self.plain = [c for c in self.others if c.candidate.name == "leapfrog, rank 0"]
         self.out: list[tuple[Contender, str]] = []
         self.blocks: list[dict[str, Any]] = []
         self.remarks: list[str] = []
@@ -212,7 +213,8 @@ class Competition:
             else:
                 fine.append(c)
         fine.sort(key=self._score, reverse=True)
-        kept = fine if last else [c for i, c in enumerate(fine) if i < max(2, len(live) // 2) or c is self.leader]
+        stay = (*self.plain, self.leader)
+        kept = fine if last else [c for i, c in enumerate(fine) if i < max(2, len(live) // 2) or c in stay]
         self.out += [(c, f"left after round {number + 1}") for c in fine if c not in kept]
         self.blocks.append({"round": number + 1, "kept": [c.candidate.name for c in kept], "candidates": [
             {"name": c.candidate.name, "spent": c.spent, "drawing": c.drawing, "transitions": c.transitions,
@@ -231,20 +233,7 @@ class Competition:
         return ""
 
     def _end(self, live: list[Contender]) -> Trial:
-        best = live[0]
-        mine, its = (self.worths[c.candidate.name] for c in (self.leader, best))
-        gain, sure = self._score(best) - self._score(self.leader), math.hypot(mine.error, its.error)
-        leader_bad = bool(self._ruled_out(self.leader))
-        if best is not self.leader and not leader_bad and gain < max(math.log(_AT_LEAST), _ERRORS * sure):
-            self.remarks.append(f"{best.candidate.name} was measured at {math.exp(gain):.2f} times the worth of "
-                                f"leapfrog, which could be chance (a standard error is a factor {math.exp(sure):.2f}): "
-                                "leapfrog stays.")
-            best = self.leader
-        elif best is not self.leader:
-            self.remarks.append(f"{best.candidate.name} is worth {math.exp(gain):.2f} times leapfrog per cost (a "
-                                f"standard error is a factor {math.exp(sure):.2f}).")
-        else:
-            self.remarks.append("No other candidate was measured to be worth more than leapfrog.")
+        best = self._chosen(live)
         told = self._believe(best)
         if best is not self.leader:
             self._fill(best, len(self.parts))
@@ -256,6 +245,28 @@ class Competition:
                     for c, why in self.out if c.candidate.name not in self.worths]
         return Trial(tuple(entries), tuple(self.remarks), told, best.candidate.motion, best.candidate.path,
                      tuple(best.chains), self.budget, self._spent(), self.settling, tuple(self.blocks))
+
+    def _chosen(self, live: list[Contender]) -> Contender:
+        """The first, unless a plain way may be as good; fewer directions make cheaper steps, unseen by gradients."""
+        best, sure, gain = live[0], 0.0, 0.0
+        plain = [c for c in (*self.plain, self.leader) if c in live and not self._ruled_out(c)]
+        for c in plain:
+            if c is best:
+                self.remarks.append(f"Nothing was measured to be worth more than {c.candidate.name}.")
+                return c
+            gain = self._score(best) - self._score(c)
+            sure = math.hypot(self.worths[c.candidate.name].error, self.worths[best.candidate.name].error)
+            if gain < max(math.log(_AT_LEAST), _ERRORS * sure):
+                self.remarks.append(f"{best.candidate.name} was measured at {math.exp(gain):.2f} times the worth of "
+                                    f"{c.candidate.name}, which could be chance (a standard error is a factor "
+                                    f"{math.exp(sure):.2f}): the plainer way stays.")
+                return c
+        if plain:
+            self.remarks.append(f"{best.candidate.name} is worth {math.exp(gain):.2f} times {plain[-1].candidate.name} "
+                                f"per cost (a standard error is a factor {math.exp(sure):.2f}).")
+        else:
+            self.remarks.append(f"{best.candidate.name} is the best of those that were not ruled out.")
+        return best
 
     def _entry(self, contender: Contender, why: str) -> Entry:
         worth = self.worths[contender.candidate.name]
