@@ -10,7 +10,7 @@ from numpy.typing import NDArray
 
 from fellwalk.chain import Block
 from fellwalk.density import Density
-from fellwalk.motions import Jittered
+from fellwalk.motions import Jittered, NoUTurn
 from fellwalk.settled import SettledChain
 from fellwalk.trial_candidates import Candidate, new_chain
 
@@ -20,6 +20,7 @@ __all__ = ["Tuner", "steepness"]
 # of the later half is taken. Gains from 3 down: a block that rejects all takes the step down to a tenth.
 _GAINS = (3.0, 2.4, 1.9, 1.5, 1.2, 1.0, 0.8, 0.65)
 _BLOCK = 6  # transitions of a block
+_SHORT = 4  # doublings of no-U-turn paths while the step size is sought: whole ones may take hundreds of steps
 _PILOT = 20  # transitions of a pilot of one length
 _MOST_STEPS = 512
 _FIRST_REACH = np.pi  # a half period of a normal target
@@ -66,10 +67,15 @@ class Tuner:
         """Does the acceptance stay below the target however short the steps?"""
         return self.acceptance < self.target - 0.1 and self.part.step_size < self._first / 6.0
 
-    def _block(self, transitions: int) -> Block:
+    def _block(self, transitions: int, *, short: bool = False) -> Block:
         entropy, key = self.seed
         seed = np.random.SeedSequence(entropy, spawn_key=(*key, next(self._numbers)))
-        chain = new_chain(self.density, self.candidate, self.part, self.position, seed, self.target)
+        candidate, part = self.candidate, self.part
+        if short and isinstance(candidate.path, NoUTurn):
+            candidate = replace(candidate, path=NoUTurn(min(_SHORT, candidate.path.doublings)))
+        elif short:
+            part = replace(part, steps=min(part.steps, 2**_SHORT))
+        chain = new_chain(self.density, candidate, part, self.position, seed, self.target)
         block = chain._raised(chain.block(transitions))
         self.position = chain.position
         self.spent += 1.0 + float(block.facts["gradients"].sum())
@@ -80,7 +86,7 @@ class Tuner:
         steps, rates = [], []
         reach = self.part.steps * self.part.step_size
         for gain in _GAINS:
-            rate = float(self._block(_BLOCK).facts["acceptance"].mean())
+            rate = float(self._block(_BLOCK, short=True).facts["acceptance"].mean())
             steps.append(np.log(self.part.step_size))
             rates.append(rate)
             self._step(float(np.exp(steps[-1] + gain * (rate - self.target))), reach)
