@@ -11,9 +11,11 @@ import targets
 import fellwalk as fw
 from fellwalk import errors, trial_merit
 from fellwalk.autocorrelation import effective_size
+from fellwalk.cli import main
 from fellwalk.settled import SettledChain
 from fellwalk.trial_candidates import candidates_for, with_rank
 from fellwalk.trial_result import told_in_words
+from fellwalk.trial_rounds import Competition, Leaders
 from fellwalk.trial_tuning import steepness
 
 
@@ -255,6 +257,35 @@ def test_what_the_density_raises_comes_out():
 
     with pytest.raises(ZeroDivisionError, match="far on"):
         fw.trial(fw.Density(function, 3), [0.1, 0.2, 0.3], seed=1)
+
+
+def test_where_the_surrogate_is_capped_products_take_its_place_at_their_price():
+    """Without directions a bend of 1 caps the acceptance on an equicorrelated normal, the more the longer the paths."""
+    target = targets.equicorrelated_normal(20, 0.98)
+    density = density_of(target)
+    points = target.exact_draws(2, np.random.default_rng(7))
+    chains = [fw.Chain(density, x, seed=c, settle="auto", rank=0) for c, x in enumerate(points)]
+    for chain in chains:
+        chain.block(10_000)
+    before = density.gradients, density.products
+    found = Competition(density, Leaders(chains, 0.0, 10.0), 60_000, 4, 0.8, 3.0).go()
+    names = {entry.name for entry in found.entries}
+    assert "lagrangian, bend 1, product" in names
+    assert "lagrangian, bend 0.1" in names
+    products = density.products - before[1]
+    assert products > 100
+    assert abs(density.gradients - before[0] + 3.0 * products - found.spent) <= 40
+
+
+def test_the_command_makes_a_trial(tmp_path, capsys):
+    model = tmp_path / "model.py"
+    model.write_text("import fellwalk as fw\n"
+                     "density = fw.Density(lambda x: (-0.5 * float(x @ x), -x), 2, start=[0.1, 0.2])\n")
+    record = str(tmp_path / "walk.fell")
+    assert main(["run", f"{model}:density", "--record", record, "--motion", "auto", "--keep", "60", "--seed", "3",
+                 "--executor", "here", "--progress", "off"]) == 0
+    assert "gradients of settling." in capsys.readouterr().out
+    assert fw.load(record).trial["entries"]
 
 
 # ---- honest limits --------------------------------------------------------------------------------------------------

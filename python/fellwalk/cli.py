@@ -127,7 +127,8 @@ def _parser() -> tuple[argparse.ArgumentParser, argparse.ArgumentParser]:
     add("--no-audit", action="store_true", help="do not look at the gradient first")
     add("--settle", type=_settle, metavar="N", default="auto", help='settling transitions, or "auto"')
     add("--seed", type=_whole(0), metavar="N", help="a whole number; left out: one is drawn and recorded")
-    add("--motion", choices=sorted(MOTIONS), default="leapfrog", help="what moves a point")
+    add("--motion", choices=[*sorted(MOTIONS), "auto"], default="leapfrog",
+        help="what moves a point; auto: a trial finds motion and path")
     add("--bend", type=float, metavar="B", default=Lagrangian.bend, help="lagrangian motion: typical L - 1")
     add("--curvature", choices=["surrogate", "difference", "product"], default="surrogate",
         help="lagrangian motion: where Hessian products come from")
@@ -226,7 +227,9 @@ def _start(text: str | np.ndarray | None) -> np.ndarray | None:
         raise ArgumentError(f"--start must be numbers separated by commas, or a .npy file; it is {text!r}") from None
 
 
-def _motion(options: argparse.Namespace) -> Motion:
+def _motion(options: argparse.Namespace) -> Motion | str:
+    if options.motion == "auto":
+        return "auto"
     if options.motion == "leapfrog":
         return Leapfrog(halvings=options.halvings)
     if options.motion == "isokinetic":
@@ -234,7 +237,9 @@ def _motion(options: argparse.Namespace) -> Motion:
     return Lagrangian(bend=options.bend, curvature=options.curvature, scheme=options.scheme, halvings=options.halvings)
 
 
-def _path(options: argparse.Namespace) -> Path:
+def _path(options: argparse.Namespace) -> Path | None:
+    if options.motion == "auto":
+        return None
     return Jittered(options.steps) if options.path == "jittered" else NoUTurn(options.doublings)
 
 
