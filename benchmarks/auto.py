@@ -49,7 +49,7 @@ TARGETS: dict[str, tuple[Callable[[], fw.Density], int]] = {
 
 
 class Clock:
-    """Processor time spent in drivers, which settle and keep, or with "auto" only keep."""
+    """Processor time spent in the latest driver of a run."""
 
     def __init__(self) -> None:
         self.seconds, go = 0.0, driver.Driver.go
@@ -75,16 +75,23 @@ def least_effective(draws: np.ndarray) -> float:
 
 
 def measured(clock: Clock, density: fw.Density, keep: int, seed: int, **how: object) -> dict[str, Any]:
-    """Effective draws, seconds of all and of kept draws, gradients of all and of kept draws, winner."""
+    """Effective draws, seconds of all and of kept draws, gradients of all, and the result."""
     begun = time.process_time()
     result = fw.run(density, keep=keep, chains=4, seed=seed, executor="here", progress="off", gradients=False,
                     audit=False, **how)
     seconds = time.process_time() - begun
     kept = float(result.facts["gradients"].sum() + result.facts["products"].sum())
     spent = result.spent["gradients"] + result.spent["products"]
-    keeping = clock.seconds if result.trial else clock.seconds * kept / spent
-    return {"effective": least_effective(result.free_draws), "seconds": seconds, "keeping": keeping, "kept": kept,
-            "spent": spent, "result": result}
+    return {"effective": least_effective(result.free_draws), "seconds": seconds, "spent": spent,
+            "keeping": kept * of_kept_gradients(clock, density, keep, seed, result), "result": result}
+
+
+def of_kept_gradients(clock: Clock, density: fw.Density, keep: int, seed: int, result: fw.Result) -> float:
+    """Seconds of one gradient of kept draws: of a run that goes on from another's settled parts and last draws."""
+    motion, path = _moved(result)
+    again = fw.run(density, result.free_draws[:, -1], motion=motion, path=path, settled=result, keep=keep, seed=seed,
+                   executor="here", progress="off", gradients=False, audit=False)
+    return clock.seconds / float(again.facts["gradients"].sum() + again.facts["products"].sum())
 
 
 def interval(ratios: np.ndarray) -> str:

@@ -21,6 +21,10 @@ Array = NDArray[np.float64]
 FEWEST = 8  # draws a chain, below which nothing is said
 _TAIL = 0.05  # share of the target in a tail; more while there are few draws,
 _IN_TAIL = 10  # so that a tail holds about so many of each candidate
+# The variance of the logarithm of the worth, times the worth. Over 60 pairs of chains each of first-order autoregressions
+# worth 12 to 200 draws in 2, 8 and 50 independent coordinates the standard deviation was 0.5 to 1.1, 0.3 to 0.8 and 0.2 to
+# 0.3 of what this says; coordinates that depend on each other are like fewer.
+_NOISE = 5.0
 _POOLED = 1000  # draws of each candidate in the pool
 
 
@@ -29,8 +33,8 @@ class Worth:
     """Least effective draws over all coordinates, of centre and tails, and how sure that is.
 
     effective: draws, the geometric mean of the least eighth of all (at least of one), as the least of many would mostly
-    be the unluckiest; error: standard deviation of its logarithm (Madras & Sokal 1988), as if they were one; tail: the
-    share of the pool that counts as a tail; worst: the coordinate of the least; what:
+    be the unluckiest; error: standard deviation of its logarithm; tail: the share of the pool that counts as a tail;
+    worst: the coordinate of the least; what:
     "centre", "lower tail" or "upper tail"; apart: largest split R-hat, in coordinate `apart_in`; shy: the most
     standard errors by which a tail was visited less than by the others, in coordinate `shy_in` (0: not less).
     """
@@ -85,7 +89,8 @@ def effective(x: Array, variance: Array) -> Array:
     # half a difference more than was seen, as none seen does not mean that there is none
     jumps = (np.diff(x, axis=-1) ** 2).mean(axis=(-2, -1)) + 0.5 / (chains * (n - 1))
     share = np.clip(0.5 * jumps / known, 1e-9, 1.0)
-    return np.minimum(own, chains * n * share / (2.0 - share))
+    least: Array = np.minimum(own, chains * n * share / (2.0 - share))
+    return least
 
 
 def tail_for(candidates: Sequence[Array]) -> float:
@@ -106,8 +111,7 @@ def measure(draws: Array, pooled: Array, others: Array, tail: float) -> Worth:
     which, worst = np.unravel_index(int(np.argmin(sizes)), sizes.shape)
     least = np.argsort(sizes, axis=None)[: (sizes.size + 7) // 8]
     size = float(np.exp(np.log(sizes.ravel()[least]).mean()))
-    # 2 (2 M + 1) / draws with a window of M = 3 times the draws between independent ones
-    error = float(np.sqrt(12.0 / size + 2.0 / (chains * n)))
+    error = float(np.sqrt(_NOISE / size))
     apart = np.nan_to_num(potential_scale_reduction(split(series[0])), nan=1.0, posinf=1e6)
     shares = _against(draws, others, tail)[1:].mean(axis=(-2, -1))
     errors = np.sqrt(of_tail / np.minimum(sizes[0], chains * n) + of_tail / others.shape[-1])
