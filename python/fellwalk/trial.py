@@ -32,8 +32,8 @@ def trial(
     rounds of equal cost: after each the better half goes on, with the chains it has. What counts is the least number
     of effective draws per cost, over centre and tails of every coordinate, measured against the draws of all candidates
     together, so that a chain that moves well inside a part of the target counts for little. The leapfrog motion, over
-    the diagonal alone where that may be as good, stays unless another is worth 1.1 times as much by more than a
-    standard error; a candidate is ruled out where it visited a tail too rarely, or where more paths ended in failed
+    the diagonal alone where that may be as good, stays unless another is worth 1.1 times as much, and by more than 1.28
+    standard errors; a candidate is ruled out where it visited a tail too rarely, or where more paths ended in failed
     steps.
 
     starts, chains, seed, acceptance: as in `run`. budget: in gradients; a Hessian product counts as product_cost of

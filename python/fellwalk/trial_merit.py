@@ -21,9 +21,9 @@ Array = NDArray[np.float64]
 FEWEST = 8  # draws a chain, below which nothing is said
 _TAIL = 0.05  # share of the target in a tail; more while there are few draws,
 _IN_TAIL = 10  # so that a tail holds about so many of each candidate
-# The variance of the logarithm of the worth, times the worth. Over 60 pairs of chains each of first-order autoregressions
-# worth 12 to 200 draws in 2, 8 and 50 independent coordinates the standard deviation was 0.5 to 1.1, 0.3 to 0.8 and 0.2 to
-# 0.3 of what this says; coordinates that depend on each other are like fewer.
+# The variance of the logarithm of the worth, times the worth. Over 60 pairs of chains each of first-order
+# autoregressions worth 12 to 200 draws in 2, 8 and 50 independent coordinates the standard deviation was 0.5 to 1.3,
+# 0.3 to 0.8 and 0.1 to 0.3 of what this says; coordinates that depend on each other are like fewer.
 _NOISE = 5.0
 _POOLED = 1000  # draws of each candidate in the pool
 
