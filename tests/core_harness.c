@@ -140,11 +140,12 @@ static int run(size_t d, int motion, int scheme, int curvature, int path, unsign
         x[i] = 0.3 + 0.1 * (double)i;
         edge_context[1 + i] = 1.3;
     }
+    const char *const names[] = {"leapfrog", "lagrangian", "isokinetic"};
     const harness_case c = {
         .d = d, .density = bounded ? one_sided : student, .product = bounded ? one_sided_product : student_product,
         .density_context = bounded ? edge_context : student_context,
         .product_context = bounded ? edge_context : student_context,
-        .motion = motion ? "lagrangian" : "leapfrog", .path = path ? "no-u-turn" : "jittered", .scheme = scheme,
+        .motion = names[motion], .path = path ? "no-u-turn" : "jittered", .scheme = scheme,
         .curvature = curvature, .turn = scheme, .bend = 0.7, .doublings = 5, .halvings = halvings, .steps = 5,
         .settle = 40, .keep = 20, .rank = path ? 2 : 0, .seed = 7,
     };
@@ -160,13 +161,13 @@ static int run(size_t d, int motion, int scheme, int curvature, int path, unsign
 int main(void)
 {
     int count = 0;
-    for (int motion = 0; motion < 2; ++motion)
-        for (int scheme = 0; scheme < (motion ? 2 : 1); ++scheme)
-            for (int curvature = 0; curvature < (motion ? 3 : 1); ++curvature)
+    for (int motion = 0; motion < 3; ++motion)
+        for (int scheme = 0; scheme < (motion == 1 ? 2 : 1); ++scheme)
+            for (int curvature = 0; curvature < (motion == 1 ? 3 : 1); ++curvature)
                 for (int path = 0; path < 2; ++path)
                     for (unsigned halvings = 0; halvings < 4; halvings += 3)
                         for (int bounded = 0; bounded < 2; ++bounded)
-                            for (size_t d = 1; d < 20; d += 8) {
+                            for (size_t d = motion == 2 ? 2 : 1; d < 20; d += 8) {
                                 const int status = run(d, motion, scheme, curvature, path, halvings, bounded);
                                 ++count;
                                 if (status != FW_OK) {

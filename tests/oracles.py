@@ -139,6 +139,46 @@ class Monge:
         return done.y[:d, -1], linalg.solve(self.metric(done.y[:d, -1]), done.y[d:, -1])
 
 
+# ---- isokinetic motion ----------------------------------------------------------------------------------------------
+
+
+class Isokinetic:
+    """dv/dt = (|v|^2 s g - v (v.g)) / (d - 1), |v|^2 = v.v / s, s = 1 / delta: of constant length, only turned."""
+
+    def __init__(self, target, delta: Array) -> None:
+        self.target, self.delta = target, np.asarray(delta, dtype=float)
+
+    def energy(self, x: Array, v: Array) -> float:
+        return -self.target.value_gradient(x)[0]
+
+    def log_determinant(self, x: Array) -> float:
+        """In the place of log det G: the logarithm of the density of the volume in (x, v) that the motion keeps."""
+        return self.target.value_gradient(x)[0]
+
+    def _turning(self, x: Array, v: Array) -> Array:
+        g = self.target.value_gradient(x)[1]
+        return (v @ (self.delta * v) * g / self.delta - v * (v @ g)) / (len(x) - 1)
+
+    def half_turn(self, x: Array, v: Array, step: float) -> Array:
+        done = solve_ivp(lambda _, w: self._turning(x, w), (0.0, 0.5 * step), v, method="DOP853", rtol=1e-13,
+                         atol=1e-14 * np.abs(v).max())
+        return done.y[:, -1]
+
+    def step(self, scheme: str, x: Array, v: Array, step: float) -> tuple[Array, Array]:
+        v = self.half_turn(x, v, step)
+        x = x + step * v
+        return x, self.half_turn(x, v, step)
+
+    def exact(self, x: Array, v: Array, time: float) -> tuple[Array, Array]:
+        d = len(x)
+
+        def equations(_: float, state: Array) -> Array:
+            return np.concatenate([state[d:], self._turning(state[:d], state[d:])])
+
+        done = solve_ivp(equations, (0.0, time), np.concatenate([x, v]), method="DOP853", rtol=1e-12, atol=1e-13)
+        return done.y[:d, -1], done.y[d:, -1]
+
+
 # ---- derivatives of whole maps --------------------------------------------------------------------------------------
 
 

@@ -14,11 +14,13 @@ import fellwalk as fw
 MOTIONS = {
     "leapfrog": fw.Leapfrog(),
     "leapfrog halved": fw.Leapfrog(halvings=3),
+    "isokinetic": fw.Isokinetic(),
     "surrogate": fw.Lagrangian(),
     "difference": fw.Lagrangian(curvature="difference"),
     "product": fw.Lagrangian(curvature="product", scheme="semi-explicit"),
 }
-PATHS = {"jittered": fw.Jittered(8), "no-u-turn": fw.NoUTurn(), "no-u-turn metric": fw.NoUTurn(turn="metric")}
+PATHS = {"jittered": fw.Jittered(8), "length found": fw.Jittered("auto"),
+         "no-u-turn": fw.NoUTurn(), "no-u-turn metric": fw.NoUTurn(turn="metric")}
 
 
 def normal(x):

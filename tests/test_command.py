@@ -146,7 +146,7 @@ def test_one_start_a_chain_and_a_number_for_settle(tmp_path, capsys):
     ("keep = 0", "keep: it must be at least 1, not 0"),
     ("keep = true", "keep must be a number or a text, not True"),
     ("bend = 'much'", "bend: it must be a number, not 'much'"),
-    ("motion = 'fast'", "motion must be one of 'lagrangian', 'leapfrog', not 'fast'"),
+    ("motion = 'fast'", "motion must be one of 'isokinetic', 'lagrangian', 'leapfrog', 'auto', not 'fast'"),
     ("motion = 3", "motion must be a text, not 3"),
     ("no-audit = 1", "no-audit must be true or false, not 1"),
     ("start = ['a', 'b']", "start must be a list of numbers, or of one such list a chain"),

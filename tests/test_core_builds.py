@@ -140,6 +140,7 @@ def test_the_builds_that_are_compared_differ(builds):
 
 MOTIONS = {
     "leapfrog": {"motion": b"leapfrog"},
+    "isokinetic": {"motion": b"isokinetic"},
     "surrogate": {"motion": b"lagrangian", "bend": 0.7},
     "semi-explicit product": {"motion": b"lagrangian", "bend": 0.7, "scheme": 1, "curvature": 2},
     "split difference": {"motion": b"lagrangian", "bend": 0.7, "curvature": 1, "halvings": 2},
@@ -160,6 +161,7 @@ def spread_start(d, seed):
 @pytest.mark.parametrize("d", [1, 3, 8, 13, 64, 250, 1003])
 def test_the_same_bytes_with_and_without_clones(builds, d, motion, path):
     """Draws, gradients, facts and exported states of settling, keeping and going on from an exported state."""
+    d = max(d, 2) if motion == "isokinetic" else d
     for target in (targets.log_spaced_normal(d, 1e-4, 1e4), targets.student(d, 5.0, 0.3)):
         named = {"steps": 6, "doublings": 5, "settle": 40, "keep": 12, "seed": 19, **MOTIONS[motion], **PATHS[path]}
         results = {name: build.run(target, spread_start(d, 3), **named) for name, build in builds.items()}
@@ -308,7 +310,7 @@ def ran(words, **environment):
     done = subprocess.run(list(map(str, words)), capture_output=True, text=True, check=False, timeout=250,
                           env={**os.environ, **environment})
     assert done.returncode == 0, done.stdout[-1000:] + done.stderr[-4000:]
-    assert done.stdout == "168 chains\n"
+    assert done.stdout == "192 chains\n"
     return done
 
 

@@ -43,7 +43,7 @@ def test_ends_have_the_law_of_the_starts(c):
 
 
 def test_the_list_holds_every_product_of_choices():
-    assert {name for name, _, _ in motions()} >= {"leapfrog", "lagrangian"}
+    assert {name for name, _, _ in motions()} >= {"leapfrog", "lagrangian", "isokinetic"}
     assert {name for name, _ in paths()} >= {"jittered", "no-u-turn"}
     # Surrogate, differences and products, in two schemes; a turn test in two metrics.
     assert len([m for m in motions() if m[0] == "lagrangian"]) == 6

@@ -13,7 +13,7 @@ import targets
 from hypothesis import given
 from hypothesis import strategies as st
 from scipy import stats
-from walks import BENT, CONSISTENT, KINDS, PLACES, SURROGATE, density_of, place
+from walks import BENT, CONSISTENT, FLAT, KINDS, PAIRS, PLACES, SURROGATE, density_of, place
 
 import fellwalk as fw
 from fellwalk import kernels
@@ -151,14 +151,13 @@ def test_published_acceptance_rates_of_leapfrog(name):
 # ---- single steps ---------------------------------------------------------------------------------------------------
 
 
-@pytest.mark.parametrize("kind", KINDS)
-@pytest.mark.parametrize("name", PLACES)
+@pytest.mark.parametrize(("name", "kind"), PAIRS)
 def test_a_step_is_the_dense_step(name, kind):
     """Against dense Christoffel symbols and a numerical Christoffel flow (tolerance 1e-13): 1e-12 of the state's size.
     Differences of gradients are off by sqrt(eps) of the curvature, so a state by 1e-7 of a step."""
     here = place(name)
     dense = here.dense(kind)
-    scheme = "semi-explicit" if kind == "leapfrog" else KINDS[kind].scheme
+    scheme = "semi-explicit" if kind in FLAT else KINDS[kind].scheme
     for step in (here.step, -here.step):
         found = here.go(kind, step=step, trace=True)
         x, v = dense.step(scheme, here.x, here.v, step)
@@ -169,8 +168,7 @@ def test_a_step_is_the_dense_step(name, kind):
         assert found.log_density == here.target.value_gradient(found.position)[0]
 
 
-@pytest.mark.parametrize("kind", KINDS)
-@pytest.mark.parametrize("name", PLACES)
+@pytest.mark.parametrize(("name", "kind"), PAIRS)
 def test_the_log_jacobian_is_that_of_the_whole_step(name, kind):
     """Against slogdet of the (2 d, 2 d) Jacobian by extrapolated central differences of step h.
 
@@ -187,7 +185,7 @@ def test_the_log_jacobian_is_that_of_the_whole_step(name, kind):
         found = here.go(kind, step=step).log_jacobian
         off = measured(f"log-Jacobian, {name}, {kind}", abs(found - log_determinant))
         assert off <= (5e-6 if loose else 2e-11)
-        if kind in BENT:
+        if kind != "leapfrog":
             assert abs(found) > 1e3 * off, "a log-Jacobian this small would agree with anything"
 
 
@@ -203,8 +201,7 @@ def test_log_jacobians_of_difference_curvature_follow_the_exact_ones(name):
 # ---- reversal -------------------------------------------------------------------------------------------------------
 
 
-@pytest.mark.parametrize("kind", KINDS)
-@pytest.mark.parametrize("name", PLACES)
+@pytest.mark.parametrize(("name", "kind"), PAIRS)
 @pytest.mark.parametrize("steps", [4, 12])
 def test_paths_are_reversible(name, kind, steps):
     """Some steps and back, by a negative step and by the flipped velocity.
@@ -237,6 +234,7 @@ def test_paths_are_reversible(name, kind, steps):
 def test_reversal_at_any_dimension_and_scale(kind, d, seed):
     """Student-t targets with a scale of its own in 1e-6..1e6 for every coordinate. 1e-11 of the state: four steps of
     20 roundings there and back, 4e-14, carried on by a condition of up to 250; differences, 1.5e-8 each: 1e-6."""
+    d = max(d, 2) if kind == "isokinetic" else d
     rng = np.random.default_rng(seed)
     unit = 10.0 ** rng.uniform(-6.0, 6.0, d)
     core = targets.student(d, 5.0)
@@ -288,8 +286,7 @@ def test_units_that_are_powers_of_two_change_no_bit(kind, powers, seed):
 # ---- order ----------------------------------------------------------------------------------------------------------
 
 
-@pytest.mark.parametrize("kind", CONSISTENT)
-@pytest.mark.parametrize("name", PLACES)
+@pytest.mark.parametrize(("name", "kind"), [pair for pair in PAIRS if pair[1] in CONSISTENT])
 def test_order_two_in_position_velocity_and_energy(name, kind):
     """Errors against the exact motion (Hamilton's equations, tolerance 1e-12) fall fourfold when the step is halved.
 
@@ -337,10 +334,11 @@ def test_the_target_is_left_invariant(kind):
     The same paths accepted without their log-Jacobian must be found out, so the test has the power it needs.
     """
     target, n, rng = targets.student(2, 5.0, 0.5), 20_000, np.random.default_rng(71)
-    density, scale, beta = density_of(target), np.array([1.3, 0.8]), 0.0 if kind == "leapfrog" else 1.5
+    density, scale, beta = density_of(target), np.array([1.3, 0.8]), 0.0 if kind in FLAT else 1.5
+    step = 1.3 if kind == "isokinetic" else 0.55  # it has hardly an energy error to reject at smaller ones
     x = target.exact_draws(n, rng)
     v = oracles.Monge(target, 1.0 / scale, beta).velocities(x, rng.standard_normal(x.shape))
-    ends = [fw.integrate(density, a, b, motion=KINDS[kind], step_size=0.55, steps=2, scale=scale, beta=beta)
+    ends = [fw.integrate(density, a, b, motion=KINDS[kind], step_size=step, steps=2, scale=scale, beta=beta)
             for a, b in zip(x, v, strict=True)]
     ratios = np.array([-np.inf if end.status else end.log_ratio for end in ends])
     jacobians = np.array([0.0 if end.status else end.log_jacobian for end in ends])
@@ -383,7 +381,7 @@ def test_exact_numbers_of_calls(kind, n):
     here = place("funnel")
     density, calls = counting(here.target)
     found = fw.integrate(density, here.x, here.v, motion=KINDS[kind], step_size=0.05, steps=n, beta=0.3)
-    curved = 0 if kind == "leapfrog" or "surrogate" in kind else 2 * n + 2 if "split" in kind else 3 * n + 1
+    curved = 0 if kind in FLAT or "surrogate" in kind else 2 * n + 2 if "split" in kind else 3 * n + 1
     expected = {"gradients": n + 1, "products": curved}
     if "difference" in kind:
         expected = {"gradients": n + 1 + curved, "products": 0}

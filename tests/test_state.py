@@ -17,6 +17,7 @@ START = (0.731, 0.468, 1.117)
 MOTIONS = {
     "leapfrog": fw.Leapfrog(),
     "leapfrog halved": fw.Leapfrog(halvings=2),
+    "isokinetic": fw.Isokinetic(),
     **{
         f"{curvature} {scheme}{' halved' if halvings else ''}": fw.Lagrangian(
             bend=0.83, curvature=curvature, scheme=scheme, halvings=halvings
@@ -28,6 +29,7 @@ MOTIONS = {
 }
 PATHS = {
     "jittered": fw.Jittered(4),
+    "length found": fw.Jittered("auto"),
     "no-u-turn": fw.NoUTurn(doublings=4),
     "no-u-turn metric": fw.NoUTurn(doublings=4, turn="metric"),
 }
@@ -82,11 +84,12 @@ def test_a_run_moved_after_every_transition(motion, path):
     assert_same_run(make(motion, path), [1], motion, path)
 
 
-@pytest.mark.parametrize("motion", ["leapfrog", "surrogate split", "product semi-explicit"])
-def test_a_run_moved_inside_an_open_plan_of_settling(motion):
-    """settle="auto": the decision when to end is part of the state."""
-    expected, *_ = undisturbed(motion, "no-u-turn", "auto")
-    chain = make(motion, "no-u-turn", settle="auto")
+@pytest.mark.parametrize("path", ["no-u-turn", "length found"])
+@pytest.mark.parametrize("motion", ["leapfrog", "isokinetic", "surrogate split", "product semi-explicit"])
+def test_a_run_moved_inside_an_open_plan_of_settling(motion, path):
+    """settle="auto": the decision when to end, and pilots of the length of paths, are part of the state."""
+    expected, *_ = undisturbed(motion, path, "auto")
+    chain = make(motion, path, settle="auto")
     parts = []
     while not chain.settled:
         parts.append(chain.block(37).draws)

@@ -9,12 +9,13 @@ import targets
 
 import fellwalk as fw
 
-KINDS = {"leapfrog": fw.Leapfrog()} | {
+KINDS = {"leapfrog": fw.Leapfrog(), "isokinetic": fw.Isokinetic()} | {
     f"{scheme}, {curvature}": fw.Lagrangian(curvature=curvature, scheme=scheme)
     for scheme in ("split", "semi-explicit")
     for curvature in ("surrogate", "difference", "product")
 }
-BENT = [kind for kind in KINDS if kind != "leapfrog"]
+FLAT = ["leapfrog", "isokinetic"]  # over the base metric alone
+BENT = [kind for kind in KINDS if kind not in FLAT]
 SURROGATE = [kind for kind in KINDS if "surrogate" in kind]
 CONSISTENT = [kind for kind in KINDS if "surrogate" not in kind]
 
@@ -41,6 +42,8 @@ class Place:
 
     def dense(self, kind):
         """The geometry in which `kind` is written down."""
+        if kind == "isokinetic":
+            return oracles.Isokinetic(self.target, 1.0 / self.scale)
         beta = 0.0 if kind == "leapfrog" else self.beta
         flat = (lambda x: -np.diag(1.0 / self.scale)) if "surrogate" in kind else None
         return oracles.Monge(self.target, 1.0 / self.scale, beta, flat)
@@ -70,6 +73,9 @@ PLACES = {
     "normal": (lambda: targets.equicorrelated_normal(4, 0.6), 0.6, 0.2),
     "student 4": (lambda: targets.student(4, 3.7, 0.4, 2.1), 0.4, 0.3),
 }
+
+# The isokinetic motion has nowhere to turn in one dimension.
+PAIRS = [(name, kind) for name in PLACES for kind in KINDS if (name, kind) != ("student 1", "isokinetic")]
 
 
 @cache

@@ -115,13 +115,13 @@ typedef enum fw_turn { FW_TURN_BASE = 0, FW_TURN_METRIC = 1 } fw_turn;
 #define FW_MAX_HALVINGS 12
 
 typedef struct fw_settings {
-    const char *motion;     /* "leapfrog" or "lagrangian" */
+    const char *motion;     /* "leapfrog", "lagrangian" or "isokinetic" (dimension >= 2) */
     const char *path;       /* "jittered" or "no-u-turn" */
     fw_scheme scheme;       /* Lagrangian motion: which integrator */
     fw_curvature curvature; /* Lagrangian motion: which symmetric field stands for the Hessian */
     double bend;            /* Lagrangian motion: typical L - 1; >= 0 */
     double beta;            /* >= 0: use this beta and do not derive it from bend; < 0: from bend */
-    size_t steps;           /* jittered path: steps uniform on 1..steps */
+    size_t steps;           /* jittered path: steps uniform on 1..steps; 0: settling finds how many (16 without settling) */
     unsigned doublings;     /* no-U-turn path: at most 2^doublings steps */
     fw_turn turn;           /* no-U-turn path: momentum of the base metric or of the full metric */
     unsigned halvings;      /* a step may be done as up to 2^halvings smaller ones; 0: never */
@@ -223,6 +223,7 @@ typedef struct fw_summary {
     double step_size, beta, bend, ceiling;
     double change; /* |log ratio| of standard deviations by which the last window moved the base metric */
     size_t directions;
+    size_t steps; /* jittered path: the most of the next path; else 0 */
     size_t workspace_vectors; /* vectors of d numbers in the workspace */
     size_t workspace_bytes;
     int started, settled;

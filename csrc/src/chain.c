@@ -54,9 +54,10 @@ static void lay_out_orbit(purse *from, fw_chain *chain)
 /* More rows see directions sooner; their number falls where they would be most of the memory and time of a window. */
 static size_t rows_of(const fw_chain *chain)
 {
+    const size_t wanted = chain->walk.d <= 2000 ? FW_WINDOW_ROWS : chain->walk.d <= 20000 ? 40 : 24;
+    if (fw_length_found_here(chain)) return wanted;
     if (!chain->settings.adapt_scale) return 0;
-    if (chain->settings.rank == 0) return FW_CLIMB_ROWS;
-    return chain->walk.d <= 2000 ? FW_WINDOW_ROWS : chain->walk.d <= 20000 ? 40 : 24;
+    return chain->settings.rank == 0 ? FW_CLIMB_ROWS : wanted;
 }
 
 static void lay_out(purse *from, fw_chain *chain)
@@ -92,7 +93,8 @@ static int within(double x, double low, double high) { return x >= low && x <= h
 
 static int settings_fine(const fw_settings *s, size_t d)
 {
-    return d > 0 && d <= SIZE_MAX / 4096 && fw_motion_named(s->motion) && fw_path_named(s->path) && s->steps >= 1 &&
+    return d > 0 && d <= SIZE_MAX / 4096 && fw_motion_named(s->motion) && fw_path_named(s->path) &&
+           d >= fw_motion_named(s->motion)->least_dimension &&
            s->doublings >= 1 && s->doublings < FW_MAX_DOUBLINGS && s->halvings <= FW_MAX_HALVINGS &&
            s->halving_bound > 0.0 && within(s->bend, 0.0, 1e6) && isfinite(s->beta) && within(s->step_size, 0.0, 1e300) &&
            s->acceptance > 0.0 && s->acceptance < 1.0 && s->settle_least <= s->settle_most && s->rank <= FW_MAX_DIRECTIONS &&
@@ -140,6 +142,7 @@ int fw_chain_new(const fw_target *target, const fw_random *random, const fw_sett
     chain->step_size = settings->step_size;
     chain->learn.bend = settings->bend;
     chain->learn.ceiling = 1.0;
+    chain->learn.steps = settings->steps > 0 ? settings->steps : 16;
     fw_learn_plan(chain, settings->settle_least, settings->settle_most);
     *out = chain;
     return FW_OK;
@@ -388,6 +391,7 @@ void fw_chain_summary(const fw_chain *chain, fw_summary *out)
         .ceiling = learn->ceiling,
         .change = learn->change,
         .directions = chain->walk.base.k,
+        .steps = chain->path == &fw_jittered ? fw_length_steps(chain, exp(learn->log_average)) : 0,
         .workspace_vectors = chain->vectors,
         .workspace_bytes = chain->bytes,
         .started = chain->started != 0,

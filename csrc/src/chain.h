@@ -44,6 +44,11 @@ typedef struct fw_learn {
     uint64_t scale_kept;        /* 1: the caller gave it, so the climb leaves it */
     /* the climb from a far start */
     uint64_t climbing, climbed;
+    /* length of jittered paths (length.c) */
+    uint64_t steps;             /* most of a path, once settled */
+    double reach;               /* most steps times step size */
+    uint64_t pilots, pilots_left, pilot_wait, pilot_draws, pilot_gradients, best_gradients;
+    double best_reach, factor, gathered;
     double climb_value[FW_CLIMB_ROWS];
 } fw_learn;
 
@@ -75,6 +80,7 @@ typedef struct fw_route {
     double step_size;
     int finer; /* twice as many steps allowed: settling compares step sizes over equal lengths */
     unsigned doublings; /* no-U-turn path: at most so many in this transition, finer not counted */
+    size_t steps;       /* jittered path: at most so many */
 } fw_route;
 
 struct fw_path {
@@ -101,6 +107,18 @@ int fw_learn_route(fw_chain *chain, fw_route *route);
 void fw_learn_update(fw_chain *chain, const fw_route *route, const fw_facts *facts);
 void fw_learn_climbed(fw_chain *chain);
 void fw_learn_beta(fw_chain *chain);
+
+/* length.c: settling of the length of jittered paths, where settings.steps is 0 */
+int fw_length_found_here(const fw_chain *chain);
+uint64_t fw_length_budget(const fw_chain *chain, uint64_t most);
+size_t fw_length_steps(const fw_chain *chain, double step); /* the most steps of the next path */
+int fw_length_piloting(const fw_chain *chain);              /* 1: nothing else may adapt in this transition */
+void fw_length_plan(fw_chain *chain);
+void fw_length_spread(const fw_chain *chain, double *mean, double *variance); /* before a window is cleared */
+/* As the tail begins; NULL: nothing is known. */
+void fw_length_begin(fw_chain *chain, const double *mean, const double *variance);
+void fw_length_update(fw_chain *chain, const fw_facts *facts);
+void fw_length_finish(fw_chain *chain);
 
 /* chain.c */
 void fw_chain_take(fw_chain *chain, const double *x, const double *g, double value);

@@ -289,6 +289,22 @@ FW_CLONES void fw_kick2(size_t n, double kc, const double *restrict c, double kh
     sums[2] = FOLD(wh);
 }
 
+FW_CLONES void fw_blend(size_t n, double a, double *restrict w, double b, const double *restrict c, double sums[2])
+{
+    SUM(ww);
+    SUM(wc);
+    SWEEP(n, const group e = GET(c); const group t = a * GET(w) + b * e; PUT(w, t); ADD(ww, t * t); ADD(wc, t * e););
+    sums[0] = FOLD(ww);
+    sums[1] = FOLD(wc);
+}
+
+FW_CLONES double fw_square_of_sum(size_t n, double a, const double *restrict w, double b, const double *restrict c)
+{
+    SUM(s);
+    SWEEP(n, const group t = a * GET(w) + b * GET(c); ADD(s, t * t););
+    return FOLD(s);
+}
+
 FW_CLONES void fw_kick2_spread(size_t n, double kc, const double *restrict c, double kh, const double *restrict h,
                                const double *restrict r, double *restrict w, double *restrict v, double sums[2])
 {

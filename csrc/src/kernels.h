@@ -11,6 +11,7 @@
  *   motion                            passes                                                       moved   least
  *   leapfrog                          kick and drift 6, kick 4                                        10      10
  *   surrogate, either scheme          kick and drift 6, whiten 4, kick 3                              13      13
+ *   isokinetic                        kick and drift 6, whiten 4, blend 3                             13      13
  *   product, split                    kick and drift 7, whiten 4, H c 4, kick 6, H w 3, kick 3        27      26
  *   product, semi-explicit            S w 3, H w 5, kick and drift 7, whiten 4, H c 4, S w 3,         35      34
  *                                     H w 5, kick 4
@@ -120,6 +121,10 @@ void fw_product_sums(size_t n, const double *r, const double *q, const double *w
                      double sums[4]);
 void fw_difference_sums(size_t n, double rate, const double *r, const double *q, const double *g, const double *w,
                         const double *p, double sums[4]);
+
+/* w = a w + b c; sums: w.w, w.c with the new w. Then sum (a w + b c)^2 by itself. */
+void fw_blend(size_t n, double a, double *w, double b, const double *c, double sums[2]);
+double fw_square_of_sum(size_t n, double a, const double *w, double b, const double *c);
 
 /* metric operations: v/delta etc. with one rank-one term; see metric.c */
 double fw_ratio_dot(size_t n, const double *a, const double *b, const double *delta);       /* sum a*b/delta */

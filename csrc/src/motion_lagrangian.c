@@ -249,6 +249,7 @@ const fw_motion fw_lagrangian = {
     .name = "lagrangian",
     .source = "Lan, Stathopoulos, Shahbaba & Girolami 2015, J. Comput. Graph. Stat. 24; Monge metric: Hartmann, "
               "Girolami & Klami 2022, AISTATS (from memory)",
+    .least_dimension = 1,
     .uses_products = 1,
     .refresh = refresh,
     .complete = complete,

@@ -60,6 +60,7 @@ static double momentum(const fw_walk *walk, const fw_point *p)
 const fw_motion fw_leapfrog = {
     .name = "leapfrog",
     .source = "Duane, Kennedy, Pendleton & Roweth 1987, Phys. Lett. B 195; Neal 2011",
+    .least_dimension = 1,
     .uses_products = 0,
     .refresh = refresh,
     .complete = complete,

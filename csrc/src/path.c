@@ -16,7 +16,7 @@ static int travel(fw_chain *chain, const fw_route *route, fw_facts *facts)
 {
     fw_walk *walk = &chain->walk;
     fw_point *p = &chain->end[0];
-    const size_t most = chain->settings.steps;
+    const size_t most = route->steps;
     size_t steps = 1 + (size_t)(chain->random.uniform(chain->random.state) * (double)most);
     if (steps > most) steps = most;
     if (route->finer) steps *= 2;

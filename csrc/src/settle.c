@@ -93,18 +93,21 @@ static void clear_window(fw_chain *chain)
 }
 
 /* A plan that fixes the number of transitions is kept to it; an open one ends a tail from now. */
-static void begin_tail(fw_learn *learn)
+static void begin_tail(fw_chain *chain, const double *mean, const double *variance)
 {
+    fw_learn *learn = &chain->learn;
     const uint64_t left = learn->most - learn->done;
     learn->window = 0;
     learn->tail_left = learn->least == learn->most || left < learn->tail ? left : learn->tail;
     if (learn->tail_left == 0) learn->tail_left = 1;
+    fw_length_begin(chain, mean, variance);
 }
 
 static void finish(fw_chain *chain)
 {
     chain->learn.settled = 1;
     if (chain->settings.adapt_step) chain->step_size = exp(chain->learn.log_average);
+    fw_length_finish(chain);
 }
 
 void fw_learn_plan(fw_chain *chain, size_t least, size_t most)
@@ -112,22 +115,23 @@ void fw_learn_plan(fw_chain *chain, size_t least, size_t most)
     fw_learn *learn = &chain->learn;
     learn->least = least;
     learn->most = most;
-    learn->tail = tail_length(most);
+    learn->tail = tail_length(most) + fw_length_budget(chain, most);
     learn->lead = lead;
     learn->done = learn->windows = learn->quiet = learn->tail_left = learn->window = 0;
     learn->settled = most == 0;
-    learn->climbing = most > 1 && chain->rows_x && learn->climbed == 0;
+    learn->climbing = most > 1 && chain->settings.adapt_scale && learn->climbed == 0;
     learn->search = chain->settings.adapt_step != 0;
     learn->log_step = log(chain->step_size > 0.0 ? chain->step_size : 1.0);
     learn->searched = learn->log_step;
     forget_epoch(learn);
     restart_average(learn, bold(chain)->reach);
     clear_window(chain);
+    fw_length_plan(chain);
     if (most == 0) return;
     learn->window = chain->settings.adapt_scale ? next_window(learn) : 0;
     if (learn->window == 0) {
         learn->tail = most;
-        begin_tail(learn);
+        begin_tail(chain, NULL, NULL);
     }
 }
 
@@ -351,6 +355,7 @@ static void close_window(fw_chain *chain)
     const double of_directions = directions_moved(chain, scale, k, chain->found, lambda);
     learn->change = of_coordinates > of_directions ? of_coordinates : of_directions;
     fw_base_set(&chain->walk.base, scale, k, chain->found, lambda);
+    fw_length_spread(chain, chain->end[0].w, chain->end[0].x);
     clear_window(chain);
     learn->ring_count = 0;
     forget_epoch(learn);
@@ -360,7 +365,7 @@ static void close_window(fw_chain *chain)
     learn->quiet = learn->change < quiet_change ? learn->quiet + 1 : 0;
     const int stable = learn->quiet >= 2 && learn->done + learn->tail >= learn->least && learn->least < learn->most;
     learn->window = stable ? 0 : next_window(learn);
-    if (learn->window == 0) begin_tail(learn);
+    if (learn->window == 0) begin_tail(chain, chain->end[0].w, chain->end[0].x);
 }
 
 /* An iteration of the climb counts as a transition; it may take half of the plan, and the windows begin when it ends. */
@@ -373,7 +378,7 @@ void fw_learn_climbed(fw_chain *chain)
     learn->lead = learn->done + lead;
     learn->window = 0;
     if (learn->tail_left == 0) learn->window = next_window(learn);
-    if (learn->window == 0) begin_tail(learn);
+    if (learn->window == 0) begin_tail(chain, NULL, NULL);
 }
 
 /* ---- one settling transition --------------------------------------------------------------------------------------- */
@@ -393,13 +398,17 @@ int fw_learn_route(fw_chain *chain, fw_route *route)
     route->finer = 0;
     route->step_size = chain->step_size;
     route->doublings = allowed_doublings(chain);
+    route->steps = fw_length_steps(chain, route->step_size);
     if (learn->settled || !chain->settings.adapt_step) return FW_OK;
     if (learn->search) {
         const int status = search_step(chain);
         if (status != FW_OK) return status;
     }
-    route->finer = has_ceiling(chain) && (learn->done & 1);
-    route->step_size = exp(learn->log_step) * (route->finer ? 0.5 : 1.0);
+    const int pilot = fw_length_piloting(chain);
+    const double step = exp(pilot ? learn->log_average : learn->log_step);
+    route->steps = fw_length_steps(chain, step);
+    route->finer = has_ceiling(chain) && !pilot && (learn->done & 1);
+    route->step_size = step * (route->finer ? 0.5 : 1.0);
     return FW_OK;
 }
 
@@ -407,15 +416,17 @@ void fw_learn_update(fw_chain *chain, const fw_route *route, const fw_facts *fac
 {
     fw_learn *learn = &chain->learn;
     ++learn->done;
-    if (chain->settings.adapt_step && !route->finer) {
+    const int pilot = fw_length_piloting(chain);
+    if (chain->settings.adapt_step && !route->finer && !pilot) {
         const double least = has_ceiling(chain) ? fmax(lowest_step(learn), learn->epoch_log_step - log(4.0)) : lowest_step(learn);
         dual_average(learn, bold(chain)->gamma, least, chain->settings.acceptance, facts->acceptance);
     }
-    if (has_ceiling(chain)) look_at_ceiling(chain, route, facts->acceptance);
+    if (has_ceiling(chain) && !pilot) look_at_ceiling(chain, route, facts->acceptance);
     if (tunes_bend(chain)) {
         remember_gradient(chain);
         fw_learn_beta(chain);
     }
+    fw_length_update(chain, facts);
     if (learn->tail_left > 0) {
         if (--learn->tail_left == 0) finish(chain);
     } else if (learn->done > learn->lead) {

@@ -7,7 +7,7 @@
 
 const fw_motion *fw_motion_named(const char *name)
 {
-    static const fw_motion *const motions[] = {&fw_leapfrog, &fw_lagrangian};
+    static const fw_motion *const motions[] = {&fw_leapfrog, &fw_lagrangian, &fw_isokinetic};
     for (size_t i = 0; name && i < sizeof motions / sizeof *motions; ++i)
         if (strcmp(motions[i]->name, name) == 0) return motions[i];
     return NULL;

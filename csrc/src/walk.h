@@ -35,6 +35,7 @@ struct fw_walk;
 typedef struct fw_motion {
     const char *name;
     const char *source; /* where the method was published */
+    size_t least_dimension;
     int uses_products;  /* 1: points carry hc when the curvature is not the surrogate */
     /* Turn standard normal numbers in p->w into a velocity drawn given p->x; c and the sums are set and kept so. */
     void (*refresh)(const struct fw_walk *walk, fw_point *p);
@@ -48,6 +49,7 @@ typedef struct fw_motion {
 
 extern const fw_motion fw_leapfrog;
 extern const fw_motion fw_lagrangian;
+extern const fw_motion fw_isokinetic;
 const fw_motion *fw_motion_named(const char *name);
 
 typedef struct fw_walk {

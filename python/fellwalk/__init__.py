@@ -15,7 +15,7 @@ from fellwalk import errors, kernels
 from fellwalk.chain import Block, Chain
 from fellwalk.density import Density
 from fellwalk.errors import FellwalkError
-from fellwalk.motions import Jittered, Lagrangian, Leapfrog, NoUTurn
+from fellwalk.motions import Isokinetic, Jittered, Lagrangian, Leapfrog, NoUTurn
 from fellwalk.parameter_kinds import between, correlation, free, increasing, positive, shares
 from fellwalk.parameters import Parameters
 from fellwalk.paths import Trajectory, integrate
@@ -28,6 +28,7 @@ __all__ = [
     "Density",
     "Estimates",
     "FellwalkError",
+    "Isokinetic",
     "Jittered",
     "Judgement",
     "Lagrangian",
@@ -38,6 +39,7 @@ __all__ = [
     "Settled",
     "SettledChain",
     "Trajectory",
+    "Trial",
     "audit",
     "between",
     "correlation",
@@ -54,6 +56,7 @@ __all__ = [
     "resume",
     "run",
     "shares",
+    "trial",
 ]
 
 if TYPE_CHECKING:
@@ -63,6 +66,7 @@ if TYPE_CHECKING:
     from fellwalk.judgement import Judgement
     from fellwalk.result import Result, load
     from fellwalk.run import resume, run
+    from fellwalk.trial import Trial, trial
 
     __version__: str
 else:
@@ -71,11 +75,13 @@ else:
         "Estimates": "estimates",
         "Judgement": "judgement",
         "Result": "result",
+        "Trial": "trial_result",
         "audit": "audit",
         "judge": "judge",
         "load": "result",
         "resume": "run",
         "run": "run",
+        "trial": "trial",
     }
 
     def __getattr__(name):
@@ -96,8 +102,8 @@ else:
         return sorted({*globals(), *_WHERE, "__version__"})
 
     class _Package(ModuleType):
-        """audit, judge and run are functions in modules of the same name: the import of such a module, whoever asks
-        for it, must not put it in the function's place."""
+        """audit, judge, run and trial are functions in modules of the same name: the import of such a module, whoever
+        asks for it, must not put it in the function's place."""
 
         def __setattr__(self, name, value):
             if _WHERE.get(name) == name and isinstance(value, ModuleType):

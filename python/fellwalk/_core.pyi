@@ -22,6 +22,7 @@ class Summary(TypedDict):
     ceiling: float
     change: float
     directions: int
+    steps: int
     workspace_vectors: int
     workspace_bytes: int
     started: bool

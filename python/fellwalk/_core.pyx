@@ -724,6 +724,7 @@ cdef class Engine:
         return {"gradients": s.gradients, "products": s.products, "transitions": s.transitions,
                 "settled_transitions": s.settled_transitions, "windows": s.windows, "step_size": s.step_size,
                 "beta": s.beta, "bend": s.bend, "ceiling": s.ceiling, "change": s.change, "directions": s.directions,
+                "steps": s.steps,
                 "workspace_vectors": s.workspace_vectors, "workspace_bytes": s.workspace_bytes,
                 "started": bool(s.started), "settled": bool(s.settled)}
 

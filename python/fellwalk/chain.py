@@ -14,7 +14,7 @@ from numpy.typing import ArrayLike, NDArray
 from fellwalk._core import FACTS, Engine, Stream
 from fellwalk.density import Density, as_vector, brief, stopped
 from fellwalk.errors import ArgumentError, SettleError, StartError, StateError
-from fellwalk.motions import Leapfrog, Motion, NoUTurn, Path, real, whole
+from fellwalk.motions import Jittered, Leapfrog, Motion, NoUTurn, Path, check_fits, real, whole
 from fellwalk.settings import Settings
 from fellwalk.settled import SettledChain
 from fellwalk.watch import Moments, Watching
@@ -96,9 +96,7 @@ class Chain:
         if not isinstance(density, Density):
             raise ArgumentError(f"the first argument must be a fellwalk.Density; it is {type(density).__name__}: wrap "
                                 "your function as fellwalk.Density(function, dimension)")
-        if settings.motion.core()["curvature"] == "product" and density.hessian_product is None:
-            raise ArgumentError('curvature="product" needs a density with a Hessian product; give hessian_product= to '
-                                'Density, or choose curvature="surrogate" or "difference"')
+        check_fits(settings.motion, density.dimension, density.hessian_product is not None)
         self.density = density
         self.settings = settings
         if not isinstance(seed, np.random.SeedSequence):
@@ -128,7 +126,13 @@ class Chain:
         """Settings of a chain that takes over a settled part and does not settle."""
         if settings.settle not in ("auto", 0):
             raise ArgumentError(f"settled= takes the place of settling; leave settle out (it is {settings.settle!r})")
-        return replace(settings, settle=0, step_size=settled.step_size, beta=settled.beta, adapt_scale=False)
+        path = settings.path
+        if isinstance(path, Jittered) and path.steps == "auto":
+            if settled.steps == 0:
+                raise ArgumentError('the settled part knows no number of steps, as it is not of jittered paths; give '
+                                    'Jittered(steps) in the place of Jittered("auto")')
+            path = Jittered(settled.steps)
+        return replace(settings, settle=0, step_size=settled.step_size, beta=settled.beta, adapt_scale=False, path=path)
 
     def _set_base(self, scale: ArrayLike | None, settled: SettledChain | None) -> None:
         if settled is not None:

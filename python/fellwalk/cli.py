@@ -17,7 +17,7 @@ from fellwalk.demo.show import show
 from fellwalk.errors import ArgumentError, FellwalkError
 from fellwalk.interrupts import watching
 from fellwalk.model import find_model
-from fellwalk.motions import MOTIONS, PATHS, Jittered, Lagrangian, Leapfrog, Motion, NoUTurn, Path
+from fellwalk.motions import MOTIONS, PATHS, Isokinetic, Jittered, Lagrangian, Leapfrog, Motion, NoUTurn, Path
 from fellwalk.result import Result, load
 from fellwalk.run import resume, run
 
@@ -127,7 +127,8 @@ def _parser() -> tuple[argparse.ArgumentParser, argparse.ArgumentParser]:
     add("--no-audit", action="store_true", help="do not look at the gradient first")
     add("--settle", type=_settle, metavar="N", default="auto", help='settling transitions, or "auto"')
     add("--seed", type=_whole(0), metavar="N", help="a whole number; left out: one is drawn and recorded")
-    add("--motion", choices=sorted(MOTIONS), default="leapfrog", help="what moves a point")
+    add("--motion", choices=[*sorted(MOTIONS), "auto"], default="leapfrog",
+        help="what moves a point; auto: a trial finds motion and path")
     add("--bend", type=float, metavar="B", default=Lagrangian.bend, help="lagrangian motion: typical L - 1")
     add("--curvature", choices=["surrogate", "difference", "product"], default="surrogate",
         help="lagrangian motion: where Hessian products come from")
@@ -135,7 +136,8 @@ def _parser() -> tuple[argparse.ArgumentParser, argparse.ArgumentParser]:
         help="lagrangian motion: the integrator")
     add("--halvings", type=_whole(0), metavar="N", default=0, help="a step may be done as up to 2^N smaller ones")
     add("--path", choices=sorted(PATHS), default="no-u-turn", help="how far it is moved")
-    add("--steps", type=_whole(1), metavar="N", default=Jittered.steps, help="jittered path: steps drawn from 1..N")
+    add("--steps", type=_steps, metavar="N", default=Jittered.steps,
+        help='jittered path: steps drawn from 1..N, or "auto": settling finds N')
     add("--doublings", type=_whole(1), metavar="N", default=NoUTurn.doublings,
         help="no-u-turn path: at most 2^N steps")
     add("--acceptance", type=float, metavar="RATE", default=0.8, help="rate that settling aims the step size at")
@@ -209,6 +211,10 @@ def _settle(text: str) -> int | str:
     return text if text == "auto" else _whole(0)(text)
 
 
+def _steps(text: str) -> int | str:
+    return text if text == "auto" else _whole(1)(text)
+
+
 def _start(text: str | np.ndarray | None) -> np.ndarray | None:
     if text is None or isinstance(text, np.ndarray):  # a settings file gives numbers as they are
         return text
@@ -223,13 +229,19 @@ def _start(text: str | np.ndarray | None) -> np.ndarray | None:
         raise ArgumentError(f"--start must be numbers separated by commas, or a .npy file; it is {text!r}") from None
 
 
-def _motion(options: argparse.Namespace) -> Motion:
+def _motion(options: argparse.Namespace) -> Motion | str:
+    if options.motion == "auto":
+        return "auto"
     if options.motion == "leapfrog":
         return Leapfrog(halvings=options.halvings)
+    if options.motion == "isokinetic":
+        return Isokinetic(halvings=options.halvings)
     return Lagrangian(bend=options.bend, curvature=options.curvature, scheme=options.scheme, halvings=options.halvings)
 
 
-def _path(options: argparse.Namespace) -> Path:
+def _path(options: argparse.Namespace) -> Path | None:
+    if options.motion == "auto":
+        return None
     return Jittered(options.steps) if options.path == "jittered" else NoUTurn(options.doublings)
 
 

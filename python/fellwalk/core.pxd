@@ -160,6 +160,7 @@ cdef extern from "fellwalk.h" nogil:
         double ceiling
         double change
         size_t directions
+        size_t steps
         size_t workspace_vectors
         size_t workspace_bytes
         int started

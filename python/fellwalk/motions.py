@@ -7,7 +7,7 @@ from numbers import Complex, Real
 from fellwalk._core import MAX_DOUBLINGS, MAX_HALVINGS
 from fellwalk.errors import ArgumentError
 
-__all__ = ["Jittered", "Lagrangian", "Leapfrog", "NoUTurn"]
+__all__ = ["Isokinetic", "Jittered", "Lagrangian", "Leapfrog", "NoUTurn"]
 
 
 def whole(name: str, value: object, least: int, most: int) -> int:
@@ -101,19 +101,48 @@ class Lagrangian:
 
 
 @dataclass(frozen=True)
-class Jittered:
-    """A number of steps drawn uniformly from 1..steps, then one accept test (Mackenze 1989; Neal 2011)."""
+class Isokinetic:
+    """A velocity of constant length that gradients only turn, over the learned base metric (Ver Steeg & Galstyan 2021;
+    Robnik, Cohn-Gordon & Seljak 2025, arXiv 2503.01707), drawn anew for every path and with an accept test.
 
-    steps: int = 16
+    One gradient a step; needs at least two coordinates. In many dimensions give it ``path=Jittered("auto")``, whose
+    length settling finds. halvings: as for Leapfrog.
+    """
+
+    halvings: int = 0
+
+    name = "isokinetic"
+
+    def __post_init__(self) -> None:
+        set_plain(self, halvings=whole("halvings", self.halvings, 0, MAX_HALVINGS))
+
+    def core(self) -> dict[str, object]:
+        """The members of the core's settings that this motion fixes."""
+        return {"motion": self.name, "scheme": "split", "curvature": "surrogate", "bend": 0.0,
+                "halvings": self.halvings}
+
+
+@dataclass(frozen=True)
+class Jittered:
+    """A number of steps drawn uniformly from 1..steps, then one accept test (Mackenze 1989; Neal 2011).
+
+    steps: a number, or "auto": settling finds it by doubling, from effective draws per gradient of pilots (a chain
+    that does not settle then takes 16).
+    """
+
+    steps: int | str = 16
 
     name = "jittered"
 
     def __post_init__(self) -> None:
-        set_plain(self, steps=whole("steps", self.steps, 1, 2**31 - 1))
+        if isinstance(self.steps, str) and self.steps != "auto":
+            raise ArgumentError(f'steps must be a whole number or "auto"; it is {self.steps!r:.60}')
+        if self.steps != "auto":
+            set_plain(self, steps=whole("steps", self.steps, 1, 2**31 - 1))
 
     def core(self) -> dict[str, object]:
         """The members of the core's settings that this path fixes."""
-        return {"path": self.name, "steps": self.steps, "doublings": 10, "turn": "base"}
+        return {"path": self.name, "steps": 0 if self.steps == "auto" else self.steps, "doublings": 10, "turn": "base"}
 
 
 @dataclass(frozen=True)
@@ -137,7 +166,17 @@ class NoUTurn:
         return {"path": self.name, "steps": 1, "doublings": self.doublings, "turn": self.turn}
 
 
-Motion = Leapfrog | Lagrangian
+Motion = Leapfrog | Lagrangian | Isokinetic
 Path = Jittered | NoUTurn
-MOTIONS = {kind.name: kind for kind in (Leapfrog, Lagrangian)}
+MOTIONS = {kind.name: kind for kind in (Leapfrog, Lagrangian, Isokinetic)}
 PATHS = {kind.name: kind for kind in (Jittered, NoUTurn)}
+
+
+def check_fits(motion: Motion, dimension: int, has_product: bool) -> None:
+    """Errors: ArgumentError where the density lacks what the motion needs."""
+    if motion.core()["curvature"] == "product" and not has_product:
+        raise ArgumentError('curvature="product" needs a density with a Hessian product; give hessian_product= to '
+                            'Density, or choose curvature="surrogate" or "difference"')
+    if isinstance(motion, Isokinetic) and dimension < 2:
+        raise ArgumentError("the isokinetic motion needs at least 2 coordinates, as its velocity can only turn; this "
+                            "density has 1: use fellwalk.Leapfrog()")

@@ -8,7 +8,7 @@ from numpy.typing import ArrayLike, NDArray
 from fellwalk._core import SENTENCES, Engine, Stream
 from fellwalk.density import Density, as_vector, stopped
 from fellwalk.errors import ArgumentError
-from fellwalk.motions import Jittered, Leapfrog, Motion, real, whole
+from fellwalk.motions import Jittered, Leapfrog, Motion, check_fits, real, whole
 from fellwalk.settings import Settings
 
 __all__ = ["Trajectory", "integrate"]
@@ -73,8 +73,7 @@ def integrate(
         raise ArgumentError("step_size must not be 0; a negative one goes back in time")
     count = whole("steps", steps, 0, 2**40)
     settings = Settings(motion=motion or Leapfrog(), path=Jittered(), settle=0, beta=beta)
-    if settings.motion.core()["curvature"] == "product" and density.hessian_product is None:
-        raise ArgumentError('curvature="product" needs a density with a Hessian product; give hessian_product=')
+    check_fits(settings.motion, d, density.hessian_product is not None)
     target = density.target()
     engine = Engine(target, Stream(np.random.SeedSequence(0)), settings.core())
     diagonal = np.ones(d) if scale is None else as_vector(scale, d, "scale")

@@ -35,6 +35,7 @@ from fellwalk.model import find_model
 from fellwalk.report_advice import remedies
 from fellwalk.report_table import answer, by_need, html_table, table_notes
 from fellwalk.table import ROWS, _energy_lines, _failure_lines, _identity_lines
+from fellwalk.trial_result import told_in_words
 from fellwalk.verdict import CAUTION, FIT, MORE, NOT_TRUSTED
 
 if TYPE_CHECKING:
@@ -116,6 +117,7 @@ def _contents(result: Result, density: Density | None, find: bool) -> dict[str, 
         "settings": told.settings_rows(result),
         "versions": told.version_rows(result),
         "code": told.code(result),
+        "trial": told_in_words(result.trial) if result.trial else "",
         "caution": CAUTION,
         **_table(judgement),
         **_intervals(judgement),

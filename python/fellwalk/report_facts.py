@@ -162,6 +162,8 @@ def code(result: Result) -> str:
         given["settled"] = "earlier"
         given.pop("settle")
         given.pop("step_size", None)
+    if plan.get("trial"):
+        given = {"motion": '"auto"', **{key: given[key] for key in ("keep", "chains", "seed", "acceptance")}}
     arguments = "".join(f"    {key}={value},\n" for key, value in given.items())
     return f"import fellwalk as fw\n\nresult = fw.run(\n    density, starts,\n{arguments})"
 

@@ -22,6 +22,7 @@ from fellwalk.run_record import ChainResult, plan_of, read_parts, read_states
 from fellwalk.settled import Settled
 from fellwalk.settling import settling_remarks
 from fellwalk.table import wrap
+from fellwalk.trial_result import told_in_words
 from fellwalk.watch import Moments, judged_only
 
 if TYPE_CHECKING:
@@ -156,7 +157,7 @@ class Result:
 
     @cached_property
     def spent(self) -> dict[str, float]:
-        """Calls and seconds of work, settling included."""
+        """Calls and seconds of work, settling and a trial included (of a trial the calls; products at their price)."""
         total = {"gradients": 0.0, "products": 0.0, "seconds": 0.0}
         for part in self._parts:
             for phase in part.facts.values():
@@ -164,7 +165,14 @@ class Result:
                     total["gradients"] += int(facts["gradients"].sum())
                     total["products"] += int(facts["products"].sum())
             total["seconds"] += part.seconds
+        if self.trial is not None:
+            total["gradients"] += self.trial["settling"] + self.trial["spent"]
         return total
+
+    @property
+    def trial(self) -> dict[str, Any] | None:
+        """With ``motion="auto"`` what the trial has found, as `fellwalk.Trial.to_json` gives it, else None."""
+        return self.plan.get("trial")
 
     @property
     def judged(self) -> bool:
@@ -254,7 +262,9 @@ class Result:
             settled = [part.count("settle") for part in self._parts]
             sizes = [chain["step_size"] for chain in self.chains]
             how = f"Settled in {_range(settled, 'd')} transitions"
-            if self.plan.get("settled"):
+            if self.trial:
+                how = "Settled in a trial of motions"
+            elif self.plan.get("settled"):
                 how = f"Settled part {self.plan['settled']} taken over"
             lines.append(f"{how}: step size {_range(sizes, '.3g')}{self._bend_line()}.")
             lines += settling_remarks(self.settling, self.chains, self.settings["acceptance"])
@@ -276,7 +286,8 @@ class Result:
     def __str__(self) -> str:
         if not self.judged:
             return self.heading()
-        return f"{self.heading()}\n\n{self.judgement}"
+        tried = f"{told_in_words(self.trial)}\n\n" if self.trial else ""
+        return f"{self.heading()}\n\n{tried}{self.judgement}"
 
     def __repr__(self) -> str:
         return f"<Result: {len(self._parts)} chains of {self._shortest} draws, {len(self.names)} parameters>"

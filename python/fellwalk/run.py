@@ -18,7 +18,7 @@ from fellwalk.density import Density, brief
 from fellwalk.driver import Driver
 from fellwalk.errors import ArgumentError, NotWrittenError, OtherModelError, StartError
 from fellwalk.model import find_model
-from fellwalk.motions import Leapfrog, Motion, NoUTurn, Path, real, whole
+from fellwalk.motions import Jittered, Leapfrog, Motion, NoUTurn, Path, real, whole
 from fellwalk.parameters import Parameters
 from fellwalk.pools import Workers
 from fellwalk.progress import choose_progress
@@ -28,6 +28,8 @@ from fellwalk.run_record import ChainResult, begin, plan_of, read_check, read_pa
 from fellwalk.settings import Settings
 from fellwalk.settled import Settled
 from fellwalk.starts import Starts, starting_points
+from fellwalk.trial_result import Trial
+from fellwalk.trial_rounds import Competition, budget_for, settle_leaders
 from fellwalk.watch import Watch, watch_again, watch_of
 from fellwalk.work import Check
 
@@ -41,7 +43,7 @@ def run(
     density: Density,
     starts: Starts | None = None,
     *,
-    motion: Motion | None = None,
+    motion: Motion | str | None = None,
     path: Path | None = None,
     settle: int | str = "auto",
     keep: int = 1000,
@@ -51,7 +53,7 @@ def run(
     step_size: float | None = None,
     scale: ArrayLike | None = None,
     rank: int | str = "auto",
-    settled: Result | Settled | None = None,
+    settled: Result | Settled | Trial | None = None,
     gradients: bool | None = None,
     watch: str | int | Sequence[str | int] | Callable[[np.ndarray], Any] | None = None,
     executor: Executor | str | None = None,
@@ -69,10 +71,13 @@ def run(
         natural values, flat or dicts by name; also a function ``starts(rng)`` that draws one; left out, and without a
         ``start`` of the density, they are drawn (`fellwalk.starts.free_starts`).
     settle: settling transitions a chain, or "auto": until the scale has stabilised, between stated bounds.
+    motion: what moves a point, by default `fellwalk.Leapfrog()`; "auto": what a trial (`fellwalk.trial`) finds best, on
+        chains settled first in this process, with a budget of 0.15 of what the run would cost. The plan, and so the
+        record and the result, keeps its table; what was drawn during the trial is not kept.
     acceptance: the rate that settling aims the step size at. step_size, scale: where settling starts from.
     rank: directions of large or small variance that the base metric learns beside its diagonal: a number, or "auto":
         those that stand out, at most 16. settled: another result (or its ``settled``), whose settled parts are used in
-        turn in the place of settling; the plan keeps their hash.
+        turn in the place of settling; the plan keeps their hash. A `fellwalk.Trial` gives motion, path and starts, too.
     gradients: keep the gradient at every draw (default: up to 1,000 dimensions, and not with ``watch``).
     watch: keep of each draw only these: names of coordinates or parameters, numbers of coordinates, or a function of
         one draw (parameters,), read-only, that gives a number, a truth value or a vector; of all other coordinates
@@ -95,8 +100,14 @@ def run(
     if not isinstance(density, Density):
         raise ArgumentError(f"the first argument must be a fellwalk.Density; it is {type(density).__name__}: wrap your "
                             "function as fellwalk.Density(function, dimension)")
+    auto = isinstance(motion, str)
+    if isinstance(motion, str):
+        _only_auto(motion, {"path": path, "step_size": step_size, "scale": scale, "settled": settled}, settle, rank)
+        motion = None
+    if isinstance(settled, Trial):
+        motion, path = motion or settled.motion, path or settled.path
     settings = _settings(motion, path, settle, acceptance, step_size, rank)
-    taken = settled.settled if isinstance(settled, Result) else settled
+    taken = settled.settled if isinstance(settled, Result | Trial) else settled
     if taken is not None:
         if settle not in ("auto", 0):
             raise ArgumentError(f"settled= takes the place of settling; leave settle out (it is {settle!r})")
@@ -119,19 +130,32 @@ def run(
     }
     if notes:
         plan["notes"] = dict(notes)
-    if starts is None and density.start is None and density.parameters is None:
+    again = settled.positions if starts is None and isinstance(settled, Trial) else None
+    if starts is None and again is None and density.start is None and density.parameters is None:
         raise ArgumentError("this density has no start of its own; give starts: a point (dimension,) in the support")
     try:
-        points = starting_points(density, density.start if starts is None else starts, chains,
-                                 np.random.default_rng([seed, 1]))
+        if again is not None:
+            points = again[np.arange(chains) % len(again)]
+        else:
+            points = starting_points(density, density.start if starts is None else starts, chains,
+                                     np.random.default_rng([seed, 1]))
     except (NotWrittenError, StartError):
         if audit:
             glance_at_start(density)
         raise
     watching = _watch(plan, watch, density, points[0], gradients)
-    states = _first_states(density, settings, points, seed, scale, taken)
-    if audit:
-        glance(density, points[-1])
+    if auto:
+        if audit:
+            glance(density, points[-1])
+        found = _tried(density, points, seed, acceptance, keep)
+        states = [chain.state for chain in found.chains]
+        settings = replace_settings(settings, motion=found.motion, path=found.path, settle=0,
+                                    step_size=found.chains[0].step_size)
+        plan |= {"settings": settings.to_json(), "trial": found.to_json()}
+    else:
+        states = _first_states(density, settings, points, seed, scale, taken)
+        if audit:
+            glance(density, points[-1])
     parts = [ChainResult() for _ in states]
     check = Check.of(density, points[0])
     transitions = chains * (keep + min(_SETTLE, settings.settle_bounds()[1]))
@@ -167,6 +191,22 @@ def _natural(density: Density, point: np.ndarray) -> np.ndarray:
     return point if density.parameters is None else density.parameters.natural(point)
 
 
+def _only_auto(motion: str, given: Mapping[str, Any], settle: int | str, rank: int | str) -> None:
+    if motion != "auto":
+        raise ArgumentError(f'motion must be a motion, as fellwalk.Leapfrog(), or "auto"; it is {motion!r}')
+    named = [name for name, value in given.items() if value is not None]
+    named += [name for name, value in (("settle", settle), ("rank", rank)) if value != "auto"]
+    if named:
+        raise ArgumentError(f'motion="auto" finds what {named[0]}= would fix; leave it out')
+
+
+def _tried(density: Density, points: np.ndarray, seed: int, acceptance: float, keep: int) -> Trial:
+    leaders = settle_leaders(density, points, seed, acceptance)
+    draws = keep * len(points)
+    budget = budget_for(leaders.gradients, draws, leaders.per_draw)
+    return Competition(density, leaders, budget, seed, acceptance, 1.0, draws).go()
+
+
 def _first_states(density: Density, settings: Settings, points: np.ndarray, seed: int,
                   scale: ArrayLike | None, settled: Settled | None) -> list[bytes]:
     states = []
@@ -187,6 +227,9 @@ def _settings(motion: Motion | None, path: Path | None, settle: int | str, accep
                         settle=settle, acceptance=acceptance, step_size=step_size, rank=rank)
     if settings.settle_bounds()[1] == 0 and step_size is None:
         raise ArgumentError("with settle=0 nothing finds a step size; give step_size=, or let the chains settle")
+    if settings.settle_bounds()[1] == 0 and isinstance(settings.path, Jittered) and settings.path.steps == "auto":
+        raise ArgumentError('with settle=0 nothing finds the length of paths; give Jittered(steps), or let the chains '
+                            'settle')
     return settings
 
 

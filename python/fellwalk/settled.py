@@ -25,7 +25,8 @@ class SettledChain:
     """The settled part of one chain.
 
     scale: (dimension,) variances; directions: (k, dimension), orthonormal in coordinates scaled by sqrt(scale);
-    variances: (k,), along the directions in those coordinates. beta is None where the motion has none of its own.
+    variances: (k,), along the directions in those coordinates. beta is None where the motion has none of its own;
+    steps is the most of a jittered path, 0 for other paths.
     """
 
     scale: NDArray[np.float64]
@@ -33,6 +34,7 @@ class SettledChain:
     variances: NDArray[np.float64]
     step_size: float
     beta: float
+    steps: int = 0
 
     @classmethod
     def of(cls, chain: Chain) -> SettledChain:
@@ -40,11 +42,12 @@ class SettledChain:
         found = chain.summary
         if not found["settled"] or not found["step_size"] > 0:
             raise SettleError("a chain has not settled yet, so it has no settled part to use again")
-        return cls(*chain.base_metric, found["step_size"], found["beta"])
+        return cls(*chain.base_metric, found["step_size"], found["beta"], found["steps"])
 
     def to_bytes(self) -> bytes:
         """All numbers as little-endian float64, in the order of the fields."""
-        numbers = [self.scale, self.directions.ravel(), self.variances, np.array([self.step_size, self.beta])]
+        last = np.array([self.step_size, self.beta, float(self.steps)])
+        numbers = [self.scale, self.directions.ravel(), self.variances, last]
         return np.concatenate(numbers).astype("<f8").tobytes()
 
 

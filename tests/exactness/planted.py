@@ -23,8 +23,13 @@ def leapfrog(path: str, target: str, turn=0, halvings=0, rank=0) -> Combination:
     return Combination("leapfrog", 0, 0, path, turn, halvings, rank, target)
 
 
+def isokinetic(path: str, target: str, turn=0, halvings=0, rank=0) -> Combination:
+    return Combination("isokinetic", 0, 0, path, turn, halvings, rank, target)
+
+
 JITTERED, NO_U_TURN = "jittered", "no-u-turn"
 MOTION, PATH, ORBIT, WALK = "motion_lagrangian.c", "path.c", "path_nouturn.c", "walk.c"
+TURNED = "motion_isokinetic.c"
 
 JACOBIAN = [
     Planted(
@@ -184,4 +189,35 @@ VELOCITY = [
     ),
 ]
 
-PLANTED = [*JACOBIAN, *FIELD, *TURN, *HALVING, *VELOCITY]
+ISOKINETIC = [
+    Planted(
+        "log-Jacobian dropped, isokinetic",
+        Mutation(TURNED, "    p->log_jacobian -= others * log_stretch;\n", ""),
+        (isokinetic(JITTERED, "student"), isokinetic(NO_U_TURN, "ring")),
+    ),
+    Planted(
+        "log-Jacobian of the isokinetic turn in d dimensions, not d - 1",
+        Mutation(TURNED, "_jacobian -= others * log_stretch;", "_jacobian -= (others + 1.0) * log_stretch;"),
+        (isokinetic(JITTERED, "student"), isokinetic(NO_U_TURN, "rosenbrock")),
+    ),
+    Planted(
+        "isokinetic turns less in the first half of a step than in the second",
+        Mutation(
+            TURNED,
+            "turn(walk, p, 0.5 * step, speed, &k, &stretch);\n    if (status != FW_OK) return status;\n    /*",
+            "turn(walk, p, 0.2 * step, speed, &k, &stretch);\n    if (status != FW_OK) return status;\n    /*",
+        ),
+        (isokinetic(NO_U_TURN, "student"), isokinetic(JITTERED, "student")),
+    ),
+    Planted(
+        "isokinetic velocities that always begin along the gradient",
+        Mutation(
+            TURNED,
+            "    fw_scale(walk->d, k, p->w);\n    p->wc *= k;\n",
+            "    fw_scale(walk->d, p->wc < 0.0 ? -k : k, p->w);\n    p->wc = fabs(k * p->wc);\n",
+        ),
+        (isokinetic(JITTERED, "student"), isokinetic(JITTERED, "ring")),
+    ),
+]
+
+PLANTED = [*JACOBIAN, *FIELD, *TURN, *HALVING, *VELOCITY, *ISOKINETIC]

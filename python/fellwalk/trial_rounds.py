@@ -1,0 +1,342 @@
+"""The rounds of a trial: candidates draw under equal budgets, the better half goes on, and what stands against it."""
+
+from __future__ import annotations
+
+import math
+from dataclasses import asdict, dataclass, replace
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from fellwalk import trial_merit
+from fellwalk.chain import Block, Chain
+from fellwalk.density import Density
+from fellwalk.errors import StartError
+from fellwalk.motions import Jittered, Lagrangian, Leapfrog
+from fellwalk.settings import Settings
+from fellwalk.settled import SettledChain
+from fellwalk.trial_candidates import LEADER, Candidate, Contender, candidates_for, new_chain, with_rank
+from fellwalk.trial_result import Entry, Trial
+from fellwalk.trial_tuning import Tuner, steepness
+
+__all__ = ["Competition", "Leaders", "budget_for", "settle_leaders"]
+
+_SHARE = 0.15  # of what a run costs without its trial, settling and draws
+_CHAINS = 2  # chains of every candidate but the leader, which has all
+_ROUNDS = (0.5, 0.5, 1.0)  # shares of what is left of the budget
+_MOST_IN_BLOCK = 1000
+_AT_LEAST = 1.1  # a candidate takes the leader's place only where it is worth so many times as much,
+_ERRORS = 1.28  # and by so many standard errors of the logarithm: chance does that once in ten
+_SHY = 4.0  # standard errors by which a tail visited too rarely disqualifies: chance does it to one tail in 30,000
+_APART = 1.1  # split R-hat of ranks above which chains are not of one mind
+_FAILED = 0.01  # share of failed paths beyond the leader's that disqualifies
+_FEW = 10.0  # effective draws below which nothing can be told
+_ONE_STEP = Candidate("one step", Leapfrog(), Jittered("auto"))
+_ROUGH = 1e-3  # energy error of a step a thousandth as long as the settled one: smooth densities have 1e-9
+
+
+def budget_for(settling: float, draws: int, per_draw: float) -> float:
+    """What a run that keeps so many draws in all spends on its trial."""
+    return _SHARE * (settling + draws * per_draw)
+
+
+@dataclass(frozen=True)
+class Leaders:
+    """Settled chains of the leader. gradients: that settling took; per_draw: of a transition in the last part of it."""
+
+    chains: list[Chain]
+    gradients: float
+    per_draw: float
+
+
+def settle_leaders(density: Density, points: NDArray[np.float64], seed: int, acceptance: float) -> Leaders:
+    """Settle the leader's chains from these points, as a run with this seed would."""
+    settings = Settings(motion=LEADER.motion, path=LEADER.path, acceptance=acceptance)
+    chains, gradients, late = [], 0.0, []
+    for c, point in enumerate(points):
+        try:
+            chain = Chain._with_settings(density, settings, point, np.random.SeedSequence(seed, spawn_key=(c,)), None)
+        except StartError as error:
+            raise StartError(f"chain {c + 1} of {len(points)}: {error}") from None
+        block = chain._raised(chain.block(2**62, draws=False))
+        gradients += float(block.facts["gradients"].sum())
+        late.append(float(block.facts["gradients"][-50:].mean()))
+        chains.append(chain)
+    return Leaders(chains, gradients, float(np.mean(late)))
+
+
+class Competition:
+    """The rounds of a trial, from settled chains of the leader to the winner's chains.
+
+    draws: those that the run, which makes the trial, is to keep; where a better candidate takes less for a draw than
+    the leader, the run will be cheaper, and the budget with it. 0: the budget stands.
+    """
+
+    def __init__(self, density: Density, leaders: Leaders, budget: float, seed: int, acceptance: float,
+                 product_cost: float, draws: int = 0) -> None:
+        self.draws = draws
+        self.density, self.budget, self.seed, self.acceptance = density, float(budget), seed, acceptance
+        self.product_cost, self.settling = product_cost, leaders.gradients
+        self.parts = [SettledChain.of(chain) for chain in leaders.chains]
+        self.begun = [chain.position for chain in leaders.chains]
+        directions = max(len(part.variances) for part in self.parts)
+        self.leader = Contender(LEADER, list(leaders.chains), [[] for _ in leaders.chains])
+        self.others = [Contender(c) for c in candidates_for(density.dimension, directions)[1:]]
+        self.plain = [c for c in self.others if c.candidate.name == "leapfrog, rank 0"]
+        self.out: list[tuple[Contender, str]] = []
+        self.blocks: list[dict[str, Any]] = []
+        self.remarks: list[str] = []
+        self.rough = False
+        self.worths: dict[str, trial_merit.Worth] = {}
+        self.gradients: list[NDArray[np.float64]] = []
+        self.tuned: dict[int, Tuner] = {}
+        self.spread = np.ones(density.dimension)
+
+    def go(self) -> Trial:
+        """All rounds."""
+        self._look_for_noise()
+        live = [self.leader, *self.others]
+        for number, share in enumerate(_ROUNDS):
+            left = self.budget - self._spent()
+            if left <= 0.0:
+                break
+            allowance = share * left / len(live)
+            for contender in list(live):
+                if not self._give(contender, allowance, number):
+                    live.remove(contender)
+                    self.out.append((contender, "its share of the budget was not enough to find its step size"))
+                if contender is self.leader and number == 0:
+                    self.spread = np.maximum(self.leader.stacked().var(axis=(0, 1)), 1e-300)
+            live = self._weigh(live, number, last=number == len(_ROUNDS) - 1)
+            best = live[0]
+            if self.draws > 0:
+                per_draw = best.drawing / best.transitions
+                self.budget = min(self.budget, budget_for(self.settling, self.draws, per_draw))
+        return self._end(live)
+
+    def _spent(self) -> float:
+        return sum(c.spent for c in (self.leader, *self.others))
+
+    # ---- drawing ------------------------------------------------------------------------------------------------
+
+    def _price(self, block: Block) -> float:
+        return float(block.facts["gradients"].sum()) + self.product_cost * float(block.facts["products"].sum())
+
+    def _give(self, contender: Contender, allowance: float, number: int) -> bool:
+        """Let a candidate draw for about `allowance`; in its first round it pays its tuning from that. False where it
+        could not even be tuned."""
+        until = contender.spent + allowance
+        if not contender.chains and not self._enter(contender, allowance):
+            return False
+        contender.rounds = number + 1
+        fewest = trial_merit.FEWEST * len(contender.chains)
+        while contender.spent < until or contender.transitions < fewest:
+            for c, chain in enumerate(contender.chains):
+                block = chain._raised(chain.block(self._block_size(contender, until),
+                                                  gradients=contender is self.leader and number == 0))
+                contender.take(block, c, self._price(block))
+                if block.gradients is not None:
+                    self.gradients.append(block.gradients)
+        return True
+
+    def _block_size(self, contender: Contender, until: float) -> int:
+        """Transitions of the next block of each chain: the fewest first, then as many as the rest may pay for."""
+        chains = len(contender.chains)
+        if contender.transitions < trial_merit.FEWEST * chains:
+            return trial_merit.FEWEST
+        each = contender.drawing / contender.transitions
+        return int(np.clip((until - contender.spent) / (each * chains), 1, _MOST_IN_BLOCK))
+
+    def _enter(self, contender: Contender, allowance: float) -> bool:
+        """Tune a candidate on its first chain. Where the surrogate field caps its acceptance the cheapest field that is
+        left takes its place."""
+        tuner = self._tuned(contender, allowance)
+        motion = contender.candidate.motion
+        if tuner is not None and tuner.capped and isinstance(motion, Lagrangian):
+            curvature = "difference" if self.density.hessian_product is None else "product"
+            contender.candidate = replace(contender.candidate, motion=replace(motion, curvature=curvature),
+                                          name=f"{contender.candidate.name}, {curvature}")
+            tuner = self._tuned(contender, allowance)
+        if tuner is None:
+            return False
+        self.tuned[self._key(contender)] = tuner
+        self._fill(contender, min(_CHAINS, len(self.parts)))
+        return True
+
+    def _tuned(self, contender: Contender, allowance: float) -> Tuner | None:
+        part, motion = with_rank(self.parts[0], contender.candidate.rank), contender.candidate.motion
+        beta = 0.0
+        if isinstance(motion, Lagrangian):
+            beta = motion.bend / max(steepness(part, np.concatenate(self.gradients)), 0.01 * len(part.scale))
+        tuner = Tuner(self.density, contender.candidate, replace(part, beta=beta, steps=0), self.begun[0],
+                      (self.seed, (0, self._key(contender))), self.acceptance, self.product_cost, 0.6 * allowance,
+                      self.spread)
+        fine = tuner.go()
+        contender.spent += tuner.spent
+        return tuner if fine else None
+
+    def _fill(self, contender: Contender, count: int) -> None:
+        """New chains of a tuned candidate, `count` in all."""
+        key = self._key(contender)
+        tuner = self.tuned[key]
+        for c in range(len(contender.chains), count):
+            own = with_rank(self.parts[c], contender.candidate.rank)
+            part = replace(own, step_size=tuner.part.step_size, beta=tuner.part.beta, steps=tuner.part.steps)
+            seed = np.random.SeedSequence(self.seed, spawn_key=(c, key))
+            start = tuner.position if c == 0 else self.begun[c]
+            contender.chains.append(new_chain(self.density, contender.candidate, part, start, seed, self.acceptance))
+            contender.draws.append([])
+            contender.spent += 1.0
+
+    def _key(self, contender: Contender) -> int:
+        return 1 + [id(c) for c in (self.leader, *self.others)].index(id(contender))
+
+    # ---- deciding -----------------------------------------------------------------------------------------------
+
+    def _score(self, contender: Contender) -> float:
+        """Logarithm of effective draws per cost."""
+        return math.log(self.worths[contender.candidate.name].effective / contender.drawing)
+
+    def _weigh(self, live: list[Contender], number: int, *, last: bool) -> list[Contender]:
+        """Measure all, rule out, and keep the better half; the leader stays."""
+        drawn = {c.candidate.name: c.stacked() for c in live}
+        pooled, tail = trial_merit.pool(list(drawn.values())), trial_merit.tail_for(list(drawn.values()))
+        for name, mine in drawn.items():
+            others = [draws for other, draws in drawn.items() if other != name]
+            self.worths[name] = trial_merit.measure(mine, pooled, trial_merit.pool(others) if others else pooled, tail)
+        fine = []
+        for c in live:
+            reason = self._ruled_out(c)
+            if reason and c is not self.leader:
+                self.out.append((c, reason))
+            else:
+                fine.append(c)
+        fine.sort(key=self._score, reverse=True)
+        stay = (*self.plain, self.leader)
+        kept = fine if last else [c for i, c in enumerate(fine) if i < max(2, len(live) // 2) or c in stay]
+        self.out += [(c, f"left after round {number + 1}") for c in fine if c not in kept]
+        self.blocks.append({"round": number + 1, "kept": [c.candidate.name for c in kept], "candidates": [
+            {"name": c.candidate.name, "spent": c.spent, "drawing": c.drawing, "transitions": c.transitions,
+             "failed": c.failed, **asdict(self.worths[c.candidate.name])} for c in live]})
+        return kept
+
+    def _ruled_out(self, contender: Contender) -> str:
+        worth, names = self.worths[contender.candidate.name], self.density.coordinates
+        share = contender.failed / contender.transitions
+        usual = self.leader.failed / self.leader.transitions
+        surely = contender.failed - 2.0 * math.sqrt(contender.failed)  # more than chance would have
+        if surely > (usual + _FAILED) * contender.transitions:
+            return f"{share:.1%} of its paths ended in a failed step ({usual:.1%} of the leader's)"
+        if worth.shy > _SHY:
+            return f"it visited a tail of {names[worth.shy_in]} too rarely, by {worth.shy:.0f} standard errors"
+        return ""
+
+    def _end(self, live: list[Contender]) -> Trial:
+        best = self._chosen(live)
+        told = self._believe(best)
+        if best is not self.leader:
+            self._fill(best, len(self.parts))
+        ranked = [best, *(c for c in live if c is not best)]
+        entries = [self._entry(c, "") for c in ranked]
+        measured = [(c, why) for c, why in self.out if c.candidate.name in self.worths]
+        entries += [self._entry(c, why) for c, why in sorted(measured, key=lambda pair: -self._score(pair[0]))]
+        entries += [Entry(c.candidate.name, 0.0, 0.0, 0.0, 0.0, "", "", 1.0, 0.0, 0, c.spent, 0, why)
+                    for c, why in self.out if c.candidate.name not in self.worths]
+        return Trial(tuple(entries), tuple(self.remarks), told, best.candidate.motion, best.candidate.path,
+                     tuple(best.chains), self.budget, self._spent(), self.settling, tuple(self.blocks))
+
+    def _chosen(self, live: list[Contender]) -> Contender:
+        """The first, unless a plain way may be as good; fewer directions make cheaper steps, unseen by gradients."""
+        best, sure, gain = live[0], 0.0, 0.0
+        plain = [c for c in (*self.plain, self.leader) if c in live and not self._ruled_out(c)]
+        for c in plain:
+            if c is best:
+                self.remarks.append(f"Nothing was measured to be worth more than {c.candidate.name}.")
+                return c
+            gain = self._score(best) - self._score(c)
+            sure = math.hypot(self.worths[c.candidate.name].error, self.worths[best.candidate.name].error)
+            if gain < max(math.log(_AT_LEAST), _ERRORS * sure):
+                self.remarks.append(f"{best.candidate.name} was measured at {math.exp(gain):.2f} times the worth of "
+                                    f"{c.candidate.name}, which could be chance (a standard error is a factor "
+                                    f"{math.exp(sure):.2f}): the plainer way stays.")
+                return c
+        if plain:
+            self.remarks.append(f"{best.candidate.name} is worth {math.exp(gain):.2f} times {plain[-1].candidate.name} "
+                                f"per cost (a standard error is a factor {math.exp(sure):.2f}).")
+        else:
+            self.remarks.append(f"{best.candidate.name} is the best of those that were not ruled out.")
+        return best
+
+    def _entry(self, contender: Contender, why: str) -> Entry:
+        worth = self.worths[contender.candidate.name]
+        per = 1000.0 * worth.effective / contender.drawing
+        reach = math.exp(min(1.96 * worth.error, 700.0))
+        return Entry(contender.candidate.name, per, per / reach, per * reach, worth.effective,
+                     self.density.coordinates[worth.worst], worth.what, worth.apart,
+                     contender.failed / contender.transitions, contender.transitions, contender.spent, contender.rounds,
+                     why)
+
+    # ---- what stands against it ---------------------------------------------------------------------------------
+
+    def _believe(self, best: Contender) -> bool:
+        """Was the budget enough, and do chains from different starts agree? Says so where not."""
+        worth, names = self.worths[best.candidate.name], self.density.coordinates
+        led = self.worths[LEADER.name]
+        told = not self.rough
+        if best is self.leader and self._ruled_out(best):
+            self.remarks.append(f"Of leapfrog, {self._ruled_out(best)}; no candidate was better.")
+            told = False
+        apart, where = (led.apart, led.apart_in) if led.apart > worth.apart else (worth.apart, worth.apart_in)
+        if apart > _APART:
+            groups = self._groups(where)
+            if groups:
+                self.remarks.append(f"Chains from different starts stay in different parts of the target ({groups} in "
+                                    f"{names[where]}, R-hat {apart:.2f}): it has several modes, and no candidate was "
+                                    "seen to pass between them. What was measured is how well they move inside one.")
+            else:
+                self.remarks.append(f"Chains from different starts do not agree yet (R-hat {apart:.2f} in "
+                                    f"{names[where]}): the budget is too small to tell, or the target has parts that "
+                                    "none has found.")
+            told = False
+        if worth.effective < _FEW:
+            self.remarks.append(f"The best had {worth.effective:.1f} effective draws in {names[worth.worst]}: the "
+                                f"budget is too small to tell; ten would take about {self._needed(worth):.0f}.")
+            told = False
+        return told
+
+    def _needed(self, worth: trial_merit.Worth) -> float:
+        return self.budget * _FEW / max(worth.effective, 0.1)
+
+    def _groups(self, coordinate: int) -> str:
+        """The numbers of chains on either side of a gap that none of the leader's chains crosses, or nothing."""
+        draws = self.leader.stacked()[..., coordinate]
+        low, high = draws.min(axis=-1), draws.max(axis=-1)
+        order = np.argsort(low)
+        for i in range(1, len(order)):
+            left, right = order[:i], order[i:]
+            gap = low[right].min() - high[left].max()
+            if gap > 0.0 and gap > 0.5 * max(np.median(high - low), 1e-300):
+                return f"{len(left)} below a gap and {len(right)} above it"
+        return ""
+
+    def _look_for_noise(self) -> None:
+        """The same value twice at the same place, and an energy that hardly changes in a very short step?"""
+        part, x = self.parts[0], self.begun[0]
+        first, second = self.density(x), self.density(x)
+        self.rough = True
+        if first[0] != second[0] or not np.array_equal(first[1], second[1]):
+            self.remarks.append("The density is not smooth: called twice at one point it gave two log densities or "
+                                f"gradients ({first[0]!r}, {second[0]!r}). Every motion needs it to depend on the "
+                                "position alone; what the trial says is not to be believed.")
+            return
+        short = replace(part, step_size=1e-3 * part.step_size, steps=1)
+        seed = np.random.SeedSequence(self.seed, spawn_key=(0, 0))
+        chain = new_chain(self.density, _ONE_STEP, short, x, seed, self.acceptance)
+        errors = chain._raised(chain.block(5)).facts["log_weight_range"]
+        size = 1e-11 * (abs(first[0]) + len(x))
+        self.rough = float(np.median(errors)) > _ROUGH + size
+        if self.rough:
+            self.remarks.append("The density is not smooth: over a step a thousandth as long as the settled one the "
+                                f"energy changes by {np.median(errors):.2g}, so the log density carries noise, or is "
+                                "not what its gradient is the gradient of. What the trial says is not to be believed.")
