@@ -4,6 +4,7 @@ from importlib.metadata import version
 from pathlib import Path
 
 from fellwalk import errors, kernels
+from fellwalk.adapters import from_jax, from_numba, from_torch
 from fellwalk.audit import Audit, audit
 from fellwalk.chain import Block, Chain
 from fellwalk.density import Density
@@ -41,6 +42,9 @@ __all__ = [
     "correlation",
     "errors",
     "free",
+    "from_jax",
+    "from_numba",
+    "from_torch",
     "get_include",
     "increasing",
     "integrate",
