@@ -11,6 +11,7 @@ from fellwalk.density import Density
 from fellwalk.errors import FellwalkError
 from fellwalk.judge import judge
 from fellwalk.judgement import Judgement
+from fellwalk.lockstep import Lockstep
 from fellwalk.motions import Jittered, Lagrangian, Leapfrog, NoUTurn
 from fellwalk.parameter_kinds import between, correlation, free, increasing, positive, shares
 from fellwalk.parameters import Parameters
@@ -31,6 +32,7 @@ __all__ = [
     "Judgement",
     "Lagrangian",
     "Leapfrog",
+    "Lockstep",
     "NoUTurn",
     "Parameters",
     "Result",

@@ -792,6 +792,30 @@ cdef class Maps:
         fw_maps_pull(self.maps, &g[0], with_jacobian, &to[0])
         return out
 
+    def apply_all(self, const double[:, ::1] y not None):
+        """As `apply`, and (n,) truth values: the rows where the user's functions are not called."""
+        x, log_jacobian = np.empty((y.shape[0], self.natural_size)), np.empty(y.shape[0])
+        outside = np.empty(y.shape[0], dtype=np.uint8)
+        cdef double[:, ::1] to = x
+        cdef double[::1] logs = log_jacobian
+        cdef unsigned char[::1] out = outside
+        cdef Py_ssize_t i
+        for i in range(y.shape[0]):
+            logs[i] = fw_maps_apply(self.maps, &y[i, 0], &to[i, 0])
+            out[i] = fw_maps_outside(self.maps) != 0
+        return x, log_jacobian, outside.view(np.bool_)
+
+    def pull_all(self, const double[:, ::1] y not None, const double[:, ::1] g not None):
+        """J^T g plus the gradient of the log-Jacobian, for rows (n, dimension) and (n, natural_size)."""
+        x, pulled = np.empty(self.natural_size), np.empty((y.shape[0], self.dimension))
+        cdef double[::1] at = x
+        cdef double[:, ::1] to = pulled
+        cdef Py_ssize_t i
+        for i in range(y.shape[0]):
+            fw_maps_apply(self.maps, &y[i, 0], &at[0])
+            fw_maps_pull(self.maps, &g[i, 0], 1, &to[i, 0])
+        return pulled
+
     def push(self, const double[::1] y not None, const double[::1] p not None):
         """J p at y."""
         x, out = np.empty(self.natural_size), np.empty(self.natural_size)

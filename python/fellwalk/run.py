@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import contextlib
 import os
 from collections.abc import Mapping
 from concurrent.futures import Executor
@@ -16,8 +17,9 @@ from fellwalk.chain import Chain
 from fellwalk.density import Density, brief
 from fellwalk.driver import Driver
 from fellwalk.errors import ArgumentError, NotWrittenError, OtherModelError, StartError
+from fellwalk.lockstep_run import LockstepRun, check_form, first_lockstep_states
 from fellwalk.model import find_model
-from fellwalk.motions import Motion, Path, real, whole
+from fellwalk.motions import Jittered, Motion, Path, real, whole
 from fellwalk.parameters import Parameters
 from fellwalk.pools import Workers
 from fellwalk.progress import choose_progress
@@ -71,6 +73,8 @@ def run(
         those that stand out, at most 16. settled: another result (or its ``settled``), whose settled parts are used in
         turn in the place of settling; the plan keeps their hash.
     gradients: keep the gradient at every draw (default: up to 1,000 dimensions).
+    Densities made with ``batch=True`` advance all chains together (`Lockstep`), here, on jittered paths; draws then
+        depend on the number of chains too.
     executor: who makes the blocks: any concurrent.futures.Executor (the density then goes to its workers by pickling,
         or by `Density.factory`), "here", "threads", "processes", or None: threads for compiled densities; for Python
         ones worker processes where they save time, else this process. Draws do not depend on it. An executor that was
@@ -88,6 +92,8 @@ def run(
     if not isinstance(density, Density):
         raise ArgumentError(f"the first argument must be a fellwalk.Density; it is {type(density).__name__}: wrap your "
                             "function as fellwalk.Density(function, dimension)")
+    if density.batch is not None:
+        path = Jittered() if path is None else path
     settings = _settings(motion, path, settle, acceptance, step_size, rank)
     taken = settled.settled if isinstance(settled, Result) else settled
     if taken is not None:
@@ -109,6 +115,8 @@ def run(
         "settled": None if taken is None else taken.hash,
         "parameters": None if density.parameters is None else density.parameters.to_json(),
     }
+    if density.batch is not None:
+        plan["lockstep"] = True
     if notes:
         plan["notes"] = dict(notes)
     if starts is None and density.start is None and density.parameters is None:
@@ -120,11 +128,17 @@ def run(
         if audit:
             glance_at_start(density)
         raise
-    states = _first_states(density, settings, points, seed, scale, taken)
+    first = _first_states if density.batch is None else first_lockstep_states
+    states = first(density, settings, points, seed, scale, taken)
     if audit:
         glance(density, points[-1])
     parts = [ChainResult() for _ in states]
     check = Check.of(density, points[0])
+    if density.batch is not None:
+        with contextlib.nullcontext() if record is None else Record.create(record, plan, replace=replace) as file:
+            if file is not None:
+                begin(file, states, check)
+            return _drive_lockstep(plan, density, states, parts, executor, file, progress, seconds)
     transitions = chains * (keep + min(_SETTLE, settings.settle_bounds()[1]))
     with Workers(executor, density, chains, transitions, check) as workers:
         if record is None:
@@ -132,6 +146,12 @@ def run(
         with Record.create(record, plan, replace=replace) as file:
             begin(file, states, check)
             return _drive(plan, states, parts, workers, file, progress, seconds)
+
+
+def _drive_lockstep(plan: dict[str, Any], density: Density, states: list[bytes], parts: list[ChainResult],
+                    executor: object, file: Record | None, progress: object, seconds: float | None) -> Result:
+    told = choose_progress(progress, plan["keep"], [part.count("keep") for part in parts])
+    return LockstepRun(plan, density, states, parts, executor, file, told, seconds).go()
 
 
 def _drive(plan: dict[str, Any], states: list[bytes], parts: list[ChainResult], workers: Workers, file: Record | None,
@@ -187,6 +207,7 @@ def resume(
     with Record.open(record, write=True) as file:
         plan = plan_of(file)
         density = density or _named(file, plan)
+        check_form(density, plan, file.path)
         check = _agreed(file, plan, density)
         if keep is not None:
             keep = whole("keep", keep, 1, 2**40)
@@ -195,6 +216,11 @@ def resume(
                                     f"ask for more, not for {keep}")
             plan = {**plan, "keep": keep}
         parts, states = read_parts(file), read_states(file)
+        if density.batch is not None:
+            if keep is not None:
+                file.set_entry("settings", plan)
+            file.append_event("resumed")
+            return _drive_lockstep(plan, density, states, parts, executor, file, progress, seconds)
         left = sum(plan["keep"] - part.count("keep") + _SETTLE * (not part.summary.get("settled")) for part in parts)
         with Workers(executor, density, plan["chains"], left, check) as workers:
             if keep is not None:
