@@ -195,11 +195,12 @@ def test_single_precision_is_refused_with_the_line_that_ends_it():
     assert said.splitlines()[-1] == "-12.5"
 
 
-def test_where_jax_is_not_loaded_yet_double_precision_is_switched_on():
+def test_in_another_process_double_precision_is_switched_on_before_the_function_brings_jax():
     said = run_alone("""
         import pickle, cloudpickle, subprocess, sys
-        import fellwalk as fw
-        density = fw.from_jax(lambda x: -0.5 * x @ x, 2)
+        import fellwalk as fw, jax.numpy as jnp, jax
+        jax.config.update("jax_enable_x64", True)
+        density = fw.from_jax(lambda x: -0.5 * jnp.sum(x * x), 2)
         code = "import pickle, sys; print(pickle.load(sys.stdin.buffer)([0.1, 0.2])[0])"
         print(density([0.1, 0.2])[0])
         print(subprocess.run([sys.executable, "-c", code], input=cloudpickle.dumps(density), capture_output=True,

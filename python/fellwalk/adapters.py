@@ -7,10 +7,12 @@ measured by benchmarks/call_time.py (the same function in NumPy: 1.4 microsecond
 from __future__ import annotations
 
 import importlib
+import pickle
 import sys
 from collections.abc import Callable
 from typing import Any
 
+import cloudpickle
 import numpy as np
 from numpy.typing import NDArray
 
@@ -47,17 +49,21 @@ def _function(f: object, library: str) -> None:
 # ---- JAX -------------------------------------------------------------------------------------------------------------
 
 
-def from_jax(f: Callable[[Any], Any], dimension: int | Parameters, **named: Any) -> Density:
+def from_jax(f: Callable[[Any], Any], dimension: int | Parameters, *, batch: bool = False, **named: Any) -> Density:
     """The density of a JAX function, with gradient and Hessian product by automatic differentiation.
 
     f: x of shape (dimension,), a float64 JAX array, to the log density, a float64 scalar; it must be one that jax.jit
         takes. With Parameters x holds the flat natural values. named: start=, names= of `fellwalk.Density`.
     Log density and gradient come from one compiled call, and a Hessian product from one that fuses all three. x goes in
     as it is and the gradient comes out without a copy. A gradient costs 9 microseconds, a Hessian product 14.
+    batch: all chains of a run advance together, f still being of one point: jax.vmap makes it one of many. Worth it
+        where a call costs more than the arithmetic of f (benchmarks/lockstep.py).
     Errors: ArgumentError without JAX, in single precision, or when f does not give a float64 scalar.
     """
     _function(f, "jax")
     function = JaxFunction(f, _size(dimension))
+    if batch:
+        return Density(function.many, dimension, batch=True, hessian_product=function.multiply, **named)
     return Density(function, dimension, hessian_product=function.multiply, **named)
 
 
@@ -72,13 +78,7 @@ class JaxFunction:
         self._compile()
 
     def _compile(self) -> None:
-        fresh = "jax" not in sys.modules
-        jax = _imported("jax", "JAX")
-        if fresh:  # nobody here has calculated anything in single precision
-            jax.config.update("jax_enable_x64", True)
-        if not jax.config.jax_enable_x64:
-            raise ArgumentError("JAX computes in single precision here, which is too coarse for following a path back; "
-                                f"before anything else is computed, say: {_JAX_LINE}")
+        jax = _jax()
         found = jax.eval_shape(self.f, jax.ShapeDtypeStruct((self.size,), np.float64))
         if getattr(found, "shape", None) != () or found.dtype != np.float64:
             raise ArgumentError("the JAX function must return one float64 number; for x of shape "
@@ -92,11 +92,17 @@ class JaxFunction:
             return jax.numpy.stack(jax.jvp(packed, (x,), (p,)))
 
         self._packed, self._fused = jax.jit(packed), jax.jit(fused)
+        self._many = jax.jit(jax.vmap(jax.value_and_grad(self.f)))
 
     def __call__(self, x: Array) -> tuple[float, Array]:
         """(log density, gradient (dimension,)) at x; the gradient is read-only and JAX's own memory."""
         out = _doubles(self._packed(x))
         return float(out[-1]), out[:-1]
+
+    def many(self, x: Array) -> tuple[Array, Array]:
+        """(log densities (m,), gradients (m, dimension)) at the rows of x, read-only."""
+        values, gradients = self._many(x)
+        return _doubles(values), _doubles(gradients)
 
     def together(self, x: Array, p: Array) -> tuple[float, Array, Array]:
         """(log density, gradient, Hessian times p) in one call."""
@@ -107,12 +113,26 @@ class JaxFunction:
         """Hessian at x times p, (dimension,)."""
         return self.together(x, p)[2]
 
-    def __getstate__(self) -> dict[str, Any]:
-        return {"f": self.f, "size": self.size}
+    def __reduce__(self) -> tuple[Any, ...]:
+        return _jax_again, (cloudpickle.dumps(self.f), self.size)
 
-    def __setstate__(self, state: dict[str, Any]) -> None:
-        self.__dict__.update(state)
-        self._compile()
+
+def _jax_again(packed: bytes, size: int) -> JaxFunction:
+    """In another process: double precision is on before f, which may bring JAX with it, is unpacked."""
+    _jax()
+    return JaxFunction(pickle.loads(packed), size)
+
+
+def _jax() -> Any:
+    """JAX, in double precision where nobody can have used it before. Errors: ArgumentError."""
+    fresh = "jax" not in sys.modules
+    jax = _imported("jax", "JAX")
+    if fresh:
+        jax.config.update("jax_enable_x64", True)
+    if not jax.config.jax_enable_x64:
+        raise ArgumentError("JAX computes in single precision here, which is too coarse for following a path back; "
+                            f"before anything else is computed, say: {_JAX_LINE}")
+    return jax
 
 
 def _doubles(given: Any) -> Array:

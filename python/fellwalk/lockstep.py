@@ -42,14 +42,25 @@ AUTO_SETTLE = (60, 1500)  # as for single chains, but m draws come with each tra
 
 @dataclass
 class _Path:
-    """Where all chains stand on their paths: x, g (m, d) and value (m,) at the last point, displacement a step u."""
+    """Where all chains stand on their paths: positions x, gradients g, whitened velocities w (m, d), log densities,
+    energies (m,); the least and the largest energy so far; 0 or the status that ended the path, and where."""
 
     x: NDArray[np.float64]
-    u: NDArray[np.float64]
     g: NDArray[np.float64]
+    w: NDArray[np.float64]
     value: NDArray[np.float64]
+    energy: NDArray[np.float64]
+    low: NDArray[np.float64]
+    high: NDArray[np.float64]
     failure: NDArray[np.int32]
     failed_at: dict[int, NDArray[np.float64]]
+
+
+class _Room:
+    """Arrays (m, d) to work in: velocities drawn, velocities and positions on the path, a product, the next point."""
+
+    def __init__(self, m: int, d: int) -> None:
+        self.drawn, self.w, self.x, self.t, self.next_x, self.next_g = (np.empty((m, d)) for _ in range(6))
 
 
 class Lockstep:
@@ -139,6 +150,7 @@ class Lockstep:
     def _plan(self, least: int, most: int) -> None:
         rank = MAX_DIRECTIONS if self.settings.rank == "auto" else int(self.settings.rank)
         m, d = self.x.shape
+        self._room = _Room(m, d)
         self.pool = Pool(m, d, least, most, self.settings.acceptance, rank, self.settings.rank != "auto",
                          self.settings.adapt_scale)
 
@@ -212,72 +224,89 @@ class Lockstep:
             raise
 
     def _travel(self, step: float) -> tuple[NDArray[np.void], dict[int, NDArray[np.float64]]]:
-        m, d = self.x.shape
-        w = self._random.standard_normal((m, d))
+        self._random.standard_normal(out=self._room.drawn)
         steps = 1 + min(int(self._random.random() * self._steps), self._steps - 1)
-        chance = self._random.random(m)
-        weight, path = self._walk(w, step, steps)
-        acceptance = np.where(path.failure == 0, np.exp(np.minimum(weight, 0.0)), 0.0)
+        chance = self._random.random(len(self.x))
+        start, path = self._walk(step, steps)
+        with np.errstate(all="ignore"):
+            acceptance = np.where(path.failure == 0, np.exp(np.minimum(start - path.energy, 0.0)), 0.0)
         take = chance < acceptance
-        facts = np.zeros(m, FACTS)
-        kinetic = 0.5 * np.einsum("ij,ij->i", w, w)
-        facts["energy"] = np.where(take, kinetic - self.value - weight, kinetic - self.value)
-        x, g = (np.where(take[:, None], new, old) for new, old in ((path.x, self.x), (path.g, self.g)))
-        value = np.where(take, path.value, self.value)
+        stay = np.flatnonzero(~take)  # few
+        x, g, value = self._room.next_x, self._room.next_g, np.where(take, path.value, self.value)
+        for to, new, old in ((x, path.x, self.x), (g, path.g, self.g)):
+            np.copyto(to, new)
+            to[stay] = old[stay]
+        facts = np.zeros(len(self.x), FACTS)
         facts["log_density"], facts["acceptance"] = value, acceptance
-        facts["log_weight_range"] = np.where(path.failure == 0, np.abs(weight), 0.0)
+        facts["energy"] = np.where(take, path.energy, start)
+        facts["log_weight_range"] = path.high - path.low
         facts["step_size"], facts["steps"], facts["gradients"], facts["failure"] = step, steps, steps, path.failure
         base = self.base if self.settled else self.pool.update(x, g, float(acceptance.mean()), self.base)
+        self._room.next_x, self._room.next_g = self.x, self.g
         self.x, self.g, self.value, self.base = x, g, value, base
         self.transitions += 1
         self.has_step = True
         return facts, path.failed_at
 
-    def _walk(self, w: NDArray[np.float64], step: float, steps: int) -> tuple[NDArray[np.float64], _Path]:
-        """(log weights (m,), where the paths have ended) of leapfrog steps from here with whitened velocities w."""
-        u = self.base.velocity(w) * step
-        u += self.base.force(self.g, 0.5 * step * step)
-        path = _Path(self.x.copy(), u, self.g, self.value, np.zeros(len(w), np.int32), {})
-        for i in range(steps):
-            path.x += path.u
-            path.value, path.g = evaluate(self.density, path.x, self._maps)
-            self.evaluations += 1
-            self._look(path)
-            with np.errstate(all="ignore"):  # of chains that stand still
-                path.u += self.base.force(path.g, step * step if i + 1 < steps else 0.5 * step * step)
-            if path.failed_at:
-                path.u[path.failure != 0] = 0.0
-        end = self.base.whiten(path.u / step)
-        with np.errstate(all="ignore"):
-            weight = path.value - self.value + 0.5 * (np.einsum("ij,ij->i", w, w) - np.einsum("ij,ij->i", end, end))
-            self._fail(path, (path.failure == 0) & ~np.isfinite(weight), _ENERGY)
-            self._fail(path, (path.failure == 0) & (np.abs(weight) > 1000.0), _RANGE)
-        return np.where(path.failure == 0, weight, -np.inf), path
+    def _walk(self, step: float, steps: int) -> tuple[NDArray[np.float64], _Path]:
+        """(energies at the start (m,), where the paths have ended) of leapfrog steps from here, with the whitened
+        velocities that stand in the working room as drawn."""
+        room, base = self._room, self.base
+        np.copyto(room.w, room.drawn)
+        np.copyto(room.x, self.x)
+        start = 0.5 * np.einsum("ij,ij->i", room.w, room.w) - self.value
+        path = _Path(room.x, self.g, room.w, self.value, start, start.copy(), start.copy(),
+                     np.zeros(len(self.x), np.int32), {})
+        with np.errstate(over="ignore", invalid="ignore"):
+            base.kick(path.g, 0.5 * step, path.w, room.t)
+            for i in range(steps):
+                base.drift(path.w, step, path.x, room.t)
+                path.value, path.g = evaluate(self.density, path.x, self._maps)
+                self.evaluations += 1
+                self._look(path)
+                base.kick(path.g, 0.5 * step, path.w, room.t)
+                path.energy = 0.5 * np.einsum("ij,ij->i", path.w, path.w) - path.value
+                self._weigh(path)
+                if i + 1 < steps:
+                    path.w += room.t
+                if path.failed_at:
+                    path.w[path.failure != 0] = 0.0
+        return start, path
 
     def _look(self, path: _Path) -> None:
         """Which chains have come to where the density cannot be used? They wait at their start."""
-        with np.errstate(all="ignore"):
-            fine = np.isfinite(path.value) & np.isfinite(np.einsum("ij->i", path.g))
-        if np.all(fine | (path.failure != 0)):
+        if math.isfinite(path.value.sum()) and math.isfinite(path.g.sum()):
             return
-        new = ~fine & (path.failure == 0)
-        self._fail(path, new & (path.value == -np.inf), _OUTSIDE)
-        self._fail(path, new & np.isnan(path.value), _NAN)
-        self._fail(path, new & np.isfinite(path.value) & ~np.all(np.isfinite(path.g), axis=1), _GRADIENT)
+        bad = ~(np.isfinite(path.value) & np.all(np.isfinite(path.g), axis=1)) & (path.failure == 0)
+        self._fail(path, bad & (path.value == -np.inf), _OUTSIDE)
+        self._fail(path, bad & np.isnan(path.value), _NAN)
+        self._fail(path, bad & np.isfinite(path.value), _GRADIENT)
+
+    def _weigh(self, path: _Path) -> None:
+        """The range of the energy along the path; it ends where that is beyond all bounds, as in single chains."""
+        going = path.failure == 0
+        finite = going & np.isfinite(path.energy)
+        np.fmin(path.low, path.energy, out=path.low, where=finite)
+        np.fmax(path.high, path.energy, out=path.high, where=finite)
+        if np.all((path.high - path.low <= 1000.0) & finite | ~going):
+            return
+        self._fail(path, going & ~finite, _ENERGY)
+        self._fail(path, (path.failure == 0) & (path.high - path.low > 1000.0), _RANGE)
 
     def _fail(self, path: _Path, which: NDArray[np.bool_], code: int) -> None:
         for chain in np.flatnonzero(which):
             path.failed_at[int(chain)] = path.x[chain].copy()
             path.failure[chain] = code
             path.x[chain] = self.x[chain]
-            path.u[chain] = 0.0
+            path.w[chain] = 0.0
 
     def _search(self) -> None:
         """Double or halve the step until the mean acceptance of one step crosses 1/2; the good side is taken."""
-        w = self._random.standard_normal(self.x.shape)
+        self._random.standard_normal(out=self._room.drawn)
 
         def good(step: float) -> bool:
-            weight, _ = self._walk(w, step, 1)
+            start, path = self._walk(step, 1)
+            weight = np.where(path.failure == 0, start - path.energy, -np.inf)
             return float(np.exp(np.minimum(weight, 0.0)).mean()) > 0.5
 
         step = math.exp(self.pool.log_step)
@@ -356,6 +385,7 @@ class Lockstep:
         self.base = Base(r * r, e, variances)
         self.base.r = r
         self.pool = Pool.from_plain(head["pool"], rows)
+        self._room = _Room(*self.x.shape)
         return self
 
     def __repr__(self) -> str:

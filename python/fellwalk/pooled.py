@@ -1,9 +1,9 @@
 """Settling of chains that advance together: one step size and one base metric for all, learned from all.
 
-The rules are like those of csrc/src/settle.c, with every chain's draws and gradients in one pool: dual averaging of the
-step size towards the mean acceptance; windows, each half as long again as the one before, at whose end the scale is set
-anew; a tail for the step size alone. As the pool is large, directions come from covariances of all coordinates, found in
-every other chain and confirmed in the others. There is no climb: starts belong into or near the bulk.
+The rules are like those of csrc/src/settle.c, with every chain's draws and gradients in one pool: the step size is led
+towards a mean acceptance; windows, each half as long again as the one before, at whose end the scale is set
+anew; a tail for the step size alone. As the pool is large, directions come from covariances of all coordinates: found
+in every other chain, confirmed in the rest. There is no climb: starts belong into the bulk, or near it.
 """
 
 from __future__ import annotations
@@ -18,7 +18,7 @@ __all__ = ["Base", "Pool"]
 
 Array = NDArray[np.float64]
 
-_LEAD, _WINDOW, _TAIL = 10, 10, 30  # transitions; shorter than for single chains, as each brings m draws
+_LEAD, _WINDOW, _TAIL = 10, 10, 50  # transitions; shorter than for single chains, as each brings m draws
 _QUIET = 0.2  # root mean square of log(new / old standard deviation)
 _NUMBERS = 2_000_000  # that the rows of a window may hold
 _MOST_FOR_DIRECTIONS = 500  # dimensions: covariances take d^2 numbers and d^3 operations
@@ -46,21 +46,17 @@ class Base:
         out: Array = y + ((y @ self.e.T) * (self.variances**power - 1.0)) @ self.e
         return out
 
-    def velocity(self, w: Array) -> Array:
-        """S w for rows w."""
-        out: Array = self.stretch(w, 0.5) * self.r
-        return out
+    def kick(self, g: Array, factor: float, w: Array, room: Array) -> None:
+        """w += factor S' g for rows g; leaves the product in room, an array like w."""
+        np.multiply(g, factor * self.r, out=room)
+        if len(self.variances):
+            np.copyto(room, self.stretch(room, 0.5))
+        w += room
 
-    def whiten(self, v: Array) -> Array:
-        """S^-1 v for rows v."""
-        return self.stretch(v / self.r, -0.5)
-
-    def force(self, g: Array, factor: float) -> Array:
-        """factor G0^-1 g for rows g."""
-        if not len(self.variances):
-            out: Array = g * (factor * self.r**2)
-            return out
-        return self.stretch(g * self.r, 1.0) * (factor * self.r)
+    def drift(self, w: Array, factor: float, x: Array, room: Array) -> None:
+        """x += factor S w for rows w; room: an array like w to work in."""
+        np.multiply(self.stretch(w, 0.5), factor * self.r, out=room)
+        x += room
 
     def variance(self) -> Array:
         """Variances of the coordinates, (d,)."""
@@ -81,7 +77,8 @@ class Pool:
         self.change = math.nan
         self.settled = most == 0
         self.search = True
-        self.log_step = self.mu = self.log_average = self.shortfall = self.count = 0.0
+        self.log_step = self.log_average = 0.0
+        self.count = 0
         self.rows_x: list[Array] = []
         self.rows_g: list[Array] = []
         if most:
@@ -91,18 +88,17 @@ class Pool:
 
     # ---- step size --------------------------------------------------------------------------------------------------
 
-    def restart(self, log_step: float, reach: float = 10.0) -> None:
-        """Begin the averaging of the step size at log_step."""
+    def restart(self, log_step: float) -> None:
+        """Begin at log_step, which a search has found."""
         self.log_step = self.log_average = log_step
-        self.mu = log_step + math.log(reach)
-        self.shortfall = self.count = 0.0
+        self.count = 0
 
     def _average(self, acceptance: float) -> None:
-        """Nesterov 2009; Hoffman & Gelman 2014 with their gamma = 0.05, t0 = 10, kappa = 0.75."""
-        self.count += 1.0
-        weight = 1.0 / (self.count + 10.0)
-        self.shortfall = (1.0 - weight) * self.shortfall + weight * (self.acceptance - acceptance)
-        self.log_step = self.mu - math.sqrt(self.count) / 0.05 * self.shortfall
+        """Robbins & Monro 1951, averaged (Polyak & Juditsky 1992). The mean acceptance of many chains falls by about
+        its own size when the step is e times as long, and what is left of its noise is that of the common number of
+        steps: a gain of about 1 that falls slowly."""
+        self.count += 1
+        self.log_step += 1.5 * self.count**-0.6 * (acceptance - self.acceptance)
         share = self.count**-0.75
         self.log_average = share * self.log_step + (1.0 - share) * self.log_average
 
@@ -134,7 +130,7 @@ class Pool:
             return base
         stride = -(-self.window * self.m * self.d // _NUMBERS)
         if self.in_window % stride == 0:
-            self.rows_x, self.rows_g = [*self.rows_x, x], [*self.rows_g, g]
+            self.rows_x, self.rows_g = [*self.rows_x, x.copy()], [*self.rows_g, g.copy()]
         self.in_window += 1
         return self._close(base) if self.in_window == self.window else base
 
