@@ -243,6 +243,20 @@ def test_one_fused_call_gives_all_three_and_no_copy_is_made_on_the_way_out():
     assert not gradient.flags.writeable, "it is a view of JAX's own array"
 
 
+def test_a_function_of_one_point_becomes_one_of_many():
+    density = fw.from_jax(for_jax(), D, batch=True, start=POINTS[0])
+    values, gradients = density.batch(POINTS)
+    assert not gradients.flags.writeable, "it is a view of JAX's own array"
+    for c, x in enumerate(POINTS):
+        value, slope = KNOWN.call(x)
+        assert values[c] == pytest.approx(value, rel=1e-12)
+        np.testing.assert_allclose(gradients[c], slope, rtol=1e-12, atol=1e-12 * np.abs(slope).max())
+    result = fw.run(density, chains=16, keep=50, seed=1, path=fw.Jittered(4), progress="off")
+    assert result.draws.shape == (16, 50, D)
+    again = pickle.loads(cloudpickle.dumps(density))
+    assert np.array_equal(again.batch(POINTS)[1], gradients)
+
+
 # ---- PyTorch --------------------------------------------------------------------------------------------------------
 
 

@@ -104,10 +104,10 @@ def planted_kick(monkeypatch):
     """The second half kick of every step is 15% too long, so that paths cannot be walked back."""
     kick, calls = pooled.Base.kick, []
 
-    def longer(self, g, factor, w, room):
-        calls.append(factor)
-        kick(self, g, factor, w, room)
-        if g is not None and len(calls) % 2 == 0:
+    def longer(self, g, by, w, room):
+        calls.append(by)
+        kick(self, g, by, w, room)
+        if len(calls) % 2 == 0:
             w += 0.15 * room
 
     monkeypatch.setattr(pooled.Base, "kick", longer)
@@ -534,12 +534,3 @@ def test_a_density_of_batches_is_python_and_plain():
         Lockstep(fw.Density(lambda x: (0.0, x), 2), np.ones((2, 2)))
     with pytest.raises(errors.ShapeError, match=r"starts must have shape \(chains, 3\)"):
         Lockstep(MADE, np.ones(3))
-
-
-def test_from_jax_makes_one_of_a_function_of_one_point():
-    jax = pytest.importorskip("jax")
-    jax.config.update("jax_enable_x64", True)
-    density = fw.from_jax(lambda x: -0.5 * (x @ x), 3, batch=True, start=[0.1, 0.2, 0.3])
-    result = run(density, chains=16, keep=50)
-    assert result.draws.shape == (16, 50, 3)
-    np.testing.assert_allclose(result.gradients, -result.draws, rtol=1e-14)

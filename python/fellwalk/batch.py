@@ -52,7 +52,7 @@ def evaluate(density: Density, y: Array, maps: Maps | None) -> tuple[Array, Arra
         values, slopes = _checked(density.batch(x), *x.shape)
         values = np.where(outside, -np.inf, values + log_jacobians)
         gradients = maps.pull_all(y, np.ascontiguousarray(slopes))
-    if np.any(values == np.inf):
+    if not np.add.reduce(values) < np.inf and np.any(values == np.inf):
         row = int(np.argmax(values))
         raise InfiniteDensityError(f"in row {row} of the batch, at {y[row]}: the log density is plus infinity there, "
                                    "so the function is not the logarithm of a density: look for a division by 0 or a "
@@ -66,7 +66,8 @@ def _checked(answer: object, m: int, d: int) -> tuple[Array, Array]:
         raise DensityError(f"a function of a batch of {m} points must return (log densities, gradients); it gave "
                            f"{type(answer).__name__} {answer!r:.60}")
     try:
-        values, gradients = reals(np.asarray(answer[0])), np.asarray(answer[1])
+        values, gradients = np.asarray(answer[0]), np.asarray(answer[1])
+        values = values if values.dtype == np.float64 else reals(values)
         gradients = gradients if gradients.dtype == np.float64 else reals(gradients)
     except (TypeError, ValueError, OverflowError):
         raise DensityError("a function of a batch must return arrays of real numbers") from None

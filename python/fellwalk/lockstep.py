@@ -257,25 +257,26 @@ class Lockstep:
         start = 0.5 * np.einsum("ij,ij->i", room.w, room.w) - self.value
         path = _Path(room.x, self.g, room.w, self.value, start, start.copy(), start.copy(),
                      np.zeros(len(self.x), np.int32), {})
+        push, move = 0.5 * step * base.r, step * base.r
         with np.errstate(over="ignore", invalid="ignore"):
-            base.kick(path.g, 0.5 * step, path.w, room.t)
+            base.kick(path.g, push, path.w, room.t)
             for i in range(steps):
-                base.drift(path.w, step, path.x, room.t)
+                base.drift(path.w, move, path.x, room.t)
                 path.value, path.g = evaluate(self.density, path.x, self._maps)
                 self.evaluations += 1
                 self._look(path)
-                base.kick(path.g, 0.5 * step, path.w, room.t)
+                base.kick(path.g, push, path.w, room.t)
                 path.energy = 0.5 * np.einsum("ij,ij->i", path.w, path.w) - path.value
                 self._weigh(path)
                 if i + 1 < steps:
-                    path.w += room.t
+                    np.add(path.w, room.t, out=path.w)
                 if path.failed_at:
                     path.w[path.failure != 0] = 0.0
         return start, path
 
     def _look(self, path: _Path) -> None:
         """Which chains have come to where the density cannot be used? They wait at their start."""
-        if math.isfinite(path.value.sum()) and math.isfinite(path.g.sum()):
+        if math.isfinite(np.add.reduce(path.value)) and math.isfinite(np.add.reduce(path.g, axis=None)):
             return
         bad = ~(np.isfinite(path.value) & np.all(np.isfinite(path.g), axis=1)) & (path.failure == 0)
         self._fail(path, bad & (path.value == -np.inf), _OUTSIDE)
@@ -284,6 +285,11 @@ class Lockstep:
 
     def _weigh(self, path: _Path) -> None:
         """The range of the energy along the path; it ends where that is beyond all bounds, as in single chains."""
+        if not path.failed_at and math.isfinite(np.add.reduce(path.energy)):
+            np.minimum(path.low, path.energy, out=path.low)
+            np.maximum(path.high, path.energy, out=path.high)
+            if np.maximum.reduce(path.high - path.low) <= 1000.0:
+                return
         going = path.failure == 0
         finite = going & np.isfinite(path.energy)
         np.fmin(path.low, path.energy, out=path.low, where=finite)

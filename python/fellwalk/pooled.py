@@ -46,17 +46,17 @@ class Base:
         out: Array = y + ((y @ self.e.T) * (self.variances**power - 1.0)) @ self.e
         return out
 
-    def kick(self, g: Array, factor: float, w: Array, room: Array) -> None:
-        """w += factor S' g for rows g; leaves the product in room, an array like w."""
-        np.multiply(g, factor * self.r, out=room)
+    def kick(self, g: Array, by: Array, w: Array, room: Array) -> None:
+        """w += f S' g for rows g, with by = f r; leaves the product in room, an array like w."""
+        np.multiply(g, by, out=room)
         if len(self.variances):
             np.copyto(room, self.stretch(room, 0.5))
-        w += room
+        np.add(w, room, out=w)
 
-    def drift(self, w: Array, factor: float, x: Array, room: Array) -> None:
-        """x += factor S w for rows w; room: an array like w to work in."""
-        np.multiply(self.stretch(w, 0.5), factor * self.r, out=room)
-        x += room
+    def drift(self, w: Array, by: Array, x: Array, room: Array) -> None:
+        """x += f S w for rows w, with by = f r; room: an array like w to work in."""
+        np.multiply(self.stretch(w, 0.5), by, out=room)
+        np.add(x, room, out=x)
 
     def variance(self) -> Array:
         """Variances of the coordinates, (d,)."""
