@@ -712,6 +712,31 @@ def log_determinant(diagonal, u, *, sign=1):
     return value
 
 
+# ---- many points at once ---------------------------------------------------------------------------------------------
+
+def leave(const unsigned char[::1] still not None, double kick, double step, const double[::1] r not None,
+          const double[:, ::1] g not None, double[:, ::1] w not None, double[:, ::1] x not None):
+    """fw_rows_leave; g, w, x (m, d), still (m,), r (d,)."""
+    cdef Py_ssize_t m = g.shape[0], d = g.shape[1]
+    if not (r.shape[0] == d and still.shape[0] == w.shape[0] == x.shape[0] == m and w.shape[1] == x.shape[1] == d):
+        raise ShapeError("the arrays of leave do not belong together")
+    if m and d:
+        with nogil:
+            fw_rows_leave(<size_t>m, <size_t>d, &still[0], kick, step, &r[0], &g[0, 0], &w[0, 0], &x[0, 0])
+
+
+def arrive(const unsigned char[::1] still not None, double kick, const double[::1] r not None,
+           const double[:, ::1] g not None, double[:, ::1] w not None, double[::1] ww not None,
+           double[::1] cc not None):
+    """fw_rows_arrive; g, w (m, d), still, ww, cc (m,), r (d,)."""
+    cdef Py_ssize_t m = g.shape[0], d = g.shape[1]
+    if not (r.shape[0] == d and still.shape[0] == w.shape[0] == ww.shape[0] == cc.shape[0] == m and w.shape[1] == d):
+        raise ShapeError("the arrays of arrive do not belong together")
+    if m and d:
+        with nogil:
+            fw_rows_arrive(<size_t>m, <size_t>d, &still[0], kick, &r[0], &g[0, 0], &w[0, 0], &ww[0], &cc[0])
+
+
 # ---- bounded parameters ----------------------------------------------------------------------------------------------
 
 cdef class Maps:

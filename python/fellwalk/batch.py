@@ -57,11 +57,11 @@ def evaluate(density: Density, y: Array, maps: Maps | None) -> tuple[Array, Arra
         raise InfiniteDensityError(f"in row {row} of the batch, at {y[row]}: the log density is plus infinity there, "
                                    "so the function is not the logarithm of a density: look for a division by 0 or a "
                                    "logarithm of 0 with the wrong sign")
-    return values, gradients
+    return values, np.ascontiguousarray(gradients)
 
 
 def _checked(answer: object, m: int, d: int) -> tuple[Array, Array]:
-    """What the function gave, as float64 arrays of the right shapes; no copy is made of such."""
+    """What the function gave, as float64 arrays of the right shapes; no copy is made of such arrays."""
     if not (isinstance(answer, tuple) and len(answer) == 2):
         raise DensityError(f"a function of a batch of {m} points must return (log densities, gradients); it gave "
                            f"{type(answer).__name__} {answer!r:.60}")

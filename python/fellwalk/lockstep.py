@@ -57,10 +57,10 @@ class _Path:
 
 
 class _Room:
-    """Arrays (m, d) to work in: velocities drawn, velocities and positions on the path, a product, the next point."""
+    """Arrays (m, d) to work in: velocities drawn, velocities and positions on the path, the next point."""
 
     def __init__(self, m: int, d: int) -> None:
-        self.drawn, self.w, self.x, self.t, self.next_x, self.next_g = (np.empty((m, d)) for _ in range(6))
+        self.drawn, self.w, self.x, self.next_x, self.next_g = (np.empty((m, d)) for _ in range(5))
 
 
 class Lockstep:
@@ -257,28 +257,26 @@ class Lockstep:
         start = 0.5 * np.einsum("ij,ij->i", room.w, room.w) - self.value
         path = _Path(room.x, self.g, room.w, self.value, start, start.copy(), start.copy(),
                      np.zeros(len(self.x), np.int32), {})
-        push, move = 0.5 * step * base.r, step * base.r
+        still, ww, cc = np.zeros(len(self.x), np.uint8), 2.0 * (start + self.value), np.zeros(len(self.x))
         with np.errstate(over="ignore", invalid="ignore"):
-            base.kick(path.g, push, path.w, room.t)
-            for i in range(steps):
-                base.drift(path.w, move, path.x, room.t)
+            for _ in range(steps):
+                base.leave(still, step, path.g, path.w, path.x)
                 path.value, path.g = evaluate(self.density, path.x, self._maps)
                 self.evaluations += 1
-                self._look(path)
-                base.kick(path.g, push, path.w, room.t)
-                path.energy = 0.5 * np.einsum("ij,ij->i", path.w, path.w) - path.value
+                base.arrive(still, step, path.g, path.w, ww, cc)
+                path.energy = 0.5 * ww - path.value
+                self._look(path, cc)
                 self._weigh(path)
-                if i + 1 < steps:
-                    np.add(path.w, room.t, out=path.w)
                 if path.failed_at:
-                    path.w[path.failure != 0] = 0.0
+                    np.not_equal(path.failure, 0, out=still, casting="unsafe")
         return start, path
 
-    def _look(self, path: _Path) -> None:
-        """Which chains have come to where the density cannot be used? They wait at their start."""
-        if math.isfinite(np.add.reduce(path.value)) and math.isfinite(np.add.reduce(path.g, axis=None)):
+    def _look(self, path: _Path, cc: NDArray[np.float64]) -> None:
+        """Which chains have come to where the density cannot be used? They wait at their start. cc: (m,), finite where
+        the gradient is."""
+        if not path.failed_at and math.isfinite(np.add.reduce(path.value)) and math.isfinite(np.add.reduce(cc)):
             return
-        bad = ~(np.isfinite(path.value) & np.all(np.isfinite(path.g), axis=1)) & (path.failure == 0)
+        bad = ~(np.isfinite(path.value) & np.isfinite(cc)) & (path.failure == 0)
         self._fail(path, bad & (path.value == -np.inf), _OUTSIDE)
         self._fail(path, bad & np.isnan(path.value), _NAN)
         self._fail(path, bad & np.isfinite(path.value), _GRADIENT)
@@ -304,7 +302,6 @@ class Lockstep:
             path.failed_at[int(chain)] = path.x[chain].copy()
             path.failure[chain] = code
             path.x[chain] = self.x[chain]
-            path.w[chain] = 0.0
 
     def _search(self) -> None:
         """Double or halve the step until the mean acceptance of one step crosses 1/2; the good side is taken."""

@@ -14,6 +14,8 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from fellwalk._core import arrive, leave
+
 __all__ = ["Base", "Pool"]
 
 Array = NDArray[np.float64]
@@ -46,17 +48,23 @@ class Base:
         out: Array = y + ((y @ self.e.T) * (self.variances**power - 1.0)) @ self.e
         return out
 
-    def kick(self, g: Array, by: Array, w: Array, room: Array) -> None:
-        """w += f S' g for rows g, with by = f r; leaves the product in room, an array like w."""
-        np.multiply(g, by, out=room)
-        if len(self.variances):
-            np.copyto(room, self.stretch(room, 0.5))
-        np.add(w, room, out=w)
+    def leave(self, still: NDArray[np.uint8], step: float, g: Array, w: Array, x: Array) -> None:
+        """Half a kick and a drift: w += step/2 S' g, x += step S w, in the rows (m, d) that do not stand still (m,)."""
+        if not len(self.variances):
+            leave(still, 0.5 * step, step, self.r, g, w, x)
+            return
+        w += self.stretch(g * (0.5 * step * self.r), 0.5)
+        w[still != 0] = 0.0
+        x += self.stretch(w, 0.5) * (step * self.r)
 
-    def drift(self, w: Array, by: Array, x: Array, room: Array) -> None:
-        """x += f S w for rows w, with by = f r; room: an array like w to work in."""
-        np.multiply(self.stretch(w, 0.5), by, out=room)
-        np.add(x, room, out=x)
+    def arrive(self, still: NDArray[np.uint8], step: float, g: Array, w: Array, ww: Array, cc: Array) -> None:
+        """Half a kick: w += step/2 S' g; then ww = |w|^2 and cc = |S' g|^2, (m,), of the rows that go on."""
+        if not len(self.variances):
+            arrive(still, 0.5 * step, self.r, g, w, ww, cc)
+            return
+        c = self.stretch(g * self.r, 0.5)
+        w += c * (0.5 * step)
+        ww[:], cc[:] = np.einsum("ij,ij->i", w, w), np.einsum("ij,ij->i", c, c)
 
     def variance(self) -> Array:
         """Variances of the coordinates, (d,)."""
