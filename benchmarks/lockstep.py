@@ -63,7 +63,7 @@ class Way:
 
 
 def main() -> None:
-    repeats, length = (2, 200) if QUICK else (5, 1000)
+    repeats, length = (2, 200) if QUICK else (11, 1000)
     before, rows = busy(), []
     for d in (10, 100):
         one, many = fw.from_jax(springs, d), fw.from_jax(springs, d, batch=True)

@@ -505,6 +505,21 @@ def test_a_limit_of_time_and_ctrl_c_end_at_a_block_edge(tmp_path):
     assert np.array_equal(fw.resume(place, MADE, progress="off").draws, run(keep=400).draws)
 
 
+def test_rows_that_hang_together_are_noticed():
+    """A mean over the batch, which one point alone does not show."""
+    def mixed(x):
+        value, slope = normal(np.ones(3))(x)
+        return value - 0.1 * x.mean(), slope - 0.1 / x.size
+
+    def shared(x):
+        value, slope = normal(np.ones(3))(x)
+        return value, slope.mean(axis=0) + np.zeros_like(x)
+
+    for function in (mixed, shared):
+        with pytest.raises(errors.AuditError, match="depend on its own point only"):
+            run(batch_of(function, 3, start=[0.5, 1.0, 0.1]))
+
+
 WRONG = {
     "path": ({"path": fw.NoUTurn()}, "jittered paths"),
     "motion": ({"motion": fw.Lagrangian()}, "plain leapfrog"),

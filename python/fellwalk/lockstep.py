@@ -128,7 +128,7 @@ class Lockstep:
                                 "batch=True), with f(x) -> (log densities (m,), gradients (m, dimension))")
         if not isinstance(settings.path, Jittered):
             raise ArgumentError("chains in lockstep follow jittered paths, as all of them must make the same number of "
-                                "steps: give path=fellwalk.Jittered(steps)")
+                                "steps: give path=fellwalk.Jittered(steps); in the command, --path jittered")
         if settings.motion != Leapfrog():
             raise ArgumentError("chains in lockstep make plain leapfrog steps: leave motion= out, or give "
                                 "fellwalk.Leapfrog()")

@@ -14,8 +14,8 @@ import numpy as np
 from numpy.typing import ArrayLike
 
 from fellwalk.chain import Block
-from fellwalk.density import Density
-from fellwalk.errors import ArgumentError, OtherModelError, RecordError
+from fellwalk.density import Density, brief
+from fellwalk.errors import ArgumentError, AuditError, OtherModelError, RecordError
 from fellwalk.interrupts import Interrupts
 from fellwalk.lockstep import Lockstep
 from fellwalk.progress import Progress
@@ -26,7 +26,7 @@ from fellwalk.settings import Settings
 from fellwalk.settled import LOCKSTEP_MAGIC, Settled
 from fellwalk.work import Done, Live
 
-__all__ = ["LockstepRun", "check_form", "first_lockstep_states", "states_of"]
+__all__ = ["LockstepRun", "check_form", "check_rows", "first_lockstep_states", "states_of"]
 
 _BLOCK_SECONDS = 0.5
 _BLOCK_BYTES = 64_000_000
@@ -51,6 +51,18 @@ def check_form(density: Density, plan: dict[str, Any], path: str) -> None:
     if plan.get("lockstep", False) != (density.batch is not None):
         made, needed = ("in lockstep", "with") if plan.get("lockstep") else ("of single chains", "without")
         raise OtherModelError(f"{path}: this run is {made}; go on with a density made {needed} batch=True")
+
+
+def check_rows(density: Density, states: list[bytes]) -> None:
+    """Is the last row of a batch what its point gives alone, but for rounding? Errors: AuditError."""
+    chains = Lockstep.from_state(density, states[0])
+    value, gradient = density(chains.x[-1])
+    size = float(np.abs(gradient).max())
+    if not (abs(value - chains.value[-1]) <= 1e-6 * (1.0 + abs(value))
+            and np.abs(gradient - chains.g[-1]).max() <= 1e-6 * (1.0 + size)):
+        raise AuditError(f"at {brief(chains.x[-1])}, the last of {len(chains.x)} points, the function gives the "
+                         f"log density {float(chains.value[-1])!r} in a batch and {value!r} alone (or its gradient "
+                         "differs): each row must depend on its own point only. Look for sums over the batch")
 
 
 class _Inside(Live):

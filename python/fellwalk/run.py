@@ -17,7 +17,7 @@ from fellwalk.chain import Chain
 from fellwalk.density import Density, brief
 from fellwalk.driver import Driver
 from fellwalk.errors import ArgumentError, NotWrittenError, OtherModelError, StartError
-from fellwalk.lockstep_run import LockstepRun, check_form, first_lockstep_states
+from fellwalk.lockstep_run import LockstepRun, check_form, check_rows, first_lockstep_states
 from fellwalk.model import find_model
 from fellwalk.motions import Jittered, Motion, Path, real, whole
 from fellwalk.parameters import Parameters
@@ -132,6 +132,8 @@ def run(
     states = first(density, settings, points, seed, scale, taken)
     if audit:
         glance(density, points[-1])
+        if density.batch is not None:
+            check_rows(density, states)
     parts = [ChainResult() for _ in states]
     check = Check.of(density, points[0])
     if density.batch is not None:
