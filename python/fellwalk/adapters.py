@@ -88,11 +88,15 @@ class JaxFunction:
             value, gradient = jax.value_and_grad(self.f)(x)
             return jax.numpy.concatenate([gradient, value[None]])
 
+        def flat(x: Any) -> Any:
+            values, gradients = jax.vmap(jax.value_and_grad(self.f))(x)
+            return jax.numpy.concatenate([gradients.ravel(), values])
+
         def fused(x: Any, p: Any) -> Any:
             return jax.numpy.stack(jax.jvp(packed, (x,), (p,)))
 
         self._packed, self._fused = jax.jit(packed), jax.jit(fused)
-        self._many = jax.jit(jax.vmap(jax.value_and_grad(self.f)))
+        self._many = jax.jit(flat)
 
     def __call__(self, x: Array) -> tuple[float, Array]:
         """(log density, gradient (dimension,)) at x; the gradient is read-only and JAX's own memory."""
@@ -101,8 +105,8 @@ class JaxFunction:
 
     def many(self, x: Array) -> tuple[Array, Array]:
         """(log densities (m,), gradients (m, dimension)) at the rows of x, read-only."""
-        values, gradients = self._many(x)
-        return _doubles(values), _doubles(gradients)
+        out = _doubles(self._many(x))
+        return out[x.size :], out[: x.size].reshape(x.shape)
 
     def together(self, x: Array, p: Array) -> tuple[float, Array, Array]:
         """(log density, gradient, Hessian times p) in one call."""
