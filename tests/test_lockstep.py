@@ -309,6 +309,19 @@ def test_settling_pools_all_chains():
     assert (hashlib.sha256(chains.base.r.tobytes()).hexdigest(), chains.step_size) == before, "nothing adapts any more"
 
 
+def test_settling_goes_on_while_the_log_density_rises():
+    """From 3,000 standard deviations out, where two windows change nothing: the draws are then of the target. Means of
+    64 chains, 40 draws each that hardly depend on each other: false alarm 1e-6."""
+    x = SPREAD * (3000.0 + 0.1 * np.random.default_rng(3).standard_normal((64, 8)))
+    chains = Lockstep(batch_of(normal(SPREAD), 8), x, seed=6, path=fw.Jittered(6), settle="auto")
+    while not chains.settled:
+        chains.transition()
+    assert chains.transitions > 200
+    draws = np.array([block.draws for block in chains.advance(400)])[:, ::10] / SPREAD
+    assert np.abs(draws).max() < 10.0
+    stat_checks.assert_all([stat_checks.compare_independent_mean(draws[..., i], 0.0) for i in range(8)], 1e-6)
+
+
 def test_directions_are_learned_and_confirmed():
     """A normal whose correlation of 0.99 makes one direction long and nine short."""
     d = 10

@@ -241,7 +241,8 @@ class Lockstep:
         facts["energy"] = np.where(take, path.energy, start)
         facts["log_weight_range"] = path.high - path.low
         facts["step_size"], facts["steps"], facts["gradients"], facts["failure"] = step, steps, steps, path.failure
-        base = self.base if self.settled else self.pool.update(x, g, float(acceptance.mean()), self.base)
+        base = self.base if self.settled else self.pool.update(x, g, float(value.mean()), float(acceptance.mean()),
+                                                                       self.base)
         self._room.next_x, self._room.next_g = self.x, self.g
         self.x, self.g, self.value, self.base = x, g, value, base
         self.transitions += 1

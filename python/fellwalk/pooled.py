@@ -3,7 +3,7 @@
 The rules are like those of csrc/src/settle.c, with every chain's draws and gradients in one pool: the step size is led
 towards a mean acceptance; windows, each half as long again as the one before, at whose end the scale is set
 anew; a tail for the step size alone. As the pool is large, directions come from covariances of all coordinates: found
-in every other chain, confirmed in the rest. There is no climb: starts belong into the bulk, or near it.
+in every other chain, confirmed in the rest. There is no climb; an open plan goes on while the log density rises.
 """
 
 from __future__ import annotations
@@ -87,6 +87,7 @@ class Pool:
         self.search = True
         self.log_step = self.log_average = 0.0
         self.count = 0
+        self.values: list[float] = []
         self.rows_x: list[Array] = []
         self.rows_g: list[Array] = []
         if most:
@@ -124,8 +125,9 @@ class Pool:
         self.window = 0
         self.tail_left = max(1, left if self.least == self.most or left < self.tail else self.tail)
 
-    def update(self, x: Array, g: Array, acceptance: float, base: Base) -> Base:
-        """After a transition that ended at x with gradients g (m, d) each: the base metric from now on."""
+    def update(self, x: Array, g: Array, value: float, acceptance: float, base: Base) -> Base:
+        """After a transition that ended at x with gradients g (m, d) each; value: the mean log density there. The base
+        metric from now on."""
         self.done += 1
         self._average(acceptance)
         if self.tail_left > 0:
@@ -139,15 +141,21 @@ class Pool:
         stride = -(-self.window * self.m * self.d // _NUMBERS)
         if self.in_window % stride == 0:
             self.rows_x, self.rows_g = [*self.rows_x, x.copy()], [*self.rows_g, g.copy()]
+        self.values = [*self.values, value]
         self.in_window += 1
         return self._close(base) if self.in_window == self.window else base
 
     def _close(self, old: Base) -> Base:
         new = learned(np.array(self.rows_x), np.array(self.rows_g), old, self.rank, self.rank_fixed)
         self.change = moved(old, new)
+        middle = len(self.values) // 2
+        rise = float(np.mean(self.values[middle:]) - np.mean(self.values[:middle]))
+        # of m chains in the bulk, where a log density has a standard deviation of about sqrt(d / 2)
+        rising = rise > 0.1 + 4.0 * math.sqrt(self.d / self.m)
+        self.values = []
         self.rows_x, self.rows_g, self.in_window = [], [], 0
         self.windows += 1
-        self.quiet = self.quiet + 1 if self.change < _QUIET else 0
+        self.quiet = self.quiet + 1 if self.change < _QUIET and not rising else 0
         self.search = True
         stable = self.quiet >= 2 and self.done + self.tail >= self.least and self.least < self.most
         self.window = 0 if stable else self._next_window()
