@@ -63,13 +63,14 @@ class Way:
 
 
 def main() -> None:
-    repeats, length = (2, 200) if QUICK else (9, 1000)
+    repeats, length = (2, 200) if QUICK else (7, 1000)
     before, rows = busy(), []
     for d in (10, 100):
-        one, many = fw.from_jax(springs, d), fw.from_jax(springs, d, batch=True)
+        one, many, mapped = fw.from_jax(springs, d), *(fw.from_jax(springs, d, batch=batch) for batch in ("loop", True))
         jittered = fw.Jittered(STEPS[d])
         ways = {
-            f"{CHAINS} in lockstep, jittered": Way(many, CHAINS, length if d < 40 else length // 4, jittered, None),
+            f'{CHAINS} in lockstep, batch="loop"': Way(many, CHAINS, length if d < 40 else length // 4, jittered, None),
+            f"{CHAINS} in lockstep, batch=True": Way(mapped, CHAINS, length if d < 40 else length // 4, jittered, None),
             "4 separate, jittered": Way(one, 4, length, jittered, "here"),
             "4 separate, no-u-turn": Way(one, 4, length, fw.NoUTurn(), "here"),
         }

@@ -243,8 +243,9 @@ def test_one_fused_call_gives_all_three_and_no_copy_is_made_on_the_way_out():
     assert not gradient.flags.writeable, "it is a view of JAX's own array"
 
 
-def test_a_function_of_one_point_becomes_one_of_many():
-    density = fw.from_jax(for_jax(), D, batch=True, start=POINTS[0])
+@pytest.mark.parametrize("batch", [True, "loop"])
+def test_a_function_of_one_point_becomes_one_of_many(batch):
+    density = fw.from_jax(for_jax(), D, batch=batch, start=POINTS[0])
     values, gradients = density.batch(POINTS)
     assert not gradients.flags.writeable, "it is a view of JAX's own array"
     for c, x in enumerate(POINTS):
@@ -255,6 +256,8 @@ def test_a_function_of_one_point_becomes_one_of_many():
     assert result.draws.shape == (16, 50, D)
     again = pickle.loads(cloudpickle.dumps(density))
     assert np.array_equal(again.batch(POINTS)[1], gradients)
+    with pytest.raises(errors.ArgumentError, match="batch must be"):
+        fw.from_jax(for_jax(), D, batch="rows")
 
 
 # ---- PyTorch --------------------------------------------------------------------------------------------------------

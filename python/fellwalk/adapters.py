@@ -49,19 +49,23 @@ def _function(f: object, library: str) -> None:
 # ---- JAX -------------------------------------------------------------------------------------------------------------
 
 
-def from_jax(f: Callable[[Any], Any], dimension: int | Parameters, *, batch: bool = False, **named: Any) -> Density:
+def from_jax(f: Callable[[Any], Any], dimension: int | Parameters, *, batch: bool | str = False,
+             **named: Any) -> Density:
     """The density of a JAX function, with gradient and Hessian product by automatic differentiation.
 
     f: x of shape (dimension,), a float64 JAX array, to the log density, a float64 scalar; it must be one that jax.jit
         takes. With Parameters x holds the flat natural values. named: start=, names= of `fellwalk.Density`.
     Log density and gradient come from one compiled call, and a Hessian product from one that fuses all three. x goes in
     as it is and the gradient comes out without a copy. A gradient costs 9 microseconds, a Hessian product 14.
-    batch: all chains of a run advance together, f still being of one point: jax.vmap makes it one of many. Worth it
-        where a call costs more than the arithmetic of f (benchmarks/lockstep.py).
+    batch: all chains of a run advance together, f still being of one point. Worth it where a call costs more than the
+        arithmetic of f. True: jax.vmap makes it a function of many, which is best where f has matrix products; "loop":
+        the compiled call does one point after the other, best for simple functions (benchmarks/lockstep.py).
     Errors: ArgumentError without JAX, in single precision, or when f does not give a float64 scalar.
     """
     _function(f, "jax")
-    function = JaxFunction(f, _size(dimension))
+    if batch not in (False, True, "loop"):
+        raise ArgumentError(f'batch must be False, True or "loop"; it is {batch!r:.60}')
+    function = JaxFunction(f, _size(dimension), loop=batch == "loop")
     if batch:
         return Density(function.many, dimension, batch=True, hessian_product=function.multiply, **named)
     return Density(function, dimension, hessian_product=function.multiply, **named)
@@ -73,8 +77,8 @@ class JaxFunction:
     Pickles when f does. In a process that has no JAX yet it switches double precision on.
     """
 
-    def __init__(self, f: Callable[[Any], Any], size: int) -> None:
-        self.f, self.size = f, size
+    def __init__(self, f: Callable[[Any], Any], size: int, loop: bool = False) -> None:
+        self.f, self.size, self.loop = f, size, loop
         self._compile()
 
     def _compile(self) -> None:
@@ -89,7 +93,8 @@ class JaxFunction:
             return jax.numpy.concatenate([gradient, value[None]])
 
         def flat(x: Any) -> Any:
-            values, gradients = jax.vmap(jax.value_and_grad(self.f))(x)
+            one = jax.value_and_grad(self.f)
+            values, gradients = jax.lax.map(one, x) if self.loop else jax.vmap(one)(x)
             return jax.numpy.concatenate([gradients.ravel(), values])
 
         def fused(x: Any, p: Any) -> Any:
@@ -118,13 +123,13 @@ class JaxFunction:
         return self.together(x, p)[2]
 
     def __reduce__(self) -> tuple[Any, ...]:
-        return _jax_again, (cloudpickle.dumps(self.f), self.size)
+        return _jax_again, (cloudpickle.dumps(self.f), self.size, self.loop)
 
 
-def _jax_again(packed: bytes, size: int) -> JaxFunction:
+def _jax_again(packed: bytes, size: int, loop: bool) -> JaxFunction:
     """In another process: double precision is on before f, which may bring JAX with it, is unpacked."""
     _jax()
-    return JaxFunction(pickle.loads(packed), size)
+    return JaxFunction(pickle.loads(packed), size, loop)
 
 
 def _jax() -> Any:
