@@ -11,10 +11,7 @@ theirs, and its random numbers are drawn all the same: the others' bits are what
 
 from __future__ import annotations
 
-import hashlib
-import json
 import math
-import struct
 from dataclasses import dataclass
 from typing import Any
 
@@ -26,15 +23,14 @@ from fellwalk.batch import evaluate
 from fellwalk.chain import Block
 from fellwalk.density import Density, as_vector, brief
 from fellwalk.errors import ArgumentError, SettleError, ShapeError, StartError, StateError
+from fellwalk.lockstep_state import pack, unpack
 from fellwalk.motions import Jittered, Leapfrog, whole
 from fellwalk.pooled import Base, Pool, first_scale
 from fellwalk.settings import Settings
-from fellwalk.settled import LOCKSTEP_MAGIC as MAGIC
 from fellwalk.settled import SettledChain
 
 __all__ = ["Lockstep"]
 
-_CHECKSUM_BYTES = 16
 _FAILURE_ROOM = 32  # positions of failed steps kept in one block of a chain
 _OUTSIDE, _NAN, _GRADIENT, _ENERGY, _RANGE = 2, 3, 4, 8, 9  # status codes of the core
 AUTO_SETTLE = (60, 1500)  # as for single chains, but m draws come with each transition
@@ -366,17 +362,15 @@ class Lockstep:
         numbers, rows = self.pool.to_plain()
         stream = self._random.bit_generator.state
         arrays = [self.x, self.g, self.value, self.base.r, self.base.e, self.base.variances, *rows]
-        head = json.dumps({
+        return pack({
             "settings": self.settings.to_json(), "pool": numbers, "random": stream, "has_step": self.has_step,
-            "transitions": self.transitions, "evaluations": self.evaluations, "shapes": [a.shape for a in arrays],
-        }).encode()
-        body = MAGIC + struct.pack("<Q", len(head)) + head + b"".join(a.astype("<f8").tobytes() for a in arrays)
-        return body + hashlib.blake2b(body, digest_size=_CHECKSUM_BYTES).digest()
+            "transitions": self.transitions, "evaluations": self.evaluations,
+        }, arrays)
 
     @classmethod
     def from_state(cls, density: Density, state: bytes) -> Lockstep:
         """The chains that `state` was taken from, over the same density. Errors: StateError."""
-        head, arrays = _read(state)
+        head, arrays = unpack(state)
         self = cls.__new__(cls)
         self._make(density, Settings.from_json(head["settings"]), 0)
         self._random.bit_generator.state = head["random"]
@@ -395,26 +389,3 @@ class Lockstep:
     def __repr__(self) -> str:
         m, d = self.x.shape
         return f"<Lockstep of {m} chains of {d} coordinates, {self.transitions} transitions, {self.phase}>"
-
-
-def _read(state: bytes) -> tuple[dict[str, Any], list[NDArray[np.float64]]]:
-    if not isinstance(state, bytes) or not state.startswith(MAGIC):
-        raise StateError("this is not a state of chains in lockstep: it does not begin as one")
-    body, checksum = state[:-_CHECKSUM_BYTES], state[-_CHECKSUM_BYTES:]
-    if hashlib.blake2b(body, digest_size=_CHECKSUM_BYTES).digest() != checksum:
-        raise StateError("the stored state is damaged: it does not agree with its checksum")
-    start = len(MAGIC) + 8
-    (length,) = struct.unpack("<Q", body[len(MAGIC) : start])
-    head = json.loads(body[start : start + length])
-    numbers = np.frombuffer(body[start + length :], "<f8").astype(np.float64)
-    ends = np.cumsum([math.prod(shape) for shape in head["shapes"]])
-    return head, [numbers[end - math.prod(shape) : end].reshape(shape).copy()
-                  for end, shape in zip(ends, head["shapes"], strict=True)]
-
-
-def settled_of_state(state: bytes) -> SettledChain:
-    """The settled part in a state of `Lockstep`. Errors: SettleError, StateError."""
-    head, arrays = _read(state)
-    if not (head["pool"]["settled"] and head["has_step"]):
-        raise SettleError("these chains have not settled yet, so they have no settled part to use again")
-    return SettledChain(arrays[3] ** 2, arrays[4], arrays[5], math.exp(head["pool"]["log_step"]), 0.0)

@@ -65,7 +65,7 @@ class Settled:
             raise AssertionError("reading a state calls no density")
 
         if states and states[0].startswith(LOCKSTEP_MAGIC):
-            from fellwalk.lockstep import settled_of_state
+            from fellwalk.lockstep_state import settled_of_state
 
             return cls((settled_of_state(states[0]),) * len(states))
         density = Density(unused, dimension, hessian_product=unused)
