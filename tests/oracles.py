@@ -39,13 +39,6 @@ def log_determinant(delta: Array, u: Array, sign: int) -> mp.mpf:
         return mp.log(mp.det(metric(delta, u, sign)))
 
 
-def level(delta: Array, u: Array, sign: int) -> tuple[float, float]:
-    """(q, L): q = sum u^2 / delta and L = 1 + sign q, rounded once."""
-    with mp.workdps(DIGITS):
-        q = sum(mp.mpf(float(b)) ** 2 / mp.mpf(float(a)) for a, b in zip(delta, u, strict=True))
-        return float(q), float(1 + sign * q)
-
-
 # ---- Monge metric and any field in the place of the Hessian ---------------------------------------------------------
 
 
@@ -177,23 +170,6 @@ class Isokinetic:
 
         done = solve_ivp(equations, (0.0, time), np.concatenate([x, v]), method="DOP853", rtol=1e-12, atol=1e-13)
         return done.y[:d, -1], done.y[d:, -1]
-
-
-# ---- derivatives of whole maps --------------------------------------------------------------------------------------
-
-
-def jacobian(walk: Callable[[Array], Array], state: Array, unit: Array, h: float) -> Array:
-    """Jacobian of `walk` in units `unit`: central differences at h, h/2, h/4, extrapolated to O(h^6) (Richardson)."""
-    rows = []
-    for i in range(len(state)):
-        found = []
-        for size in (h, h / 2, h / 4):
-            move = np.zeros(len(state))
-            move[i] = size * unit[i]
-            found.append((walk(state + move) - walk(state - move)) / (2.0 * size * unit))
-        first = [(4.0 * found[1] - found[0]) / 3.0, (4.0 * found[2] - found[1]) / 3.0]
-        rows.append((16.0 * first[1] - first[0]) / 15.0)
-    return np.array(rows).T
 
 
 # ---- halved steps, from their definition ----------------------------------------------------------------------------

@@ -1,11 +1,8 @@
-"""The O(d) operations on diag(diagonal) + sign u u^T against dense algebra.
+"""The O(d) operations on diag(diagonal) + sign u u^T against exact rationals, many digits and dense algebra.
 
-Tolerances are forward error bounds of the rounding analysis (Higham 2002, Accuracy and Stability of Numerical
-Algorithms, ch. 3): a sum of d products is off by at most d + 1 roundings of the sum of absolute values, and dividing
-by L = 1 + sign q multiplies the relative error of L by (1 + q) / L. SLACK counts the operations beside the sum.
+`fellwalk.testing.check_metric` has the identities and their forward error bounds; here they are joined by determinants
+and solutions of dense matrices in many digits, which know nothing of the formulas for a rank-one term.
 """
-
-from dataclasses import dataclass
 
 import checks
 import mpmath as mp
@@ -18,72 +15,13 @@ from hypothesis import strategies as st
 from scipy import linalg
 
 from fellwalk import errors, kernels
+from fellwalk.testing import Metric, check_metric, metrics
 
-EPS = oracles.EPS / 2
-SLACK = 12
 VECTORS = (kernels.apply, kernels.solve, kernels.velocity, kernels.momentum)
 
 
-@dataclass(frozen=True)
-class Case:
-    diagonal: np.ndarray
-    u: np.ndarray
-    vector: np.ndarray
-    sign: int
-
-    @property
-    def arguments(self):
-        return self.diagonal, self.u, self.vector
-
-    @property
-    def roundings(self):
-        return (len(self.u) + SLACK) * EPS
-
-
-@st.composite
-def cases(draw, most=40, decades=12):
-    """Every entry has a scale of its own in 1e-decades..1e+decades; with sign -1, L goes down to 1e-9."""
-    d = draw(st.integers(1, most))
-    sign = draw(st.sampled_from([1, -1]))
-    rng = np.random.default_rng(draw(st.integers(0, 2**32)))
-    diagonal, vector = (10.0 ** rng.uniform(-decades, decades, d) for _ in range(2))
-    u = 10.0 ** rng.uniform(-decades, decades, d) * rng.choice([-1.0, 1.0], d)
-    u[rng.random(d) < draw(st.sampled_from([0.0, 0.3, 1.0]))] = 0.0
-    if sign == -1 and u.any():
-        q = 1.0 - 10.0 ** draw(st.floats(-9.0, -0.05))
-        u *= np.sqrt(q / np.sum(u**2 / diagonal))
-    return Case(diagonal, u, vector * rng.choice([-1.0, 1.0], d), sign)
-
-
-def conditioning(case):
-    """(L, how many times its own relative error the relative error of L may be)."""
-    q, level = oracles.level(case.diagonal, case.u, case.sign)
-    return level, 1.0 + (1.0 + q) / level
-
-
-def bound_apply(case):
-    delta, u, v = (np.abs(a) for a in case.arguments)
-    return case.roundings * (delta * v + u * (u @ v))
-
-
-def bound_solve(case):
-    delta, u, p = (np.abs(a) for a in case.arguments)
-    level, worse = conditioning(case)
-    return case.roundings * (p / delta + u / delta * (u @ (p / delta)) / level * worse)
-
-
-def bound_velocity(case):
-    delta, u, z = (np.abs(a) for a in case.arguments)
-    level, worse = conditioning(case)
-    root = np.sqrt(level)
-    w = u / np.sqrt(delta)
-    return case.roundings * (z + w * (w @ z) / (root * (1 + root)) * worse) / np.sqrt(delta)
-
-
-def bound_momentum(case):
-    delta, u, z = (np.abs(a) for a in case.arguments)
-    level, worse = conditioning(case)
-    return case.roundings * (np.sqrt(delta) * z + u * ((u / np.sqrt(delta)) @ z) / (1 + np.sqrt(level)) * worse)
+def arguments(metric):
+    return metric.diagonal, metric.u, metric.vector
 
 
 def assert_within(found, exact, bound):
@@ -91,76 +29,23 @@ def assert_within(found, exact, bound):
     assert np.all(off <= bound), f"off by up to {np.max(off / np.maximum(bound, 1e-300)):.3g} bounds"
 
 
-@given(cases())
+@given(metrics(most=40))
+@settings(max_examples=300)
+def test_every_identity_holds(metric):
+    check_metric(metric)
+
+
+@given(metrics())
 @settings(max_examples=150)
-def test_apply_is_the_dense_product(case):
-    found = kernels.apply(*case.arguments, sign=case.sign)
+def test_against_dense_matrices_in_many_digits(metric):
+    """Elimination and the determinant of the whole matrix, at 120 digits."""
+    solved = kernels.solve(*arguments(metric), sign=metric.sign)
     with mp.workdps(oracles.DIGITS):
-        exact = oracles.metric(case.diagonal, case.u, case.sign) * oracles.column(case.vector)
-        assert_within(found, list(exact), bound_apply(case))
-
-
-@given(cases(most=14))
-@settings(max_examples=150)
-def test_solve_is_elimination_in_many_digits(case):
-    found = kernels.solve(*case.arguments, sign=case.sign)
-    with mp.workdps(oracles.DIGITS):
-        assert_within(found, oracles.solve(case.diagonal, case.u, case.sign, case.vector), bound_solve(case))
-
-
-@given(cases())
-@settings(max_examples=150)
-def test_apply_and_solve_undo_each_other(case):
-    """G x^ - p is at most |G| times the error of x^, and G^-1 p^ - v at most |G^-1| times that of p^, plus one more."""
-    delta, u = case.diagonal, case.u
-    solved = kernels.solve(*case.arguments, sign=case.sign)
-    back = kernels.apply(delta, u, solved, sign=case.sign)
-    carried = bound_solve(case)
-    allowed = delta * carried + np.abs(u) * (np.abs(u) @ carried) + bound_apply(Case(delta, u, solved, case.sign))
-    assert np.all(np.abs(back - case.vector) <= allowed * (1 + 1e-9))
-
-    applied = kernels.apply(*case.arguments, sign=case.sign)
-    back = kernels.solve(delta, u, applied, sign=case.sign)
-    carried = bound_apply(case)
-    level, worse = conditioning(case)
-    allowed = carried / delta + np.abs(u) / delta * (np.abs(u) @ (carried / delta)) / level * worse
-    allowed = allowed + bound_solve(Case(delta, u, applied, case.sign))
-    assert np.all(np.abs(back - case.vector) <= allowed * (1 + 1e-9))
-
-
-@given(cases(most=14))
-@settings(max_examples=150)
-def test_log_determinant_is_that_of_the_dense_matrix(case):
-    found = kernels.log_determinant(case.diagonal, case.u, sign=case.sign)
-    q, level = oracles.level(case.diagonal, case.u, case.sign)
-    bound = case.roundings * (np.abs(np.log(case.diagonal)).sum() + abs(np.log(level)) + q / level)
-    with mp.workdps(oracles.DIGITS):
-        exact = oracles.log_determinant(case.diagonal, case.u, case.sign)
-        assert float(abs(mp.mpf(found) - exact)) <= bound
-
-
-def as_matrix(operation, case):
-    """The matrix of a linear operation: its images of the identity's columns, and their error bounds."""
-    bound = {kernels.velocity: bound_velocity, kernels.momentum: bound_momentum}[operation]
-    columns, errors_ = [], []
-    for e in np.eye(len(case.u)):
-        pushed = Case(case.diagonal, case.u, e, case.sign)
-        columns.append(operation(*pushed.arguments, sign=case.sign))
-        errors_.append(bound(pushed))
-    return np.array(columns).T, np.array(errors_).T
-
-
-@given(cases(most=9))
-def test_covariances_of_the_draws_are_exact(case):
-    """M M^T of the maps from z is G^-1 for velocities and G for momenta, in many digits."""
-    with mp.workdps(oracles.DIGITS):
-        dense = oracles.metric(case.diagonal, case.u, case.sign)
-        for operation, exact in ((kernels.velocity, mp.inverse(dense)), (kernels.momentum, dense)):
-            found, off = as_matrix(operation, case)
-            product = mp.matrix(found.tolist()) * mp.matrix(found.tolist()).T
-            bound = (off @ np.abs(found).T + np.abs(found) @ off.T) * (1 + 1e-9) + off @ off.T
-            for i in range(len(case.u)):
-                assert_within([0.0] * len(case.u), list(product[i, :] - exact[i, :]), bound[i])
+        assert_within(solved, oracles.solve(*arguments(metric)[:2], metric.sign, metric.vector),
+                      metric.bound_solve(metric.vector))
+        exact = oracles.log_determinant(metric.diagonal, metric.u, metric.sign)
+        found = kernels.log_determinant(metric.diagonal, metric.u, sign=metric.sign)
+        assert float(abs(mp.mpf(found) - exact)) <= metric.bound_log_determinant
 
 
 @pytest.mark.parametrize("sign", [1, -1])
@@ -199,8 +84,8 @@ def test_draws_have_the_covariance_by_monte_carlo():
     stat_checks.assert_all(found, 1e-6)
 
 
-@given(cases())
-@example(Case(np.array([3.7e-12]), np.array([0.0]), np.array([-2.385e12]), -1))
+@given(metrics())
+@example(Metric(np.array([3.7e-12]), np.array([0.0]), np.array([-2.385e12]), -1))
 def test_without_a_rank_one_term_nothing_but_the_diagonal_is_left(case):
     delta, zero, z = case.diagonal, np.zeros_like(case.u), case.vector
     assert np.array_equal(kernels.apply(delta, zero, z, sign=case.sign), delta * z)
@@ -211,9 +96,9 @@ def test_without_a_rank_one_term_nothing_but_the_diagonal_is_left(case):
     assert abs(kernels.log_determinant(delta, zero, sign=case.sign) - logs.sum()) <= case.roundings * np.abs(logs).sum()
 
 
-@given(cases(), st.sampled_from(VECTORS))
+@given(metrics(most=40), st.sampled_from(VECTORS))
 def test_out_may_be_the_vector_itself_and_gives_the_same_bits(case, operation):
-    fresh = operation(*case.arguments, sign=case.sign)
+    fresh = operation(*arguments(case), sign=case.sign)
     kept = case.vector.copy()
     into = np.full_like(kept, np.nan)
     assert operation(case.diagonal, case.u, kept, sign=case.sign, out=into) is into
@@ -223,22 +108,22 @@ def test_out_may_be_the_vector_itself_and_gives_the_same_bits(case, operation):
     assert kept.tobytes() == fresh.tobytes()
 
 
-@given(cases(), st.sampled_from(VECTORS))
+@given(metrics(most=40), st.sampled_from(VECTORS))
 def test_strided_and_read_only_arrays_are_read_as_they_are(case, operation):
     spread = np.repeat(case.vector, 3)[::3]
     fixed = case.diagonal.copy()
     fixed.flags.writeable = False
     found = operation(fixed, case.u[::-1][::-1], spread, sign=case.sign)
-    assert found.tobytes() == operation(*case.arguments, sign=case.sign).tobytes()
+    assert found.tobytes() == operation(*arguments(case), sign=case.sign).tobytes()
 
 
-@given(cases(), st.sampled_from(VECTORS), st.integers(-30, 30))
+@given(metrics(most=40), st.sampled_from(VECTORS), st.integers(-30, 30))
 def test_units_that_are_powers_of_four_change_no_bit(case, operation, k):
     """x -> 2^k x makes delta, u and velocities 4^-k, 2^-k and 2^k times as large: exact in binary."""
     unit = 2.0**k
     powers = {kernels.apply: (1, -1), kernels.solve: (-1, 1), kernels.velocity: (0, 1), kernels.momentum: (0, -1)}
     given_power, power = powers[operation]
-    fresh = operation(*case.arguments, sign=case.sign)
+    fresh = operation(*arguments(case), sign=case.sign)
     other = operation(case.diagonal / unit**2, case.u / unit, case.vector * unit**given_power, sign=case.sign)
     assert (other / unit**power).tobytes() == fresh.tobytes()
 

@@ -167,7 +167,7 @@ def test_headers_and_type_marker_are_found_where_the_package_is_installed():
 
 def test_the_extra_for_people_at_a_terminal_stays_light():
     extras = project()["optional-dependencies"]
-    assert set(extras) == {"report", "test", "bench", "cluster", "all"}
+    assert set(extras) == {"report", "test", "bench", "cluster", "jax", "torch", "numba", "all"}
     wanted = {requirement.split(">=")[0].split("[")[0] for requirement in extras["all"] + extras["report"]}
     assert wanted == {"fellwalk", "tqdm", "matplotlib", "Jinja2", "loky", "threadpoolctl"}
 

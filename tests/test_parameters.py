@@ -9,7 +9,7 @@ import pytest
 from compiled_densities import DENSITY_SIGNATURE, PRODUCT_SIGNATURE, Plan, ctypes_function
 
 import fellwalk as fw
-from fellwalk import errors
+from fellwalk import errors, testing
 
 PARAMETERS = fw.Parameters(rate=fw.positive(), slope=fw.free(2), share=fw.shares(3), corr=fw.correlation(2))
 START = {"rate": 0.7313, "slope": [-1.4142, 2.385], "share": [0.2, 0.5, 0.3], "corr": [[1, 0.25], [0.25, 1]]}
@@ -129,10 +129,8 @@ def test_every_form_sees_natural_values(form):
     np.testing.assert_allclose(gradient, PARAMETERS.maps().pull(y, slope, True), rtol=1e-13)
     assert density.names == PARAMETERS.names
     assert (density.dimension, density.natural_size) == (6, 7)
-    p = np.random.default_rng(3).standard_normal(6)
-    h = 1e-5  # error of central differences: h^2, 1e-10, and eps/h, 1e-11, times the sizes here, some tens
-    change = (density(y + h * p)[1] - density(y - h * p)[1]) / (2 * h)
-    np.testing.assert_allclose(density.product(y, p), change, rtol=1e-7, atol=1e-7)
+    p, q = np.random.default_rng(3).standard_normal((2, 6))
+    testing.check_hessian_product(density, y, p, q, rtol=1e-7)
 
 
 @pytest.mark.parametrize("form", FORMS)

@@ -8,6 +8,7 @@ import oracles
 import targets
 
 import fellwalk as fw
+from fellwalk import testing
 
 KINDS = {"leapfrog": fw.Leapfrog(), "isokinetic": fw.Isokinetic()} | {
     f"{scheme}, {curvature}": fw.Lagrangian(curvature=curvature, scheme=scheme)
@@ -40,6 +41,11 @@ class Place:
         return fw.integrate(density_of(self.target), x, v, motion=KINDS[kind], step_size=step or self.step, steps=steps,
                             scale=self.scale, beta=self.beta, **named)
 
+    def walk(self, kind):
+        """The motion of this kind here, as `fellwalk.testing` takes it."""
+        beta = 0.0 if kind in FLAT else self.beta
+        return testing.walk_of(density_of(self.target), KINDS[kind], scale=self.scale, beta=beta)
+
     def dense(self, kind):
         """The geometry in which `kind` is written down."""
         if kind == "isokinetic":
@@ -51,17 +57,6 @@ class Place:
     def apart(self, a, b):
         """Largest difference of two states, in the units of the base metric."""
         return max(np.abs((p - q) / np.sqrt(self.scale)).max() for p, q in zip(a, b, strict=True))
-
-    def jacobian(self, kind, step, steps, h):
-        d = len(self.x)
-
-        def walk(state):
-            found = self.go(kind, state[:d], state[d:], step, steps)
-            assert found.status == 0, found.sentence
-            return np.concatenate([found.position, found.velocity])
-
-        unit = np.tile(np.sqrt(self.scale), 2)
-        return oracles.jacobian(walk, np.concatenate([self.x, self.v]), unit, h)
 
 
 PLACES = {

@@ -236,6 +236,18 @@ FW_API size_t fw_chain_state_bytes(const fw_chain *chain);
 FW_API int fw_chain_export(const fw_chain *chain, void *bytes, size_t size);
 FW_API int fw_chain_import(fw_chain *chain, const void *bytes, size_t size);
 
+/* ---- many points at once -----------------------------------------------------------------------------------------
+ * The two halves of a leapfrog step over the base metric G0^-1 = diag(r)^2, for m points of which some stand still
+ * (their rows are not touched). x, w, g are m x d; w are velocities divided by r, as chains keep them. Between leave and
+ * arrive the caller finds the gradients g at x. */
+
+/* w += kick r*g; x += step r*w */
+FW_API void fw_rows_leave(size_t m, size_t d, const unsigned char *still, double kick, double step, const double *r,
+                          const double *g, double *w, double *x);
+/* w += kick r*g; ww and cc, m numbers each: |w|^2 after that, |r*g|^2. */
+FW_API void fw_rows_arrive(size_t m, size_t d, const unsigned char *still, double kick, const double *r, const double *g,
+                           double *w, double *ww, double *cc);
+
 /* ---- bounded parameters ------------------------------------------------------------------------------------------
  * Chains move in free coordinates, all of R^d; the caller's functions see natural values, inside their bounds. A list
  * of maps, one after the other, takes the free coordinates y to the natural values x:

@@ -33,6 +33,7 @@ __all__ = [
     "Judgement",
     "Lagrangian",
     "Leapfrog",
+    "Lockstep",
     "NoUTurn",
     "Parameters",
     "Result",
@@ -45,6 +46,9 @@ __all__ = [
     "correlation",
     "errors",
     "free",
+    "from_jax",
+    "from_numba",
+    "from_torch",
     "get_include",
     "get_library",
     "increasing",
@@ -60,10 +64,12 @@ __all__ = [
 ]
 
 if TYPE_CHECKING:
+    from fellwalk.adapters import from_jax, from_numba, from_torch
     from fellwalk.audit import Audit, audit
     from fellwalk.estimates import Estimates
     from fellwalk.judge import judge
     from fellwalk.judgement import Judgement
+    from fellwalk.lockstep import Lockstep
     from fellwalk.result import Result, load
     from fellwalk.run import resume, run
     from fellwalk.trial import Trial, trial
@@ -74,9 +80,13 @@ else:
         "Audit": "audit",
         "Estimates": "estimates",
         "Judgement": "judgement",
+        "Lockstep": "lockstep",
         "Result": "result",
         "Trial": "trial_result",
         "audit": "audit",
+        "from_jax": "adapters",
+        "from_numba": "adapters",
+        "from_torch": "adapters",
         "judge": "judge",
         "load": "result",
         "resume": "run",

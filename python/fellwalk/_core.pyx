@@ -847,6 +847,31 @@ def log_determinant(diagonal, u, *, sign=1):
     return value
 
 
+# ---- many points at once ---------------------------------------------------------------------------------------------
+
+def leave(const unsigned char[::1] still not None, double kick, double step, const double[::1] r not None,
+          const double[:, ::1] g not None, double[:, ::1] w not None, double[:, ::1] x not None):
+    """fw_rows_leave; g, w, x (m, d), still (m,), r (d,)."""
+    cdef Py_ssize_t m = g.shape[0], d = g.shape[1]
+    if not (r.shape[0] == d and still.shape[0] == w.shape[0] == x.shape[0] == m and w.shape[1] == x.shape[1] == d):
+        raise ShapeError("the arrays of leave do not belong together")
+    if m and d:
+        with nogil:
+            fw_rows_leave(<size_t>m, <size_t>d, &still[0], kick, step, &r[0], &g[0, 0], &w[0, 0], &x[0, 0])
+
+
+def arrive(const unsigned char[::1] still not None, double kick, const double[::1] r not None,
+           const double[:, ::1] g not None, double[:, ::1] w not None, double[::1] ww not None,
+           double[::1] cc not None):
+    """fw_rows_arrive; g, w (m, d), still, ww, cc (m,), r (d,)."""
+    cdef Py_ssize_t m = g.shape[0], d = g.shape[1]
+    if not (r.shape[0] == d and still.shape[0] == w.shape[0] == ww.shape[0] == cc.shape[0] == m and w.shape[1] == d):
+        raise ShapeError("the arrays of arrive do not belong together")
+    if m and d:
+        with nogil:
+            fw_rows_arrive(<size_t>m, <size_t>d, &still[0], kick, &r[0], &g[0, 0], &w[0, 0], &ww[0], &cc[0])
+
+
 # ---- bounded parameters ----------------------------------------------------------------------------------------------
 
 cdef class Maps:
@@ -926,6 +951,30 @@ cdef class Maps:
         fw_maps_apply(self.maps, &y[0], &at[0])
         fw_maps_pull(self.maps, &g[0], with_jacobian, &to[0])
         return out
+
+    def apply_all(self, const double[:, ::1] y not None):
+        """As `apply`, and (n,) truth values: the rows where the user's functions are not called."""
+        x, log_jacobian = np.empty((y.shape[0], self.natural_size)), np.empty(y.shape[0])
+        outside = np.empty(y.shape[0], dtype=np.uint8)
+        cdef double[:, ::1] to = x
+        cdef double[::1] logs = log_jacobian
+        cdef unsigned char[::1] out = outside
+        cdef Py_ssize_t i
+        for i in range(y.shape[0]):
+            logs[i] = fw_maps_apply(self.maps, &y[i, 0], &to[i, 0])
+            out[i] = fw_maps_outside(self.maps) != 0
+        return x, log_jacobian, outside.view(np.bool_)
+
+    def pull_all(self, const double[:, ::1] y not None, const double[:, ::1] g not None):
+        """J^T g plus the gradient of the log-Jacobian, for rows (n, dimension) and (n, natural_size)."""
+        x, pulled = np.empty(self.natural_size), np.empty((y.shape[0], self.dimension))
+        cdef double[::1] at = x
+        cdef double[:, ::1] to = pulled
+        cdef Py_ssize_t i
+        for i in range(y.shape[0]):
+            fw_maps_apply(self.maps, &y[i, 0], &at[0])
+            fw_maps_pull(self.maps, &g[i, 0], 1, &to[i, 0])
+        return pulled
 
     def push(self, const double[::1] y not None, const double[::1] p not None):
         """J p at y."""

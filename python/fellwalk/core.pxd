@@ -171,6 +171,11 @@ cdef extern from "fellwalk.h" nogil:
     int fw_chain_export(const fw_chain *chain, void *bytes, size_t size)
     int fw_chain_import(fw_chain *chain, const void *bytes, size_t size)
 
+    void fw_rows_leave(size_t m, size_t d, const unsigned char *still, double kick, double step, const double *r,
+                       const double *g, double *w, double *x)
+    void fw_rows_arrive(size_t m, size_t d, const unsigned char *still, double kick, const double *r, const double *g,
+                        double *w, double *ww, double *cc)
+
     ctypedef enum fw_map_kind:
         FW_FREE
         FW_ABOVE

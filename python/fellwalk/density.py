@@ -8,6 +8,7 @@ import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
 from fellwalk._core import SENTENCES, UNWRITTEN, MappedTarget, Target, is_compiled, is_unwritten, reals
+from fellwalk.batch import OnePoint
 from fellwalk.errors import (
     ArgumentError,
     CallbackStop,
@@ -49,6 +50,8 @@ class Density:
         it returns 0, or > 0 outside the support, or < 0 to stop.
         Outside the support Python functions return ``-inf`` (the gradient is then not looked at).
         x is lent for the call: its contents are undefined afterwards unless the function keeps the array.
+        with ``batch=True``, ``f(x) -> (log densities, gradients)`` of many points at once, x and gradients of shape
+        (m, dimension), log densities (m,): `fellwalk.run` then lets all chains advance together, one call a step.
     hessian_product: optional ``f(x, p) -> H(x) p``, or a LowLevelCallable with the signature
         ``int (size_t, const double *, const double *, double *, void *)``: dimension, x, p, product, user data.
     names: one name a coordinate; ``x[0]``, ``x[1]``, ... when left out.
@@ -75,6 +78,7 @@ class Density:
         names: Sequence[str] | None = None,
         start: ArrayLike | Mapping[str, ArrayLike] | None = None,
         by_name: bool = False,
+        batch: bool = False,
     ) -> None:
         if not callable(function) and not is_compiled(function):
             raise ArgumentError(f"the log density must be a function or a scipy.LowLevelCallable; it is "
@@ -82,7 +86,11 @@ class Density:
         if hessian_product is not None and not callable(hessian_product) and not is_compiled(hessian_product):
             raise ArgumentError(f"hessian_product must be a function or a scipy.LowLevelCallable; it is "
                                 f"{hessian_product!r:.60}")
-        self.function = function
+        if batch and (is_compiled(function) or in_place or by_name):
+            raise ArgumentError("batch=True is for functions f(x) -> (log densities (m,), gradients (m, dimension)) of "
+                                "points (m, dimension); in_place=, by_name= and compiled ones are for single points")
+        self.batch = function if batch else None
+        self.function = OnePoint(function) if batch else function
         self.in_place = bool(in_place)
         self.hessian_product = hessian_product
         self.parameters = dimension if isinstance(dimension, Parameters) else None

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import contextlib
 import os
 import secrets
 from collections.abc import Callable, Mapping, Sequence
@@ -17,6 +18,7 @@ from fellwalk.chain import Chain
 from fellwalk.density import Density, brief
 from fellwalk.driver import Driver
 from fellwalk.errors import ArgumentError, NotWrittenError, OtherModelError, StartError
+from fellwalk.lockstep_run import LockstepRun, check_form, check_rows, first_lockstep_states
 from fellwalk.model import find_model
 from fellwalk.motions import Jittered, Leapfrog, Motion, NoUTurn, Path, real, whole
 from fellwalk.parameters import Parameters
@@ -83,6 +85,8 @@ def run(
         one draw (parameters,), read-only, that gives a number, a truth value or a vector; of all other coordinates
         running means and variances are kept (``result.moments``), and the verdict says what it judged. Default: all up
         to 20,000 coordinates, beyond that 1,000 of them spread evenly; "all" keeps every draw whole in any dimension.
+        Densities made with ``batch=True`` advance all chains together (`Lockstep`), here, on jittered paths; draws then
+        depend on the number of chains too.
     executor: who makes the blocks: any concurrent.futures.Executor (the density then goes to its workers by pickling,
         or by `Density.factory`), "here", "threads", "processes", or None: threads for compiled densities; for Python
         ones worker processes where they save time, else this process. Draws do not depend on it. An executor that was
@@ -106,6 +110,11 @@ def run(
         motion = None
     if isinstance(settled, Trial):
         motion, path = motion or settled.motion, path or settled.path
+    if density.batch is not None:
+        if auto or watch is not None:
+            raise ArgumentError(f"a density with batch=True keeps whole draws of leapfrog steps; leave out "
+                                f"{'motion=' if auto else 'watch='}, or make the density without batch")
+        path = Jittered() if path is None else path
     settings = _settings(motion, path, settle, acceptance, step_size, rank)
     taken = settled.settled if isinstance(settled, Result | Trial) else settled
     if taken is not None:
@@ -128,6 +137,8 @@ def run(
         "settled": None if taken is None else taken.hash,
         "parameters": None if density.parameters is None else density.parameters.to_json(),
     }
+    if density.batch is not None:
+        plan["lockstep"] = True
     if notes:
         plan["notes"] = dict(notes)
     again = settled.positions if starts is None and isinstance(settled, Trial) else None
@@ -143,7 +154,7 @@ def run(
         if audit:
             glance_at_start(density)
         raise
-    watching = _watch(plan, watch, density, points[0], gradients)
+    watching = None if density.batch is not None else _watch(plan, watch, density, points[0], gradients)
     if auto:
         if audit:
             glance(density, points[-1])
@@ -153,11 +164,19 @@ def run(
                                     step_size=found.chains[0].step_size)
         plan |= {"settings": settings.to_json(), "trial": found.to_json()}
     else:
-        states = _first_states(density, settings, points, seed, scale, taken)
+        first = _first_states if density.batch is None else first_lockstep_states
+        states = first(density, settings, points, seed, scale, taken)
         if audit:
             glance(density, points[-1])
+            if density.batch is not None:
+                check_rows(density, states)
     parts = [ChainResult() for _ in states]
     check = Check.of(density, points[0])
+    if density.batch is not None:
+        with contextlib.nullcontext() if record is None else Record.create(record, plan, replace=replace) as file:
+            if file is not None:
+                begin(file, states, check)
+            return _drive_lockstep(plan, density, states, parts, executor, file, progress, seconds)
     transitions = chains * (keep + min(_SETTLE, settings.settle_bounds()[1]))
     with Workers(executor, density, chains, transitions, check) as workers:
         if record is None:
@@ -165,6 +184,12 @@ def run(
         with Record.create(record, plan, replace=replace) as file:
             begin(file, states, check)
             return _drive(plan, states, parts, workers, file, progress, seconds, watching)
+
+
+def _drive_lockstep(plan: dict[str, Any], density: Density, states: list[bytes], parts: list[ChainResult],
+                    executor: object, file: Record | None, progress: object, seconds: float | None) -> Result:
+    told = choose_progress(progress, plan["keep"], [part.count("keep") for part in parts])
+    return LockstepRun(plan, density, states, parts, executor, file, told, seconds).go()
 
 
 def _drive(plan: dict[str, Any], states: list[bytes], parts: list[ChainResult], workers: Workers, file: Record | None,
@@ -258,6 +283,7 @@ def resume(
     with Record.open(record, write=True) as file:
         plan = plan_of(file)
         density = density or _named(file, plan)
+        check_form(density, plan, file.path)
         check = _agreed(file, plan, density)
         if keep is not None:
             keep = whole("keep", keep, 1, 2**40)
@@ -268,6 +294,11 @@ def resume(
         natural = _natural(density, check.position)
         watching = watch_again(plan.get("watch"), watch, density, natural, file.path)
         parts, states = read_parts(file), read_states(file)
+        if density.batch is not None:
+            if keep is not None:
+                file.set_entry("settings", plan)
+            file.append_event("resumed")
+            return _drive_lockstep(plan, density, states, parts, executor, file, progress, seconds)
         left = sum(plan["keep"] - part.count("keep") + _SETTLE * (not part.summary.get("settled")) for part in parts)
         with Workers(executor, density, plan["chains"], left, check) as workers:
             if keep is not None:

@@ -19,6 +19,8 @@ if TYPE_CHECKING:
 
 __all__ = ["Settled", "SettledChain"]
 
+LOCKSTEP_MAGIC = b"fellwalk lockstep 1\n"  # how the states of chains in lockstep begin
+
 
 @dataclass(frozen=True, eq=False)
 class SettledChain:
@@ -65,6 +67,10 @@ class Settled:
         def unused(*_: object) -> None:
             raise AssertionError("reading a state calls no density")
 
+        if states and states[0].startswith(LOCKSTEP_MAGIC):
+            from fellwalk.lockstep_state import settled_of_state
+
+            return cls((settled_of_state(states[0]),) * len(states))
         density = Density(unused, dimension, hessian_product=unused)
         return cls(tuple(SettledChain.of(Chain.from_state(density, state)) for state in states))
 
