@@ -21,7 +21,7 @@ HEAVY = {
 EMBEDDING = {
     "fellwalk", "fellwalk._core", "fellwalk.errors", "fellwalk.kernels", "fellwalk.chain", "fellwalk.density",
     "fellwalk.motions", "fellwalk.parameter_kinds", "fellwalk.parameters", "fellwalk.paths", "fellwalk.settings",
-    "fellwalk.settled", "fellwalk.watch",
+    "fellwalk.settled", "fellwalk.watch", "fellwalk.batch",
 }  # fmt: skip
 
 

@@ -223,10 +223,10 @@ typedef struct fw_summary {
     double step_size, beta, bend, ceiling;
     double change; /* |log ratio| of standard deviations by which the last window moved the base metric */
     size_t directions;
-    size_t steps; /* jittered path: the most of the next path; else 0 */
     size_t workspace_vectors; /* vectors of d numbers in the workspace */
     size_t workspace_bytes;
     int started, settled;
+    size_t steps; /* jittered path: the most of the next path; else 0 */
 } fw_summary;
 FW_API void fw_chain_summary(const fw_chain *chain, fw_summary *summary);
 

@@ -160,11 +160,11 @@ cdef extern from "fellwalk.h" nogil:
         double ceiling
         double change
         size_t directions
-        size_t steps
         size_t workspace_vectors
         size_t workspace_bytes
         int started
         int settled
+        size_t steps
 
     void fw_chain_summary(const fw_chain *chain, fw_summary *summary)
     size_t fw_chain_state_bytes(const fw_chain *chain)

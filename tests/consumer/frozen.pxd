@@ -164,11 +164,17 @@ cdef extern from "fellwalk.h" nogil:
         size_t workspace_bytes
         int started
         int settled
+        size_t steps
 
     void fw_chain_summary(const fw_chain *chain, fw_summary *summary)
     size_t fw_chain_state_bytes(const fw_chain *chain)
     int fw_chain_export(const fw_chain *chain, void *bytes, size_t size)
     int fw_chain_import(fw_chain *chain, const void *bytes, size_t size)
+
+    void fw_rows_leave(size_t m, size_t d, const unsigned char *still, double kick, double step, const double *r,
+                       const double *g, double *w, double *x)
+    void fw_rows_arrive(size_t m, size_t d, const unsigned char *still, double kick, const double *r, const double *g,
+                        double *w, double *ww, double *cc)
 
     ctypedef enum fw_map_kind:
         FW_FREE

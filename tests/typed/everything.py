@@ -1,7 +1,7 @@
 """A program that uses the whole public interface of fellwalk, for mypy --strict. It is read, not run."""
 
 import ctypes
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
 from concurrent.futures import ThreadPoolExecutor
 from pathlib import Path
 from typing import Any, assert_type
@@ -160,6 +160,34 @@ def whole_run(density: fw.Density) -> None:
     assert_type(judged.least_worth(), int | None)
     assert_type(str(judged), str)
     assert_type(judged.to_dict(), dict[str, Any])
+
+
+def tried(density: fw.Density) -> None:
+    found = fw.trial(density, [0.1, 0.2], budget=5000, chains=4, seed=2, acceptance=0.8, product_cost=2.0)
+    assert_type(found, fw.Trial)
+    assert_type(found.winner, str)
+    assert_type(found.settled, fw.Settled)
+    assert_type(found.positions, Array)
+    assert_type(found.reasons, tuple[str, ...])
+    assert_type(str(found), str)
+    fw.run(density, settled=found)
+    fw.run(density, motion="auto")
+    fw.run(density, motion=fw.Isokinetic(halvings=1), path=fw.Jittered("auto"), watch=["a"])
+
+
+def of_other_libraries(f: Callable[[Any], Any]) -> fw.Density:
+    assert_type(fw.from_jax(f, 2), fw.Density)
+    assert_type(fw.from_torch(f, 2), fw.Density)
+    return fw.from_numba(f, 2, in_place=True)
+
+
+def many(f: Callable[[Array], tuple[Array, Array]]) -> None:
+    density = fw.Density(f, 2, batch=True)
+    chains = fw.Lockstep(density, np.zeros((8, 2)), seed=1, settle="auto")
+    assert_type(chains.settle(), NDArray[np.void])
+    assert_type(chains.advance(10), list[fw.Block])
+    assert_type(chains.state, bytes)
+    assert_type(fw.run(density, [0.0, 0.0], chains=8), fw.Result)
 
 
 def refused(density: fw.Density) -> str:
