@@ -32,8 +32,10 @@ OPTIONS = {"settle": 60, "keep": 540, "chains": 10, "seed": 20, "path": fw.Jitte
 KINDS = ["worker killed", "exception", "Ctrl-C", "driver killed"]
 WEIGHTS = [4, 3, 2, 1]
 
-# calls made, faults met, process id of the driver; shared by all processes forked from here
-shared = mmap.mmap(-1, 24)
+# Shared by all processes forked from here: faults met, process id of the driver, and the calls made, a place for each
+# worker (what two of them add to one number at once would be lost).
+MET, DRIVER, CALLS, PLACES = 0, 1, 2, 256
+shared = mmap.mmap(-1, 8 * (CALLS + PLACES))
 plan: list[tuple[int, str]] = []
 
 
@@ -47,21 +49,23 @@ def put(place, value):
 
 def harmed(x):
     """`curved`, with the faults of the plan."""
-    put(0, get(0) + 1)
-    met = get(1)
-    if met < len(plan) and get(0) >= plan[met][0] and os.getpid() != get(2):
-        put(1, met + 1)
+    mine = CALLS + os.getpid() % PLACES
+    put(mine, get(mine) + 1)
+    met = get(MET)
+    calls = sum(struct.unpack_from(f"{PLACES}q", shared, 8 * CALLS))
+    if met < len(plan) and calls >= plan[met][0] and os.getpid() != get(DRIVER):
+        put(MET, met + 1)
         if plan[met][1] == "worker killed":
             os.kill(os.getpid(), signal.SIGKILL)
         if plan[met][1] == "exception":
             raise Boom("planned")
-        os.kill(get(2), signal.SIGINT if plan[met][1] == "Ctrl-C" else signal.SIGKILL)
+        os.kill(get(DRIVER), signal.SIGINT if plan[met][1] == "Ctrl-C" else signal.SIGKILL)
     return curved(x)
 
 
 def drive(record):
     """One driver process: what it came to, as its exit status."""
-    put(2, os.getpid())
+    put(DRIVER, os.getpid())
     Driver._most = lambda self, chain: BLOCK
     density = fw.Density(harmed, 3, start=START)
     # nobody else ends the idle workers of a killed driver
@@ -88,7 +92,7 @@ def main(record, calls):
             os._exit(drive(record))
         ends[os.waitstatus_to_exitcode(os.waitpid(pid, 0)[1])] += 1
         assert sum(ends.values()) < 5 * FAULTS
-    print(json.dumps({"met": Counter(kind for _, kind in plan[: get(1)]), "ends": ends}))
+    print(json.dumps({"met": Counter(kind for _, kind in plan[: get(MET)]), "ends": ends}))
 
 
 if __name__ == "__main__":

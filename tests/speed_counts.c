@@ -53,7 +53,7 @@ EXPORT long counted(const char *motion, int scheme, int curvature, size_t d, siz
         fw_path_out out = {0};
         int status = fw_chain_new(&target, &random, &settings, &chain);
         if (status != FW_OK) return status < 0 ? status : -status;
-        for (size_t j = 0; j < d; ++j) x[j] = v[j] = 0.3 + 0.01 * (double)j;
+        for (size_t j = 0; j < d; ++j) x[j] = 0.3 + 0.01 * (double)j, v[j] = j % 2 ? x[j] : -x[j];
         const long before = moved;
         status = fw_chain_integrate(chain, x, v, 0.1, i * steps, &out);
         marks[i] = moved - before;

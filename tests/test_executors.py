@@ -82,9 +82,11 @@ def assert_same(result, expected):
 @pytest.mark.filterwarnings("ignore:this executor forks:RuntimeWarning")
 @pytest.mark.filterwarnings("ignore:.*use of fork:DeprecationWarning")
 @pytest.mark.parametrize("kind", EXECUTORS)
-def test_the_same_draws_on_every_executor(kind, expected, compiled):
+def test_the_same_draws_on_every_executor(kind, expected, compiled, request):
     """A lambda-like closure and a compiled density made by a factory, one after the other on one executor; and the
     executor can be used afterwards."""
+    if kind == "fork":
+        request.getfixturevalue("forks")
     with EXECUTORS[kind]() as executor:
         assert_same(fw.run(run_models.slow_density(0.0), **OPTIONS, executor=executor), expected)
         assert_same(fw.run(run_models.compiled_from_factory(), **OPTIONS, executor=executor), compiled)
@@ -136,6 +138,7 @@ def test_dask_merges_no_equal_blocks(cluster, tmp_path):
 
 @pytest.mark.filterwarnings("ignore:this executor forks:RuntimeWarning")
 @pytest.mark.filterwarnings("ignore:.*use of fork:DeprecationWarning")
+@pytest.mark.usefixtures("forks")
 def test_a_large_density_is_sent_only_to_workers_that_lack_it(expected):
     data = np.zeros(300_000)
     density = fw.Density(lambda x: (data[0] + run_models.curved(x)[0], run_models.curved(x)[1]), 3, start=START)
@@ -266,6 +269,7 @@ def test_a_worker_with_another_density_is_refused(how, sentence, tmp_path):
 
 
 @pytest.mark.filterwarnings("ignore:.*use of fork:DeprecationWarning")
+@pytest.mark.usefixtures("forks")
 def test_forking_beside_threads_warns_and_beside_jax_is_refused(monkeypatch):
     event = threading.Event()
     thread = threading.Thread(target=event.wait, name="somebody's thread")

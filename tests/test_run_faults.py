@@ -79,6 +79,7 @@ def test_workers_that_always_die_are_given_up(tmp_path):
 @pytest.mark.filterwarnings("ignore:.*use of fork:DeprecationWarning")
 @pytest.mark.parametrize("make", [lambda: ProcessPoolExecutor(2, mp_context=multiprocessing.get_context("fork")),
                                   lambda: loky.ProcessPoolExecutor(2)])
+@pytest.mark.usefixtures("forks")
 def test_a_broken_executor_of_the_user_leaves_all_safe(make, tmp_path, monkeypatch, small_blocks, expected):
     arm_at(tmp_path, "keep", 100, "kill", monkeypatch)
     record = tmp_path / "a.fell"

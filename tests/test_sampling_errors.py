@@ -24,8 +24,9 @@ def test_stated_errors_agree_with_independent_estimates(name, way):
     """Of one set of draws: means and sds within 10% of Geyer's estimate and 25% of batch means, quantiles within 40%.
 
     Batch means of 141 draws scatter by 4% (some 560 batches) and lose a part 1/141 of the autocorrelation time.
-    Errors of quantiles are errors of probabilities over the slope of the empirical cdf, here taken over four errors on
-    both sides; those two slopes may differ by a quarter.
+    Where the tails put the error of an sd in doubt it is stated wider, at most twice. Errors of quantiles are errors
+    of probabilities over the slope of the empirical cdf, here taken over four errors on both sides; those two slopes
+    may differ by a quarter.
     """
     result = sampling.draw(name, way, keep=20_000, seed=31)
     judged = result.judgement
@@ -38,6 +39,7 @@ def test_stated_errors_agree_with_independent_estimates(name, way):
             "mean, batches": (judged.error[i], stat_checks.batch_means_error(x)[0], 1.25),
             "sd, Geyer": (judged.spread_error[i], stat_checks.geyer_error(squares) / (2 * x.std()), 1.1),
         }
+        wider = {"sd, Geyer"} if judged.spread_in_doubt[i] else set()
         for which, level in LEVELS.items():
             error = stat_checks.geyer_error((x <= getattr(judged, which)[i]).astype(float))
             low, high = np.quantile(x, [level - 4 * error, level + 4 * error])
@@ -45,7 +47,7 @@ def test_stated_errors_agree_with_independent_estimates(name, way):
         bad += [
             f"{name} x[{i}] {what}: stated {stated:.4g}, otherwise {other:.4g}"
             for what, (stated, other, factor) in pairs.items()
-            if not other / factor <= stated <= other * factor
+            if not other / factor <= stated <= other * (2.0 if what in wider else factor)
         ]
     assert not bad, "\n".join(bad)
 

@@ -23,11 +23,12 @@ MOVES = {
     "fw_kick2_spread": (4, 2), "fw_product_dot": (3, 0), "fw_scale_by": (2, 1), "fw_product_sums": (5, 0),
     "fw_kick2": (3, 1), "fw_whiten_square": (2, 1), "fw_kick2_drift_coarsest": (5, 2),
     "fw_probe": (3, 1), "fw_whiten_difference": (3, 1),
-    "fw_difference_dot": (4, 0), "fw_difference_sums": (5, 0),
+    "fw_difference_dot": (4, 0), "fw_difference_sums": (5, 0), "fw_blend": (2, 1),
 }  # fmt: skip
 
 MOTIONS = {
     "leapfrog": (b"leapfrog", 0, 0),
+    "isokinetic": (b"isokinetic", 0, 0),
     "surrogate, either scheme": (b"lagrangian", 0, 0),
     "surrogate, the other": (b"lagrangian", 1, 0),
     "product, split": (b"lagrangian", 0, 2),

@@ -20,7 +20,9 @@
  *   difference, semi-explicit         probe 4, H w 5, kick and drift 7, whiten 3, probe 4, H c 4,     40      39
  *                                     probe 4, H w 5, kick 4
  *
- * What is left, one vector each: in the third row H c as the caller gave it could be kept in the place of H c whitened;
+ * The isokinetic motion reads two vectors more in a turn that begins almost against the gradient.
+ *
+ * What is left, one vector each: in the row "product, split" H c as the caller gave it could be kept in the place of H c whitened;
  * in both semi-explicit rows the S w or the probe of the second half could go with H c.
  */
 #ifndef FW_KERNELS_H

@@ -115,6 +115,9 @@ else:
         """audit, judge, run and trial are functions in modules of the same name: the import of such a module, whoever
         asks for it, must not put it in the function's place."""
 
+        def __reduce__(self):  # functions that are sent by value may hold the package
+            return import_module, (self.__name__,)
+
         def __setattr__(self, name, value):
             if _WHERE.get(name) == name and isinstance(value, ModuleType):
                 value = getattr(value, name)
