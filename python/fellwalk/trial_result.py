@@ -89,7 +89,7 @@ def told_in_words(found: dict[str, Any]) -> str:
     rows = [head]
     for e in found["entries"]:
         where = f"{e['what']} of {e['worst']}" if e["worst"] else ""
-        numbers = (f"{e['worth']:.3g}", f"{e['low']:.2g} to {e['high']:.2g}", f"{e['least']:.0f}", where,
+        numbers = (f"{e['worth']:.3g}", f"{e['low']:.3g} to {e['high']:.3g}", f"{e['least']:.0f}", where,
                    f"{e['apart']:.2f}", f"{e['failed']:.1%}") if e["draws"] else ("", "", "", "", "", "")
         rows.append((e["name"], *numbers, f"{e['spent']:.0f}", e["why"]))
     widths = [max(len(row[i]) for row in rows) for i in range(len(head) - 1)]
