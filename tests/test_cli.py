@@ -8,6 +8,7 @@ from pathlib import Path
 
 import numpy as np
 import pytest
+from command_line import inside
 from run_models import python_density
 
 import fellwalk as fw
@@ -22,17 +23,6 @@ def fellwalk(*arguments, **more):
     done = subprocess.run([sys.executable, "-m", "fellwalk", *map(str, arguments)], capture_output=True, text=True,
                           timeout=60, check=False, **more)
     return done.returncode, done.stdout, done.stderr
-
-
-def inside(capsys, *arguments):
-    """The command in this process, which is quicker."""
-    try:
-        status = cli.main([str(argument) for argument in arguments])
-    except SystemExit as stop:
-        status = stop.code
-    out, err = capsys.readouterr()
-    assert "Traceback" not in err
-    return status, out, err
 
 
 @pytest.fixture

@@ -7,25 +7,14 @@ from pathlib import Path
 
 import numpy as np
 import pytest
+from command_line import inside
 from run_models import START, python_density
 
 import fellwalk as fw
-from fellwalk import cli
 
 MODELS = Path(__file__).with_name("run_models.py")
 MODEL = f"{MODELS}:python_density"
 SHORT = ["--chains", "2", "--settle", "60", "--keep", "40", "--seed", "5", "--executor", "here", "--progress", "off"]
-
-
-def inside(capsys, *arguments):
-    """Exit status, standard output and standard error of the command in this process."""
-    try:
-        status = cli.main([str(argument) for argument in arguments])
-    except SystemExit as stop:
-        status = stop.code
-    out, err = capsys.readouterr()
-    assert "Traceback" not in err
-    return status, out, err
 
 
 @pytest.fixture

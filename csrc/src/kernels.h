@@ -150,5 +150,4 @@ void fw_add_pair(size_t n, const double *a, const double *b, double *out, double
 void fw_seam(size_t n, const double *fa, const double *la, const double *pa, const double *ra, const double *fb,
              const double *lb, const double *pb, const double *rb, double *out, double sums[6]);
 
-
 #endif

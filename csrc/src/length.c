@@ -40,7 +40,7 @@ size_t fw_length_steps(const fw_chain *chain, double step)
     if (!fw_length_found_here(chain)) return chain->settings.steps;
     if (learn->settled) return (size_t)learn->steps;
     uint64_t steps = steps_for(learn->reach, step);
-    /* as for no-U-turn paths: long ones over a base metric that is still wrong buy little */
+    /* as for no-U-turn paths, whose limit grows more slowly: long ones over a base metric still wrong buy little */
     const uint64_t early = 3 + learn->windows / 2;
     if (learn->tail_left == 0 && early < 10 && steps > (UINT64_C(1) << early)) steps = UINT64_C(1) << early;
     return (size_t)steps;

@@ -72,9 +72,6 @@ static void dual_average(fw_learn *learn, double gamma, double least, double tar
     learn->log_average = share * learn->log_step + (1.0 - share) * learn->log_average;
 }
 
-/* No step that is worth its cost lies further below the one where a single step from a typical point is accepted. */
-static double lowest_step(const fw_learn *learn) { return learn->searched - log(100.0); }
-
 static void forget_epoch(fw_learn *learn)
 {
     learn->whole_sum = learn->half_sum = learn->whole_squares = learn->half_squares = 0.0;
@@ -220,6 +217,15 @@ static double mean_and_error(double sum, double squares, uint64_t count, double 
     const double n = (double)count, mean = sum / n;
     *variance = (squares / n - mean * mean) / (n - 1.0);
     return mean;
+}
+
+/* No step that is worth its cost lies further below the one where a single step from a typical point is accepted; and
+ * one look at the acceptance is to be of steps that are much alike. */
+static double lowest_step(const fw_chain *chain)
+{
+    const fw_learn *learn = &chain->learn;
+    const double lowest = learn->searched - log(100.0);
+    return has_ceiling(chain) ? fmax(lowest, learn->epoch_log_step - log(4.0)) : lowest;
 }
 
 /* Rejections at the step and at half of it, over equal lengths, give by extrapolation the rejection that no step can
@@ -418,8 +424,7 @@ void fw_learn_update(fw_chain *chain, const fw_route *route, const fw_facts *fac
     ++learn->done;
     const int pilot = fw_length_piloting(chain);
     if (chain->settings.adapt_step && !route->finer && !pilot) {
-        const double least = has_ceiling(chain) ? fmax(lowest_step(learn), learn->epoch_log_step - log(4.0)) : lowest_step(learn);
-        dual_average(learn, bold(chain)->gamma, least, chain->settings.acceptance, facts->acceptance);
+        dual_average(learn, bold(chain)->gamma, lowest_step(chain), chain->settings.acceptance, facts->acceptance);
     }
     if (has_ceiling(chain) && !pilot) look_at_ceiling(chain, route, facts->acceptance);
     if (tunes_bend(chain)) {

@@ -48,15 +48,12 @@ def chosen(name: str, value: object, choices: tuple[str, ...]) -> str:
 
 
 @dataclass(frozen=True)
-class Leapfrog:
-    """Leapfrog steps over the learned base metric (Duane et al. 1987; Neal 2011).
-
-    halvings: a step may be done as up to 2**halvings smaller ones where the energy swings (0: never).
-    """
+class _OverBase:
+    """A motion over the base metric alone."""
 
     halvings: int = 0
 
-    name = "leapfrog"
+    name = ""
 
     def __post_init__(self) -> None:
         set_plain(self, halvings=whole("halvings", self.halvings, 0, MAX_HALVINGS))
@@ -65,6 +62,16 @@ class Leapfrog:
         """The members of the core's settings that this motion fixes."""
         return {"motion": self.name, "scheme": "split", "curvature": "surrogate", "bend": 0.0,
                 "halvings": self.halvings}
+
+
+@dataclass(frozen=True)
+class Leapfrog(_OverBase):
+    """Leapfrog steps over the learned base metric (Duane et al. 1987; Neal 2011).
+
+    halvings: a step may be done as up to 2**halvings smaller ones where the energy swings (0: never).
+    """
+
+    name = "leapfrog"
 
 
 @dataclass(frozen=True)
@@ -101,7 +108,7 @@ class Lagrangian:
 
 
 @dataclass(frozen=True)
-class Isokinetic:
+class Isokinetic(_OverBase):
     """A velocity of constant length that gradients only turn, over the learned base metric (Ver Steeg & Galstyan 2021;
     Robnik, Cohn-Gordon & Seljak 2025, arXiv 2503.01707), drawn anew for every path and with an accept test.
 
@@ -109,17 +116,7 @@ class Isokinetic:
     length settling finds. halvings: as for Leapfrog.
     """
 
-    halvings: int = 0
-
     name = "isokinetic"
-
-    def __post_init__(self) -> None:
-        set_plain(self, halvings=whole("halvings", self.halvings, 0, MAX_HALVINGS))
-
-    def core(self) -> dict[str, object]:
-        """The members of the core's settings that this motion fixes."""
-        return {"motion": self.name, "scheme": "split", "curvature": "surrogate", "bend": 0.0,
-                "halvings": self.halvings}
 
 
 @dataclass(frozen=True)

@@ -85,8 +85,6 @@ def run(
         one draw (parameters,), read-only, that gives a number, a truth value or a vector; of all other coordinates
         running means and variances are kept (``result.moments``), and the verdict says what it judged. Default: all up
         to 20,000 coordinates, beyond that 1,000 of them spread evenly; "all" keeps every draw whole in any dimension.
-        Densities made with ``batch=True`` advance all chains together (`Lockstep`), here, on jittered paths; draws then
-        depend on the number of chains too.
     executor: who makes the blocks: any concurrent.futures.Executor (the density then goes to its workers by pickling,
         or by `Density.factory`), "here", "threads", "processes", or None: threads for compiled densities; for Python
         ones worker processes where they save time, else this process. Draws do not depend on it. An executor that was
@@ -95,6 +93,9 @@ def run(
     progress: "bars", "lines", "off" or None (bars when a person watches). seconds: stop at a block edge after so long.
     audit: look at the gradient at the last starting point first (ten gradients or so), and refuse one that is wrong.
     notes: what the plan, and so the record, is to keep besides, as plain JSON values by name; reports show them.
+
+    Densities made with ``batch=True`` advance all chains together (`Lockstep`), in this process, on jittered paths;
+    draws then depend on the number of chains too.
 
     The first Ctrl-C ends the run at the next block edge and returns what there is; a second one abandons the
     transitions in hand and raises KeyboardInterrupt. An exception of the density comes out as it was raised, after
