@@ -9,8 +9,6 @@
 #include "kernels.h"
 #include "walk.h"
 
-static int differs(const fw_walk *walk) { return walk->curvature == FW_DIFFERENCE; }
-
 /* Length of a difference along a vector of squared length pp in the base metric: the point moves by sqrt(macheps), or
  * by the root of the coarsest spacing of its coordinates (in base units) where that is larger: the two balance
  * truncation against rounding, in any units. */
@@ -25,13 +23,13 @@ static double length(const fw_point *at, double pp)
 static int ask(fw_walk *walk, const fw_point *at, const double *p, double pp, int spread, double *h)
 {
     const fw_base *base = &walk->base;
-    *h = differs(walk) ? length(at, pp) : 0.0;
-    if (differs(walk) && base->k == 0) {
+    *h = fw_differs(walk) ? length(at, pp) : 0.0;
+    if (fw_differs(walk) && base->k == 0) {
         fw_probe(walk->d, *h, at->x, base->r, p, walk->probe);
         return fw_evaluate_probe(walk);
     }
     if (!spread) fw_base_velocity(base, p, walk->natural);
-    if (!differs(walk)) return fw_multiply(walk, at->x);
+    if (!fw_differs(walk)) return fw_multiply(walk, at->x);
     fw_copy(walk->d, at->x, walk->probe);
     fw_axpy(walk->d, *h, walk->natural, walk->probe);
     return fw_evaluate_probe(walk);
@@ -40,7 +38,7 @@ static int ask(fw_walk *walk, const fw_point *at, const double *p, double pp, in
 /* walk->product from what was asked to H~ p; with learned directions, where nothing is fused. */
 static void whiten_product(fw_walk *walk, const fw_point *at, double h)
 {
-    if (differs(walk)) fw_difference_over(walk->d, walk->product, at->g, 1.0 / h, walk->product);
+    if (fw_differs(walk)) fw_difference_over(walk->d, walk->product, at->g, 1.0 / h, walk->product);
     fw_base_gradient(&walk->base, walk->product, walk->product);
 }
 
@@ -48,7 +46,7 @@ int fw_curve_gradient(fw_walk *walk, fw_point *p)
 {
     const fw_base *base = &walk->base;
     const size_t d = walk->d;
-    const int fused = base->k == 0, spread = fused && !differs(walk);
+    const int fused = base->k == 0, spread = fused && !fw_differs(walk);
     double h, sums[2];
     if (spread) {
         p->cc = fw_whiten_spread(d, base->r, p->g, p->c, walk->natural);
@@ -92,7 +90,7 @@ int fw_curve_velocity(fw_walk *walk, const fw_point *p, int spread, double *whw)
     if (base->k > 0) {
         whiten_product(walk, p, h);
         *whw = fw_dot(walk->d, p->w, walk->product);
-    } else if (differs(walk)) {
+    } else if (fw_differs(walk)) {
         *whw = fw_difference_dot(walk->d, 1.0 / h, base->r, walk->product, p->g, p->w);
     } else {
         *whw = fw_product_dot(walk->d, base->r, walk->product, p->w);
@@ -115,7 +113,7 @@ int fw_curve_velocity_all(fw_walk *walk, const fw_point *p, double sums[4])
         sums[1] = fw_dot(d, walk->product, p->c);
         sums[2] = fw_dot(d, walk->product, p->hc);
         sums[3] = fw_dot(d, p->w, p->hc);
-    } else if (differs(walk)) {
+    } else if (fw_differs(walk)) {
         fw_difference_sums(d, 1.0 / h, base->r, walk->product, p->g, p->w, p->hc, sums);
     } else {
         fw_product_sums(d, base->r, walk->product, p->w, p->c, p->hc, sums);

@@ -112,8 +112,6 @@ static int step_surrogate(fw_walk *walk, fw_point *p, double step)
 
 /* ---- curvature of the density itself ------------------------------------------------------------------------------ */
 
-static int differs(const fw_walk *walk) { return walk->curvature == FW_DIFFERENCE; }
-
 /* b = G^-1 grad phi = bc c + bh hc */
 static void force(const fw_walk *walk, const fw_point *p, double *bc, double *bh)
 {
@@ -130,7 +128,7 @@ static int leave_split(fw_walk *walk, fw_point *p, double step)
     const int status = christoffel(bh, 0.5 * step, p->whw, p->whc, p->chc, 0, &s, &rise);
     if (status != FW_OK) return status;
     p->log_jacobian -= 2.0 * log1p(rise);
-    fw_base_kick2_drift(&walk->base, -s - 0.5 * step * bc, -0.5 * step * bh, step, differs(walk), p);
+    fw_base_kick2_drift(&walk->base, -s - 0.5 * step * bc, -0.5 * step * bh, step, fw_differs(walk), p);
     return FW_OK;
 }
 
@@ -184,7 +182,7 @@ static int leave_semi_explicit(fw_walk *walk, fw_point *p, double step)
 {
     double kc, kh;
     const int status = half_semi_explicit(walk, p, step, &kc, &kh);
-    if (status == FW_OK) fw_base_kick2_drift(&walk->base, kc, kh, step, differs(walk), p);
+    if (status == FW_OK) fw_base_kick2_drift(&walk->base, kc, kh, step, fw_differs(walk), p);
     return status;
 }
 
@@ -227,7 +225,7 @@ static void refresh(const fw_walk *walk, fw_point *p)
 static int complete(fw_walk *walk, fw_point *p)
 {
     if (curved(walk)) {
-        if (differs(walk)) p->coarsest = fw_coarsest(walk->d, walk->base.r, p->x);
+        if (fw_differs(walk)) p->coarsest = fw_coarsest(walk->d, walk->base.r, p->x);
         int status = fw_curve_gradient(walk, p);
         if (status == FW_OK && walk->scheme == FW_SPLIT) {
             p->whc = fw_dot(walk->d, p->w, p->hc);

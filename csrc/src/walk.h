@@ -76,6 +76,9 @@ int fw_evaluate(fw_walk *walk, const double *x, double *value, double *g);
 int fw_evaluate_probe(fw_walk *walk);
 int fw_multiply(fw_walk *walk, const double *x);
 
+/* Are Hessian products differences of gradients? */
+static inline int fw_differs(const fw_walk *walk) { return walk->curvature == FW_DIFFERENCE; }
+
 /* curvature.c: from x, g and, for differences, coarsest of the point: c, cc, hc, chc, hchc. */
 int fw_curve_gradient(fw_walk *walk, fw_point *p);
 /* w.H~w at the point, ww set. spread: walk->natural is S w already. */
