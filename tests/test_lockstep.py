@@ -535,6 +535,8 @@ def test_rows_that_hang_together_are_noticed():
 
 WRONG = {
     "path": ({"path": fw.NoUTurn()}, "jittered paths"),
+    "length": ({"path": fw.Jittered("auto")}, "do not look for the length"),
+    "seed": ({"seed": "x"}, "seed must be a whole number"),
     "motion": ({"motion": fw.Lagrangian()}, "plain leapfrog"),
     "halvings": ({"motion": fw.Leapfrog(halvings=3)}, "plain leapfrog"),
     "executor": ({"executor": "threads"}, "leave executor= out"),

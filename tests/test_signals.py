@@ -170,6 +170,7 @@ def alive(pid):
         return False
 
 
+@pytest.mark.usefixtures("forks")
 def test_an_ignored_ctrl_c_stays_ignored(tmp_path):
     """As under nohup or in the background of a script."""
     record = tmp_path / "a.fell"

@@ -166,7 +166,6 @@ def from_torch(f: Callable[[Any], Any], dimension: int | Parameters, **named: An
     """
     _function(f, "torch")
     function = TorchFunction(f)
-    _size(dimension)
     return Density(function, dimension, hessian_product=function.multiply, **named)
 
 

@@ -287,8 +287,8 @@ class Chain:
         most = _PIECE if whole_rows is None else min(_PIECE, len(whole_rows))
         gradients = np.empty((n, d)) if want_gradients else None
         facts = np.empty(n, dtype=FACTS)
-        failures, done, error, ended = [], 0, None, False
-        while done < n and error is None and self.phase == phase and not ended:
+        failures, done, error = [], 0, None
+        while done < n and error is None and self.phase == phase:
             piece = slice(done, min(n, done + most))
             room = min(piece.stop - done, _FAILURE_ROOM)
             index, code = np.empty(room, np.int64), np.empty(room, np.int32)
@@ -302,13 +302,14 @@ class Chain:
                 if want_draws:
                     draws[done : done + made] = watching.take(whole_rows[:made])
                 position = watching.place(position[:rows])
-            ended = most_gradients > 0
             failures.append((index[:rows] + done, code[:rows], position[:rows].copy()))
             done += made
             self._count()
             if status < 0 and error is None:
                 error = stopped(status, f"transition {self._engine.summary()['transitions'] + 1}", self.density,
                                 self._engine.failed_at())
+            if most_gradients:
+                break
         index, code, position = (np.concatenate(column) for column in zip(*failures, strict=True))
         return Block(phase, draws[:done], None if gradients is None else gradients[:done], facts[:done],
                      (index, code, position), error)

@@ -1,11 +1,13 @@
 """The command: demo, audit, run, resume, report."""
 
 import argparse
+import dataclasses
 import os
 import shlex
 import signal
 import sys
 from collections.abc import Callable, Sequence
+from typing import Any
 
 import numpy as np
 
@@ -17,7 +19,7 @@ from fellwalk.demo.show import show
 from fellwalk.errors import ArgumentError, FellwalkError
 from fellwalk.interrupts import watching
 from fellwalk.model import find_model
-from fellwalk.motions import MOTIONS, PATHS, Isokinetic, Jittered, Lagrangian, Leapfrog, Motion, NoUTurn, Path
+from fellwalk.motions import MOTIONS, PATHS, Jittered, Lagrangian, Motion, NoUTurn, Path
 from fellwalk.result import Result, load
 from fellwalk.run import resume, run
 
@@ -31,9 +33,10 @@ def main(arguments: Sequence[str] | None = None) -> int:
     Ctrl-C and 143 when SIGTERM ended the run early.
     """
     typed = list(sys.argv[1:] if arguments is None else arguments)
-    options = _parser()[0].parse_args(typed)
+    parser, make = _parser()
+    options = parser.parse_args(typed)
     try:
-        options = _with_file(options, typed)
+        options = _with_file(options, typed, parser, make)
         with watching(signal.SIGTERM):
             status = int(options.action(options))
         sys.stdout.flush()
@@ -58,13 +61,14 @@ def main(arguments: Sequence[str] | None = None) -> int:
         return 1
 
 
-def _with_file(options: argparse.Namespace, typed: list[str]) -> argparse.Namespace:
-    """Options again, with a settings file's values in the place of defaults."""
+def _with_file(options: argparse.Namespace, typed: list[str], parser: argparse.ArgumentParser,
+               make: argparse.ArgumentParser) -> argparse.Namespace:
+    """Options again, with a settings file's values in the place of the defaults of `make`, the parser of `run`."""
     if options.command == "run":
-        parser, make = _parser()
         given = read_settings(options.settings, make) if options.settings else {}
-        make.set_defaults(**given)
-        options = parser.parse_args(typed)
+        if given:
+            make.set_defaults(**given)
+            options = parser.parse_args(typed)
         missing = [name for name, there in (("MODEL", options.model), ("--record", options.record)) if not there]
         if missing:
             make.error(f"the following arguments are required: {', '.join(missing)}")
@@ -230,19 +234,17 @@ def _start(text: str | np.ndarray | None) -> np.ndarray | None:
 
 
 def _motion(options: argparse.Namespace) -> Motion | str:
-    if options.motion == "auto":
-        return "auto"
-    if options.motion == "leapfrog":
-        return Leapfrog(halvings=options.halvings)
-    if options.motion == "isokinetic":
-        return Isokinetic(halvings=options.halvings)
-    return Lagrangian(bend=options.bend, curvature=options.curvature, scheme=options.scheme, halvings=options.halvings)
+    return "auto" if options.motion == "auto" else _made(MOTIONS[options.motion], options)
 
 
 def _path(options: argparse.Namespace) -> Path | None:
-    if options.motion == "auto":
-        return None
-    return Jittered(options.steps) if options.path == "jittered" else NoUTurn(options.doublings)
+    return None if options.motion == "auto" else _made(PATHS[options.path], options)
+
+
+def _made(kind: Any, options: argparse.Namespace) -> Any:
+    """A motion or a path from the options named as its fields; a field without an option keeps its default."""
+    there = [field.name for field in dataclasses.fields(kind) if hasattr(options, field.name)]
+    return kind(**{name: getattr(options, name) for name in there})
 
 
 def _run(options: argparse.Namespace) -> int:

@@ -2,20 +2,19 @@
 
 from __future__ import annotations
 
-import contextlib
 import time
 from collections import deque
 from concurrent.futures import Executor, Future
 from queue import Empty, SimpleQueue
 from typing import Any
 
-from fellwalk.errors import Interrupted, RecordError, WorkerError
+from fellwalk.errors import Interrupted, WorkerError
 from fellwalk.interrupts import Interrupts
 from fellwalk.pools import Workers
 from fellwalk.progress import Progress
 from fellwalk.record import Record
 from fellwalk.result import Result
-from fellwalk.run_record import ChainResult, record_block
+from fellwalk.run_record import ChainResult, end_record, kept_where, record_block
 from fellwalk.settings import Settings
 from fellwalk.watch import Watch
 from fellwalk.work import Done, Job
@@ -211,20 +210,12 @@ class Driver:
         path = self.record.path if self.record else ""
         result = Result(self.plan, self.parts, states=self.states, ended=why, path=path)
         error = self._explained(real, result) if real else KeyboardInterrupt() if abandoned and not done else None
-        if self.record:
-            # a full disk must not hide what happened before
-            with contextlib.suppress(*([RecordError] if error else [])):
-                self.record.append_event("stopped" if why else "finished", {"why": why} if why else {})
-        if error is not None:
-            with contextlib.suppress(AttributeError):
-                error.fellwalk_result = result  # type: ignore[attr-defined]
-            raise error
+        end_record(self.record, why, result, error)
         return result
 
     def _explained(self, errors: list[tuple[int, str, BaseException]], result: Result) -> BaseException:
         chain, phase, error = errors[0]
-        kept = (f"the record {result.path} holds every finished block; fellwalk.resume goes on from it" if result.path
-                else "this exception's fellwalk_result holds the draws finished before it")
+        kept = kept_where(result.path)
         if isinstance(error, WorkerError):
             error.add_note(f"fellwalk: the block in hand of chain {chain + 1} is lost; {kept}.")
             return error

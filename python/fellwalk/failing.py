@@ -5,7 +5,8 @@ from typing import Any
 
 import numpy as np
 
-__all__ = ["EDGE_CODES", "FAILED_PLACE", "FAILED_SHARE", "FAILED_THERE", "HARMLESS_CODES", "failing", "further"]
+__all__ = ["EDGE_CODES", "FAILED_PLACE", "FAILED_SHARE", "FAILED_THERE", "HARMLESS_CODES", "failing", "further",
+           "harmful"]
 
 # Failed steps cut paths short, so what lies behind them may be missed. At 400 effective draws the standard error of a
 # probability of 5% is sqrt(0.05 * 0.95 / 400) = 0.011: failures in more than 1% of the transitions could hide as much
@@ -49,6 +50,12 @@ def further(settings: Mapping[str, Any] | None) -> tuple[str, str]:
     return f"acceptance={rate:g}", f"halvings={more}" if more > halvings else ""
 
 
+def harmful(failure: np.ndarray) -> np.ndarray:
+    """Which status codes are of failed steps that may hide a part of the distribution."""
+    found: np.ndarray = (failure != 0) & ~np.isin(failure, HARMLESS_CODES)
+    return found
+
+
 def failing(
     x: np.ndarray, names: Sequence[str], failure: np.ndarray | None, settings: Mapping[str, Any] | None = None
 ) -> list[str]:
@@ -56,7 +63,7 @@ def failing(
     of the run, where they are known."""
     if failure is None:
         return []
-    failed = (failure != 0) & ~np.isin(failure, HARMLESS_CODES)
+    failed = harmful(failure)
     share = failed.mean()
     reasons = []
     if share > FAILED_SHARE:

@@ -9,7 +9,7 @@ import numpy as np
 from matplotlib.axes import Axes
 from numpy.typing import NDArray
 
-from fellwalk.failing import EDGE_CODES, HARMLESS_CODES
+from fellwalk.failing import EDGE_CODES, HARMLESS_CODES, harmful
 from fellwalk.figures import AREA, INK, LINE, MARK, MUTED, WIDTH, Drawing, draw, labels, number, plain, rows_of_labels
 
 if TYPE_CHECKING:
@@ -191,5 +191,5 @@ def _halved(result: Result) -> NDArray[np.bool_]:
     each = 1.0
     if motion.get("curvature") == "difference" and facts.size:
         each = max(1.0, float(np.min(facts["gradients"] / steps)))
-    harmless = (facts["failure"] == 0) | np.isin(facts["failure"], HARMLESS_CODES)
+    harmless = ~harmful(facts["failure"])
     return np.asarray(harmless & (facts["gradients"] > np.ceil(each * steps)), bool)

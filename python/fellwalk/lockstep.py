@@ -125,13 +125,17 @@ class Lockstep:
         if not isinstance(settings.path, Jittered):
             raise ArgumentError("chains in lockstep follow jittered paths, as all of them must make the same number of "
                                 "steps: give path=fellwalk.Jittered(steps); in the command, --path jittered")
+        if settings.path.steps == "auto":
+            raise ArgumentError("chains in lockstep do not look for the length of their paths; give "
+                                "fellwalk.Jittered(steps)")
         if settings.motion != Leapfrog():
             raise ArgumentError("chains in lockstep make plain leapfrog steps: leave motion= out, or give "
                                 "fellwalk.Leapfrog()")
         self.density, self.settings, self._steps = density, settings, settings.path.steps
         self._maps = None if density.parameters is None else density.parameters.maps()
-        sequence = seed if isinstance(seed, np.random.SeedSequence) else np.random.SeedSequence(seed)
-        self._random = np.random.Generator(np.random.PCG64DXSM(sequence))
+        if not isinstance(seed, np.random.SeedSequence):
+            seed = np.random.SeedSequence(None if seed is None else whole("seed", seed, 0, 2**128))
+        self._random = np.random.Generator(np.random.PCG64DXSM(seed))
         self.transitions = self.evaluations = 0
 
     def _start(self, x: NDArray[np.float64]) -> None:
@@ -147,8 +151,7 @@ class Lockstep:
         rank = MAX_DIRECTIONS if self.settings.rank == "auto" else int(self.settings.rank)
         m, d = self.x.shape
         self._room = _Room(m, d)
-        self.pool = Pool(m, d, least, most, self.settings.acceptance, rank, self.settings.rank != "auto",
-                         self.settings.adapt_scale)
+        self.pool = Pool(m, d, least, most, self.settings.acceptance, rank, self.settings.rank != "auto")
 
     # ---- moving -----------------------------------------------------------------------------------------------------
 

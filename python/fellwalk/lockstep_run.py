@@ -6,7 +6,6 @@ stands with the first of them.
 
 from __future__ import annotations
 
-import contextlib
 import time
 from typing import Any
 
@@ -15,13 +14,13 @@ from numpy.typing import ArrayLike
 
 from fellwalk.chain import Block
 from fellwalk.density import Density, brief
-from fellwalk.errors import ArgumentError, AuditError, OtherModelError, RecordError
+from fellwalk.errors import ArgumentError, AuditError, OtherModelError
 from fellwalk.interrupts import Interrupts
 from fellwalk.lockstep import Lockstep
 from fellwalk.progress import Progress
 from fellwalk.record import Record
 from fellwalk.result import Result
-from fellwalk.run_record import ChainResult, record_block
+from fellwalk.run_record import ChainResult, end_record, kept_where, record_block
 from fellwalk.settings import Settings
 from fellwalk.settled import LOCKSTEP_MAGIC, Settled
 from fellwalk.work import Done, Live
@@ -148,22 +147,13 @@ class LockstepRun:
 
     def _end(self, error: BaseException | None) -> Result:
         done = not self._left()
-        stopped = isinstance(error, KeyboardInterrupt) and self.interrupts.count > 0
         why = "" if done else self.interrupts.name if self.interrupts.count else (
             "an exception" if error else "the time given had passed")
         path = self.record.path if self.record else ""
         result = Result(self.plan, self.parts, states=self.states, ended=why, path=path)
-        if self.record:
-            with contextlib.suppress(*([RecordError] if error else [])):  # a full disk must not hide what was before
-                self.record.append_event("stopped" if why else "finished", {"why": why} if why else {})
-        if error is not None:
-            if not stopped:
-                kept = (f"the record {path} holds every finished block; fellwalk.resume goes on from it" if path else
-                        "this exception's fellwalk_result holds the draws finished before it")
-                phase = "keeping draws" if self.chains.settled else "settling"
-                error.add_note(f"fellwalk: raised while {len(self.parts)} chains in lockstep were {phase}, at "
-                               f"transition {self.chains.transitions + 1}; {kept}.")
-            with contextlib.suppress(AttributeError):
-                error.fellwalk_result = result  # type: ignore[attr-defined]
-            raise error
+        if error is not None and not (isinstance(error, KeyboardInterrupt) and self.interrupts.count > 0):
+            phase = "keeping draws" if self.chains.settled else "settling"
+            error.add_note(f"fellwalk: raised while {len(self.parts)} chains in lockstep were {phase}, at transition "
+                           f"{self.chains.transitions + 1}; {kept_where(path)}.")
+        end_record(self.record, why, result, error)
         return result

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import hashlib
 import json
 import math
 import struct
@@ -12,12 +11,11 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from fellwalk.errors import SettleError, StateError
-from fellwalk.settled import LOCKSTEP_MAGIC, SettledChain
+from fellwalk.chain import _CHECKSUM_BYTES, _checksum
+from fellwalk.errors import StateError
+from fellwalk.settled import LOCKSTEP_MAGIC
 
-__all__ = ["pack", "settled_of_state", "unpack"]
-
-_CHECKSUM_BYTES = 16
+__all__ = ["pack", "unpack"]
 
 
 def pack(head: dict[str, Any], arrays: Sequence[NDArray[np.float64]]) -> bytes:
@@ -25,7 +23,7 @@ def pack(head: dict[str, Any], arrays: Sequence[NDArray[np.float64]]) -> bytes:
     packed = json.dumps({**head, "shapes": [a.shape for a in arrays]}).encode()
     numbers = b"".join(a.astype("<f8").tobytes() for a in arrays)
     body = LOCKSTEP_MAGIC + struct.pack("<Q", len(packed)) + packed + numbers
-    return body + hashlib.blake2b(body, digest_size=_CHECKSUM_BYTES).digest()
+    return body + _checksum(body)
 
 
 def unpack(state: bytes) -> tuple[dict[str, Any], list[NDArray[np.float64]]]:
@@ -33,7 +31,7 @@ def unpack(state: bytes) -> tuple[dict[str, Any], list[NDArray[np.float64]]]:
     if not isinstance(state, bytes) or not state.startswith(LOCKSTEP_MAGIC):
         raise StateError("this is not a state of chains in lockstep: it does not begin as one")
     body, checksum = state[:-_CHECKSUM_BYTES], state[-_CHECKSUM_BYTES:]
-    if hashlib.blake2b(body, digest_size=_CHECKSUM_BYTES).digest() != checksum:
+    if _checksum(body) != checksum:
         raise StateError("the stored state is damaged: it does not agree with its checksum")
     start = len(LOCKSTEP_MAGIC) + 8
     (length,) = struct.unpack("<Q", body[len(LOCKSTEP_MAGIC) : start])
@@ -42,11 +40,3 @@ def unpack(state: bytes) -> tuple[dict[str, Any], list[NDArray[np.float64]]]:
     ends = np.cumsum([math.prod(shape) for shape in head["shapes"]])
     return head, [numbers[end - math.prod(shape) : end].reshape(shape).copy()
                   for end, shape in zip(ends, head["shapes"], strict=True)]
-
-
-def settled_of_state(state: bytes) -> SettledChain:
-    """The settled part in a state of chains in lockstep. Errors: SettleError, StateError."""
-    head, arrays = unpack(state)
-    if not (head["pool"]["settled"] and head["has_step"]):
-        raise SettleError("these chains have not settled yet, so they have no settled part to use again")
-    return SettledChain(arrays[3] ** 2, arrays[4], arrays[5], math.exp(head["pool"]["log_step"]), 0.0)

@@ -75,10 +75,9 @@ class Base:
 class Pool:
     """What settling has gathered, and what it says: `log_step` now, `base` now. Plain numbers and arrays."""
 
-    def __init__(self, m: int, d: int, least: int, most: int, acceptance: float, rank: int, rank_fixed: bool,
-                 adapt_scale: bool) -> None:
+    def __init__(self, m: int, d: int, least: int, most: int, acceptance: float, rank: int, rank_fixed: bool) -> None:
         self.m, self.d, self.rank, self.rank_fixed = m, d, rank, rank_fixed
-        self.acceptance, self.adapt_scale = acceptance, adapt_scale
+        self.acceptance = acceptance
         self.least, self.most = least, most
         self.tail = min(_TAIL, most // 2)
         self.done = self.windows = self.quiet = self.tail_left = self.window = self.in_window = 0
@@ -91,7 +90,7 @@ class Pool:
         self.rows_x: list[Array] = []
         self.rows_g: list[Array] = []
         if most:
-            self.window = self._next_window() if adapt_scale else 0
+            self.window = self._next_window()
             if not self.window:
                 self._begin_tail()
 
@@ -202,10 +201,13 @@ def learned(x: Array, g: Array, old: Base, rank: int, fixed: bool) -> Base:
     order = np.argsort(-np.abs(np.log(values)))
     kept, variances = [], []
     for i in order:
+        size = abs(math.log(values[i]))
+        if not fixed and size <= _WORTH:
+            break  # they come in falling order
         e = vectors[:, i]
         ratios = [0.5 * math.log((e @ cx @ e) / (e @ cg @ e)) for cx, cg in halves]
         shown = ratios[1] * math.copysign(1.0, math.log(values[i]))
-        if fixed or (abs(math.log(values[i])) > _WORTH and shown > _AGREEMENT * abs(math.log(values[i]))):
+        if fixed or shown > _AGREEMENT * size:
             kept.append(e)
             variances.append(math.exp(0.5 * (ratios[0] + ratios[1])))
         if len(kept) == min(rank, d):

@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from fellwalk.errors import FellwalkError
-from fellwalk.failing import HARMLESS_CODES
+from fellwalk.failing import harmful
 from fellwalk.figures import number
 from fellwalk.geometry import seconds_in_density
 from fellwalk.judgement import Judgement
@@ -87,8 +87,11 @@ def cost_summary(result: Result, judgement: Judgement | None, share: Share) -> s
 def cost_rows(result: Result, judgement: Judgement | None, share: Share) -> list[tuple[str, str]]:
     """The cost of the whole run, as (what, how much)."""
     spent, settled = result.spent, _settled(result, "gradients")
-    kept = spent["gradients"] - settled
-    rows = [("Gradients", f"{spent['gradients']:,.0f}: {settled:,.0f} in settling, {kept:,.0f} for the kept draws")]
+    tried = result.trial["settling"] + result.trial["spent"] if result.trial else 0
+    kept = spent["gradients"] - settled - tried
+    trial = f"{tried:,.0f} in the trial, " if tried else ""
+    parts = f"{settled:,.0f} in settling, {trial}{kept:,.0f} for the kept draws"
+    rows = [("Gradients", f"{spent['gradients']:,.0f}: {parts}")]
     products = f"{spent['products']:,.0f}" if spent["products"] else "none"
     rows.append(("Hessian products", products))
     rows.append(("Time", f"{duration(spent['seconds'])} of work, all chains added up"))
@@ -113,12 +116,8 @@ def chain_rows(result: Result) -> list[tuple[str, ...]]:
         products = int(facts["products"].sum() + settling["products"].sum())
         rows.append((str(c + 1), f"{len(settling):,}", f"{settling['gradients'].sum():,}",
                      f"{facts['gradients'].sum():,}", f"{products:,}", step, acceptance,
-                     f"{_failed(facts['failure']):,}"))
+                     f"{np.count_nonzero(harmful(facts['failure'])):,}"))
     return rows
-
-
-def _failed(failure: np.ndarray) -> int:
-    return int(np.count_nonzero((failure != 0) & ~np.isin(failure, HARMLESS_CODES)))
 
 
 def settings_rows(result: Result) -> list[tuple[str, str]]:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import contextlib
 from dataclasses import dataclass, field
 from typing import Any
 
@@ -15,7 +16,8 @@ from fellwalk.settings import Settings
 from fellwalk.watch import Moments
 from fellwalk.work import Check, Done
 
-__all__ = ["ChainResult", "begin", "plan_of", "read_check", "read_parts", "read_states", "record_block"]
+__all__ = ["ChainResult", "begin", "end_record", "kept_where", "plan_of", "read_check", "read_parts", "read_states",
+           "record_block"]
 
 _PLAN = {"settings", "names", "dimension", "chains", "keep", "seed", "gradients", "model"}
 
@@ -64,6 +66,23 @@ def begin(record: Record, states: list[bytes], check: Check) -> None:
         "check": record.put_part(np.concatenate([check.position, check.gradient, [check.log_density]])
                                  .astype("<f8").tobytes()),
     })
+
+
+def kept_where(path: str) -> str:
+    """For the note of an exception: where what was finished before it is."""
+    return (f"the record {path} holds every finished block; fellwalk.resume goes on from it" if path else
+            "this exception's fellwalk_result holds the draws finished before it")
+
+
+def end_record(record: Record | None, why: str, result: object, error: BaseException | None) -> None:
+    """Note in the record that a run has finished, or why it stopped; then raise its error, which carries the result."""
+    if record:
+        with contextlib.suppress(*([RecordError] if error else [])):  # a full disk must not hide what was before
+            record.append_event("stopped" if why else "finished", {"why": why} if why else {})
+    if error is not None:
+        with contextlib.suppress(AttributeError):
+            error.fellwalk_result = result  # type: ignore[attr-defined]
+        raise error
 
 
 def record_block(done: Done, part: ChainResult) -> RecordBlock:

@@ -68,9 +68,10 @@ class Settled:
             raise AssertionError("reading a state calls no density")
 
         if states and states[0].startswith(LOCKSTEP_MAGIC):
-            from fellwalk.lockstep_state import settled_of_state
+            from fellwalk.lockstep import Lockstep
 
-            return cls((settled_of_state(states[0]),) * len(states))
+            chains = Lockstep.from_state(Density(unused, dimension, batch=True), states[0])
+            return cls((chains.settled_part,) * len(states))
         density = Density(unused, dimension, hessian_product=unused)
         return cls(tuple(SettledChain.of(Chain.from_state(density, state)) for state in states))
 

@@ -50,8 +50,7 @@ class Sharpened:
     """Means of several values of the draws, arrays (values,).
 
     by: number in CANDIDATES of what won, 0 where the plain mean stays. mean, error: sharpened; the error is NaN where
-    the plain mean stays. raw, raw_error: the plain mean, its error by batch means. correction, correction_error: what
-    was taken off on average, and the error of that; its expectation is zero if the draws come from the density.
+    the plain mean stays. raw, raw_error: the plain mean, its error by batch means.
     """
 
     mean: Array
@@ -59,8 +58,6 @@ class Sharpened:
     by: NDArray[np.int64]
     raw: Array
     raw_error: Array
-    correction: Array
-    correction_error: Array
 
 
 @dataclass(frozen=True, eq=False)
@@ -78,7 +75,6 @@ class _Try:
     the batch means (values, batches), and the variance that fitting adds to the mean."""
 
     level: int
-    heavy: bool
     served: list[tuple[Terms, list[int], Array]]
     left: Array
     fitting: Array
@@ -161,19 +157,17 @@ class Sharpener:
         f /= np.where(spread > 0, spread, 1.0)[:, None]
         count = len(f)
         mean, error, by = np.zeros(count), np.full(count, np.nan), np.zeros(count, dtype=np.int64)
-        taken, taken_error = np.zeros(count), np.zeros(count)
         doubt = widening(above)
         plain = self._rate(self.layout.means(f)) * doubt
         if flat.shape[1] >= FEWEST and self.coordinates and len(self.layout.folds) > 1:
             for chosen, which in self._compete(f, plain, doubt, (flat, centre, spread)):
                 parts = self._finish(f[which], chosen, which, plain[which], above[which])
-                good = (spread[which] > 0) & (self.forced | (parts[1] < WORTHWHILE * plain[which])) & ~parts[4]
+                good = (spread[which] > 0) & (self.forced | (parts[1] < WORTHWHILE * plain[which])) & ~parts[2]
                 at = which[good]
-                mean[at], error[at], taken[at], taken_error[at] = (part[good] for part in parts[:4])
+                mean[at], error[at] = parts[0][good], parts[1][good]
                 by[at] = chosen.level
         floor = np.finfo(float).eps * np.abs(centre) + EXACT * spread
-        return Sharpened(centre + spread * mean, np.maximum(spread * error, floor), by, centre, spread * plain,
-                         spread * taken, spread * taken_error)
+        return Sharpened(centre + spread * mean, np.maximum(spread * error, floor), by, centre, spread * plain)
 
     def _compete(
         self, f: Array, plain: Array, doubt: Array, draws: tuple[Array, Array, Array]
@@ -222,7 +216,7 @@ class Sharpener:
         # How far the mean of all draws would move with coefficients from other folds: the jackknife's variance.
         moves = np.array(moved)
         fitting = (len(moves) - 1) / len(moves) * ((moves - moves.mean(axis=0)) ** 2).sum(axis=0)
-        return _Try(level, heavy, served, left, fitting)
+        return _Try(level, served, left, fitting)
 
     def _affordable(self, terms: Terms, level: int, heavy: bool) -> bool:
         p = len(terms.chosen(level, heavy))
@@ -255,7 +249,7 @@ class Sharpener:
     def _finish(
         self, f: Array, tried: _Try, which: NDArray[np.int64], plain: Array, above: Array
     ) -> tuple[Array, ...]:
-        """Mean and error of what is left, mean and error of what was taken off, and if that contradicts the draws."""
+        """Mean and error of what is left, and whether what was taken off contradicts the draws."""
         series = self._series(f, tried, which)
         mean = series.mean(axis=1)
         error = np.sqrt(self._error(series) ** 2 + tried.fitting[which]) * _skewed(tried.left[which])
@@ -268,7 +262,7 @@ class Sharpener:
         # gradients, and a small error would only hide it.
         with np.errstate(all="ignore"):
             chance = 2 * special.stdtr(taken.shape[1] / 4, -np.abs(off) / off_error)
-        return mean, error, off, off_error, chance < FALSE_ALARM / max(len(tried.left), 1)
+        return mean, error, chance < FALSE_ALARM / max(len(tried.left), 1)
 
     def _rate(self, batches: Array) -> Array:
         """Errors of means by batch means (q, batches): quick, for comparisons."""
@@ -293,7 +287,7 @@ def _skewed(batches: Array) -> Array:
     variance = square.mean(axis=1)
     with np.errstate(all="ignore"):
         skewness = np.nan_to_num((square * away).mean(axis=1) / variance**1.5)
-        excess = np.nan_to_num((square * square).mean(axis=1) / variance**2) - 3
+        peaked = np.nan_to_num((square * square).mean(axis=1) / variance**2) - 3
     z = 1.96
-    lack = (z**4 + 2 * z**2 - 3) / 18 * skewness**2 - (z**2 - 3) / 12 * excess
+    lack = (z**4 + 2 * z**2 - 3) / 18 * skewness**2 - (z**2 - 3) / 12 * peaked
     return 1 + np.maximum(lack, 0) / batches.shape[1]

@@ -9,12 +9,13 @@ from numpy.typing import NDArray
 
 from fellwalk.chain import Block, Chain
 from fellwalk.density import Density
-from fellwalk.failing import HARMLESS_CODES
+from fellwalk.failing import harmful
 from fellwalk.motions import Isokinetic, Jittered, Lagrangian, Leapfrog, Motion, NoUTurn, Path
 from fellwalk.settings import Settings
 from fellwalk.settled import SettledChain
 
-__all__ = ["Candidate", "Contender", "candidates_for", "with_rank"]
+__all__ = ["Candidate", "Contender", "candidates_for", "new_chain", "with_rank"]
+
 
 @dataclass(frozen=True)
 class Candidate:
@@ -78,8 +79,7 @@ class Contender:
         self.spent += cost
         self.drawing += cost
         self.transitions += len(block)
-        failures = block.facts["failure"]
-        self.failed += sum(code not in HARMLESS_CODES for code in failures[failures != 0].tolist())
+        self.failed += int(np.count_nonzero(harmful(block.facts["failure"])))
         self.draws[number].append(block.draws)
 
     def stacked(self) -> NDArray[np.float64]:
@@ -92,11 +92,5 @@ class Contender:
 def new_chain(density: Density, candidate: Candidate, part: SettledChain, start: NDArray[np.float64],
               seed: np.random.SeedSequence, acceptance: float) -> Chain:
     """A chain of the candidate with the base metric, step size, beta and number of steps of the settled part."""
-    path = Jittered(part.steps) if isinstance(candidate.path, Jittered) else candidate.path
-    settings = Settings(motion=candidate.motion, path=path, settle=0, step_size=part.step_size, beta=part.beta,
-                        acceptance=acceptance, adapt_scale=False)
-    chain = Chain.__new__(Chain)
-    chain._make(density, settings, seed)
-    chain._set_base(None, part)
-    chain._start(start)
-    return chain
+    settings = Settings(motion=candidate.motion, path=candidate.path, acceptance=acceptance)
+    return Chain._with_settings(density, settings, start, seed, None, part)

@@ -34,9 +34,9 @@ class Worth:
 
     effective: draws, the geometric mean of the least eighth of all (at least of one), as the least of many would mostly
     be the unluckiest; error: standard deviation of its logarithm; tail: the share of the pool that counts as a tail;
-    worst: the coordinate of the least; what:
-    "centre", "lower tail" or "upper tail"; apart: largest split R-hat, in coordinate `apart_in`; shy: the most
-    standard errors by which a tail was visited less than by the others, in coordinate `shy_in` (0: not less).
+    worst: the coordinate of the least; what: "centre", "lower tail" or "upper tail"; apart: largest split R-hat, in
+    coordinate `apart_in`; shy: the most standard errors by which a tail was visited less than by the others, in
+    coordinate `shy_in` (0: not less).
     """
 
     effective: float
@@ -58,22 +58,24 @@ def pool(candidates: Sequence[Array]) -> Array:
     return np.sort(np.concatenate(picked).T, axis=-1)
 
 
-def _against(draws: Array, pooled: Array, tail: float) -> Array:
-    """(3, dimension, chains, draws): normal scores of the ranks in the pool, and whether draws lie in either tail."""
+def _scores(draws: Array, pooled: Array) -> Array:
+    """(dimension, chains, draws): normal scores of the ranks in the pool."""
     chains, n, d = draws.shape
-    size = pooled.shape[-1]
-    found = np.empty((3, d, chains, n))
+    found = np.empty((d, chains, n))
     for i in range(d):
         x = draws[..., i]
         below = np.searchsorted(pooled[i], x, "left")
         upto = np.searchsorted(pooled[i], x, "right")
-        found[0, i] = special.ndtri((0.5 * (below + upto) + 0.5) / (size + 1.0))
-    low = pooled[:, round(tail * (size - 1))]
-    high = pooled[:, round((1.0 - tail) * (size - 1))]
-    moved = np.moveaxis(draws, -1, 0)
-    found[1] = moved <= low[:, None, None]
-    found[2] = moved >= high[:, None, None]
+        found[i] = special.ndtri((0.5 * (below + upto) + 0.5) / (pooled.shape[-1] + 1.0))
     return found
+
+
+def _in_tails(draws: Array, pooled: Array, tail: float) -> Array:
+    """(2, dimension, chains, draws): whether draws lie in either tail of the pool, as 0 and 1."""
+    last = pooled.shape[-1] - 1
+    low, high = pooled[:, round(tail * last)], pooled[:, round((1.0 - tail) * last)]
+    moved = np.moveaxis(draws, -1, 0)
+    return np.stack([moved <= low[:, None, None], moved >= high[:, None, None]]).astype(float)
 
 
 def effective(x: Array, variance: Array) -> Array:
@@ -104,7 +106,7 @@ def measure(draws: Array, pooled: Array, others: Array, tail: float) -> Worth:
     the tails of the others' pool. The error of that is by what the centre is worth: a tail that was never visited says
     nothing of how often it should have been."""
     chains, n, _ = draws.shape
-    series = _against(draws, pooled, tail)
+    series = np.concatenate([_scores(draws, pooled)[None], _in_tails(draws, pooled, tail)])
     of_tail = tail * (1.0 - tail)
     variance = np.stack([np.full(series.shape[1], v) for v in (1.0, of_tail, of_tail)])
     sizes = effective(series, variance)
@@ -113,7 +115,7 @@ def measure(draws: Array, pooled: Array, others: Array, tail: float) -> Worth:
     size = float(np.exp(np.log(sizes.ravel()[least]).mean()))
     error = float(np.sqrt(_NOISE / size))
     apart = np.nan_to_num(potential_scale_reduction(split(series[0])), nan=1.0, posinf=1e6)
-    shares = _against(draws, others, tail)[1:].mean(axis=(-2, -1))
+    shares = _in_tails(draws, others, tail).mean(axis=(-2, -1))
     errors = np.sqrt(of_tail / np.minimum(sizes[0], chains * n) + of_tail / others.shape[-1])
     shy = (tail - shares) / errors
     side, shy_in = np.unravel_index(int(np.argmax(shy)), shy.shape)

@@ -83,7 +83,7 @@ class Competition:
         directions = max(len(part.variances) for part in self.parts)
         self.leader = Contender(LEADER, list(leaders.chains), [[] for _ in leaders.chains])
         self.others = [Contender(c) for c in candidates_for(density.dimension, directions)[1:]]
-        self.plain = [c for c in self.others if c.candidate.name == "leapfrog, rank 0"]
+        self.plain = [c for c in self.others if c.candidate.rank == 0]
         self.out: list[tuple[Contender, str]] = []
         self.blocks: list[dict[str, Any]] = []
         self.remarks: list[str] = []
