@@ -14,13 +14,26 @@ from fellwalk.autocorrelation import effective_size
 from fellwalk.cli import main
 from fellwalk.settled import SettledChain
 from fellwalk.trial_candidates import candidates_for, with_rank
+from fellwalk.trial_play import Play, packed, unpacked
 from fellwalk.trial_result import told_in_words
-from fellwalk.trial_rounds import Competition, Leaders
+from fellwalk.trial_rounds import Terms
 from fellwalk.trial_tuning import steepness
+from fellwalk.work import Job, Live, make_block
 
 
 def density_of(target):
     return fw.Density(target.density, target.dimension, hessian_product=target.hessian_product)
+
+
+def played(play, limit=10**9):
+    """The trial and the states of the winner's chains, of a play whose blocks are made here; or None after so many."""
+    ready, live = list(play.begin()), Live()
+    while ready and limit > 0:
+        done = play.make_here(ready.pop(0), live)
+        assert done.block.error is None
+        ready += play.take(done)
+        limit -= 1
+    return play.winners() if play.over else None
 
 
 def spread_normal():
@@ -212,7 +225,7 @@ def test_a_run_that_finds_its_motion_itself(tmp_path):
     assert loaded.trial == json.loads(json.dumps(result.trial))
     assert loaded.draws.tobytes() == result.draws.tobytes()
     assert result.trial["entries"][0]["name"] in str(loaded)
-    assert "Settled in a trial of motions: step size" in str(loaded)
+    assert " and a trial of motions: step size" in " ".join(str(loaded).split())
     page = loaded.report()
     assert "Why this motion?" in page
     assert html.escape(result.trial["reasons"][0]) in page
@@ -226,6 +239,166 @@ def test_a_run_that_finds_its_motion_itself(tmp_path):
     cost = result.trial["settling"] + 1600 * best["drawing"] / best["transitions"]
     assert 0.0 < result.trial["budget"] <= 0.15 * cost * (1.0 + 1e-12)
     stat_checks.assert_all(stat_checks.compare_marginal(on.draws, target.marginals["x1"], "x1"), 1e-5)
+
+
+@pytest.fixture(scope="module")
+def settled_on_student():
+    """(density, states, facts of settling) of four chains on a Student-t in 10 dimensions."""
+    target = targets.student(10, 5.0)
+    density = density_of(target)
+    chains = [fw.Chain(density, x, seed=c, settle="auto")
+              for c, x in enumerate(target.exact_draws(4, np.random.default_rng(9)))]
+    settling = [chain.block(10_000, draws=False).facts for chain in chains]
+    return density, [chain.state for chain in chains], settling
+
+
+TERMS = Terms(6, budget=9000)
+
+
+def test_it_does_not_matter_who_makes_the_blocks_nor_where_they_end(settled_on_student):
+    """Chains kept in memory against states sent round in random order, with blocks cut into pieces of at most three."""
+    density, states, settling = settled_on_student
+    found, ends = played(Play(density, states, settling, TERMS))
+    play, rng = Play(density, states, settling, TERMS), np.random.default_rng(1)
+    ready = list(play.begin())
+    most_at_once = 0
+    while ready:
+        most_at_once = max(most_at_once, len(ready))
+        job = play.job(ready.pop(rng.integers(len(ready))), 10.0)
+        ready += play.take(make_block(density, Job(job.chain, job.state, min(3, job.most), job.gradients)))
+    assert most_at_once > 5  # candidates side by side
+    again, others = play.winners()
+    assert again.to_json() == found.to_json()
+    assert others == ends
+
+
+@pytest.mark.parametrize("stop", [1, 30, 100])
+def test_a_trial_goes_on_from_its_stored_blocks(settled_on_student, stop):
+    density, states, settling = settled_on_student
+    found, ends = played(Play(density, states, settling, TERMS))
+    play = Play(density, states, settling, TERMS, storing=True)
+    ready = list(play.begin())
+    for _ in range(stop):
+        ready += play.take(make_block(density, play.job(ready.pop(0), 10.0)))
+    assert len(play.unsaved) == stop
+    stored = unpacked(packed(play.unsaved), 10)
+    calls = density.gradients
+    again, others = played(Play(density, states, settling, TERMS, stored))
+    assert again.to_json() == found.to_json()
+    assert others == ends
+    called = density.gradients - calls
+    saved = sum(int(answer.block.facts["gradients"].sum()) for answer in stored)
+    assert saved > 0
+    # beside blocks: two calls and a short path for noise, starts; those of stored blocks are not made again
+    assert -stop <= called - (found.spent - saved) <= 40
+
+
+class Stopping:
+    """A density that counts its calls and raises at one of them."""
+
+    def __init__(self, at=None):
+        self.calls, self.at = 0, at
+
+    def __call__(self, x):
+        self.calls += 1
+        if self.calls == self.at:
+            raise ZeroDivisionError("here")
+        return -0.5 * float(x @ x), -x
+
+
+@pytest.mark.parametrize("where", ["settling", "trial", "keeping"])
+def test_a_run_that_was_cut_off_goes_on_with_the_bits_of_an_undisturbed_one(tmp_path, monkeypatch, where):
+    monkeypatch.setattr(fw.driver, "_TRIAL_HERE", 0.0)  # hand its blocks round, as of a slow density
+    whole = fw.run(fw.Density(Stopping(), 3), [0.1, 0.2, 0.3], keep=500, seed=3, executor="here", progress="off")
+    assert whole.trial["entries"][0]["draws"] > 0
+    settling = whole.trial["settling"]
+    at = {"settling": 0.5 * settling, "trial": settling + 0.6 * whole.trial["spent"],
+          "keeping": settling + whole.trial["spent"] + 1500}[where]
+    path = tmp_path / "walk.fell"
+    with pytest.raises(ZeroDivisionError) as caught:
+        fw.run(fw.Density(Stopping(round(at)), 3), [0.1, 0.2, 0.3], keep=500, seed=3, executor="here", progress="off",
+               record=path)
+    phrase = {"settling": ", settling, at", "trial": "in the trial of motions", "keeping": "keeping draws"}[where]
+    assert phrase in caught.value.__notes__[0]
+    half = fw.load(path)
+    assert (half.trial is None) == (where != "keeping")
+    function = Stopping()
+    on = fw.resume(path, fw.Density(function, 3), executor="here", progress="off")
+    assert on.draws.tobytes() == whole.draws.tobytes()
+    assert on.trial == json.loads(json.dumps(whole.trial))
+    if where == "trial":  # what was made before it stopped is not made again
+        assert function.calls < whole.spent["gradients"] - settling - 0.4 * whole.trial["spent"]
+    assert fw.load(path).draws.tobytes() == whole.draws.tobytes()
+
+
+@pytest.mark.parametrize("executor", ["threads", "processes"])
+def test_the_executor_does_not_matter(monkeypatch, executor):
+    monkeypatch.setattr(fw.driver, "_TRIAL_HERE", 0.0)
+    how = {"keep": 300, "chains": 3, "seed": 8, "progress": "off"}
+    density = fw.Density(Stopping(), 3)
+    here = fw.run(density, [0.1, 0.2, 0.3], executor="here", **how)
+    there = fw.run(density, [0.1, 0.2, 0.3], executor=executor, **how)
+    assert there.trial == here.trial
+    assert there.draws.tobytes() == here.draws.tobytes()
+    tried = [fw.trial(density, [0.1, 0.2, 0.3], budget=4000, seed=8, executor=one) for one in ("here", executor)]
+    assert tried[0].to_json() == tried[1].to_json()
+    assert [a.state for a in tried[0].chains] == [b.state for b in tried[1].chains]
+
+
+def test_a_run_makes_a_trial_unless_it_is_told_what_a_trial_would_find():
+    density = fw.Density(Stopping(), 3)
+    how = {"keep": 300, "seed": 8, "progress": "off", "executor": "here"}
+    chosen = fw.run(density, [0.1, 0.2, 0.3], **how)
+    assert chosen.trial["entries"]
+    assert chosen.draws.tobytes() == fw.run(density, [0.1, 0.2, 0.3], motion="auto", **how).draws.tobytes()
+    told = [{"motion": fw.Leapfrog()}, {"path": fw.NoUTurn()}, {"rank": 0}, {"settle": 200}, {"scale": np.ones(3)},
+            {"step_size": 0.5}, {"settled": chosen}]
+    for given in told:
+        assert fw.run(density, [0.1, 0.2, 0.3], **given, **how).trial is None
+
+
+def test_a_short_run_makes_none_and_says_so():
+    result = fw.run(fw.Density(Stopping(), 3), [0.1, 0.2, 0.3], keep=20, seed=8, progress="off", executor="here")
+    assert [entry["name"] for entry in result.trial["entries"]] == ["leapfrog"]
+    assert result.trial["spent"] == 0
+    assert "No trial was made: its budget of" in str(result)
+    plain = fw.run(fw.Density(Stopping(), 3), [0.1, 0.2, 0.3], motion=fw.Leapfrog(), keep=20, seed=8, progress="off",
+                   executor="here")
+    assert result.draws.tobytes() == plain.draws.tobytes()  # the chains go on as if nothing had been asked
+
+
+def test_fewer_candidates_where_the_budget_is_for_fewer():
+    found = [len(fw.trial(fw.Density(Stopping(), 3), [0.1, 0.2, 0.3], budget=budget, seed=8).entries)
+             for budget in (1000, 2500, 20_000)]
+    assert 1 <= found[0] < found[1] < found[2] == len(candidates_for(3, 0))
+
+
+def test_products_have_their_price_in_a_run():
+    target = targets.equicorrelated_normal(20, 0.98)
+    how = {"keep": 1000, "seed": 2, "progress": "off", "executor": "here", "product_cost": 7.0}
+    result = fw.run(density_of(target), target.exact_draws(1, np.random.default_rng(7))[0], **how)
+    assert result.plan["terms"] == {"draws": 4000, "product_cost": 7.0}
+    assert "product_cost=7.0" in result.report()
+    with pytest.raises(errors.ArgumentError, match="product_cost"):
+        fw.run(density_of(target), np.zeros(20), product_cost=-1.0)
+
+
+def test_of_many_coordinates_some_are_judged():
+    """Of 3000 coordinates some 1250, the slow one among them: it has a hundred times the scale that settling was given."""
+    d = 3000
+    scale = np.ones(d)
+    scale[1234] = 1e4
+    density = fw.Density(lambda x: (-0.5 * float(x @ (x / scale)), -x / scale), d)
+    chains = [fw.Chain(density, np.sqrt(scale) * x, seed=c, settle=30, adapt_scale=False)
+              for c, x in enumerate(np.random.default_rng(3).standard_normal((2, d)))]
+    settling = [chain.block(30, draws=False).facts for chain in chains]
+    play = Play(density, [chain.state for chain in chains], settling, Terms(4, budget=5000))
+    found, _ = played(play)
+    picked = play.competition.picked
+    assert 1000 < len(picked) <= 1250
+    assert 1234 in picked
+    assert found.entries[0].worst == "x[1234]"
+    assert all(rows.shape[1] == len(picked) for parts in play.competition.leader.draws for rows in parts)
 
 
 @pytest.mark.parametrize(("given", "named"), [({"path": fw.NoUTurn()}, "path"), ({"settle": 100}, "settle"),
@@ -266,10 +439,10 @@ def test_where_the_surrogate_is_capped_products_take_its_place_at_their_price():
     density = density_of(target)
     points = target.exact_draws(2, np.random.default_rng(7))
     chains = [fw.Chain(density, x, seed=c, settle="auto", rank=0) for c, x in enumerate(points)]
-    for chain in chains:
-        chain.block(10_000)
+    settling = [chain.block(10_000, draws=False).facts for chain in chains]
     before = density.gradients, density.products
-    found = Competition(density, Leaders(chains, 0.0, 10.0), 60_000, 4, 0.8, 3.0).go()
+    play = Play(density, [chain.state for chain in chains], settling, Terms(4, budget=60_000, product_cost=3.0))
+    found, _ = played(play)
     names = {entry.name for entry in found.entries}
     assert "lagrangian, bend 1, product" in names
     assert "lagrangian, bend 0.1" in names
@@ -285,8 +458,17 @@ def test_the_command_makes_a_trial(tmp_path, capsys):
     record = str(tmp_path / "walk.fell")
     assert main(["run", f"{model}:density", "--record", record, "--motion", "auto", "--keep", "60", "--seed", "3",
                  "--executor", "here", "--progress", "off"]) == 0
+    assert "No trial was made" in capsys.readouterr().out
+    assert main(["run", f"{model}:density", "--record", record, "--keep", "400", "--seed", "3", "--replace",
+                 "--executor", "here", "--progress", "off"]) == 0
     assert "gradients of settling." in capsys.readouterr().out
-    assert fw.load(record).trial["entries"]
+    assert fw.load(record).trial["entries"][0]["draws"] > 0
+    assert main(["run", f"{model}:density", "--record", record, "--keep", "60", "--seed", "3", "--replace",
+                 "--halvings", "2", "--executor", "here", "--progress", "off"]) == 0
+    assert fw.load(record).trial is None
+    assert main(["run", f"{model}:density", "--record", record, "--motion", "auto", "--path", "jittered", "--replace"]
+                ) != 0
+    assert "finds what path= would fix" in capsys.readouterr().err
 
 
 # ---- honest limits --------------------------------------------------------------------------------------------------

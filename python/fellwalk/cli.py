@@ -131,21 +131,24 @@ def _parser() -> tuple[argparse.ArgumentParser, argparse.ArgumentParser]:
     add("--no-audit", action="store_true", help="do not look at the gradient first")
     add("--settle", type=_settle, metavar="N", default="auto", help='settling transitions, or "auto"')
     add("--seed", type=_whole(0), metavar="N", help="a whole number; left out: one is drawn and recorded")
-    add("--motion", choices=[*sorted(MOTIONS), "auto"], default="leapfrog",
-        help="what moves a point; auto: a trial finds motion and path")
+    add("--motion", choices=[*sorted(MOTIONS), "auto"],
+        help="what moves a point; auto: a trial finds motion and path. Left out: auto, or leapfrog where an option says "
+             "what a trial would find")
     add("--bend", type=float, metavar="B", default=Lagrangian.bend, help="lagrangian motion: typical L - 1")
     add("--curvature", choices=["surrogate", "difference", "product"], default="surrogate",
         help="lagrangian motion: where Hessian products come from")
     add("--scheme", choices=["split", "semi-explicit"], default="split",
         help="lagrangian motion: the integrator")
     add("--halvings", type=_whole(0), metavar="N", default=0, help="a step may be done as up to 2^N smaller ones")
-    add("--path", choices=sorted(PATHS), default="no-u-turn", help="how far it is moved")
+    add("--path", choices=sorted(PATHS), help="how far it is moved; left out: no-u-turn, without a trial")
     add("--steps", type=_steps, metavar="N", default=Jittered.steps,
         help='jittered path: steps drawn from 1..N, or "auto": settling finds N')
     add("--doublings", type=_whole(1), metavar="N", default=NoUTurn.doublings,
         help="no-u-turn path: at most 2^N steps")
     add("--acceptance", type=float, metavar="RATE", default=0.8, help="rate that settling aims the step size at")
     add("--step-size", type=float, metavar="SIZE", help="where settling starts from, in units of the base metric")
+    add("--product-cost", type=float, metavar="C", default=1.0,
+        help="gradients that a Hessian product counts as in a trial")
     _common(make)
     make.set_defaults(action=_run)
 
@@ -233,12 +236,17 @@ def _start(text: str | np.ndarray | None) -> np.ndarray | None:
         raise ArgumentError(f"--start must be numbers separated by commas, or a .npy file; it is {text!r}") from None
 
 
-def _motion(options: argparse.Namespace) -> Motion | str:
-    return "auto" if options.motion == "auto" else _made(MOTIONS[options.motion], options)
-
-
-def _path(options: argparse.Namespace) -> Path | None:
-    return None if options.motion == "auto" else _made(PATHS[options.path], options)
+def _moved(options: argparse.Namespace) -> tuple[Motion | str, Path | None]:
+    """Motion and path. Left out, they are for a trial to find, unless another option says something of them."""
+    motion, path = options.motion, None if options.path is None else _made(PATHS[options.path], options)
+    if motion is None:
+        said = (path, options.step_size, options.halvings or None, None if options.settle == "auto" else options.settle,
+                None if options.steps == Jittered.steps else options.steps,
+                None if options.doublings == NoUTurn.doublings else options.doublings)
+        motion = "auto" if all(value is None for value in said) else "leapfrog"
+    if motion == "auto":
+        return motion, path
+    return _made(MOTIONS[motion], options), path or _made(NoUTurn, options)
 
 
 def _made(kind: Any, options: argparse.Namespace) -> Any:
@@ -248,8 +256,9 @@ def _made(kind: Any, options: argparse.Namespace) -> Any:
 
 
 def _run(options: argparse.Namespace) -> int:
+    motion, path = _moved(options)
     result = run(
-        find_model(options.model), _start(options.start), motion=_motion(options), path=_path(options),
+        find_model(options.model), _start(options.start), motion=motion, path=path, product_cost=options.product_cost,
         settle=options.settle, keep=options.keep, chains=options.chains, seed=options.seed,
         acceptance=options.acceptance, step_size=options.step_size, executor=options.executor,
         record=options.record, replace=options.replace, progress=options.progress or True,

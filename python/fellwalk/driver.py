@@ -5,9 +5,13 @@ from __future__ import annotations
 import time
 from collections import deque
 from concurrent.futures import Executor, Future
+from dataclasses import replace
 from queue import Empty, SimpleQueue
 from typing import Any
 
+import numpy as np
+
+from fellwalk.chain import Chain
 from fellwalk.errors import Interrupted, WorkerError
 from fellwalk.interrupts import Interrupts
 from fellwalk.pools import Workers
@@ -16,6 +20,10 @@ from fellwalk.record import Record
 from fellwalk.result import Result
 from fellwalk.run_record import ChainResult, end_record, kept_where, record_block
 from fellwalk.settings import Settings
+from fellwalk.trial_play import Play
+from fellwalk.trial_record import record_answers, record_winner, stored_answers
+from fellwalk.trial_result import Trial
+from fellwalk.trial_rounds import Terms
 from fellwalk.watch import Watch
 from fellwalk.work import Done, Job
 
@@ -26,6 +34,7 @@ _BLOCK_SECONDS = 0.5
 # of this many seconds a byte makes that two parts in a hundred.
 _BLOCK_SECONDS_A_BYTE, _LONGEST_BLOCK = 7.5e-7, 10.0
 _BLOCK_BYTES = 32_000_000
+_TRIAL_HERE = 0.25  # seconds: a trial that takes less is made in this thread, as handing blocks round would cost more
 _COMMIT_SHARE = 20  # commits are grouped so that they take at most one part in so many of the driver's time
 
 
@@ -33,12 +42,16 @@ class Driver:
     """One run from where its chains stand until all draws are made, or until it is stopped.
 
     plan: as the record keeps it. states, parts: of every chain, so far. seconds: stop at a block edge after so long.
+    terms: of a trial that is to be made when all chains have settled; its winner's chains then keep the draws.
     Attributes for measurements: `blocks` finished, and seconds `waited` for workers.
     """
 
     def __init__(self, plan: dict[str, Any], states: list[bytes], parts: list[ChainResult], workers: Workers,
-                 record: Record | None, progress: Progress, seconds: float | None, watch: Watch | None = None) -> None:
-        self.watch = watch
+                 record: Record | None, progress: Progress, seconds: float | None, watch: Watch | None = None,
+                 terms: Terms | None = None) -> None:
+        self.watch, self.terms = watch, terms
+        self.play: Play | None = None
+        self.trial: Trial | None = None
         self.plan, self.states, self.parts = plan, states, parts
         self.workers, self.record, self.progress = workers, record, progress
         self.settle_most = Settings.from_json(plan["settings"]).settle_bounds()[1]
@@ -50,6 +63,7 @@ class Driver:
         self.written, self.writing = float("-inf"), 0.0  # when the last commit ended, how long it took
         self.errors: list[tuple[int, str, BaseException]] = []
         self.interrupts = Interrupts(workers.live, progress.say, lambda: self.arrived.put(None), workers.here)
+        self.stored = float("-inf")  # when answers of the trial were last stored
         self.blocks, self.waited = 0, 0.0
 
     def go(self) -> Result:
@@ -79,7 +93,9 @@ class Driver:
             if self.finished and self._due():
                 self._write()
             elif not self.flying:
-                return
+                if self.terms is None or self.play is not None or self._stopping():
+                    return
+                self._try()
             elif self.interrupts.count > 1 and not self.workers.local:
                 self._write()
                 return
@@ -97,13 +113,21 @@ class Driver:
                 del self.flying[future]
 
     def _left(self, chain: int) -> int:
+        if self.terms is not None:  # a trial comes between settling and keeping
+            return int(not self._settled(chain))
         return self.plan["keep"] - self.parts[chain].count("keep")
 
+    def _settled(self, chain: int) -> bool:
+        return self.parts[chain].summary.get("settled", self.settle_most == 0)
+
     def _job(self, chain: int) -> Job:
-        keeping = self.parts[chain].summary.get("settled", self.settle_most == 0)
-        seconds = min(max(_BLOCK_SECONDS, _BLOCK_SECONDS_A_BYTE * len(self.states[chain])), _LONGEST_BLOCK)
+        size = len(self.states[chain % len(self.states)])
+        seconds = min(max(_BLOCK_SECONDS, _BLOCK_SECONDS_A_BYTE * size), _LONGEST_BLOCK)
         if self.limit is not None:
             seconds = min(seconds, max(0.01, 0.5 * (self.limit - time.monotonic())))
+        if self.play is not None and chain >= len(self.states):
+            return self.play.job(chain, seconds)
+        keeping = self._settled(chain)
         most = min(self._left(chain), self._most(chain)) if keeping else self._most(chain)
         return Job(chain, self.states[chain], most, self.plan["gradients"], seconds, self.watch,
                    self.parts[chain].moments)
@@ -181,7 +205,9 @@ class Driver:
         return not (self.record and busy) or time.monotonic() >= self.written + _COMMIT_SHARE * self.writing
 
     def _write(self) -> None:
-        done, self.finished = self.finished, []
+        whole, self.finished = self.finished, []
+        done = [d for d in whole if d.chain < len(self.states)]
+        self._tried([d for d in whole if d.chain >= len(self.states)])
         full = [d for d in done if len(d.block)]
         if self.record and full:
             begun = time.monotonic()
@@ -200,10 +226,72 @@ class Driver:
             elif self._left(d.chain):
                 self.ready.append(d.chain)
 
+    # ---- a trial between settling and keeping -------------------------------------------------------------------
+
+    def _try(self) -> None:
+        """All chains have settled: begin the trial, or make all of it where that takes no time."""
+        assert self.terms is not None
+        stored = stored_answers(self.record, self.plan["dimension"]) if self.record else []
+        settling = [np.concatenate(part.facts["settle"]) for part in self.parts]
+        self.play = Play(self.workers.density, self.states, settling, self.terms, stored,
+                         storing=self.record is not None)
+        budget = self.play.competition.budget
+        self.progress.say(f"the chains have settled; a trial of motions may take {budget:.0f} gradients")
+        ready = deque(self.play.begin())
+        took = sum(part.seconds for part in self.parts) / max(1, sum(int(facts["gradients"].sum(dtype=np.int64))
+                                                                     for facts in settling))
+        if self.workers.local and took * budget < _TRIAL_HERE:
+            while ready and not self._stopping():
+                done = self.play.make_here(ready.popleft(), self.workers.live)
+                if done.block.error is not None:
+                    self.errors.append((self.play.place(done.chain), "trial", done.block.error))
+                else:
+                    ready.extend(self.play.take(done))
+        else:
+            self.ready.extend(ready)
+        if self.play.over:
+            self._end_trial()
+
+    def _tried(self, done: list[Done]) -> None:
+        """Blocks of the trial have come back."""
+        if self.play is None or not done:
+            return
+        for d in done:
+            if len(d.block):
+                self.ready.extend(self.play.take(replace(d, block=replace(d.block, error=None))))
+            if d.block.error is not None:
+                self.errors.append((self.play.place(d.chain), "trial", d.block.error))
+        if self.record and (self._stopping() or time.monotonic() >= self.stored + _COMMIT_SHARE * self.writing + 1.0):
+            self._store_answers(self.record)
+        if self.play.over:
+            self._end_trial()
+
+    def _store_answers(self, record: Record) -> None:
+        if self.play is not None and self.play.unsaved:
+            record_answers(record, self.play.unsaved)
+            self.play.unsaved.clear()
+            self.stored = time.monotonic()
+
+    def _end_trial(self) -> None:
+        """The winner's chains go on in the place of those that have settled."""
+        assert self.play is not None
+        self.trial, states = self.play.winners()
+        settings = replace(Settings.from_json(self.plan["settings"]), motion=self.trial.motion, path=self.trial.path,
+                           settle=0, step_size=Chain.from_state(self.workers.density, states[0]).step_size)
+        chosen = {"settings": settings.to_json(), "trial": self.trial.to_json()}
+        if self.record:
+            record_winner(self.record, chosen, states)
+        self.progress.say(f"the trial is over: {' '.join(self.trial.reasons[:1])}")
+        self.plan = self.plan | chosen
+        self.states, self.terms = states, None
+        self.ready.extend(chain for chain in range(len(states)) if self._left(chain))
+
     # ---- the end -----------------------------------------------------------------------------------------------
 
     def _end(self) -> Result:
-        done = not any(self._left(chain) for chain in range(len(self.states)))
+        if self.record:
+            self._store_answers(self.record)
+        done = self.terms is None and not any(self._left(chain) for chain in range(len(self.states)))
         abandoned = self.interrupts.count > 1
         real = [e for e in self.errors if not (abandoned and isinstance(e[2], Interrupted | KeyboardInterrupt))]
         why = "" if done else "an exception" if real else self.interrupts.name or "the time given had passed"
@@ -220,7 +308,9 @@ class Driver:
             error.add_note(f"fellwalk: the block in hand of chain {chain + 1} is lost; {kept}.")
             return error
         place = f"chain {chain + 1}"
-        if phase:
+        if phase == "trial":
+            place += ", in the trial of motions"
+        elif phase:
             doing = "keeping draws" if phase == "keep" else "settling"
             place += f", {doing}, at transition {self.parts[chain].count(phase) + 1}"
         others = sorted({number + 1 for number, *_ in errors} - {chain + 1})

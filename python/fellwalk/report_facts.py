@@ -87,7 +87,7 @@ def cost_summary(result: Result, judgement: Judgement | None, share: Share) -> s
 def cost_rows(result: Result, judgement: Judgement | None, share: Share) -> list[tuple[str, str]]:
     """The cost of the whole run, as (what, how much)."""
     spent, settled = result.spent, _settled(result, "gradients")
-    tried = result.trial["settling"] + result.trial["spent"] if result.trial else 0
+    tried = result.trial["spent"] if result.trial else 0
     kept = spent["gradients"] - settled - tried
     trial = f"{tried:,.0f} in the trial, " if tried else ""
     parts = f"{settled:,.0f} in settling, {trial}{kept:,.0f} for the kept draws"
@@ -161,8 +161,10 @@ def code(result: Result) -> str:
         given["settled"] = "earlier"
         given.pop("settle")
         given.pop("step_size", None)
-    if plan.get("trial"):
+    if "terms" in plan:
         given = {"motion": '"auto"', **{key: given[key] for key in ("keep", "chains", "seed", "acceptance")}}
+        if plan["terms"]["product_cost"] != 1.0:
+            given["product_cost"] = plan["terms"]["product_cost"]
     arguments = "".join(f"    {key}={value},\n" for key, value in given.items())
     return f"import fellwalk as fw\n\nresult = fw.run(\n    density, starts,\n{arguments})"
 

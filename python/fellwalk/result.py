@@ -166,12 +166,12 @@ class Result:
                     total["products"] += int(facts["products"].sum())
             total["seconds"] += part.seconds
         if self.trial is not None:
-            total["gradients"] += self.trial["settling"] + self.trial["spent"]
+            total["gradients"] += self.trial["spent"]
         return total
 
     @property
     def trial(self) -> dict[str, Any] | None:
-        """With ``motion="auto"`` what the trial has found, as `fellwalk.Trial.to_json` gives it, else None."""
+        """After a trial of motions what it has found, as `fellwalk.Trial.to_json` gives it, else None."""
         return self.plan.get("trial")
 
     @property
@@ -263,7 +263,7 @@ class Result:
             sizes = [chain["step_size"] for chain in self.chains]
             how = f"Settled in {_range(settled, 'd')} transitions"
             if self.trial:
-                how = "Settled in a trial of motions"
+                how += " and a trial of motions"
             elif self.plan.get("settled"):
                 how = f"Settled part {self.plan['settled']} taken over"
             lines.append(f"{how}: step size {_range(sizes, '.3g')}{self._bend_line()}.")

@@ -14,7 +14,6 @@ import numpy as np
 from numpy.typing import ArrayLike
 
 from fellwalk.audit import glance, glance_at_start
-from fellwalk.chain import Chain
 from fellwalk.density import Density, brief
 from fellwalk.driver import Driver
 from fellwalk.errors import ArgumentError, NotWrittenError, OtherModelError, StartError
@@ -29,15 +28,16 @@ from fellwalk.result import Result
 from fellwalk.run_record import ChainResult, begin, plan_of, read_check, read_parts, read_states
 from fellwalk.settings import Settings
 from fellwalk.settled import Settled
-from fellwalk.starts import Starts, starting_points
+from fellwalk.starts import Starts, first_states, starting_points
 from fellwalk.trial_result import Trial
-from fellwalk.trial_rounds import Competition, budget_for, settle_leaders
+from fellwalk.trial_rounds import Terms
 from fellwalk.watch import Watch, watch_again, watch_of
 from fellwalk.work import Check
 
 __all__ = ["resume", "run"]
 
 _GRADIENTS_UP_TO = 1000  # dimensions: beyond, kept gradients double a large record, so they are asked for
+_TRIAL_UP_TO = 20_000  # dimensions: beyond, the draws of a trial take gigabytes, so it is asked for
 _SETTLE = 400  # transitions that settling takes about, for guessing how long a run will be
 
 
@@ -55,6 +55,7 @@ def run(
     step_size: float | None = None,
     scale: ArrayLike | None = None,
     rank: int | str = "auto",
+    product_cost: float = 1.0,
     settled: Result | Settled | Trial | None = None,
     gradients: bool | None = None,
     watch: str | int | Sequence[str | int] | Callable[[np.ndarray], Any] | None = None,
@@ -73,9 +74,11 @@ def run(
         natural values, flat or dicts by name; also a function ``starts(rng)`` that draws one; left out, and without a
         ``start`` of the density, they are drawn (`fellwalk.starts.free_starts`).
     settle: settling transitions a chain, or "auto": until the scale has stabilised, between stated bounds.
-    motion: what moves a point, by default `fellwalk.Leapfrog()`; "auto": what a trial (`fellwalk.trial`) finds best, on
-        chains settled first in this process, with a budget of 0.15 of what the run would cost. The plan, and so the
-        record and the result, keeps its table; what was drawn during the trial is not kept.
+    motion: what moves a point, by default "auto": what a trial (`fellwalk.trial`) finds best, made when the chains have
+        settled, with a budget of 0.15 of what the run would cost. The plan, and so the record and the result, keeps its
+        table; what was drawn during the trial is not kept. Where ``path``, ``settle``, ``step_size``, ``scale``,
+        ``rank`` or ``settled`` is given, in more than 20,000 dimensions, and with ``batch=True``, the default is
+        `fellwalk.Leapfrog()`, without a trial. product_cost: gradients that a Hessian product counts as in the trial.
     acceptance: the rate that settling aims the step size at. step_size, scale: where settling starts from.
     rank: directions of large or small variance that the base metric learns beside its diagonal: a number, or "auto":
         those that stand out, at most 16. settled: another result (or its ``settled``), whose settled parts are used in
@@ -105,10 +108,15 @@ def run(
     if not isinstance(density, Density):
         raise ArgumentError(f"the first argument must be a fellwalk.Density; it is {type(density).__name__}: wrap your "
                             "function as fellwalk.Density(function, dimension)")
+    found = {"path": path, "step_size": step_size, "scale": scale, "settled": settled,
+             "settle": None if settle == "auto" else settle, "rank": None if rank == "auto" else rank}
+    given = [name for name, value in found.items() if value is not None]
     auto = isinstance(motion, str)
     if isinstance(motion, str):
-        _only_auto(motion, {"path": path, "step_size": step_size, "scale": scale, "settled": settled}, settle, rank)
+        _only_auto(motion, given)
         motion = None
+    elif motion is None and not given and density.batch is None:
+        auto = density.dimension <= _TRIAL_UP_TO
     if isinstance(settled, Trial):
         motion, path = motion or settled.motion, path or settled.path
     if density.batch is not None:
@@ -122,6 +130,7 @@ def run(
         if settle not in ("auto", 0):
             raise ArgumentError(f"settled= takes the place of settling; leave settle out (it is {settle!r})")
         settings = replace_settings(settings, settle=0, step_size=taken.chains[0].step_size)
+    product_cost = real("product_cost", product_cost, 0.0, 1e6, include=True)
     chains, keep = whole("chains", chains, 1, 2**20), whole("keep", keep, 1, 2**40)
     seconds = None if seconds is None else real("seconds", seconds, 0.0, 1e12)
     seed = secrets.randbits(128) if seed is None else whole("seed", seed, 0, 2**128)
@@ -140,6 +149,8 @@ def run(
     }
     if density.batch is not None:
         plan["lockstep"] = True
+    if auto:
+        plan["terms"] = {"draws": chains * keep, "product_cost": product_cost}
     if notes:
         plan["notes"] = dict(notes)
     again = settled.positions if starts is None and isinstance(settled, Trial) else None
@@ -156,21 +167,12 @@ def run(
             glance_at_start(density)
         raise
     watching = None if density.batch is not None else _watch(plan, watch, density, points[0], gradients)
-    if auto:
-        if audit:
-            glance(density, points[-1])
-        found = _tried(density, points, seed, acceptance, keep)
-        states = [chain.state for chain in found.chains]
-        settings = replace_settings(settings, motion=found.motion, path=found.path, settle=0,
-                                    step_size=found.chains[0].step_size)
-        plan |= {"settings": settings.to_json(), "trial": found.to_json()}
-    else:
-        first = _first_states if density.batch is None else first_lockstep_states
-        states = first(density, settings, points, seed, scale, taken)
-        if audit:
-            glance(density, points[-1])
-            if density.batch is not None:
-                check_rows(density, states)
+    first = first_states if density.batch is None else first_lockstep_states
+    states = first(density, settings, points, seed, scale, taken)
+    if audit:
+        glance(density, points[-1])
+        if density.batch is not None:
+            check_rows(density, states)
     parts = [ChainResult() for _ in states]
     check = Check.of(density, points[0])
     if density.batch is not None:
@@ -197,7 +199,10 @@ def _drive(plan: dict[str, Any], states: list[bytes], parts: list[ChainResult], 
            progress: object, seconds: float | None, watch: Watch | None) -> Result:
     told = choose_progress(progress, plan["keep"], [part.count("keep") for part in parts])
     told.say(workers.why)
-    return Driver(plan, states, parts, workers, file, told, seconds, watch).go()
+    terms = None
+    if "terms" in plan and not plan.get("trial"):
+        terms = Terms(plan["seed"], plan["settings"]["acceptance"], **plan["terms"])
+    return Driver(plan, states, parts, workers, file, told, seconds, watch, terms).go()
 
 
 def _watch(plan: dict[str, Any], watch: object, density: Density, point: np.ndarray, gradients: bool | None
@@ -217,34 +222,11 @@ def _natural(density: Density, point: np.ndarray) -> np.ndarray:
     return point if density.parameters is None else density.parameters.natural(point)
 
 
-def _only_auto(motion: str, given: Mapping[str, Any], settle: int | str, rank: int | str) -> None:
+def _only_auto(motion: str, given: Sequence[str]) -> None:
     if motion != "auto":
         raise ArgumentError(f'motion must be a motion, as fellwalk.Leapfrog(), or "auto"; it is {motion!r}')
-    named = [name for name, value in given.items() if value is not None]
-    named += [name for name, value in (("settle", settle), ("rank", rank)) if value != "auto"]
-    if named:
-        raise ArgumentError(f'motion="auto" finds what {named[0]}= would fix; leave it out')
-
-
-def _tried(density: Density, points: np.ndarray, seed: int, acceptance: float, keep: int) -> Trial:
-    leaders = settle_leaders(density, points, seed, acceptance)
-    draws = keep * len(points)
-    budget = budget_for(leaders.gradients, draws, leaders.per_draw)
-    return Competition(density, leaders, budget, seed, acceptance, 1.0, draws).go()
-
-
-def _first_states(density: Density, settings: Settings, points: np.ndarray, seed: int,
-                  scale: ArrayLike | None, settled: Settled | None) -> list[bytes]:
-    states = []
-    for c, point in enumerate(points):
-        part = None if settled is None else settled.for_chain(c, density.dimension)
-        try:
-            chain = Chain._with_settings(density, settings, point, np.random.SeedSequence(seed, spawn_key=(c,)), scale,
-                                         part)
-        except StartError as error:
-            raise StartError(f"chain {c + 1} of {len(points)}: {error}") from None
-        states.append(chain.state)
-    return states
+    if given:
+        raise ArgumentError(f'motion="auto" finds what {given[0]}= would fix; leave it out')
 
 
 def _settings(motion: Motion | None, path: Path | None, settle: int | str, acceptance: float,
@@ -273,7 +255,8 @@ def resume(
 
     density: that of the run; may be left out when the record names a model that can be imported. At the first starting
         point of the run it is evaluated again and must agree with the record.
-    keep: draws a chain in all, when more are wanted than at first; the bits are those of having asked at first.
+    keep: draws a chain in all, when more are wanted than at first; the bits are those of having asked at first (but for
+        a trial, which has had the budget of the run first asked for).
     watch: the function that the run watched, where it was one; it must agree at the first starting point, too.
     executor, progress, seconds: as in `run`; they need not be those of the first time.
     Errors: OtherModelError when the density does not agree; RecordError and its kinds; and as `run`.

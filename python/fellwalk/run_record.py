@@ -97,10 +97,13 @@ def record_block(done: Done, part: ChainResult) -> RecordBlock:
 
 
 def plan_of(record: Record) -> dict[str, Any]:
-    """The plan of the run that the record keeps. Errors: RecordError when it is not of a run of this version."""
+    """The plan of the run that the record keeps, with what its trial has chosen. Errors: RecordError when it is not of a
+    run of this version."""
     plan = record.settings
     if not (isinstance(plan, dict) and plan.keys() >= _PLAN):
         raise RecordError(f"{record.path}: this record was not made by fellwalk.run, so there is no run in it")
+    chosen = record.get_entry("chosen", {})
+    plan = plan | {name: chosen[name] for name in ("settings", "trial") if name in chosen}
     try:
         Settings.from_json(plan["settings"])
     except (KeyError, TypeError, ValueError) as error:
@@ -118,14 +121,19 @@ def _beginning(record: Record) -> dict[str, Any]:
 
 
 def read_states(record: Record) -> list[bytes]:
-    """The latest state of every chain, or its first one."""
-    found = _beginning(record)
-    whole = record.part(found["states"])
-    ends = np.cumsum(found["sizes"]).tolist()
-    states = [whole[end - size : end] for size, end in zip(found["sizes"], ends, strict=True)]
-    for chain, (_, _, state) in record.states().items():
-        states[chain] = state
+    """The latest state of every chain: of its last block, or that which a trial gave it, or its first one."""
+    chosen = record.get_entry("chosen")
+    states = _split(record, _beginning(record) if chosen is None else chosen)
+    for chain, (phase, _, state) in record.states().items():
+        if chosen is None or phase == "keep":
+            states[chain] = state
     return states
+
+
+def _split(record: Record, entry: dict[str, Any]) -> list[bytes]:
+    whole = record.part(entry["states"])
+    ends = np.cumsum(entry["sizes"]).tolist()
+    return [whole[end - size : end] for size, end in zip(entry["sizes"], ends, strict=True)]
 
 
 def read_check(record: Record, dimension: int) -> Check:

@@ -6,11 +6,14 @@ from typing import Any
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
+from fellwalk.chain import Chain
 from fellwalk.density import Density, as_vector, brief
 from fellwalk.errors import ShapeError, StartError
 from fellwalk.parameters import Parameters
+from fellwalk.settings import Settings
+from fellwalk.settled import Settled
 
-__all__ = ["starting_points"]
+__all__ = ["first_states", "starting_points"]
 
 Starts = ArrayLike | Mapping[str, ArrayLike] | Sequence[Mapping[str, ArrayLike]] | Callable[[np.random.Generator], Any]
 _HALVINGS = 60
@@ -103,3 +106,18 @@ def _drawn(density: Density, rng: np.random.Generator) -> NDArray[np.float64]:
             return x
     raise StartError(f"no starting point was found: {_HALVINGS} points drawn in the free coordinates have a log "
                      "density or gradient that is not finite; give starts in natural values")
+
+
+def first_states(density: Density, settings: Settings, points: NDArray[np.float64], seed: int,
+                 scale: ArrayLike | None = None, settled: Settled | None = None) -> list[bytes]:
+    """States of chains that stand at these points and have not moved. Errors: StartError, which names the chain."""
+    states = []
+    for c, point in enumerate(points):
+        part = None if settled is None else settled.for_chain(c, density.dimension)
+        try:
+            chain = Chain._with_settings(density, settings, point, np.random.SeedSequence(seed, spawn_key=(c,)), scale,
+                                         part)
+        except StartError as error:
+            raise StartError(f"chain {c + 1} of {len(points)}: {error}") from None
+        states.append(chain.state)
+    return states

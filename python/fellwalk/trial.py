@@ -2,15 +2,25 @@
 
 from __future__ import annotations
 
+from concurrent.futures import Executor
+from dataclasses import replace
+
 import numpy as np
 from numpy.typing import ArrayLike
 
+from fellwalk.chain import Chain
 from fellwalk.density import Density
+from fellwalk.driver import Driver
 from fellwalk.errors import ArgumentError
 from fellwalk.motions import real, whole
-from fellwalk.starts import starting_points
+from fellwalk.pools import Workers
+from fellwalk.progress import choose_progress
+from fellwalk.run_record import ChainResult
+from fellwalk.settings import Settings
+from fellwalk.starts import first_states, starting_points
 from fellwalk.trial_result import Entry, Trial
-from fellwalk.trial_rounds import Competition, settle_leaders
+from fellwalk.trial_rounds import Terms
+from fellwalk.work import Check
 
 __all__ = ["Entry", "Trial", "trial"]
 
@@ -24,6 +34,8 @@ def trial(
     seed: int | None = None,
     acceptance: float = 0.8,
     product_cost: float = 1.0,
+    executor: Executor | str | None = None,
+    progress: object = None,
 ) -> Trial:
     """Try motions and paths on a density, and settle chains of the best one.
 
@@ -36,8 +48,9 @@ def trial(
     standard errors; a candidate is ruled out where it visited a tail too rarely, or where more paths ended in failed
     steps.
 
-    starts, chains, seed, acceptance: as in `run`. budget: in gradients; a Hessian product counts as product_cost of
-    them. No clock decides anything. Errors: as `run`.
+    starts, chains, seed, acceptance, executor, progress: as in `run`. budget: in gradients; a Hessian product counts as
+    product_cost of them. No clock decides anything. Ctrl-C ends it without a result (KeyboardInterrupt); a trial inside
+    a `run` with a record goes on from where it stood. Errors: as `run`.
     """
     if not isinstance(density, Density):
         raise ArgumentError(f"the first argument must be a fellwalk.Density; it is {type(density).__name__}: wrap your "
@@ -51,5 +64,17 @@ def trial(
         raise ArgumentError("this density has no start of its own; give starts: a point (dimension,) in the support")
     points = starting_points(density, density.start if starts is None else starts, chains,
                              np.random.default_rng([seed, 1]))
-    leaders = settle_leaders(density, points, seed, acceptance)
-    return Competition(density, leaders, budget, seed, acceptance, product_cost).go()
+    settings = Settings(acceptance=acceptance)
+    states = first_states(density, settings, points, seed)
+    plan = {"settings": settings.to_json(), "names": density.names, "dimension": density.dimension, "chains": chains,
+            "keep": 0, "seed": seed, "gradients": False}
+    check = Check.of(density, points[0])
+    with Workers(executor, density, chains, budget / 10.0, check) as workers:
+        told = choose_progress(progress, 0, [0] * chains)
+        told.say(workers.why)
+        driver = Driver(plan, states, [ChainResult() for _ in states], workers, None, told, None,
+                        terms=Terms(seed, acceptance, 0, budget, product_cost))
+        driver.go()
+    if driver.trial is None:
+        raise KeyboardInterrupt
+    return replace(driver.trial, chains=tuple(Chain.from_state(density, state) for state in driver.states))

@@ -2,19 +2,21 @@
 
 from __future__ import annotations
 
+from collections.abc import Generator
 from dataclasses import dataclass, field, replace
+from typing import TypeVar
 
 import numpy as np
 from numpy.typing import NDArray
 
-from fellwalk.chain import Block, Chain
-from fellwalk.density import Density
+from fellwalk.chain import Block
 from fellwalk.failing import harmful
+from fellwalk.fresh import Fresh
 from fellwalk.motions import Isokinetic, Jittered, Lagrangian, Leapfrog, Motion, NoUTurn, Path
 from fellwalk.settings import Settings
 from fellwalk.settled import SettledChain
 
-__all__ = ["Candidate", "Contender", "candidates_for", "new_chain", "with_rank"]
+__all__ = ["LEADER", "Ask", "Candidate", "Contender", "Work", "candidates_for", "fresh_chain", "with_rank"]
 
 
 @dataclass(frozen=True)
@@ -31,20 +33,28 @@ LEADER = Candidate("leapfrog", Leapfrog(), NoUTurn())
 
 
 def candidates_for(dimension: int, directions: int) -> list[Candidate]:
-    """All candidates; the first is the leader, whose chains have settled by the open plan."""
+    """All candidates; the first is the leader, whose chains have settled by the open plan. The others stand in the
+    order in which they are left out where a budget is too small for all, the last first."""
     found = [LEADER]
     if directions > 0:
         found.append(Candidate("leapfrog, rank 0", Leapfrog(), NoUTurn(), 0))
-    if directions > 1:
-        found.append(Candidate("leapfrog, rank 1", Leapfrog(), NoUTurn(), 1))
     found.append(Candidate("leapfrog, length found", Leapfrog(), Jittered("auto")))
-    found.append(Candidate("leapfrog, halved", Leapfrog(halvings=6), NoUTurn()))
-    found += [Candidate(f"lagrangian, bend {bend:g}", Lagrangian(bend=bend), NoUTurn()) for bend in (0.1, 0.3, 1.0)]
     if dimension > 1:
         found.append(Candidate("isokinetic", Isokinetic(), NoUTurn()))
+    found.append(_bent(0.3))
+    if dimension > 1:
         found.append(Candidate("isokinetic, length found", Isokinetic(), Jittered("auto")))
+    found.append(Candidate("leapfrog, halved", Leapfrog(halvings=6), NoUTurn()))
+    if directions > 1:
+        found.append(Candidate("leapfrog, rank 1", Leapfrog(), NoUTurn(), 1))
+    found += [_bent(bend) for bend in (0.1, 1.0)]
+    if dimension > 1:
         found.append(Candidate("isokinetic, halved", Isokinetic(halvings=6), NoUTurn()))
     return found
+
+
+def _bent(bend: float) -> Candidate:
+    return Candidate(f"lagrangian, bend {bend:g}", Lagrangian(bend=bend), NoUTurn())
 
 
 def with_rank(part: SettledChain, rank: int | None) -> SettledChain:
@@ -61,12 +71,31 @@ def with_rank(part: SettledChain, rank: int | None) -> SettledChain:
                    variances=part.variances[kept])
 
 
+@dataclass(frozen=True, eq=False)
+class Ask:
+    """A block wanted of a chain of the trial: of a new one (`fresh`), or of the one that `slot` (number of the
+    candidate, number of the chain) holds; at most `most` transitions."""
+
+    slot: tuple[int, int]
+    most: int
+    fresh: Fresh | None = None
+    gradients: bool = False
+
+
+Found = TypeVar("Found")
+Work = Generator[list[Ask], list[Block], Found]  # asks for blocks that may be made side by side, and is sent them
+
+
 @dataclass(eq=False)
 class Contender:
-    """A candidate with its chains and draws, and what it has spent: `spent` in all, `drawing` for the draws."""
+    """A candidate with its draws, and what it has spent: `spent` in all, `drawing` for the draws.
+
+    number: of the candidate; unbegun: of its chains, None where the chain exists.
+    """
 
     candidate: Candidate
-    chains: list[Chain] = field(default_factory=list)
+    number: int
+    unbegun: list[Fresh | None] = field(default_factory=list)
     draws: list[list[NDArray[np.float64]]] = field(default_factory=list)
     spent: float = 0.0
     drawing: float = 0.0
@@ -74,23 +103,42 @@ class Contender:
     failed: int = 0
     rounds: int = 0
 
-    def take(self, block: Block, number: int, cost: float) -> None:
-        """Add a block of draws of chain `number`."""
+    @property
+    def chains(self) -> int:
+        """How many it has."""
+        return len(self.unbegun)
+
+    def add(self, fresh: Fresh | None) -> None:
+        """One chain more."""
+        self.unbegun.append(fresh)
+        self.draws.append([])
+
+    def ask(self, most: int, *, gradients: bool = False) -> list[Ask]:
+        """A block of each chain."""
+        asks = [Ask((self.number, c), most, fresh, gradients) for c, fresh in enumerate(self.unbegun)]
+        self.unbegun = [None] * self.chains
+        return asks
+
+    def take(self, block: Block, chain: int, cost: float, picked: NDArray[np.int64] | None) -> None:
+        """Add a block of draws of one chain, or of each draw only the coordinates `picked`."""
         self.spent += cost
         self.drawing += cost
         self.transitions += len(block)
         self.failed += int(np.count_nonzero(harmful(block.facts["failure"])))
-        self.draws[number].append(block.draws)
+        self.draws[chain].append(block.draws if picked is None else block.draws[:, picked])
+
+    def only(self, picked: NDArray[np.int64]) -> None:
+        """Forget the other coordinates of the draws."""
+        self.draws = [[rows[:, picked] for rows in parts] for parts in self.draws]
 
     def stacked(self) -> NDArray[np.float64]:
-        """(chains, draws, dimension), as many draws as the shortest chain has."""
+        """(chains, draws, coordinates), as many draws as the shortest chain has."""
         joined = [np.concatenate(parts) for parts in self.draws]
         n = min(len(rows) for rows in joined)
         return np.stack([rows[:n] for rows in joined])
 
 
-def new_chain(density: Density, candidate: Candidate, part: SettledChain, start: NDArray[np.float64],
-              seed: np.random.SeedSequence, acceptance: float) -> Chain:
+def fresh_chain(candidate: Candidate, part: SettledChain, start: NDArray[np.float64], seed: tuple[int, tuple[int, ...]],
+                acceptance: float) -> Fresh:
     """A chain of the candidate with the base metric, step size, beta and number of steps of the settled part."""
-    settings = Settings(motion=candidate.motion, path=candidate.path, acceptance=acceptance)
-    return Chain._with_settings(density, settings, start, seed, None, part)
+    return Fresh(Settings(motion=candidate.motion, path=candidate.path, acceptance=acceptance), part, start, seed)

@@ -84,7 +84,9 @@ class Trial:
 
 
 def told_in_words(found: dict[str, Any]) -> str:
-    """Ranking and reasons of what `Trial.to_json` gave."""
+    """Ranking and reasons of what `Trial.to_json` gave; the reasons alone where nothing was tried."""
+    if not any(entry["draws"] for entry in found["entries"]):
+        return "\n".join(found["reasons"])
     head = ("candidate", "in 1000", "95% interval", "effective", "worst", "R-hat", "failed", "spent", "")
     rows = [head]
     for e in found["entries"]:

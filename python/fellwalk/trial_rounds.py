@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Iterator
 from dataclasses import asdict, dataclass, replace
 from typing import Any
 
@@ -10,21 +11,20 @@ import numpy as np
 from numpy.typing import NDArray
 
 from fellwalk import trial_merit
-from fellwalk.chain import Block, Chain
+from fellwalk.chain import Block
 from fellwalk.density import Density
-from fellwalk.errors import StartError
 from fellwalk.motions import Jittered, Lagrangian, Leapfrog
-from fellwalk.settings import Settings
 from fellwalk.settled import SettledChain
-from fellwalk.trial_candidates import LEADER, Candidate, Contender, candidates_for, new_chain, with_rank
+from fellwalk.trial_candidates import LEADER, Ask, Candidate, Contender, Work, candidates_for, fresh_chain, with_rank
 from fellwalk.trial_result import Entry, Trial
-from fellwalk.trial_tuning import Tuner, steepness
+from fellwalk.trial_tuning import Tuner, needed, steepness
 
-__all__ = ["Competition", "Leaders", "budget_for", "settle_leaders"]
+__all__ = ["Competition", "Leaders", "Terms"]
 
 _SHARE = 0.15  # of what a run costs without its trial, settling and draws
 _CHAINS = 2  # chains of every candidate but the leader, which has all
 _ROUNDS = (0.5, 0.5, 1.0)  # shares of what is left of the budget
+_FOR_TUNING = 0.6  # share of its first allowance that a candidate may take to find its step size
 _MOST_IN_BLOCK = 1000
 _AT_LEAST = 1.1  # a candidate takes the leader's place only where it is worth so many times as much,
 _ERRORS = 1.28  # and by so many standard errors of the logarithm: chance does that once in ten
@@ -34,56 +34,59 @@ _FAILED = 0.01  # share of failed paths beyond the leader's that disqualifies
 _FEW = 10.0  # effective draws below which nothing can be told
 _ONE_STEP = Candidate("one step", Leapfrog(), Jittered("auto"))
 _ROUGH = 1e-3  # energy error of a step a thousandth as long as the settled one: smooth densities have 1e-9
+_NOISE = (1000, 0)  # the slot of the chain that looks for it
+_ALL_UP_TO = 2000  # coordinates that are all judged; of more these are: so many spread evenly,
+_EVENLY, _SLOWEST = 1000, 250  # and those in which the leader's first draws moved least
 
 
-def budget_for(settling: float, draws: int, per_draw: float) -> float:
-    """What a run that keeps so many draws in all spends on its trial."""
-    return _SHARE * (settling + draws * per_draw)
+@dataclass(frozen=True)
+class Terms:
+    """What a trial may cost. draws: those that the run, which makes the trial, is to keep, or 0; budget: in gradients,
+    or None: a share of what the run will cost; product_cost: gradients that a Hessian product counts as."""
+
+    seed: int
+    acceptance: float = 0.8
+    draws: int = 0
+    budget: float | None = None
+    product_cost: float = 1.0
+
+    def budget_for(self, settling: float, per_draw: float) -> float:
+        """The budget where settling took so many gradients and a draw takes so many."""
+        return _SHARE * (settling + self.draws * per_draw) if self.budget is None else self.budget
 
 
 @dataclass(frozen=True)
 class Leaders:
-    """Settled chains of the leader. gradients: that settling took; per_draw: of a transition in the last part of it."""
+    """Settled chains of the leader: their settled parts and positions. gradients: that settling took; per_draw: of a
+    transition in the last part of it."""
 
-    chains: list[Chain]
+    parts: list[SettledChain]
+    positions: list[NDArray[np.float64]]
     gradients: float
     per_draw: float
 
 
-def settle_leaders(density: Density, points: NDArray[np.float64], seed: int, acceptance: float) -> Leaders:
-    """Settle the leader's chains from these points, as a run with this seed would."""
-    settings = Settings(motion=LEADER.motion, path=LEADER.path, acceptance=acceptance)
-    chains, gradients, late = [], 0.0, []
-    for c, point in enumerate(points):
-        try:
-            chain = Chain._with_settings(density, settings, point, np.random.SeedSequence(seed, spawn_key=(c,)), None)
-        except StartError as error:
-            raise StartError(f"chain {c + 1} of {len(points)}: {error}") from None
-        block = chain._raised(chain.block(2**62, draws=False))
-        gradients += float(block.facts["gradients"].sum())
-        late.append(float(block.facts["gradients"][-50:].mean()))
-        chains.append(chain)
-    return Leaders(chains, gradients, float(np.mean(late)))
-
-
 class Competition:
-    """The rounds of a trial, from settled chains of the leader to the winner's chains.
+    """The rounds of a trial, from settled chains of the leader to those of the winner.
 
-    draws: those that the run, which makes the trial, is to keep; where a better candidate takes less for a draw than
-    the leader, the run will be cheaper, and the budget with it. 0: the budget stands.
+    `go` yields groups of works that may go on side by side, each to its end before the next group begins.
+    Where a better candidate takes less for a draw than the leader, a run will be cheaper, and its trial's budget with
+    it. After `go`: `winner`, a contender, and `found`, without the chains.
     """
 
-    def __init__(self, density: Density, leaders: Leaders, budget: float, seed: int, acceptance: float,
-                 product_cost: float, draws: int = 0) -> None:
-        self.draws = draws
-        self.density, self.budget, self.seed, self.acceptance = density, float(budget), seed, acceptance
-        self.product_cost, self.settling = product_cost, leaders.gradients
-        self.parts = [SettledChain.of(chain) for chain in leaders.chains]
-        self.begun = [chain.position for chain in leaders.chains]
+    def __init__(self, density: Density, leaders: Leaders, terms: Terms) -> None:
+        self.density, self.terms = density, terms
+        self.settling, self.per_draw = leaders.gradients, leaders.per_draw
+        self.budget = terms.budget_for(leaders.gradients, leaders.per_draw)
+        self.parts, self.begun = leaders.parts, leaders.positions
         directions = max(len(part.variances) for part in self.parts)
-        self.leader = Contender(LEADER, list(leaders.chains), [[] for _ in leaders.chains])
-        self.others = [Contender(c) for c in candidates_for(density.dimension, directions)[1:]]
+        found = candidates_for(density.dimension, directions)
+        self.leader = Contender(LEADER, 0)
+        for _ in self.parts:
+            self.leader.add(None)
+        self.others = [Contender(c, i) for i, c in enumerate(found[: 1 + self._affordable(len(found) - 1)]) if i > 0]
         self.plain = [c for c in self.others if c.candidate.rank == 0]
+        self.winner = self.leader
         self.out: list[tuple[Contender, str]] = []
         self.blocks: list[dict[str, Any]] = []
         self.remarks: list[str] = []
@@ -92,28 +95,37 @@ class Competition:
         self.gradients: list[NDArray[np.float64]] = []
         self.tuned: dict[int, Tuner] = {}
         self.spread = np.ones(density.dimension)
+        self.picked: NDArray[np.int64] | None = None
+        self.found: Trial | None = None
 
-    def go(self) -> Trial:
+    def _affordable(self, most: int) -> int:
+        """How many candidates the first round can tune, and let draw as often as is the least to say something of."""
+        tuning = needed(self.per_draw)
+        each = max(tuning / _FOR_TUNING, tuning + trial_merit.FEWEST * _CHAINS * self.per_draw)
+        return int(np.clip(_ROUNDS[0] * self.budget / each - 1.0, 0, most))
+
+    def go(self) -> Iterator[list[Work[None]]]:
         """All rounds."""
-        self._look_for_noise()
+        if not self.others:
+            self.found = self._no_trial()
+            return
+        yield [self._look_for_noise()]
         live = [self.leader, *self.others]
         for number, share in enumerate(_ROUNDS):
             left = self.budget - self._spent()
-            if left <= 0.0:
+            if left <= 0.0 or len(live) == 1:
                 break
             allowance = share * left / len(live)
-            for contender in list(live):
-                if not self._give(contender, allowance, number):
-                    live.remove(contender)
-                    self.out.append((contender, "its share of the budget was not enough to find its step size"))
-                if contender is self.leader and number == 0:
-                    self.spread = np.maximum(self.leader.stacked().var(axis=(0, 1)), 1e-300)
-            live = self._weigh(live, number, last=number == len(_ROUNDS) - 1)
+            if number == 0:
+                yield [self._give(self.leader, allowance, number)]
+                self._know_the_leader()
+                yield [self._give(contender, allowance, number) for contender in live[1:]]
+            else:
+                yield [self._give(contender, allowance, number) for contender in live]
+            live = self._weigh([c for c in live if c.chains], number, last=number == len(_ROUNDS) - 1)
             best = live[0]
-            if self.draws > 0:
-                per_draw = best.drawing / best.transitions
-                self.budget = min(self.budget, budget_for(self.settling, self.draws, per_draw))
-        return self._end(live)
+            self.budget = min(self.budget, self.terms.budget_for(self.settling, best.drawing / best.transitions))
+        self.found = self._end(live)
 
     def _spent(self) -> float:
         return sum(c.spent for c in (self.leader, *self.others))
@@ -121,76 +133,85 @@ class Competition:
     # ---- drawing ------------------------------------------------------------------------------------------------
 
     def _price(self, block: Block) -> float:
-        return float(block.facts["gradients"].sum()) + self.product_cost * float(block.facts["products"].sum())
+        facts = block.facts
+        return float(facts["gradients"].sum()) + self.terms.product_cost * float(facts["products"].sum())
 
-    def _give(self, contender: Contender, allowance: float, number: int) -> bool:
-        """Let a candidate draw for about `allowance`; in its first round it pays its tuning from that. False where it
-        could not even be tuned."""
+    def _give(self, contender: Contender, allowance: float, number: int) -> Work[None]:
+        """Let a candidate draw for about `allowance`; in its first round it pays its tuning from that, and is out where
+        that was not enough."""
         until = contender.spent + allowance
-        if not contender.chains and not self._enter(contender, allowance):
-            return False
+        if not contender.chains and not (yield from self._enter(contender, allowance)):
+            self.out.append((contender, "its share of the budget was not enough to find its step size"))
+            return
         contender.rounds = number + 1
-        fewest = trial_merit.FEWEST * len(contender.chains)
+        fewest = trial_merit.FEWEST * contender.chains
+        first = contender is self.leader and number == 0
         while contender.spent < until or contender.transitions < fewest:
-            for c, chain in enumerate(contender.chains):
-                block = chain._raised(chain.block(self._block_size(contender, until),
-                                                  gradients=contender is self.leader and number == 0))
-                contender.take(block, c, self._price(block))
+            blocks = yield contender.ask(self._block_size(contender, until), gradients=first)
+            for c, block in enumerate(blocks):
+                contender.take(block, c, self._price(block), self.picked)
                 if block.gradients is not None:
                     self.gradients.append(block.gradients)
-        return True
 
     def _block_size(self, contender: Contender, until: float) -> int:
         """Transitions of the next block of each chain: the fewest first, then as many as the rest may pay for."""
-        chains = len(contender.chains)
-        if contender.transitions < trial_merit.FEWEST * chains:
+        if contender.transitions < trial_merit.FEWEST * contender.chains:
             return trial_merit.FEWEST
         each = contender.drawing / contender.transitions
-        return int(np.clip((until - contender.spent) / (each * chains), 1, _MOST_IN_BLOCK))
+        return int(np.clip((until - contender.spent) / (each * contender.chains), 1, _MOST_IN_BLOCK))
 
-    def _enter(self, contender: Contender, allowance: float) -> bool:
+    def _know_the_leader(self) -> None:
+        """From its first draws: the spread of all coordinates, and which of them are judged where there are many."""
+        draws = self.leader.stacked()
+        self.spread = np.maximum(draws.var(axis=(0, 1)), 1e-300)
+        d = self.density.dimension
+        if d > _ALL_UP_TO:
+            moved = (np.diff(draws, axis=1) ** 2).mean(axis=(0, 1)) / self.spread
+            slow = np.argsort(moved, kind="stable")[:_SLOWEST]
+            self.picked = np.union1d(np.linspace(0, d - 1, _EVENLY).round().astype(np.int64), slow)
+            self.leader.only(self.picked)
+
+    def _named(self, coordinate: int) -> str:
+        return self.density.coordinates[coordinate if self.picked is None else int(self.picked[coordinate])]
+
+    def _enter(self, contender: Contender, allowance: float) -> Work[bool]:
         """Tune a candidate on its first chain. Where the surrogate field caps its acceptance the cheapest field that is
         left takes its place."""
-        tuner = self._tuned(contender, allowance)
+        tuner = yield from self._tuned(contender, allowance)
         motion = contender.candidate.motion
         if tuner is not None and tuner.capped and isinstance(motion, Lagrangian):
             curvature = "difference" if self.density.hessian_product is None else "product"
             contender.candidate = replace(contender.candidate, motion=replace(motion, curvature=curvature),
                                           name=f"{contender.candidate.name}, {curvature}")
-            tuner = self._tuned(contender, allowance)
+            tuner = yield from self._tuned(contender, allowance)
         if tuner is None:
             return False
-        self.tuned[self._key(contender)] = tuner
+        self.tuned[contender.number] = tuner
         self._fill(contender, min(_CHAINS, len(self.parts)))
         return True
 
-    def _tuned(self, contender: Contender, allowance: float) -> Tuner | None:
+    def _tuned(self, contender: Contender, allowance: float) -> Work[Tuner | None]:
         part, motion = with_rank(self.parts[0], contender.candidate.rank), contender.candidate.motion
         beta = 0.0
         if isinstance(motion, Lagrangian):
             beta = motion.bend / max(steepness(part, np.concatenate(self.gradients)), 0.01 * len(part.scale))
-        tuner = Tuner(self.density, contender.candidate, replace(part, beta=beta, steps=0), self.begun[0],
-                      (self.seed, (0, self._key(contender))), self.acceptance, self.product_cost, 0.6 * allowance,
-                      self.spread)
-        fine = tuner.go()
+        tuner = Tuner((contender.number, 0), contender.candidate, replace(part, beta=beta, steps=0), self.begun[0],
+                      (self.terms.seed, (0, contender.number)), self.terms.acceptance, self.terms.product_cost,
+                      _FOR_TUNING * allowance, self.spread)
+        fine = yield from tuner.go()
         contender.spent += tuner.spent
         return tuner if fine else None
 
     def _fill(self, contender: Contender, count: int) -> None:
         """New chains of a tuned candidate, `count` in all."""
-        key = self._key(contender)
-        tuner = self.tuned[key]
-        for c in range(len(contender.chains), count):
+        tuner = self.tuned[contender.number]
+        for c in range(contender.chains, count):
             own = with_rank(self.parts[c], contender.candidate.rank)
             part = replace(own, step_size=tuner.part.step_size, beta=tuner.part.beta, steps=tuner.part.steps)
-            seed = np.random.SeedSequence(self.seed, spawn_key=(c, key))
             start = tuner.position if c == 0 else self.begun[c]
-            contender.chains.append(new_chain(self.density, contender.candidate, part, start, seed, self.acceptance))
-            contender.draws.append([])
+            contender.add(fresh_chain(contender.candidate, part, start, (self.terms.seed, (c, contender.number)),
+                                      self.terms.acceptance))
             contender.spent += 1.0
-
-    def _key(self, contender: Contender) -> int:
-        return 1 + [id(c) for c in (self.leader, *self.others)].index(id(contender))
 
     # ---- deciding -----------------------------------------------------------------------------------------------
 
@@ -222,14 +243,14 @@ class Competition:
         return kept
 
     def _ruled_out(self, contender: Contender) -> str:
-        worth, names = self.worths[contender.candidate.name], self.density.coordinates
+        worth = self.worths[contender.candidate.name]
         share = contender.failed / contender.transitions
         usual = self.leader.failed / self.leader.transitions
         surely = contender.failed - 2.0 * math.sqrt(contender.failed)  # more than chance would have
         if surely > (usual + _FAILED) * contender.transitions:
             return f"{share:.1%} of its paths ended in a failed step ({usual:.1%} of the leader's)"
         if worth.shy > _SHY:
-            return f"it visited a tail of {names[worth.shy_in]} too rarely, by {worth.shy:.0f} standard errors"
+            return f"it visited a tail of {self._named(worth.shy_in)} too rarely, by {worth.shy:.0f} standard errors"
         return ""
 
     def _end(self, live: list[Contender]) -> Trial:
@@ -237,14 +258,22 @@ class Competition:
         told = self._believe(best)
         if best is not self.leader:
             self._fill(best, len(self.parts))
+        self.winner = best
         ranked = [best, *(c for c in live if c is not best)]
         entries = [self._entry(c, "") for c in ranked]
         measured = [(c, why) for c, why in self.out if c.candidate.name in self.worths]
         entries += [self._entry(c, why) for c, why in sorted(measured, key=lambda pair: -self._score(pair[0]))]
         entries += [Entry(c.candidate.name, 0.0, 0.0, 0.0, 0.0, "", "", 1.0, 0.0, 0, c.spent, 0, why)
                     for c, why in self.out if c.candidate.name not in self.worths]
-        return Trial(tuple(entries), tuple(self.remarks), told, best.candidate.motion, best.candidate.path,
-                     tuple(best.chains), self.budget, self._spent(), self.settling, tuple(self.blocks))
+        return Trial(tuple(entries), tuple(self.remarks), told, best.candidate.motion, best.candidate.path, (),
+                     self.budget, self._spent(), self.settling, tuple(self.blocks))
+
+    def _no_trial(self) -> Trial:
+        needs = math.ceil(2.0 * needed(self.per_draw) / _FOR_TUNING / _ROUNDS[0])
+        said = (f"No trial was made: its budget of {self.budget:.0f} gradients is too small to tell a second way of "
+                f"moving from {LEADER.name}, which stays; to tune one takes about {needs}.")
+        entry = Entry(LEADER.name, 0.0, 0.0, 0.0, 0.0, "", "", 1.0, 0.0, 0, 0.0, 0, "")
+        return Trial((entry,), (said,), False, LEADER.motion, LEADER.path, (), self.budget, 0.0, self.settling)
 
     def _chosen(self, live: list[Contender]) -> Contender:
         """The first, unless a plain way may be as good; fewer directions make cheaper steps, unseen by gradients."""
@@ -273,7 +302,7 @@ class Competition:
         per = 1000.0 * worth.effective / contender.drawing
         reach = math.exp(min(1.96 * worth.error, 700.0))
         return Entry(contender.candidate.name, per, per / reach, per * reach, worth.effective,
-                     self.density.coordinates[worth.worst], worth.what, worth.apart,
+                     self._named(worth.worst), worth.what, worth.apart,
                      contender.failed / contender.transitions, contender.transitions, contender.spent, contender.rounds,
                      why)
 
@@ -281,7 +310,7 @@ class Competition:
 
     def _believe(self, best: Contender) -> bool:
         """Was the budget enough, and do chains from different starts agree? Says so where not."""
-        worth, names = self.worths[best.candidate.name], self.density.coordinates
+        worth = self.worths[best.candidate.name]
         led = self.worths[LEADER.name]
         told = not self.rough
         if best is self.leader and self._ruled_out(best):
@@ -289,19 +318,19 @@ class Competition:
             told = False
         apart, where = (led.apart, led.apart_in) if led.apart > worth.apart else (worth.apart, worth.apart_in)
         if apart > _APART:
-            groups = self._groups(where)
+            groups, name = self._groups(where), self._named(where)
             if groups:
                 self.remarks.append(f"Chains from different starts stay in different parts of the target ({groups} in "
-                                    f"{names[where]}, R-hat {apart:.2f}): it has several modes, and no candidate was "
-                                    "seen to pass between them. What was measured is how well they move inside one.")
+                                    f"{name}, R-hat {apart:.2f}): it has several modes, and no candidate was seen to "
+                                    "pass between them. What was measured is how well they move inside one.")
             else:
-                self.remarks.append(f"Chains from different starts do not agree yet (R-hat {apart:.2f} in "
-                                    f"{names[where]}): the budget is too small to tell, or the target has parts that "
-                                    "none has found.")
+                self.remarks.append(f"Chains from different starts do not agree yet (R-hat {apart:.2f} in {name}): the "
+                                    "budget is too small to tell, or the target has parts that none has found.")
             told = False
         if worth.effective < _FEW:
-            self.remarks.append(f"The best had {worth.effective:.1f} effective draws in {names[worth.worst]}: the "
-                                f"budget is too small to tell; ten would take about {self._needed(worth):.0f}.")
+            name = self._named(worth.worst)
+            self.remarks.append(f"The best had {worth.effective:.1f} effective draws in {name}: the budget is too "
+                                f"small to tell; ten would take about {self._needed(worth):.0f}.")
             told = False
         return told
 
@@ -320,7 +349,7 @@ class Competition:
                 return f"{len(left)} below a gap and {len(right)} above it"
         return ""
 
-    def _look_for_noise(self) -> None:
+    def _look_for_noise(self) -> Work[None]:
         """The same value twice at the same place, and an energy that hardly changes in a very short step?"""
         part, x = self.parts[0], self.begun[0]
         first, second = self.density(x), self.density(x)
@@ -331,9 +360,9 @@ class Competition:
                                 "position alone; what the trial says is not to be believed.")
             return
         short = replace(part, step_size=1e-3 * part.step_size, steps=1)
-        seed = np.random.SeedSequence(self.seed, spawn_key=(0, 0))
-        chain = new_chain(self.density, _ONE_STEP, short, x, seed, self.acceptance)
-        errors = chain._raised(chain.block(5)).facts["log_weight_range"]
+        fresh = fresh_chain(_ONE_STEP, short, x, (self.terms.seed, (0, 0)), self.terms.acceptance)
+        (block,) = yield [Ask(_NOISE, 5, fresh)]
+        errors = block.facts["log_weight_range"]
         size = 1e-11 * (abs(first[0]) + len(x))
         self.rough = float(np.median(errors)) > _ROUGH + size
         if self.rough:

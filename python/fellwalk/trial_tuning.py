@@ -9,12 +9,11 @@ import numpy as np
 from numpy.typing import NDArray
 
 from fellwalk.chain import Block
-from fellwalk.density import Density
 from fellwalk.motions import Jittered, NoUTurn
 from fellwalk.settled import SettledChain
-from fellwalk.trial_candidates import Candidate, new_chain
+from fellwalk.trial_candidates import Ask, Candidate, Work, fresh_chain
 
-__all__ = ["Tuner", "steepness"]
+__all__ = ["Tuner", "needed", "steepness"]
 
 # The logarithm of the step size moves by gain * (acceptance - target) after each block (Robbins & Monro 1951); the mean
 # of the later half is taken. Gains from 3 down: a block that rejects all takes the step down to a tenth.
@@ -26,6 +25,11 @@ _MOST_STEPS = 512
 _FIRST_REACH = np.pi  # a half period of a normal target
 
 
+def needed(per_draw: float) -> float:
+    """Gradients that finding a step size takes about, where a draw on whole paths takes so many."""
+    return _BLOCK * len(_GAINS) * (1.0 / _BLOCK + min(per_draw, 2.0**_SHORT - 1.0))
+
+
 def steepness(part: SettledChain, gradients: NDArray[np.float64]) -> float:
     """Median of g' G0^-1 g over gradients (n, dimension): what turns bend into beta."""
     scaled = gradients * np.sqrt(part.scale)
@@ -35,10 +39,10 @@ def steepness(part: SettledChain, gradients: NDArray[np.float64]) -> float:
 
 @dataclass
 class Tuner:
-    """Works on one chain of a candidate from `start`, for at most about `allowance`. After `go`: `part`, `spent`,
-    and `position`."""
+    """Works on one chain of a candidate from `position`, for at most about `allowance`. After `go`: `part`, `spent`,
+    and `position`. slot, seed: of the chain."""
 
-    density: Density
+    slot: tuple[int, int]
     candidate: Candidate
     part: SettledChain
     position: NDArray[np.float64]
@@ -53,13 +57,13 @@ class Tuner:
         self._numbers = itertools.count()
         self._first = self.part.step_size
 
-    def go(self) -> bool:
+    def go(self) -> Work[bool]:
         """False where the allowance was not enough."""
         if isinstance(self.candidate.path, Jittered):
             self._reach(_FIRST_REACH)
-        if not self._find_step():
+        if not (yield from self._find_step()):
             return False
-        return not isinstance(self.candidate.path, Jittered) or self._find_length()
+        return not isinstance(self.candidate.path, Jittered) or (yield from self._find_length())
 
     @property
     def capped(self) -> bool:
@@ -67,26 +71,27 @@ class Tuner:
         those of the search, there may be no such step at all."""
         return self.part.step_size < self._first / 6.0
 
-    def _block(self, transitions: int, *, short: bool = False) -> Block:
+    def _block(self, transitions: int, *, short: bool = False) -> Work[Block]:
         entropy, key = self.seed
-        seed = np.random.SeedSequence(entropy, spawn_key=(*key, next(self._numbers)))
         candidate, part = self.candidate, self.part
         if short and isinstance(candidate.path, NoUTurn):
             candidate = replace(candidate, path=NoUTurn(min(_SHORT, candidate.path.doublings)))
         elif short:
             part = replace(part, steps=min(part.steps, 2**_SHORT))
-        chain = new_chain(self.density, candidate, part, self.position, seed, self.target)
-        block = chain._raised(chain.block(transitions))
-        self.position = chain.position
+        seed = entropy, (*key, next(self._numbers))
+        fresh = fresh_chain(candidate, part, self.position, seed, self.target)
+        (block,) = yield [Ask(self.slot, transitions, fresh)]
+        self.position = block.draws[-1]
         self.spent += 1.0 + float(block.facts["gradients"].sum())
         self.spent += self.product_cost * float(block.facts["products"].sum())
         return block
 
-    def _find_step(self) -> bool:
+    def _find_step(self) -> Work[bool]:
         steps = []
         reach = self.part.steps * self.part.step_size
         for gain in _GAINS:
-            rate = float(self._block(_BLOCK, short=True).facts["acceptance"].mean())
+            block = yield from self._block(_BLOCK, short=True)
+            rate = float(block.facts["acceptance"].mean())
             steps.append(np.log(self.part.step_size))
             self._step(float(np.exp(steps[-1] + gain * (rate - self.target))), reach)
             if self.spent > self.allowance:
@@ -103,7 +108,7 @@ class Tuner:
         steps = min(max(1, round(reach / self.part.step_size)), _MOST_STEPS)
         self.part = replace(self.part, steps=steps)
 
-    def _find_length(self) -> bool:
+    def _find_length(self) -> Work[bool]:
         """By doubling, on effective draws per gradient of pilots, as settling does (length.c)."""
         best, factor, at, worth = 0.0, 2.0, _FIRST_REACH, 0.0
         for number in range(8):
@@ -111,7 +116,7 @@ class Tuner:
             if number and not 1.5 * self.part.step_size <= reach <= _MOST_STEPS * self.part.step_size:
                 break
             self._reach(reach)
-            worth = self._pilot()
+            worth = yield from self._pilot()
             better = worth > best
             if better:
                 best, at = worth, reach
@@ -124,9 +129,9 @@ class Tuner:
         self._reach(at)
         return self.spent <= 2.0 * self.allowance
 
-    def _pilot(self) -> float:
+    def _pilot(self) -> Work[float]:
         before = self.position
-        block = self._block(_PILOT)
+        block = yield from self._block(_PILOT)
         x = np.concatenate([before[None], block.draws])
         centre = 0.5 * (np.diff(x, axis=0) ** 2).mean(axis=0) / self.spread
         squares = (x - x.mean(axis=0)) ** 2

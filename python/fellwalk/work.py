@@ -21,6 +21,7 @@ from numpy.typing import NDArray
 from fellwalk.chain import Block, Chain, _joined
 from fellwalk.density import Density, brief
 from fellwalk.errors import BusyError, RemoteError, WorkerError
+from fellwalk.fresh import Fresh
 from fellwalk.watch import Moments, Watch, Watching
 
 __all__ = ["Check", "Done", "Job", "Live", "Parcel", "Reply", "make_block", "make_block_elsewhere"]
@@ -28,13 +29,14 @@ __all__ = ["Check", "Done", "Job", "Live", "Parcel", "Reply", "make_block", "mak
 
 @dataclass(frozen=True)
 class Job:
-    """A block to be made: at most `most` transitions and about `seconds` of work, all of one phase.
+    """A block to be made: at most `most` transitions and about `seconds` of work, all of one phase, by the chain that
+    has this state, or by a fresh one.
 
     The clock decides only where a block ends, never what is drawn.
     """
 
     chain: int
-    state: bytes
+    state: bytes | Fresh
     most: int
     gradients: bool
     seconds: float = 0.5
@@ -95,7 +97,13 @@ def make_block(density: Density, job: Job, live: Live | None = None) -> Done:
     """Make the block of a job. Exceptions of the density are carried in the block, after what was finished."""
     live = live or Live()
     begun = time.perf_counter()
-    chain = Chain.from_state(density, job.state)
+    try:
+        chain = job.state.chain(density) if isinstance(job.state, Fresh) else Chain.from_state(density, job.state)
+    except Exception as error:  # of the density, at the start of a fresh chain
+        if not isinstance(job.state, Fresh):
+            raise
+        block = replace(_joined("keep", [], density.dimension), error=error)
+        return Done(job.chain, block, b"", time.perf_counter() - begun, {})
     keeping, phase = chain.settled, chain.phase
     watching = None
     if job.watch is not None:
@@ -112,7 +120,8 @@ def make_block(density: Density, job: Job, live: Live | None = None) -> Done:
                                          watching=watching))
             except Exception as error:  # of the watched function: the chain is beyond the draws it was asked about
                 block = replace(_joined(phase, [], density.dimension), error=error)
-                return Done(job.chain, block, job.state, time.perf_counter() - begun, chain.summary)
+                before = b"" if isinstance(job.state, Fresh) else job.state
+                return Done(job.chain, block, before, time.perf_counter() - begun, chain.summary)
             done += len(parts[-1])
             if parts[-1].error is not None:
                 break
