@@ -2,7 +2,7 @@
 
 ``python -m pytest --hypothesis-profile=long`` asks for the second.
 
-Tests of the adapters come last, as those with JAX leave it in the process, where nothing may fork any more.
+Tests with JAX and of the adapters come last, as they leave it in the process, where nothing may fork any more.
 """
 
 import sys
@@ -16,7 +16,7 @@ settings.load_profile("quick")
 
 
 def pytest_collection_modifyitems(items):
-    items.sort(key=lambda item: item.path.name == "test_adapters.py")
+    items.sort(key=lambda item: item.path.name == "test_adapters.py" or item.name == "test_jax")
 
 
 @pytest.fixture

@@ -384,7 +384,7 @@ def test_products_have_their_price_in_a_run():
 
 
 def test_of_many_coordinates_some_are_judged():
-    """Of 3000 coordinates some 1250, the slow one among them: it has a hundred times the scale that settling was given."""
+    """Of 3000 coordinates some 1250, the slow one among them: a hundred times as wide as its chains were told."""
     d = 3000
     scale = np.ones(d)
     scale[1234] = 1e4

@@ -132,8 +132,8 @@ def _parser() -> tuple[argparse.ArgumentParser, argparse.ArgumentParser]:
     add("--settle", type=_settle, metavar="N", default="auto", help='settling transitions, or "auto"')
     add("--seed", type=_whole(0), metavar="N", help="a whole number; left out: one is drawn and recorded")
     add("--motion", choices=[*sorted(MOTIONS), "auto"],
-        help="what moves a point; auto: a trial finds motion and path. Left out: auto, or leapfrog where an option says "
-             "what a trial would find")
+        help="what moves a point; auto: a trial finds motion and path. Left out: auto, or leapfrog where an option "
+             "says what a trial would find")
     add("--bend", type=float, metavar="B", default=Lagrangian.bend, help="lagrangian motion: typical L - 1")
     add("--curvature", choices=["surrogate", "difference", "product"], default="surrogate",
         help="lagrangian motion: where Hessian products come from")

@@ -11,7 +11,6 @@ from typing import Any
 
 import numpy as np
 
-from fellwalk.chain import Chain
 from fellwalk.errors import Interrupted, WorkerError
 from fellwalk.interrupts import Interrupts
 from fellwalk.pools import Workers
@@ -276,8 +275,7 @@ class Driver:
         """The winner's chains go on in the place of those that have settled."""
         assert self.play is not None
         self.trial, states = self.play.winners()
-        settings = replace(Settings.from_json(self.plan["settings"]), motion=self.trial.motion, path=self.trial.path,
-                           settle=0, step_size=Chain.from_state(self.workers.density, states[0]).step_size)
+        settings = replace(Settings.from_json(self.plan["settings"]), motion=self.trial.motion, path=self.trial.path)
         chosen = {"settings": settings.to_json(), "trial": self.trial.to_json()}
         if self.record:
             record_winner(self.record, chosen, states)

@@ -52,8 +52,8 @@ def further(settings: Mapping[str, Any] | None) -> tuple[str, str]:
 
 def harmful(failure: np.ndarray) -> np.ndarray:
     """Which status codes are of failed steps that may hide a part of the distribution."""
-    found: np.ndarray = (failure != 0) & ~np.isin(failure, HARMLESS_CODES)
-    return found
+    found: np.ndarray = failure != 0
+    return found & ~np.isin(failure, HARMLESS_CODES) if found.any() else found
 
 
 def failing(

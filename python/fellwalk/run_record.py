@@ -97,8 +97,10 @@ def record_block(done: Done, part: ChainResult) -> RecordBlock:
 
 
 def plan_of(record: Record) -> dict[str, Any]:
-    """The plan of the run that the record keeps, with what its trial has chosen. Errors: RecordError when it is not of a
-    run of this version."""
+    """The plan of the run that the record keeps, with what its trial has chosen.
+
+    Errors: RecordError when it is not of a run of this version.
+    """
     plan = record.settings
     if not (isinstance(plan, dict) and plan.keys() >= _PLAN):
         raise RecordError(f"{record.path}: this record was not made by fellwalk.run, so there is no run in it")

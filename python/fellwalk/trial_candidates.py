@@ -65,8 +65,8 @@ def with_rank(part: SettledChain, rank: int | None) -> SettledChain:
     order = np.argsort(-np.abs(np.log(part.variances)))
     kept, left = order[:rank], order[rank:]
     squares = part.directions[left] ** 2
-    wide = 1.0 + (part.variances[left] - 1.0) @ squares
-    steep = 1.0 + (1.0 / part.variances[left] - 1.0) @ squares
+    rest = np.maximum(1.0 - squares.sum(axis=0), 0.0)
+    wide, steep = rest + part.variances[left] @ squares, rest + (1.0 / part.variances[left]) @ squares
     return replace(part, scale=part.scale * np.sqrt(wide / steep), directions=part.directions[kept],
                    variances=part.variances[kept])
 
@@ -90,7 +90,8 @@ Work = Generator[list[Ask], list[Block], Found]  # asks for blocks that may be m
 class Contender:
     """A candidate with its draws, and what it has spent: `spent` in all, `drawing` for the draws.
 
-    number: of the candidate; unbegun: of its chains, None where the chain exists.
+    number: of the candidate; unbegun: of its chains, None where the chain exists; positions: where they stand;
+    accepted: sum of acceptance over the `moved` transitions since its step size was last set.
     """
 
     candidate: Candidate
@@ -102,16 +103,30 @@ class Contender:
     transitions: int = 0
     failed: int = 0
     rounds: int = 0
+    positions: list[NDArray[np.float64]] = field(default_factory=list)
+    accepted: float = 0.0
+    moved: int = 0
+
+    @property
+    def acceptance(self) -> float:
+        """Mean since the step size was last set."""
+        return self.accepted / max(1, self.moved)
 
     @property
     def chains(self) -> int:
         """How many it has."""
         return len(self.unbegun)
 
-    def add(self, fresh: Fresh | None) -> None:
-        """One chain more."""
+    def add(self, fresh: Fresh | None, position: NDArray[np.float64]) -> None:
+        """One chain more, which stands there."""
         self.unbegun.append(fresh)
         self.draws.append([])
+        self.positions.append(position)
+
+    def begin_again(self, fresh: list[Fresh]) -> None:
+        """The same chains with another step size."""
+        self.unbegun = [*fresh]
+        self.accepted, self.moved = 0.0, 0
 
     def ask(self, most: int, *, gradients: bool = False) -> list[Ask]:
         """A block of each chain."""
@@ -121,11 +136,18 @@ class Contender:
 
     def take(self, block: Block, chain: int, cost: float, picked: NDArray[np.int64] | None) -> None:
         """Add a block of draws of one chain, or of each draw only the coordinates `picked`."""
-        self.spent += cost
+        self.see(block, chain, cost)
         self.drawing += cost
         self.transitions += len(block)
         self.failed += int(np.count_nonzero(harmful(block.facts["failure"])))
         self.draws[chain].append(block.draws if picked is None else block.draws[:, picked])
+
+    def see(self, block: Block, chain: int, cost: float) -> None:
+        """Where a block has moved a chain, what it has accepted and what it cost."""
+        self.spent += cost
+        self.moved += len(block)
+        self.accepted += float(block.facts["acceptance"].sum())
+        self.positions[chain] = block.draws[-1]
 
     def only(self, picked: NDArray[np.int64]) -> None:
         """Forget the other coordinates of the draws."""

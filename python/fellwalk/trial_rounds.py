@@ -13,6 +13,7 @@ from numpy.typing import NDArray
 from fellwalk import trial_merit
 from fellwalk.chain import Block
 from fellwalk.density import Density
+from fellwalk.fresh import Fresh
 from fellwalk.motions import Jittered, Lagrangian, Leapfrog
 from fellwalk.settled import SettledChain
 from fellwalk.trial_candidates import LEADER, Ask, Candidate, Contender, Work, candidates_for, fresh_chain, with_rank
@@ -34,6 +35,10 @@ _FAILED = 0.01  # share of failed paths beyond the leader's that disqualifies
 _FEW = 10.0  # effective draws below which nothing can be told
 _ONE_STEP = Candidate("one step", Leapfrog(), Jittered("auto"))
 _ROUGH = 1e-3  # energy error of a step a thousandth as long as the settled one: smooth densities have 1e-9
+_GAIN, _LEAST, _MOST = 1.5, 0.03, 0.5  # of corrections of the logarithm of a step size
+_AIM = 0.9  # where leapfrog accepts more than was asked for others aim at that too, up to this
+_LAST_LOOKS, _LAST_BLOCK = 2, 20  # corrections of the winner, each after so many transitions of each chain
+_CORRECTED = 1000  # in the seeds of chains whose step size was corrected
 _NOISE = (1000, 0)  # the slot of the chain that looks for it
 _ALL_UP_TO = 2000  # coordinates that are all judged; of more these are: so many spread evenly,
 _EVENLY, _SLOWEST = 1000, 250  # and those in which the leader's first draws moved least
@@ -82,8 +87,8 @@ class Competition:
         directions = max(len(part.variances) for part in self.parts)
         found = candidates_for(density.dimension, directions)
         self.leader = Contender(LEADER, 0)
-        for _ in self.parts:
-            self.leader.add(None)
+        for position in self.begun:
+            self.leader.add(None, position)
         self.others = [Contender(c, i) for i, c in enumerate(found[: 1 + self._affordable(len(found) - 1)]) if i > 0]
         self.plain = [c for c in self.others if c.candidate.rank == 0]
         self.winner = self.leader
@@ -125,7 +130,13 @@ class Competition:
             live = self._weigh([c for c in live if c.chains], number, last=number == len(_ROUNDS) - 1)
             best = live[0]
             self.budget = min(self.budget, self.terms.budget_for(self.settling, best.drawing / best.transitions))
-        self.found = self._end(live)
+        best = self._chosen(live)
+        told = self._believe(best)
+        best = best if told else self._plainer(best, live)
+        if best is not self.leader:
+            yield [self._make_ready(best)]
+        self.winner = best
+        self.found = self._end(best, live, told=told)
 
     def _spent(self) -> float:
         return sum(c.spent for c in (self.leader, *self.others))
@@ -140,6 +151,8 @@ class Competition:
         """Let a candidate draw for about `allowance`; in its first round it pays its tuning from that, and is out where
         that was not enough."""
         until = contender.spent + allowance
+        if number > 0 and contender is not self.leader:
+            self._correct(contender, number)
         if not contender.chains and not (yield from self._enter(contender, allowance)):
             self.out.append((contender, "its share of the budget was not enough to find its step size"))
             return
@@ -206,12 +219,39 @@ class Competition:
         """New chains of a tuned candidate, `count` in all."""
         tuner = self.tuned[contender.number]
         for c in range(contender.chains, count):
-            own = with_rank(self.parts[c], contender.candidate.rank)
-            part = replace(own, step_size=tuner.part.step_size, beta=tuner.part.beta, steps=tuner.part.steps)
             start = tuner.position if c == 0 else self.begun[c]
-            contender.add(fresh_chain(contender.candidate, part, start, (self.terms.seed, (c, contender.number)),
-                                      self.terms.acceptance))
+            contender.add(self._fresh(contender, c, start, (c, contender.number)), start)
             contender.spent += 1.0
+
+    def _fresh(self, contender: Contender, c: int, start: NDArray[np.float64], key: tuple[int, ...]) -> Fresh:
+        found, own = self.tuned[contender.number].part, with_rank(self.parts[c], contender.candidate.rank)
+        part = replace(own, step_size=found.step_size, beta=found.beta, steps=found.steps)
+        return fresh_chain(contender.candidate, part, start, (self.terms.seed, key), self.terms.acceptance)
+
+    def _make_ready(self, contender: Contender) -> Work[None]:
+        """The winner gets all its chains, and its step size is corrected by what all of them accept: those that did not
+        take part may stand where the target is of another scale."""
+        self._fill(contender, len(self.parts))
+        for number in range(_LAST_LOOKS):
+            contender.accepted, contender.moved = 0.0, 0
+            blocks = yield contender.ask(_LAST_BLOCK)
+            for c, block in enumerate(blocks):
+                contender.see(block, c, self._price(block))
+            self._correct(contender, len(_ROUNDS) + number)
+
+    def _correct(self, contender: Contender, number: int) -> None:
+        """The step size by the acceptance of the last round's draws, which are on whole paths and many more than those
+        of tuning. The rejection of a step of order 2 is about proportional to the square of its size, so a tenth more
+        acceptance at 0.8 is a quarter less of step; a gain of 1.5 goes more than half of that way."""
+        aim = max(self.terms.acceptance, min(self.leader.acceptance, _AIM))
+        log_factor = float(np.clip(_GAIN * (contender.acceptance - aim), -_MOST, _MOST))
+        if contender.moved == 0 or abs(log_factor) < _LEAST:
+            return
+        tuner = self.tuned[contender.number]
+        tuner.scale_step(math.exp(log_factor))
+        contender.begin_again([self._fresh(contender, c, start, (c, contender.number, _CORRECTED + number))
+                               for c, start in enumerate(contender.positions)])
+        contender.spent += contender.chains
 
     # ---- deciding -----------------------------------------------------------------------------------------------
 
@@ -253,12 +293,7 @@ class Competition:
             return f"it visited a tail of {self._named(worth.shy_in)} too rarely, by {worth.shy:.0f} standard errors"
         return ""
 
-    def _end(self, live: list[Contender]) -> Trial:
-        best = self._chosen(live)
-        told = self._believe(best)
-        if best is not self.leader:
-            self._fill(best, len(self.parts))
-        self.winner = best
+    def _end(self, best: Contender, live: list[Contender], *, told: bool) -> Trial:
         ranked = [best, *(c for c in live if c is not best)]
         entries = [self._entry(c, "") for c in ranked]
         measured = [(c, why) for c, why in self.out if c.candidate.name in self.worths]
@@ -296,6 +331,15 @@ class Competition:
         else:
             self.remarks.append(f"{best.candidate.name} is the best of those that were not ruled out.")
         return best
+
+    def _plainer(self, best: Contender, live: list[Contender]) -> Contender:
+        """What stays where the trial is not to be believed: the better of the plain ways."""
+        plain = [c for c in live if c in (*self.plain, self.leader)]
+        if best in plain:
+            return best
+        stays = plain[0] if plain else self.leader
+        self.remarks.append(f"As it could not be told, {stays.candidate.name} stays.")
+        return stays
 
     def _entry(self, contender: Contender, why: str) -> Entry:
         worth = self.worths[contender.candidate.name]

@@ -104,6 +104,11 @@ class Tuner:
         if reach > 0.0:
             self._reach(reach)
 
+    def scale_step(self, factor: float) -> None:
+        """Another step size; jittered paths keep their length."""
+        reach = self.part.steps * self.part.step_size
+        self._step(self.part.step_size * factor, reach)
+
     def _reach(self, reach: float) -> None:
         steps = min(max(1, round(reach / self.part.step_size)), _MOST_STEPS)
         self.part = replace(self.part, steps=steps)
