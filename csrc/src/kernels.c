@@ -159,6 +159,15 @@ FW_CLONES void fw_scale(size_t n, double k, double *y)
     for (size_t i = 0; i < n; ++i) y[i] *= k;
 }
 
+FW_CLONES void fw_rotate(size_t n, double c, double s, double *restrict a, double *restrict b)
+{
+    for (size_t i = 0; i < n; ++i) {
+        const double x = a[i], y = b[i];
+        a[i] = c * x - s * y;
+        b[i] = s * x + c * y;
+    }
+}
+
 FW_CLONES void fw_difference(size_t n, const double *a, const double *b, double *out)
 {
     for (size_t i = 0; i < n; ++i) out[i] = a[i] - b[i];

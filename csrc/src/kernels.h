@@ -73,6 +73,7 @@ void fw_axpy(size_t n, double k, const double *a, double *y);                /* 
 void fw_drift(size_t n, double k, const double *r, const double *w, double *x); /* x += k r*w */
 
 void fw_scale(size_t n, double k, double *y);                                /* y *= k */
+void fw_rotate(size_t n, double c, double s, double *a, double *b);          /* a, b = c a - s b, s a + c b */
 void fw_difference(size_t n, const double *a, const double *b, double *out); /* out = a - b */
 void fw_add_squares(size_t n, const double *a, double *sum);                  /* sum += a*a */
 /* Gram matrix (rows x rows, symmetric, row-major) of vectors of n numbers. */
