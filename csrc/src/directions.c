@@ -73,11 +73,11 @@ static void build(const fw_chain *chain, const view *at, fw_shown *found, double
     }
 }
 
-/* Rows and known directions into coordinates of a scale larger by factor = root^2. */
-static void change_scale(fw_chain *chain, const view *at, const double *root)
+/* The rows from `first` on into coordinates of a scale larger by root^2. */
+static void change_scale(fw_chain *chain, const view *at, size_t first, const double *root)
 {
     const size_t d = chain->walk.d, m = at->win.m;
-    for (size_t i = 0; i < at->n; ++i) {
+    for (size_t i = first; i < at->n; ++i) {
         double *r = row(chain, m, i);
         const int like_gradient = (i >= m && i < 2 * m) || (i >= 2 * m && chain->walk.base.lambda[i - 2 * m] < 1.0);
         if (like_gradient)
@@ -112,24 +112,27 @@ static void rescale(fw_chain *chain, const view *at, size_t k, const double *dir
         scale[i] *= factor;
         left[i] = sqrt(factor);
     }
-    change_scale(chain, at, left);
+    change_scale(chain, at, 0, left);
 }
 
-/* Rows centred and scaled; the known directions from the old scale to this one. */
+/* Rows centred and scaled; the known directions from the scale before to this one. */
 static void prepare(fw_chain *chain, const view *at, const double *scale)
 {
     const fw_base *base = &chain->walk.base;
     const size_t d = chain->walk.d;
     double *root = chain->end[0].x;
+    for (size_t i = 0; i < d; ++i) root[i] = sqrt(scale[i]);
     for (size_t i = 0; i < at->win.m; ++i) {
-        fw_axpy(d, -1.0, chain->mean_x, chain->rows_x + i * d);
-        fw_axpy(d, -1.0, chain->mean_g, chain->rows_g + i * d);
-        fw_divide_by(d, chain->rows_x + i * d, base->r, chain->rows_x + i * d);
-        fw_scale_by(d, chain->rows_g + i * d, base->r, chain->rows_g + i * d);
+        double *y = chain->rows_x + i * d, *c = chain->rows_g + i * d;
+        fw_difference(d, y, chain->mean_x, y);
+        fw_difference(d, c, chain->mean_g, c);
+        fw_divide_by(d, y, root, y);
+        fw_scale_by(d, c, root, c);
     }
+    if (base->k == 0) return;
     fw_copy(base->k * d, base->directions, chain->known);
-    for (size_t i = 0; i < d; ++i) root[i] = sqrt(scale[i]) / base->r[i];
-    change_scale(chain, at, root);
+    fw_divide_by(d, root, base->r, root);
+    change_scale(chain, at, 2 * at->win.m, root);
 }
 
 size_t fw_find_directions(fw_chain *chain, double *scale, double *directions, double *lambda)

@@ -473,11 +473,11 @@ FW_CLONES void fw_momentum_out(size_t n, const double *delta, const double *z, d
 
 FW_CLONES void fw_gather(size_t n, double count, const double *restrict a, double *restrict mean, double *restrict roots)
 {
-    const double counts = count > 1.0 ? 1.0 : 0.0;
+    const double counts = count > 1.0 ? 1.0 : 0.0, share = 1.0 / count;
     for (size_t i = 0; i < n; ++i) {
         const double away = a[i] - mean[i];
         roots[i] += counts * sqrt(fabs(away));
-        mean[i] += away / count;
+        mean[i] += away * share;
     }
 }
 
