@@ -267,6 +267,15 @@ def test_coordinates_that_stand_change_nothing(search):
         if 10 + more <= 32:  # beyond, the span is of fewer singular vectors
             assert_same((found[0][:10], found[1][:, :10], found[2]), first, DIGITS)
         assert_same(found, oracle(*wide, np.append(scale, np.ones(more))), DIGITS)
-        every = search(*wide, np.append(scale, np.ones(more)), 16, 1)
-        np.testing.assert_array_equal(every[1][:, 10:], 0.0)
-        assert_same(every, oracle(*wide, np.append(scale, np.ones(more)), 16, 1), DIGITS)
+
+
+@pytest.mark.parametrize("more", [1, 20])
+def test_coordinates_that_stand_are_not_taken_for_directions(search, more):
+    """They have nothing but the ridges, whose ratio is that of the traces: 400 here, where the second direction has 2."""
+    rng = np.random.default_rng(78)
+    q, sd = np.linalg.qr(rng.standard_normal((10, 10)))[0], np.sqrt(np.append([4000.0, 2.0], np.ones(8)))
+    z, still = rng.standard_normal((64, 10)), np.zeros((64, more))
+    x, g = np.hstack([z @ (q * sd).T, still]), np.hstack([-z @ (q / sd).T, still])
+    found = search(x, g, np.ones(10 + more), 2, 1)
+    np.testing.assert_array_equal(found[1][:, 10:], 0.0)
+    assert_same(found, oracle(x, g, np.ones(10 + more), 2, 1), DIGITS)
