@@ -40,7 +40,7 @@ static void look(const fw_chain *chain, view *at)
     if (win->q > WIDE) {
         double left[WIDE];
         fw_gram(chain->walk.d, at->n, rows, at->l);
-        win->q = fw_small_pivoted(at->n, at->l, at->order, left);
+        win->q = fw_small_pivoted(at->n, at->l, FW_SMALL_FLOOR, at->order, left);
         for (size_t i = 0; i < at->n; ++i) {
             rows[at->order[i]] = at->l + i * at->n;
             for (size_t j = i + 1; j < win->q; ++j) at->l[i * at->n + j] = 0.0;

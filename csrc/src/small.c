@@ -11,58 +11,8 @@ static void swap(double *a, double *b)
     *b = t;
 }
 
-/* One Jacobi rotation that annihilates a[p][q]; Golub & Van Loan, Matrix Computations, section 8.5. */
-static void rotate(size_t n, double *a, double *v, size_t p, size_t q)
-{
-    const double apq = a[p * n + q], app = a[p * n + p], aqq = a[q * n + q];
-    const double theta = (aqq - app) / (2.0 * apq);
-    const double t = (theta >= 0.0 ? 1.0 : -1.0) / (fabs(theta) + sqrt(theta * theta + 1.0));
-    const double c = 1.0 / sqrt(t * t + 1.0), s = t * c;
-    fw_rotate(n, c, s, a + p * n, a + q * n);
-    fw_rotate(n, c, s, v + p * n, v + q * n);
-    a[p * n + p] = app - t * apq;
-    a[q * n + q] = aqq + t * apq;
-    a[p * n + q] = a[q * n + p] = 0.0;
-    for (size_t i = 0; i < n; ++i) {
-        a[i * n + p] = a[p * n + i];
-        a[i * n + q] = a[q * n + i];
-    }
-}
-
-void fw_small_eigen(size_t n, double *a, double *values, double *v)
-{
-    double root[FW_SMALL_MOST];
-    for (size_t i = 0; i < n * n; ++i) v[i] = 0.0;
-    for (size_t i = 0; i < n; ++i) {
-        v[i * n + i] = 1.0;
-        root[i] = sqrt(fabs(a[i * n + i]));
-    }
-    for (int sweep = 0; sweep < 60; ++sweep) {
-        int rotated = 0;
-        for (size_t p = 0; p + 1 < n; ++p)
-            for (size_t q = p + 1; q < n; ++q) {
-                /* relative to both diagonal entries: small eigenvalues of graded matrices keep their digits */
-                if (!(fabs(a[p * n + q]) > 1e-16 * root[p] * root[q])) continue;
-                rotate(n, a, v, p, q);
-                root[p] = sqrt(fabs(a[p * n + p]));
-                root[q] = sqrt(fabs(a[q * n + q]));
-                rotated = 1;
-            }
-        if (!rotated) break;
-    }
-    for (size_t i = 0; i < n; ++i) values[i] = a[i * n + i];
-    for (size_t i = 0; i < n; ++i) {
-        size_t largest = i;
-        for (size_t j = i + 1; j < n; ++j)
-            if (values[j] > values[largest]) largest = j;
-        if (largest == i) continue;
-        swap(values + i, values + largest);
-        for (size_t j = 0; j < n; ++j) swap(v + i * n + j, v + largest * n + j);
-    }
-}
-
 /* Golub & Van Loan, section 4.2.8. Column r of l waits for its pivot, so a row of a holds l before it and a behind. */
-size_t fw_small_pivoted(size_t n, double *a, size_t *order, double *left)
+size_t fw_small_pivoted(size_t n, double *a, double floor, size_t *order, double *left)
 {
     double first = 0.0;
     for (size_t i = 0; i < n; ++i) {
@@ -74,7 +24,7 @@ size_t fw_small_pivoted(size_t n, double *a, size_t *order, double *left)
         size_t p = r;
         for (size_t i = r + 1; i < n; ++i)
             if (left[i] > left[p]) p = i;
-        if (!(left[p] > 1e-14 * first)) return r;
+        if (!(left[p] > floor * first)) return r;
         if (p != r) {
             const size_t t = order[p];
             order[p] = order[r];
@@ -94,22 +44,61 @@ size_t fw_small_pivoted(size_t n, double *a, size_t *order, double *left)
     return n;
 }
 
-/* With a = l l^T, the eigenvalues are those of l^T l, and l takes its eigenvectors to those of a. */
-size_t fw_small_range(size_t n, double *a, double *values, double *v)
+/* Rotates the r rows of v until they are orthogonal; their squared lengths. Jacobi from one side (Hestenes 1958), in rounds
+ * of disjoint pairs, whose angles do not wait for each other. */
+static void orthogonalise(size_t n, size_t r, double *v, double *square)
 {
-    double inner[FW_SMALL_MOST * FW_SMALL_MOST], of_inner[FW_SMALL_MOST * FW_SMALL_MOST], left[FW_SMALL_MOST];
+    const double small = 2.2e-16 * (double)n; /* what rounding leaves of a sum of n products */
+    const size_t even = r + r % 2;
+    for (int sweep = 0, rotated = 1; sweep < 60 && rotated; ++sweep) {
+        rotated = 0;
+        for (size_t j = 0; j < r; ++j) square[j] = fw_dot(n, v + j * n, v + j * n);
+        for (size_t turn = 0; turn + 1 < even; ++turn) {
+            size_t p[FW_SMALL_MOST / 2], q[FW_SMALL_MOST / 2], count = 0;
+            double dot[FW_SMALL_MOST / 2], c[FW_SMALL_MOST / 2], s[FW_SMALL_MOST / 2];
+            for (size_t i = 0; i < even / 2; ++i) { /* a tournament: the last stays, the others go round */
+                const size_t one = i == 0 ? even - 1 : turn + i < even - 1 ? turn + i : turn + i - (even - 1);
+                const size_t two = turn >= i ? turn - i : turn + (even - 1) - i;
+                if (one >= r) continue;
+                dot[count] = fw_dot(n, v + one * n, v + two * n);
+                /* relative to both lengths: small ones keep their digits */
+                if (!(fabs(dot[count]) > small * sqrt(square[one] * square[two]))) continue;
+                p[count] = one;
+                q[count++] = two;
+            }
+            for (size_t i = 0; i < count; ++i) { /* Golub & Van Loan, section 8.5 */
+                const double theta = (square[q[i]] - square[p[i]]) / (2.0 * dot[i]);
+                const double t = (theta >= 0.0 ? 1.0 : -1.0) / (fabs(theta) + sqrt(theta * theta + 1.0));
+                c[i] = 1.0 / sqrt(t * t + 1.0);
+                s[i] = t * c[i];
+                square[p[i]] -= t * dot[i];
+                square[q[i]] += t * dot[i];
+            }
+            for (size_t i = 0; i < count; ++i) fw_rotate(n, c[i], s[i], v + p[i] * n, v + q[i] * n);
+            rotated |= count > 0;
+        }
+    }
+}
+
+/* With a = l l^T and l q of orthogonal columns, those are eigenvectors times roots of eigenvalues; after pivoting they are
+ * almost that from the start (Veselic & Hari 1989). */
+size_t fw_small_eigen(size_t n, double *a, double floor, double *values, double *v)
+{
+    double left[FW_SMALL_MOST];
     size_t order[FW_SMALL_MOST];
-    const size_t r = fw_small_pivoted(n, a, order, left);
-    for (size_t i = 0; i < r * r; ++i) inner[i] = 0.0;
-    for (size_t i = 0; i < n; ++i)
-        for (size_t p = 0; p <= i && p < r; ++p) fw_axpy(p + 1, a[i * n + p], a + i * n, inner + p * r);
-    for (size_t p = 0; p < r; ++p)
-        for (size_t q = 0; q < p; ++q) inner[q * r + p] = inner[p * r + q];
-    fw_small_eigen(r, inner, values, of_inner);
+    const size_t r = fw_small_pivoted(n, a, floor, order, left);
+    for (size_t j = 0; j < r; ++j)
+        for (size_t i = 0; i < n; ++i) v[j * n + order[i]] = i < j ? 0.0 : a[i * n + j];
+    orthogonalise(n, r, v, values);
     for (size_t j = 0; j < r; ++j) {
-        const double root = sqrt(values[j]);
-        for (size_t i = 0; i < n; ++i)
-            v[j * n + order[i]] = fw_dot(i < r ? i + 1 : r, a + i * n, of_inner + j * r) / root;
+        size_t largest = j;
+        for (size_t i = j + 1; i < r; ++i)
+            if (values[i] > values[largest]) largest = i;
+        if (largest != j) {
+            swap(values + j, values + largest);
+            for (size_t i = 0; i < n; ++i) swap(v + j * n + i, v + largest * n + i);
+        }
+        fw_scale(n, 1.0 / sqrt(values[j]), v + j * n);
     }
     return r;
 }

@@ -38,7 +38,7 @@ static size_t leading(size_t m, size_t q, const double *const *rows, size_t most
     }
     for (size_t i = 0; i < m; ++i)
         for (size_t j = 0; j < m; ++j) k[i * m + j] += whole - mean[i] - mean[j];
-    const size_t r = fw_small_range(m, k, values, v);
+    const size_t r = fw_small_eigen(m, k, FW_SMALL_FLOOR, values, v);
     size_t count = 0;
     while (count < most && count < r && values[count] > 1e-10 * values[0] && values[count] > 0.0) {
         const double *u = v + count * m;
@@ -62,7 +62,7 @@ static size_t orthonormal(size_t q, size_t count, fw_basis basis)
         rows[a] = old[a];
     }
     fw_gram(q, count, rows, gram);
-    const size_t r = fw_small_range(count, gram, values, v);
+    const size_t r = fw_small_eigen(count, gram, FW_SMALL_FLOOR, values, v);
     size_t kept = 0;
     for (; kept < r && values[kept] > 1e-6; ++kept) {
         memset(basis[kept], 0, q * sizeof(double));
@@ -152,12 +152,12 @@ static int geometric_mean(size_t r, double *cx, double *cg)
         for (size_t k = a; k < r; ++k) fw_axpy(a + 1, cg[k * r + a], m + k * r, cx + a * r);
         for (size_t b = 0; b < a; ++b) cx[b * r + a] = cx[a * r + b];
     }
-    fw_small_eigen(r, cx, values, v);
+    const size_t rank = fw_small_eigen(r, cx, 0.0, values, v);
     memset(cx, 0, r * r * sizeof *cx);
-    for (size_t j = 0; j < r; ++j) { /* l^-T v, scaled by the fourth root of the eigenvalue, with itself */
+    for (size_t j = 0; j < rank; ++j) { /* l^-T v, scaled by the fourth root of the eigenvalue, with itself */
         double *u = v + j * r;
         fw_small_solve(r, cg, r, u);
-        fw_scale(r, sqrt(sqrt(values[j] > 0.0 ? values[j] : 0.0)), u);
+        fw_scale(r, sqrt(sqrt(values[j])), u);
         for (size_t a = 0; a < r; ++a) fw_axpy(a + 1, u[a], u, cx + a * r);
     }
     for (size_t a = 0; a < r; ++a)
@@ -183,7 +183,7 @@ static void strongest(const fw_window *win, size_t r, double *sigma, fw_basis ba
                       fw_shown *out)
 {
     double v[SPAN * SPAN], values[SPAN];
-    fw_small_eigen(r, sigma, values, v);
+    if (fw_small_eigen(r, sigma, 0.0, values, v) < r) return;
     /* the values descend, so the strongest stands at one of the two ends */
     for (size_t low = 0, high = r; low < high && out->count < most;) {
         if (!(values[high - 1] > 0.0) || !isfinite(values[low])) return;
