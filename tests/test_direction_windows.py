@@ -1,6 +1,6 @@
 """The search for learned directions in one window, against dense algebra: rows in, directions out.
 
-The oracle has singular values of the rows where the core has Gram matrices, the matrix square root of SciPy where it has
+The oracle has singular values of the rows where the core has Gram matrices and SciPy's root of a matrix where it has
 Cholesky factors, and it looks at every part of the window where the core leaves as soon as nothing can be found.
 """
 
@@ -26,7 +26,8 @@ class Window(ctypes.Structure):
         *((name, ctypes.c_size_t) for name in ("d", "m", "k")),
         ("rank", ctypes.c_uint),
         ("rank_fixed", ctypes.c_int),
-        *((name, ctypes.c_void_p) for name in ("x", "g", "mean_x", "mean_g", "scale_before", "directions", "variances")),
+        *((name, ctypes.c_void_p) for name in ("x", "g", "mean_x", "mean_g")),
+        *((name, ctypes.c_void_p) for name in ("scale_before", "directions", "variances")),
     )
 
 
@@ -177,8 +178,8 @@ DIGITS = 1e-8
 @pytest.mark.parametrize("m", [8, 20, 33, 64])
 @pytest.mark.parametrize("d", [2, 3, 10, 16, 17, 30, 31, 32, 33, 50, 60, 61, WIDE, WIDE + 1, 300])
 def test_the_directions_are_those_of_dense_algebra(search, d, m, fixed):
-    """Rows that span all coordinates and rows that do not, both kinds of inner product, known directions or none. 31 and
-    32 coordinates of 64 rows: two full sets of singular vectors are more than the dimensions of a span."""
+    """Rows that span all coordinates and rows that do not, rows themselves and Gram matrices, directions known or none.
+    31 and 32 coordinates of 64 rows: two full sets of singular vectors are more than the dimensions of a span."""
     rng = np.random.default_rng([d, m, fixed])
     rank = 4 if fixed else 16
     for k in (0, min(2, d - 1)):
@@ -220,8 +221,8 @@ def test_independent_normal_coordinates_leave_the_scale(search, d, m):
 
 @pytest.mark.parametrize("d", [2, 5, 10, 17, 31, 32])
 def test_the_covariance_of_a_normal_is_exact_from_few_draws(search, d):
-    """From 2 d draws, with every direction asked for: all but the weakest, whose variance becomes 1. The ridge, 1e-13 of
-    traces that are 1e5 times the smallest variance, shows in the eighth digit."""
+    """From 2 d draws, with every direction asked for: all but the weakest, whose variance becomes 1. The ridge, 1e-13
+    of traces that are 1e5 times the smallest variance, shows in the eighth digit."""
     rng = np.random.default_rng(d)
     x, g, covariance = spiked(rng, d, max(8, 2 * d))
     unit = np.sqrt(half_power_scale(x, g))
@@ -237,7 +238,8 @@ def test_the_covariance_of_a_normal_is_exact_from_few_draws(search, d):
 
 @pytest.mark.parametrize("d", [10, 31, 40, WIDE + 1])
 def test_the_order_of_rows_in_a_half_and_of_coordinates_is_of_no_account(search, d):
-    """Where the scale is not looked at again (it takes rows as they come): the first round finds none to disagree on."""
+    """Coordinates change places and nothing else changes. Rows change places inside a half: as many directions, and
+    those of the oracle (the second look at the scale takes rows as they come)."""
     rng = np.random.default_rng([d, 9])
     x, g, _ = spiked(rng, d, 64)
     scale = half_power_scale(x, g)
@@ -252,8 +254,8 @@ def test_the_order_of_rows_in_a_half_and_of_coordinates_is_of_no_account(search,
 
 
 def test_coordinates_that_stand_change_nothing(search):
-    """Ten coordinates that move among 0, 20 or 50 that stand, or so many that the Gram matrix is taken: rows that do not
-    span all coordinates, in every way of looking at them."""
+    """Ten coordinates that move among a few that stand, or so many that the Gram matrix is taken: rows that do not span
+    all coordinates, in every way of looking at them."""
     rng = np.random.default_rng(77)
     x, g, _ = spiked(rng, 10, 64)
     scale = half_power_scale(x, g)
@@ -271,7 +273,7 @@ def test_coordinates_that_stand_change_nothing(search):
 
 @pytest.mark.parametrize("more", [1, 20])
 def test_coordinates_that_stand_are_not_taken_for_directions(search, more):
-    """They have nothing but the ridges, whose ratio is that of the traces: 400 here, where the second direction has 2."""
+    """They have nothing but the ridges, in the ratio of the traces: 400 here, where the second direction has 2."""
     rng = np.random.default_rng(78)
     q, sd = np.linalg.qr(rng.standard_normal((10, 10)))[0], np.sqrt(np.append([4000.0, 2.0], np.ones(8)))
     z, still = rng.standard_normal((64, 10)), np.zeros((64, more))

@@ -120,14 +120,14 @@ static void prepare(fw_chain *chain, const view *at, const double *scale)
 {
     const fw_base *base = &chain->walk.base;
     const size_t d = chain->walk.d;
-    double *root = chain->end[0].x;
-    for (size_t i = 0; i < d; ++i) root[i] = sqrt(scale[i]);
+    double *root = chain->end[0].x, *inverse = chain->end[0].w;
+    for (size_t i = 0; i < d; ++i) {
+        root[i] = sqrt(scale[i]);
+        inverse[i] = 1.0 / root[i];
+    }
     for (size_t i = 0; i < at->win.m; ++i) {
-        double *y = chain->rows_x + i * d, *c = chain->rows_g + i * d;
-        fw_difference(d, y, chain->mean_x, y);
-        fw_difference(d, c, chain->mean_g, c);
-        fw_divide_by(d, y, root, y);
-        fw_scale_by(d, c, root, c);
+        fw_centre(d, chain->mean_x, inverse, chain->rows_x + i * d);
+        fw_centre(d, chain->mean_g, root, chain->rows_g + i * d);
     }
     if (base->k == 0) return;
     fw_copy(base->k * d, base->directions, chain->known);

@@ -173,6 +173,11 @@ FW_CLONES void fw_difference(size_t n, const double *a, const double *b, double 
     for (size_t i = 0; i < n; ++i) out[i] = a[i] - b[i];
 }
 
+FW_CLONES void fw_centre(size_t n, const double *restrict mean, const double *restrict unit, double *restrict a)
+{
+    for (size_t i = 0; i < n; ++i) a[i] = (a[i] - mean[i]) * unit[i];
+}
+
 FW_CLONES void fw_add_squares(size_t n, const double *restrict a, double *restrict sum)
 {
     for (size_t i = 0; i < n; ++i) sum[i] += a[i] * a[i];

@@ -349,7 +349,8 @@ static void remember_row(fw_chain *chain)
 {
     fw_learn *learn = &chain->learn;
     if (chain->settings.rank == 0) return;
-    if (learn->window > chain->rows && learn->in_window % ((learn->window + chain->rows - 1) / chain->rows) != 0) return;
+    const uint64_t stride = learn->window > chain->rows ? (learn->window + chain->rows - 1) / chain->rows : 1;
+    if (learn->in_window != learn->rows * stride) return;
     fw_copy(chain->walk.d, chain->x, chain->rows_x + learn->rows * chain->walk.d);
     fw_copy(chain->walk.d, chain->g, chain->rows_g + learn->rows * chain->walk.d);
     ++learn->rows;
