@@ -126,6 +126,8 @@ int student_product(size_t d, const double *x, const double *p, double *product,
 int one_sided(size_t d, const double *x, double *value, double *gradient, void *context);
 int one_sided_product(size_t d, const double *x, const double *p, double *product, void *context);
 
+int harness_windows(void); /* window_harness.c */
+
 enum { room = 1 << 16, most = 500 };
 
 static int run(size_t d, int motion, int scheme, int curvature, int path, unsigned halvings, int bounded)
@@ -176,6 +178,6 @@ int main(void)
                                 }
                             }
     printf("%d chains\n", count);
-    return 0;
+    return harness_windows();
 }
 #endif

@@ -17,6 +17,7 @@ from fellwalk import facts
 ROOT = Path(__file__).resolve().parent.parent
 SOURCES = sorted((ROOT / "csrc" / "src").glob("*.c"))
 HARNESS = ROOT / "tests" / "core_harness.c"
+WINDOWS = ROOT / "tests" / "window_harness.c"
 INCLUDES = [f"-I{ROOT / 'csrc' / 'include'}", f"-I{ROOT / 'csrc' / 'src'}"]
 FLOATS = ["-std=c11", "-ffp-contract=off", "-fno-math-errno", "-fno-trapping-math"]
 STRICT = ["-Wall", "-Wextra", "-Wpedantic", "-Wconversion", "-Wshadow", "-Wstrict-prototypes", "-Werror"]
@@ -302,7 +303,7 @@ def test_the_header_is_good_cplusplus(tmp_path, standard):
 def program(folder, *flags):
     out = folder / "chains"
     done = compile_("-g", "-O1", *FLOATS, *INCLUDES, "-DFW_NO_CLONES", "-DHARNESS_MAIN", *flags, *SOURCES, HARNESS,
-                    *sorted((ROOT / "tests" / "targets").glob("*.c")), "-o", out, "-lm", check=False)
+                    WINDOWS, *sorted((ROOT / "tests" / "targets").glob("*.c")), "-o", out, "-lm", check=False)
     return out, done
 
 
@@ -310,12 +311,13 @@ def ran(words, **environment):
     done = subprocess.run(list(map(str, words)), capture_output=True, text=True, check=False, timeout=250,
                           env={**os.environ, **environment})
     assert done.returncode == 0, done.stdout[-1000:] + done.stderr[-4000:]
-    assert done.stdout == "192 chains\n"
+    assert done.stdout == "192 chains\n66 windows\n"
     return done
 
 
 def test_address_and_undefined_behaviour_sanitizers_find_nothing(tmp_path):
-    """Chains of every motion, scheme, curvature and path, with and without halving, inside and at an edge."""
+    """Chains of every motion, scheme, curvature and path, with and without halving, inside and at an edge; windows of
+    as many coordinates as the search for directions treats each in its own way."""
     flags = ["-fsanitize=address,undefined", "-fno-sanitize-recover=all"]
     probe = tmp_path / "probe.c"
     probe.write_text("int main(void) { return 0; }\n")

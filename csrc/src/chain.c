@@ -253,8 +253,9 @@ static int transition(fw_chain *chain, fw_facts *facts)
     fw_walk *walk = &chain->walk;
     const uint64_t gradients = walk->gradients, products = walk->products, halved = walk->halved;
     const int settling = !chain->learn.settled, climbing = chain->learn.climbing != 0;
+    const int learning = climbing || (settling && chain->learn.search); /* the only attempts that change what is learned */
     fw_learn before;
-    if (settling) before = chain->learn;
+    if (learning) before = chain->learn;
     memset(facts, 0, sizeof *facts);
     fw_route route;
     const int status = attempt(chain, &route, facts);
@@ -262,7 +263,7 @@ static int transition(fw_chain *chain, fw_facts *facts)
         walk->gradients = gradients;
         walk->products = products;
         walk->halved = halved;
-        if (settling) chain->learn = before;
+        if (learning) chain->learn = before;
         return status;
     }
     facts->gradients = (int32_t)(walk->gradients - gradients);

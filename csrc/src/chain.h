@@ -70,6 +70,8 @@ struct fw_chain {
     fw_candidate fresh, held; /* no-U-turn path */
     fw_piece carry, level[FW_MAX_DOUBLINGS + 1];
     double *orbit_rho, *spare_rho, *seam;
+    unsigned char order[FW_RING]; /* slots of learn.ring, as they were last sorted; a hint, not exported */
+    size_t ordered;
     size_t rows;
     size_t vectors, bytes;
     double *block;

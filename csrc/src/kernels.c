@@ -159,9 +159,23 @@ FW_CLONES void fw_scale(size_t n, double k, double *y)
     for (size_t i = 0; i < n; ++i) y[i] *= k;
 }
 
+FW_CLONES void fw_rotate(size_t n, double c, double s, double *restrict a, double *restrict b)
+{
+    for (size_t i = 0; i < n; ++i) {
+        const double x = a[i], y = b[i];
+        a[i] = c * x - s * y;
+        b[i] = s * x + c * y;
+    }
+}
+
 FW_CLONES void fw_difference(size_t n, const double *a, const double *b, double *out)
 {
     for (size_t i = 0; i < n; ++i) out[i] = a[i] - b[i];
+}
+
+FW_CLONES void fw_centre(size_t n, const double *restrict mean, const double *restrict unit, double *restrict a)
+{
+    for (size_t i = 0; i < n; ++i) a[i] = (a[i] - mean[i]) * unit[i];
 }
 
 FW_CLONES void fw_add_squares(size_t n, const double *restrict a, double *restrict sum)
@@ -464,11 +478,11 @@ FW_CLONES void fw_momentum_out(size_t n, const double *delta, const double *z, d
 
 FW_CLONES void fw_gather(size_t n, double count, const double *restrict a, double *restrict mean, double *restrict roots)
 {
-    const double counts = count > 1.0 ? 1.0 : 0.0;
+    const double counts = count > 1.0 ? 1.0 : 0.0, share = 1.0 / count;
     for (size_t i = 0; i < n; ++i) {
         const double away = a[i] - mean[i];
         roots[i] += counts * sqrt(fabs(away));
-        mean[i] += away / count;
+        mean[i] += away * share;
     }
 }
 

@@ -73,7 +73,9 @@ void fw_axpy(size_t n, double k, const double *a, double *y);                /* 
 void fw_drift(size_t n, double k, const double *r, const double *w, double *x); /* x += k r*w */
 
 void fw_scale(size_t n, double k, double *y);                                /* y *= k */
+void fw_rotate(size_t n, double c, double s, double *a, double *b);          /* a, b = c a - s b, s a + c b */
 void fw_difference(size_t n, const double *a, const double *b, double *out); /* out = a - b */
+void fw_centre(size_t n, const double *mean, const double *unit, double *a);    /* a = (a - mean) unit */
 void fw_add_squares(size_t n, const double *a, double *sum);                  /* sum += a*a */
 /* Gram matrix (rows x rows, symmetric, row-major) of vectors of n numbers. */
 void fw_gram(size_t n, size_t rows, const double *const *vectors, double *out);

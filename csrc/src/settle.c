@@ -60,15 +60,15 @@ static void restart_average(fw_learn *learn, double reach)
  * pile up a debt that hundreds of accepted ones cannot repay. */
 static void dual_average(fw_learn *learn, double gamma, double least, double target, double acceptance)
 {
-    const double t = learn->count += 1.0;
+    const double t = learn->count += 1.0, root = sqrt(t);
     const double weight = 1.0 / (t + 10.0);
     learn->shortfall = (1.0 - weight) * learn->shortfall + weight * (target - acceptance);
-    learn->log_step = learn->mu - sqrt(t) / gamma * learn->shortfall;
+    learn->log_step = learn->mu - root / gamma * learn->shortfall;
     if (!(learn->log_step > least)) {
         learn->log_step = least;
-        learn->shortfall = (learn->mu - least) * gamma / sqrt(t);
+        learn->shortfall = (learn->mu - least) * gamma / root;
     }
-    const double share = pow(t, -0.75);
+    const double share = 1.0 / (root * sqrt(root));
     learn->log_average = share * learn->log_step + (1.0 - share) * learn->log_average;
 }
 
@@ -191,14 +191,18 @@ void fw_learn_beta(fw_chain *chain)
 {
     fw_learn *learn = &chain->learn;
     if (!tunes_bend(chain) || learn->ring_count == 0) return;
-    double sorted[FW_RING];
     const size_t n = learn->ring_count < FW_RING ? (size_t)learn->ring_count : FW_RING;
-    for (size_t i = 0; i < n; ++i) {
+    unsigned char *order = chain->order; /* of the time before: one value is new, so little has to move */
+    if (chain->ordered > n) chain->ordered = 0;
+    for (; chain->ordered < n; ++chain->ordered) order[chain->ordered] = (unsigned char)chain->ordered;
+    for (size_t i = 1; i < n; ++i) {
+        const unsigned char slot = order[i];
+        const double value = learn->ring[slot];
         size_t j = i;
-        for (; j > 0 && sorted[j - 1] > learn->ring[i]; --j) sorted[j] = sorted[j - 1];
-        sorted[j] = learn->ring[i];
+        for (; j > 0 && learn->ring[order[j - 1]] > value; --j) order[j] = order[j - 1];
+        order[j] = slot;
     }
-    double median = 0.5 * (sorted[(n - 1) / 2] + sorted[n / 2]);
+    double median = 0.5 * (learn->ring[order[(n - 1) / 2]] + learn->ring[order[n / 2]]);
     /* where the base metric fits, |c|^2 is about d; at a mode it is nothing, and a beta from there would hold the chain */
     if (median < 0.01 * (double)chain->walk.d) median = 0.01 * (double)chain->walk.d;
     if (median > 0.0 && isfinite(learn->bend / median)) chain->walk.beta = learn->bend / median;
@@ -344,8 +348,9 @@ static double directions_moved(const fw_chain *chain, const double *scale, size_
 static void remember_row(fw_chain *chain)
 {
     fw_learn *learn = &chain->learn;
-    const uint64_t stride = (learn->window + chain->rows - 1) / chain->rows;
-    if (chain->settings.rank == 0 || learn->in_window % stride != 0) return;
+    if (chain->settings.rank == 0) return;
+    const uint64_t stride = learn->window > chain->rows ? (learn->window + chain->rows - 1) / chain->rows : 1;
+    if (learn->in_window != learn->rows * stride) return;
     fw_copy(chain->walk.d, chain->x, chain->rows_x + learn->rows * chain->walk.d);
     fw_copy(chain->walk.d, chain->g, chain->rows_g + learn->rows * chain->walk.d);
     ++learn->rows;

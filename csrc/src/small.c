@@ -2,122 +2,124 @@
 
 #include <math.h>
 
-/* One Jacobi rotation that annihilates a[p][q]; Golub & Van Loan, Matrix Computations, section 8.5. */
-static void rotate(size_t n, double *a, double *v, size_t p, size_t q)
+#include "kernels.h"
+
+static void swap(double *a, double *b)
 {
-    const double apq = a[p * n + q];
-    const double theta = (a[q * n + q] - a[p * n + p]) / (2.0 * apq);
-    const double t = (theta >= 0.0 ? 1.0 : -1.0) / (fabs(theta) + sqrt(theta * theta + 1.0));
-    const double c = 1.0 / sqrt(t * t + 1.0), s = t * c;
-    for (size_t i = 0; i < n; ++i) {
-        const double ip = a[i * n + p], iq = a[i * n + q];
-        a[i * n + p] = c * ip - s * iq;
-        a[i * n + q] = s * ip + c * iq;
-    }
-    for (size_t i = 0; i < n; ++i) {
-        const double pi = a[p * n + i], qi = a[q * n + i];
-        a[p * n + i] = c * pi - s * qi;
-        a[q * n + i] = s * pi + c * qi;
-        const double vp = v[i * n + p], vq = v[i * n + q];
-        v[i * n + p] = c * vp - s * vq;
-        v[i * n + q] = s * vp + c * vq;
-    }
-    a[p * n + q] = a[q * n + p] = 0.0;
+    const double t = *a;
+    *a = *b;
+    *b = t;
 }
 
-static void swap_columns(size_t n, double *v, size_t p, size_t q)
-{
-    for (size_t i = 0; i < n; ++i) {
-        const double t = v[i * n + p];
-        v[i * n + p] = v[i * n + q];
-        v[i * n + q] = t;
-    }
-}
-
-void fw_small_eigen(size_t n, double *a, double *values, double *v)
-{
-    for (size_t i = 0; i < n * n; ++i) v[i] = 0.0;
-    for (size_t i = 0; i < n; ++i) v[i * n + i] = 1.0;
-    for (int sweep = 0; sweep < 60; ++sweep) {
-        int rotated = 0;
-        for (size_t p = 0; p + 1 < n; ++p)
-            for (size_t q = p + 1; q < n; ++q) {
-                /* relative to both diagonal entries: small eigenvalues of graded matrices keep their digits */
-                const double small = 1e-16 * sqrt(fabs(a[p * n + p])) * sqrt(fabs(a[q * n + q]));
-                if (!(fabs(a[p * n + q]) > small)) continue;
-                rotate(n, a, v, p, q);
-                rotated = 1;
-            }
-        if (!rotated) break;
-    }
-    for (size_t i = 0; i < n; ++i) values[i] = a[i * n + i];
-    for (size_t i = 0; i < n; ++i) {
-        size_t largest = i;
-        for (size_t j = i + 1; j < n; ++j)
-            if (values[j] > values[largest]) largest = j;
-        if (largest == i) continue;
-        const double t = values[i];
-        values[i] = values[largest];
-        values[largest] = t;
-        swap_columns(n, v, i, largest);
-    }
-}
-
-/* a = l l^T with the largest diagonal entry left as each pivot (Golub & Van Loan, section 4.2.8); l is n x n, its first
- * r columns are used. */
-static size_t pivoted(size_t n, double *a, double *l)
+/* Golub & Van Loan, section 4.2.8. Column r of l waits for its pivot, so a row of a holds l before it and a behind. */
+size_t fw_small_pivoted(size_t n, double *a, double floor, size_t *order, double *left)
 {
     double first = 0.0;
+    for (size_t i = 0; i < n; ++i) {
+        order[i] = i;
+        left[i] = a[i * n + i];
+        if (left[i] > first) first = left[i];
+    }
     for (size_t r = 0; r < n; ++r) {
-        size_t p = 0;
-        for (size_t i = 1; i < n; ++i)
-            if (a[i * n + i] > a[p * n + p]) p = i;
-        const double pivot = a[p * n + p];
-        if (r == 0) first = pivot;
-        if (!(pivot > 1e-14 * first)) return r;
-        const double root = sqrt(pivot);
-        for (size_t i = 0; i < n; ++i) l[i * n + r] = a[i * n + p] / root;
-        for (size_t i = 0; i < n; ++i)
-            for (size_t j = 0; j < n; ++j) a[i * n + j] -= l[i * n + r] * l[j * n + r];
-        a[p * n + p] = 0.0;
+        size_t p = r;
+        for (size_t i = r + 1; i < n; ++i)
+            if (left[i] > left[p]) p = i;
+        if (!(left[p] > floor * first)) return r;
+        if (p != r) {
+            const size_t t = order[p];
+            order[p] = order[r];
+            order[r] = t;
+            swap(left + p, left + r);
+            for (size_t j = 0; j < n; ++j) swap(a + p * n + j, a + r * n + j);
+            for (size_t i = r; i < n; ++i) swap(a + i * n + p, a + i * n + r);
+        }
+        const double root = sqrt(left[r]);
+        a[r * n + r] = root;
+        for (size_t i = r + 1; i < n; ++i) {
+            const double entry = (a[i * n + r] - fw_dot(r, a + i * n, a + r * n)) / root;
+            a[i * n + r] = entry;
+            left[i] -= entry * entry;
+        }
     }
     return n;
 }
 
-/* With a = l l^T, the eigenvalues are those of l^T l, and l takes its eigenvectors to those of a. */
-size_t fw_small_range(size_t n, double *a, double *values, double *v)
+/* Rotates the r rows of v until they are orthogonal; their squared lengths. Jacobi from one side (Hestenes 1958), in rounds
+ * of disjoint pairs, whose angles do not wait for each other. */
+static void orthogonalise(size_t n, size_t r, double *v, double *square)
 {
-    double l[FW_SMALL_MOST * FW_SMALL_MOST], inner[FW_SMALL_MOST * FW_SMALL_MOST];
-    const size_t r = pivoted(n, a, l);
-    for (size_t p = 0; p < r; ++p)
-        for (size_t q = 0; q <= p; ++q) {
-            double sum = 0.0;
-            for (size_t i = 0; i < n; ++i) sum += l[i * n + p] * l[i * n + q];
-            a[p * r + q] = a[q * r + p] = sum;
+    const double small = 2.2e-16 * (double)n; /* what rounding leaves of a sum of n products */
+    const size_t even = r + r % 2;
+    for (int sweep = 0, rotated = 1; sweep < 60 && rotated; ++sweep) {
+        rotated = 0;
+        for (size_t j = 0; j < r; ++j) square[j] = fw_dot(n, v + j * n, v + j * n);
+        for (size_t turn = 0; turn + 1 < even; ++turn) {
+            size_t p[FW_SMALL_MOST / 2], q[FW_SMALL_MOST / 2], count = 0;
+            double dot[FW_SMALL_MOST / 2], c[FW_SMALL_MOST / 2], s[FW_SMALL_MOST / 2];
+            for (size_t i = 0; i < even / 2; ++i) { /* a tournament: the last stays, the others go round */
+                const size_t one = i == 0 ? even - 1 : turn + i < even - 1 ? turn + i : turn + i - (even - 1);
+                const size_t two = turn >= i ? turn - i : turn + (even - 1) - i;
+                if (one >= r) continue;
+                dot[count] = fw_dot(n, v + one * n, v + two * n);
+                /* relative to both lengths: small ones keep their digits */
+                if (!(fabs(dot[count]) > small * sqrt(square[one] * square[two]))) continue;
+                p[count] = one;
+                q[count++] = two;
+            }
+            for (size_t i = 0; i < count; ++i) { /* Golub & Van Loan, section 8.5 */
+                const double theta = (square[q[i]] - square[p[i]]) / (2.0 * dot[i]);
+                const double t = (theta >= 0.0 ? 1.0 : -1.0) / (fabs(theta) + sqrt(theta * theta + 1.0));
+                c[i] = 1.0 / sqrt(t * t + 1.0);
+                s[i] = t * c[i];
+                square[p[i]] -= t * dot[i];
+                square[q[i]] += t * dot[i];
+            }
+            for (size_t i = 0; i < count; ++i) fw_rotate(n, c[i], s[i], v + p[i] * n, v + q[i] * n);
+            rotated |= count > 0;
         }
-    fw_small_eigen(r, a, values, inner);
-    for (size_t i = 0; i < n; ++i)
-        for (size_t j = 0; j < r; ++j) {
-            double sum = 0.0;
-            for (size_t p = 0; p < r; ++p) sum += l[i * n + p] * inner[p * r + j];
-            v[i * r + j] = sum / sqrt(values[j]);
+    }
+}
+
+/* With a = l l^T and l q of orthogonal columns, those are eigenvectors times roots of eigenvalues; after pivoting they are
+ * almost that from the start (Veselic & Hari 1989). */
+size_t fw_small_eigen(size_t n, double *a, double floor, double *values, double *v)
+{
+    double left[FW_SMALL_MOST];
+    size_t order[FW_SMALL_MOST];
+    const size_t r = fw_small_pivoted(n, a, floor, order, left);
+    for (size_t j = 0; j < r; ++j)
+        for (size_t i = 0; i < n; ++i) v[j * n + order[i]] = i < j ? 0.0 : a[i * n + j];
+    orthogonalise(n, r, v, values);
+    for (size_t j = 0; j < r; ++j) {
+        size_t largest = j;
+        for (size_t i = j + 1; i < r; ++i)
+            if (values[i] > values[largest]) largest = i;
+        if (largest != j) {
+            swap(values + j, values + largest);
+            for (size_t i = 0; i < n; ++i) swap(v + j * n + i, v + largest * n + i);
         }
+        fw_scale(n, 1.0 / sqrt(values[j]), v + j * n);
+    }
     return r;
 }
 
 int fw_small_cholesky(size_t n, double *a)
 {
     for (size_t j = 0; j < n; ++j) {
-        double pivot = a[j * n + j];
-        for (size_t k = 0; k < j; ++k) pivot -= a[j * n + k] * a[j * n + k];
+        const double pivot = a[j * n + j] - fw_dot(j, a + j * n, a + j * n);
         if (!(pivot > 0.0) || !isfinite(pivot)) return 0;
         const double root = sqrt(pivot);
         a[j * n + j] = root;
-        for (size_t i = j + 1; i < n; ++i) {
-            double sum = a[i * n + j];
-            for (size_t k = 0; k < j; ++k) sum -= a[i * n + k] * a[j * n + k];
-            a[i * n + j] = sum / root;
-        }
+        for (size_t i = j + 1; i < n; ++i)
+            a[i * n + j] = (a[i * n + j] - fw_dot(j, a + i * n, a + j * n)) / root;
     }
     return 1;
+}
+
+void fw_small_solve(size_t n, const double *l, size_t width, double *b)
+{
+    for (size_t i = n; i-- > 0;) {
+        b[i] /= l[i * width + i];
+        fw_axpy(i, -b[i], l + i * width, b);
+    }
 }

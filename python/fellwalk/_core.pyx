@@ -717,6 +717,12 @@ cdef class Engine:
         fw_chain_failed_at(self.chain, &to[0])
         return x
 
+    def settled(self):
+        fw_lock_take(&self.seen.lock)
+        cdef bint settled = self.seen.summary.settled
+        fw_lock_give(&self.seen.lock)
+        return settled
+
     def summary(self):
         fw_lock_take(&self.seen.lock)
         cdef fw_summary s = self.seen.summary

@@ -329,7 +329,7 @@ class Chain:
     @property
     def settled(self) -> bool:
         """Has the plan of settling ended?"""
-        return self._engine.summary()["settled"]
+        return self._engine.settled()
 
     @property
     def phase(self) -> str:
