@@ -2,7 +2,7 @@
 
 A block of draws, its per-draw facts and the chain's new state go in as one transaction, synced to disk, so a killed run
 or a power cut loses at most the block in hand. While a run writes, others may read. Numbers are little-endian and every
-stored item carries a checksum; nothing is ever unpickled.
+stored item carries a checksum; nothing is ever unpickled. DEVELOPERS.md describes the format.
 
 record_items.py turns blocks into bytes, record_file.py knows the file and its lock, record_reading.py reads; here is
 `Record`, which makes, opens, writes and closes.

@@ -177,7 +177,7 @@ def run(
     check = Check.of(density, points[0])
     if density.batch is not None:
         with contextlib.nullcontext() if record is None else Record.create(
-                record, plan, replace=replace, expected=expected_bytes(plan)) as file:
+                record, plan, replace=replace, expected=expected_bytes(plan, states)) as file:
             if file is not None:
                 begin(file, states, check)
             return _drive_lockstep(plan, density, states, parts, executor, file, progress, seconds)
@@ -185,7 +185,7 @@ def run(
     with Workers(executor, density, chains, transitions, check) as workers:
         if record is None:
             return _drive(plan, states, parts, workers, None, progress, seconds, watching)
-        with Record.create(record, plan, replace=replace, expected=expected_bytes(plan)) as file:
+        with Record.create(record, plan, replace=replace, expected=expected_bytes(plan, states)) as file:
             begin(file, states, check)
             return _drive(plan, states, parts, workers, file, progress, seconds, watching)
 

@@ -69,10 +69,11 @@ def begin(record: Record, states: list[bytes], check: Check) -> None:
     })
 
 
-def expected_bytes(plan: dict[str, Any]) -> int:
-    """About how many bytes the draws of a run and their facts will be."""
+def expected_bytes(plan: dict[str, Any], states: list[bytes]) -> int:
+    """About how many bytes a run will keep at a time: draws, their facts, and the states of its chains."""
     width = len(plan["watch"]["names"]) if plan["watch"] else plan["dimension"]
-    return plan["chains"] * plan["keep"] * (8 * width * (1 + plan["gradients"]) + FACTS.itemsize)
+    draw = 8 * width * (1 + plan["gradients"]) + FACTS.itemsize
+    return plan["chains"] * plan["keep"] * draw + sum(map(len, states))
 
 
 def kept_where(path: str) -> str:
