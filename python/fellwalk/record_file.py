@@ -28,6 +28,7 @@ BUSY_SECONDS = 30.0
 # A byte in pages of 32 KiB takes two thirds of its time in pages of 4 KiB. But an empty record of them has half a
 # megabyte, and every commit writes some pages that it fills in part only: for records that will be large.
 _PAGE_BYTES, _LARGE_PAGE_BYTES, _LARGE_RECORD_BYTES = 4_096, 32_768, 16_000_000
+_LOG_BYTES, _CACHE_KILOBYTES = 4_096_000, 500  # after so many the log is folded in; blobs only pass through the cache
 
 TABLES = """
 CREATE TABLE format (name TEXT NOT NULL, version INTEGER NOT NULL);
@@ -207,6 +208,9 @@ def open_writer(path: str) -> tuple[sqlite3.Connection, str]:
                 connection.execute("PRAGMA locking_mode=NORMAL")
                 # FULL syncs the log at every commit; a rollback journal also needs its folder synced, which EXTRA does.
                 connection.execute(f"PRAGMA synchronous={'FULL' if wanted == 'wal' else 'EXTRA'}")
+                page = connection.execute("PRAGMA page_size").fetchone()[0]
+                connection.execute(f"PRAGMA wal_autocheckpoint={_LOG_BYTES // page}")
+                connection.execute(f"PRAGMA cache_size=-{_CACHE_KILOBYTES}")
                 connection.execute("SELECT version FROM format").fetchone()
                 return connection, wanted
             connection.close()
