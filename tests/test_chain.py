@@ -3,6 +3,8 @@
 Statistical tests use fixed seeds and name their false-alarm rates (see stat_checks).
 """
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 import stat_checks
@@ -10,6 +12,8 @@ import targets
 from compiled_densities import Curved
 
 import fellwalk as fw
+from fellwalk.chain import Room, _joined
+from fellwalk.work import Job, make_block
 
 MOTIONS = {
     "leapfrog": fw.Leapfrog(),
@@ -191,6 +195,35 @@ def test_failures_keep_their_place_in_long_blocks():
     np.testing.assert_array_equal(index, expected)
     assert set(code.tolist()) == {2}
     assert (position < 0.0).all()
+
+
+@pytest.mark.parametrize("spare", [0, 2000])
+def test_a_block_of_many_calls_stands_in_arrays_made_once(spare):
+    """Failures included: their numbers count from the first of all calls. Of little used room copies are given."""
+    def edge(x):
+        if x[0] > 1.0:
+            return -np.inf, np.zeros(2)
+        return normal(x)
+
+    def made():
+        return fw.Chain(fw.Density(edge, 2), [0.3, -1.1], seed=4, step_size=0.9, path=fw.Jittered(3))
+
+    whole = made().block(1500, gradients=True)
+    assert len(whole.failures[0]) > 20
+    density = fw.Density(edge, 2)
+    job = Job(0, made().state, 1500 + spare, True, seconds=1e3)
+    room = Room(1500 + spare, 2, 2, True, True)
+    chain = fw.Chain.from_state(density, job.state)
+    parts = [chain.block(n, gradients=True, room=room) for n in (1, 8, 491, 1000)]
+    found = _joined("keep", parts, 2, room)
+    for one, other in ((whole, found), (whole, make_block(density, replace(job, most=1500)).block)):
+        for name in ("draws", "gradients", "facts"):
+            assert getattr(one, name).tobytes() == getattr(other, name).tobytes(), name
+    index = np.concatenate([part.failures[0] + start for part, start in zip(parts, (0, 1, 9, 500), strict=True)])
+    np.testing.assert_array_equal(found.failures[0], index)
+    np.testing.assert_array_equal(found.facts["failure"][index], found.failures[1])
+    for array, whole_room in ((found.draws, room.draws), (found.facts, room.facts)):
+        assert np.shares_memory(array, whole_room) == (spare == 0)
 
 
 def test_chains_of_the_same_seed_are_the_same_and_others_are_not():

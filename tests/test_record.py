@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import contextlib
+import gzip
 import json
 import multiprocessing
 import os
@@ -66,7 +67,7 @@ def test_everything_comes_back_bit_for_bit(path):
     with Record.open(path) as record:
         record.verify()
         assert record.settings == {"seed": 7, "starts": [0.0, 1.0, 2.0]}
-        assert record.schema == 1
+        assert record.schema == record_items.SCHEMA == 2
         assert record.versions["numpy"] == np.__version__
         assert record.counts() == {0: {"settle": 10, "keep": 20}, 3: {"settle": 10, "keep": 35}}
         assert record.count(3, "keep") == 35
@@ -145,14 +146,17 @@ def test_large_items_are_split_in_pieces(path, monkeypatch):
             assert plain.execute(f"SELECT max(length(data)) FROM {table}").fetchone() == (37,)
 
 
-def test_no_blob_is_over_64_megabytes(path):
-    state = np.random.default_rng(5).bytes(64_000_001)
-    with Record.create(path, {}) as record:
+@pytest.mark.parametrize("expected", [0, 10**9])
+def test_no_blob_is_over_a_piece(path, expected):
+    piece = record_items.PIECE_BYTES
+    state = np.random.default_rng(5).bytes(3 * piece + 1)
+    with Record.create(path, {}, expected=expected) as record:
         record.append_blocks([replace(make_block(0, "settle", 0), state=state)])
     with Record.open(path) as record:
         assert record.latest_state(0)[2] == state
     with contextlib.closing(sqlite3.connect(path)) as plain:
-        assert plain.execute("SELECT length(data) FROM states ORDER BY piece").fetchall() == [(64_000_000,), (1,)]
+        assert plain.execute("SELECT length(data) FROM states ORDER BY piece").fetchall() == [(piece,)] * 3 + [(1,)]
+        assert plain.execute("PRAGMA page_size").fetchone() == (32_768 if expected else 4_096,)
 
 
 def test_a_part_is_stored_once(path):
@@ -350,9 +354,42 @@ def test_a_newer_layout(path):
     with Record.create(path, {}):
         pass
     with contextlib.closing(sqlite3.connect(path)) as plain:
-        plain.execute("PRAGMA user_version = 2")
-    with pytest.raises(RecordError, match=r"newer fellwalk \(record format 2; this one reads up to 1\)"):
+        plain.execute("PRAGMA user_version = 3")
+    with pytest.raises(RecordError, match=r"newer fellwalk \(record format 3; this one reads up to 2\)"):
         Record.open(path)
+
+
+def test_a_record_of_format_1_is_read_and_gone_on_with(path):
+    """The file was written by the version of fellwalk that made this format, with the blocks of `make_block`."""
+    old = gzip.decompress((Path(__file__).parent / "checks/data/record_format_1.fell.gz").read_bytes())
+    Path(path).write_bytes(old)
+    with Record.create(path + "-again", {"seed": 3}) as record:
+        record.set_entry("start", [1.5, 2.5])
+        record.put_part(bytes(range(256)) * 4)
+        record.append_blocks([make_block(0, "settle", 0)])
+        for start in range(0, 30, 5):
+            record.append_blocks([make_block(chain, "keep", start, gradients=True) for chain in (0, 1)])
+        truth = contents(record)
+    with Record.open(path) as record:
+        record.verify()
+        assert record.schema == 1
+        assert [event.kind for event in record.events()] == ["interrupted"]
+        assert contents(record)[1:] == truth[1:]
+        assert record.states() == {chain: ("keep", 30, state_after(chain, "keep", 30)) for chain in (0, 1)}
+    with Record.open(path, write=True) as record:
+        record.append_blocks([make_block(chain, "keep", 30, gradients=True) for chain in (0, 1)])
+    with Record.open(path) as record:
+        record.verify()
+        assert record.schema == 1
+        assert record.chain_draws(1).tobytes() == expected_draws(1, 35).tobytes()
+    with contextlib.closing(sqlite3.connect(path)) as plain:  # what the version that made the file would read
+        for table in ("arrays", "states", "parts"):
+            assert plain.execute(f"SELECT DISTINCT length(checksum) FROM {table}").fetchall() == [(16,)]
+    changed = bytearray(old)
+    changed[old.index(make_block(1, "keep", 20).draws.tobytes()[:64]) + 9] ^= 16
+    Path(path).write_bytes(changed)
+    with Record.open(path) as record, pytest.raises(DamagedRecordError, match="draws of draws 20 to 24 of chain 1"):
+        record.verify()
 
 
 def test_missing_empty_and_folder(path, tmp_path):
@@ -538,10 +575,10 @@ def test_ctrl_c_inside_a_transaction_leaves_nothing_behind(path, monkeypatch):
 
 
 @posix_only
-@pytest.mark.parametrize(("mode", "kills"), [("wal", 20), ("rollback", 8)])
-def test_kill_at_any_moment_loses_at_most_the_block_in_hand(path, tmp_path, mode, kills):
+@pytest.mark.parametrize(("mode", "kills", "expected"), [("wal", 16, 0), ("wal", 8, 10**9), ("rollback", 8, 0)])
+def test_kill_at_any_moment_loses_at_most_the_block_in_hand(path, tmp_path, mode, kills, expected):
     rng = np.random.default_rng(20)
-    with Record.create(path, {}):
+    with Record.create(path, {}, expected=expected):
         pass
     confirmed = {0: 0, 1: 0}
     for _ in range(kills):

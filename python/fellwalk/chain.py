@@ -25,6 +25,8 @@ if TYPE_CHECKING:
 __all__ = ["Block", "Chain"]
 
 Bytes = bytes | bytearray | memoryview
+Failures = tuple[NDArray[np.int64], NDArray[np.int32], NDArray[np.float64]]
+Rows = tuple[NDArray[np.float64], NDArray[np.float64] | None, NDArray[np.void]]  # draws, gradients, facts
 _STATE_MAGIC = b"fellwalk chain 1\n"
 _CHECKSUM_BYTES = 16  # of the SHA-256 of all that stands before it
 _ENDLESS = 2**62
@@ -46,12 +48,40 @@ class Block:
     draws: NDArray[np.float64]
     gradients: NDArray[np.float64] | None
     facts: NDArray[np.void]
-    failures: tuple[NDArray[np.int64], NDArray[np.int32], NDArray[np.float64]]
+    failures: Failures
     error: BaseException | None = None
     moments: Moments | None = None
 
     def __len__(self) -> int:
         return len(self.facts)
+
+
+class Room:
+    """Arrays made once for the transitions of several calls, which fill them one after the other.
+
+    Memory that nothing is written to is never the process's own, so there may be much more room than is used.
+    """
+
+    def __init__(self, most: int, width: int, dimension: int, draws: bool, gradients: bool) -> None:
+        self.draws = np.empty((most if draws else 0, width))
+        self.gradients = np.empty((most, dimension)) if gradients else None
+        self.facts = np.empty(most, dtype=FACTS)
+        self.used = 0
+
+    def rows(self, n: int) -> Rows:
+        """Views of the next n rows."""
+        return self._between(self.used, self.used + n)
+
+    def filled(self) -> Rows:
+        """What has been written; copies where less than half was, so that nobody keeps the rest."""
+        draws, gradients, facts = self._between(0, self.used)
+        if 2 * self.used >= len(self.facts):
+            return draws, gradients, facts
+        return draws.copy(), None if gradients is None else gradients.copy(), facts.copy()
+
+    def _between(self, begin: int, end: int) -> Rows:
+        gradients = None if self.gradients is None else self.gradients[begin:end]
+        return self.draws[begin:end], gradients, self.facts[begin:end]
 
 
 class Chain:
@@ -261,38 +291,38 @@ class Chain:
             raise block.error
         return block
 
-    def block(self, most: int, *, draws: bool = True, gradients: bool = False, watching: Watching | None = None
-              ) -> Block:
+    def block(self, most: int, *, draws: bool = True, gradients: bool = False, watching: Watching | None = None,
+              room: Room | None = None) -> Block:
         """Up to `most` transitions of the phase the chain is in; errors are returned in the block, not raised.
 
-        watching: keeps of each draw what it says, and gathers the moments of all.
+        watching: keeps of each draw what it says, and gathers the moments of all. room: where the arrays of the block
+        go, made with the same choices and with at least `most` rows left.
 
         Errors: ArgumentError when the chain has settled without a step size.
         """
         phase = self._ready()
         # How long settling goes on is not known, so its arrays grow; those of kept draws are made once.
-        rows = _PIECE if phase == "settle" else most
+        rows = _PIECE if phase == "settle" and room is None else most
         parts: list[Block] = []
         while most > 0 and self.phase == phase and not (parts and parts[-1].error is not None):
-            parts.append(self._rows(phase, min(most, rows), draws, gradients, watching))
+            parts.append(self._rows(phase, min(most, rows), draws, gradients, watching, room=room))
             most -= len(parts[-1])
         return _joined(phase, parts, self.density.dimension)
 
     def _rows(self, phase: str, n: int, want_draws: bool, want_gradients: bool, watching: Watching | None = None,
-              most_gradients: int = 0) -> Block:
+              most_gradients: int = 0, room: Room | None = None) -> Block:
         """Up to n transitions, in pieces between which Python may answer a Ctrl-C; with most_gradients in one."""
         d = self.density.dimension
-        draws = np.empty((n if want_draws else 0, watching.width if watching else d))
+        room = room or Room(n, watching.width if watching else d, d, want_draws, want_gradients)
+        draws, gradients, facts = room.rows(n)
         whole_rows = None if watching is None or watching.direct else np.empty((watching.rows(n), d))
         most = _PIECE if whole_rows is None else min(_PIECE, len(whole_rows))
-        gradients = np.empty((n, d)) if want_gradients else None
-        facts = np.empty(n, dtype=FACTS)
         failures, done, error = [], 0, None
         while done < n and error is None and self.phase == phase:
             piece = slice(done, min(n, done + most))
-            room = min(piece.stop - done, _FAILURE_ROOM)
-            index, code = np.empty(room, np.int64), np.empty(room, np.int32)
-            position = np.empty((room, d if whole_rows is not None else draws.shape[1]))
+            places = min(piece.stop - done, _FAILURE_ROOM)
+            index, code = np.empty(places, np.int64), np.empty(places, np.int32)
+            position = np.empty((places, d if whole_rows is not None else draws.shape[1]))
             into = (draws[piece] if whole_rows is None else whole_rows) if want_draws else None
             picked = watching.picked(want_draws) if watching else (None, None)
             status, made, rows, error = self._engine.run(
@@ -302,7 +332,8 @@ class Chain:
                 if want_draws:
                     draws[done : done + made] = watching.take(whole_rows[:made])
                 position = watching.place(position[:rows])
-            failures.append((index[:rows] + done, code[:rows], position[:rows].copy()))
+            if rows:
+                failures.append((index[:rows] + done, code[:rows], position[:rows].copy()))
             done += made
             self._count()
             if status < 0 and error is None:
@@ -310,9 +341,9 @@ class Chain:
                                 self._engine.failed_at())
             if most_gradients:
                 break
-        index, code, position = (np.concatenate(column) for column in zip(*failures, strict=True))
+        room.used += done
         return Block(phase, draws[:done], None if gradients is None else gradients[:done], facts[:done],
-                     (index, code, position), error)
+                     _joined_failures(failures, draws.shape[1]), error)
 
     def _ready(self) -> str:
         """The phase, of a chain that can move."""
@@ -446,24 +477,27 @@ def _split_state(stored: Bytes) -> tuple[Settings, bytes]:
     return settings, state[start + length :]
 
 
-def _joined(phase: str, parts: list[Block], dimension: int) -> Block:
-    if len(parts) == 1:
+def _joined_failures(parts: list[Failures], width: int) -> Failures:
+    if not parts:
+        return np.empty(0, np.int64), np.empty(0, np.int32), np.empty((0, width))
+    index, code, position = (np.concatenate(column) for column in zip(*parts, strict=True))
+    return index, code, position
+
+
+def _joined(phase: str, parts: list[Block], dimension: int, room: Room | None = None) -> Block:
+    """One block of all parts; room: where they stand one after the other, if they do."""
+    if len(parts) == 1 and room is None:
         return parts[0]
     if not parts:
-        return Block(phase, np.empty((0, dimension)), None, np.empty(0, FACTS),
-                     (np.empty(0, np.int64), np.empty(0, np.int32), np.empty((0, dimension))))
+        return Block(phase, np.empty((0, dimension)), None, np.empty(0, FACTS), _joined_failures([], dimension))
     starts = np.cumsum([0, *(len(part) for part in parts[:-1])])
-    index = [part.failures[0] + start for part, start in zip(parts, starts, strict=True)]
-    code, position = (np.concatenate(arrays) for arrays in zip(*(part.failures[1:] for part in parts), strict=True))
-    slopes = [part.gradients for part in parts if part.gradients is not None]
-    gradients = np.concatenate(slopes) if slopes else None
-    return Block(
-        phase,
-        np.concatenate([part.draws for part in parts]),
-        gradients,
-        np.concatenate([part.facts for part in parts]),
-        (np.concatenate(index), code, position),
-        parts[-1].error,
-    )
+    failures = [(part.failures[0] + start, *part.failures[1:]) for part, start in zip(parts, starts, strict=True)]
+    if room is not None:
+        arrays = room.filled()
+    else:
+        slopes = [part.gradients for part in parts if part.gradients is not None]
+        arrays = (np.concatenate([part.draws for part in parts]), np.concatenate(slopes) if slopes else None,
+                  np.concatenate([part.facts for part in parts]))
+    return Block(phase, *arrays, _joined_failures(failures, parts[0].failures[2].shape[1]), parts[-1].error)
 
 

@@ -12,6 +12,7 @@ from typing import Any
 import numpy as np
 
 from fellwalk.errors import Interrupted, WorkerError
+from fellwalk.facts import FACTS
 from fellwalk.interrupts import Interrupts
 from fellwalk.pools import Workers
 from fellwalk.progress import Progress
@@ -133,7 +134,7 @@ class Driver:
 
     def _most(self, chain: int) -> int:
         """Transitions in a block, for memory's sake; but of draws at least as many bytes as the state has."""
-        return max(_BLOCK_BYTES, len(self.states[chain])) // (16 * self._width()) + 1
+        return max(_BLOCK_BYTES, len(self.states[chain])) // (16 * self._width() + FACTS.itemsize) + 1
 
     def _width(self) -> int:
         """Numbers kept of a draw."""

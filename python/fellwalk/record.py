@@ -2,7 +2,7 @@
 
 A block of draws, its per-draw facts and the chain's new state go in as one transaction, synced to disk, so a killed run
 or a power cut loses at most the block in hand. While a run writes, others may read. Numbers are little-endian and every
-stored item carries a checksum; nothing is ever unpickled.
+stored item carries a checksum; nothing is ever unpickled. DEVELOPERS.md describes the format.
 
 record_items.py turns blocks into bytes, record_file.py knows the file and its lock, record_reading.py reads; here is
 `Record`, which makes, opens, writes and closes.
@@ -55,8 +55,10 @@ class Record(RecordReader):
     """
 
     @classmethod
-    def create(cls, path: str | os.PathLike[str], settings: dict[str, Any], *, replace: bool = False) -> Record:
-        """Make a new record with the settings of a run, and open it for writing.
+    def create(cls, path: str | os.PathLike[str], settings: dict[str, Any], *, replace: bool = False,
+               expected: int = 0) -> Record:
+        """Make a new record with the settings of a run, and open it for writing. `expected`: about how many bytes will
+        go into it, if it is known; large records are laid out for speed, small ones to be small.
 
         Raises RecordExistsError when a file is there already, unless `replace` is true; RecordInUseError when another
         run is writing it.
@@ -72,7 +74,7 @@ class Record(RecordReader):
                 if os.path.exists(full) and not replace:
                     raise RecordExistsError(f"{full}: there is a file already. Resume it, use another name, or say "
                                             "replace=True.")
-                build(full, first)
+                build(full, first, expected)
                 return cls(full, *cls._with_lock(full, lock))
             except BaseException:
                 lock.release()
@@ -191,7 +193,7 @@ class Record(RecordReader):
         label = f"{chain} {block.phase} {start} {count} {dimension}"
         for kind, data in arrays.items():
             ids[kind] = self._memory["next array"]
-            for item in split(f"{kind} {label}", data):
+            for item in split(f"{kind} {label}", data, self.schema):
                 connection.execute("INSERT INTO arrays VALUES (?, ?, ?, ?, ?)", (self._memory["next array"], *item))
                 self._memory["next array"] += 1
         row = (chain, block.phase, start, count, dimension,
@@ -200,12 +202,12 @@ class Record(RecordReader):
                            (*row, row_checksum(*row)))
         stop = start + count
         connection.execute("DELETE FROM states WHERE chain = ?", (chain,))
-        for piece, pieces, chunk, checksum in split(f"state {chain} {block.phase} {stop}", block.state):
+        for piece, pieces, chunk, checksum in split(f"state {chain} {block.phase} {stop}", block.state, self.schema):
             connection.execute("INSERT INTO states VALUES (?, ?, ?, ?, ?, ?, ?)",
                                (chain, piece, pieces, block.phase, stop, chunk, checksum))
         if block.moments is not None:
             connection.execute("DELETE FROM moments WHERE chain = ?", (chain,))
-            for piece, pieces, chunk, checksum in split(f"moments {chain} {stop}", block.moments):
+            for piece, pieces, chunk, checksum in split(f"moments {chain} {stop}", block.moments, self.schema):
                 connection.execute("INSERT INTO moments VALUES (?, ?, ?, ?, ?, ?)",
                                    (chain, piece, pieces, stop, chunk, checksum))
         self._memory["tail", chain] = _Tail(block.phase, stop, "gradients" in ids)
@@ -239,7 +241,7 @@ class Record(RecordReader):
         with self._writing() as connection:
             if connection.execute("SELECT 1 FROM parts WHERE name = ?", (name,)).fetchone() is None:
                 connection.executemany("INSERT INTO parts VALUES (?, ?, ?, ?, ?)",
-                                       ((name, *item) for item in split(f"part {name}", data)))
+                                       ((name, *item) for item in split(f"part {name}", data, self.schema)))
         return name
 
     def set_entry(self, name: str, value: Any) -> None:

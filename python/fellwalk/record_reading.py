@@ -27,11 +27,12 @@ from .record_items import (
 
 
 class RecordReader:
-    """The reading half of `Record`, which see."""
+    """The reading half of `Record`, which see. `schema`: the number of the file's format."""
 
     def __init__(self, path: str, connection: sqlite3.Connection, lock: WriterLock | None, journal: str) -> None:
         self.path = path
         self.journal = journal
+        self.schema: int = connection.execute("PRAGMA user_version").fetchone()[0]
         self.damage: tuple[str, ...] = ()
         self._connection: sqlite3.Connection | None = connection
         self._lock = lock
@@ -71,12 +72,6 @@ class RecordReader:
         """`current_versions()` at the time the record was made."""
         return self.get_entry("versions")
 
-    @property
-    def schema(self) -> int:
-        """Number of the file's layout."""
-        with self._reading() as connection:
-            return connection.execute("PRAGMA user_version").fetchone()[0]
-
     def get_entry(self, name: str, default: Any = None) -> Any:
         """The value kept under a name, or `default`."""
         with self._reading() as connection:
@@ -105,7 +100,7 @@ class RecordReader:
                                       (name,)).fetchall()
         if not rows:
             raise RecordError(f"{self.path}: holds no part named {name!r}")
-        data = join(f"part {name}", rows)
+        data = join(f"part {name}", rows, self.schema)
         if data is None:
             raise self._damaged(f"the part {name}")
         return data
@@ -119,7 +114,9 @@ class RecordReader:
             last = connection.execute(query, (chain,)).fetchone()
         if not rows and last is None:
             return None
-        data = join(f"state {chain} {rows[0][0]} {rows[0][1]}", [row[2:] for row in rows]) if rows else None
+        data = None
+        if rows:
+            data = join(f"state {chain} {rows[0][0]} {rows[0][1]}", [row[2:] for row in rows], self.schema)
         if data is None or last != rows[0][:2]:
             raise self._damaged(f"the state of chain {chain}, so this chain cannot go on")
         return last[0], last[1], data
@@ -197,7 +194,7 @@ class RecordReader:
             rows = connection.execute(query, (chain,)).fetchall()
             if not rows or (self._sound is not None and rows[0][0] != self.count(chain, "keep")):
                 return None
-            data = join(f"moments {chain} {rows[0][0]}", [row[1:] for row in rows])
+            data = join(f"moments {chain} {rows[0][0]}", [row[1:] for row in rows], self.schema)
             if data is None:
                 raise self._damaged(f"the running moments of chain {chain}")
             return data
@@ -262,7 +259,7 @@ class RecordReader:
         first = getattr(row, kind)
         with contextlib.closing(self._live().execute(
                 "SELECT piece, pieces, data, checksum FROM arrays WHERE id >= ? ORDER BY id", (first,))) as found:
-            data = join(row.label(kind), found)
+            data = join(row.label(kind), found, self.schema)
         if data is None:
             span = f"draws {row.start} to {row.start + row.count - 1} of chain {row.chain} ({row.phase})"
             raise self._damaged(f"the {kind} of {span}")

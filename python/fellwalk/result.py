@@ -70,11 +70,16 @@ class Result:
         return min(part.count("keep") for part in self._parts)
 
     def _stack(self, pick: Callable[[ChainResult], list[Any]], shape: tuple[int, ...], dtype: Any) -> NDArray[Any]:
+        """(chains, draws, *shape) of what every chain has in pieces; one chain's single piece is not copied."""
         n = self._shortest
+        if len(self._parts) == 1 and len(pick(self._parts[0])) == 1:
+            return pick(self._parts[0])[0][None, :n]
         out = np.empty((len(self._parts), n, *shape), dtype)
         for row, part in zip(out, self._parts, strict=True):
-            if n:
-                row[:] = np.concatenate(pick(part))[:n]
+            done = 0
+            for piece in pick(part):
+                row[done : done + len(piece)] = piece[: n - done]
+                done = min(n, done + len(piece))
         return out
 
     @cached_property

@@ -25,7 +25,7 @@ from fellwalk.pools import Workers
 from fellwalk.progress import choose_progress
 from fellwalk.record import Record
 from fellwalk.result import Result
-from fellwalk.run_record import ChainResult, begin, plan_of, read_check, read_parts, read_states
+from fellwalk.run_record import ChainResult, begin, expected_bytes, plan_of, read_check, read_parts, read_states
 from fellwalk.settings import Settings
 from fellwalk.settled import Settled
 from fellwalk.starts import Starts, first_states, starting_points
@@ -176,7 +176,8 @@ def run(
     parts = [ChainResult() for _ in states]
     check = Check.of(density, points[0])
     if density.batch is not None:
-        with contextlib.nullcontext() if record is None else Record.create(record, plan, replace=replace) as file:
+        with contextlib.nullcontext() if record is None else Record.create(
+                record, plan, replace=replace, expected=expected_bytes(plan, states)) as file:
             if file is not None:
                 begin(file, states, check)
             return _drive_lockstep(plan, density, states, parts, executor, file, progress, seconds)
@@ -184,7 +185,7 @@ def run(
     with Workers(executor, density, chains, transitions, check) as workers:
         if record is None:
             return _drive(plan, states, parts, workers, None, progress, seconds, watching)
-        with Record.create(record, plan, replace=replace) as file:
+        with Record.create(record, plan, replace=replace, expected=expected_bytes(plan, states)) as file:
             begin(file, states, check)
             return _drive(plan, states, parts, workers, file, progress, seconds, watching)
 

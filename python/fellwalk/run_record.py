@@ -10,14 +10,15 @@ import numpy as np
 from numpy.typing import NDArray
 
 from fellwalk.errors import RecordError
+from fellwalk.facts import FACTS
 from fellwalk.record import Block as RecordBlock
 from fellwalk.record import Record
 from fellwalk.settings import Settings
 from fellwalk.watch import Moments
 from fellwalk.work import Check, Done
 
-__all__ = ["ChainResult", "begin", "end_record", "kept_where", "plan_of", "read_check", "read_parts", "read_states",
-           "record_block"]
+__all__ = ["ChainResult", "begin", "end_record", "expected_bytes", "kept_where", "plan_of", "read_check", "read_parts",
+           "read_states", "record_block"]
 
 _PLAN = {"settings", "names", "dimension", "chains", "keep", "seed", "gradients", "model"}
 
@@ -66,6 +67,13 @@ def begin(record: Record, states: list[bytes], check: Check) -> None:
         "check": record.put_part(np.concatenate([check.position, check.gradient, [check.log_density]])
                                  .astype("<f8").tobytes()),
     })
+
+
+def expected_bytes(plan: dict[str, Any], states: list[bytes]) -> int:
+    """About how many bytes a run will keep at a time: draws, their facts, and the states of its chains."""
+    width = len(plan["watch"]["names"]) if plan["watch"] else plan["dimension"]
+    draw = 8 * width * (1 + plan["gradients"]) + FACTS.itemsize
+    return plan["chains"] * plan["keep"] * draw + sum(map(len, states))
 
 
 def kept_where(path: str) -> str:

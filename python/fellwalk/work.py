@@ -18,7 +18,7 @@ import cloudpickle
 import numpy as np
 from numpy.typing import NDArray
 
-from fellwalk.chain import Block, Chain, _joined
+from fellwalk.chain import Block, Chain, Room, _joined
 from fellwalk.density import Density, brief
 from fellwalk.errors import BusyError, RemoteError, WorkerError
 from fellwalk.fresh import Fresh
@@ -110,6 +110,8 @@ def make_block(density: Density, job: Job, live: Live | None = None) -> Done:
         moments = Moments.of(len(density.names)) if job.moments is None else job.moments.copy()
         watching = Watching(job.watch, density, moments)
     parts: list[Block] = []
+    width = watching.width if watching else density.dimension
+    room = Room(job.most, width, density.dimension, keeping, keeping and job.gradients)
     moving = time.perf_counter()
     seconds = max(job.seconds, 4 * (moving - begun))  # in millions of dimensions, unpacking a state takes its time
     done, size, elapsed = 0, 1, 0.0
@@ -117,7 +119,7 @@ def make_block(density: Density, job: Job, live: Live | None = None) -> Done:
         while done < job.most and elapsed < seconds and chain.settled == keeping and not live.stopped:
             try:
                 parts.append(chain.block(min(size, job.most - done), draws=keeping, gradients=keeping and job.gradients,
-                                         watching=watching))
+                                         watching=watching, room=room))
             except Exception as error:  # of the watched function: the chain is beyond the draws it was asked about
                 block = replace(_joined(phase, [], density.dimension), error=error)
                 before = b"" if isinstance(job.state, Fresh) else job.state
@@ -127,7 +129,7 @@ def make_block(density: Density, job: Job, live: Live | None = None) -> Done:
                 break
             elapsed = time.perf_counter() - moving
             size = max(1, min(8 * size, int(done * (seconds / elapsed - 1))))
-    block = _joined(phase, parts, density.dimension)
+    block = _joined(phase, parts, density.dimension, room)
     if watching is not None and keeping:
         block = replace(block, moments=watching.moments)
     return Done(job.chain, block, chain.state, time.perf_counter() - begun, dict(chain.summary))
