@@ -207,6 +207,28 @@ FW_CLONES void fw_kick_gradient(size_t n, double kick, const double *restrict r,
     sums[1] = FOLD(cc);
 }
 
+FW_CLONES void fw_link(size_t n, double kick, const double *restrict c, double step, const double *restrict r,
+                       double *restrict w, const double *restrict x, double *restrict next, double sums[2])
+{
+    SUM(ww);
+    SUM(cc);
+    SWEEP(n, const group e = GET(c); const group t = GET(w) + kick * e; const group u = t + kick * e; PUT(w, u);
+          PUT(next, GET(x) + step * (GET(r) * u)); ADD(ww, t * t); ADD(cc, e * e););
+    sums[0] = FOLD(ww);
+    sums[1] = FOLD(cc);
+}
+
+FW_CLONES void fw_link_gradient(size_t n, double kick, double step, const double *restrict r, double *restrict w,
+                                const double *restrict x, double *restrict g, double sums[2])
+{
+    SUM(ww);
+    SUM(cc);
+    SWEEP(n, const group s = GET(r); const group e = s * GET(g); const group t = GET(w) + kick * e;
+          const group u = t + kick * e; PUT(w, u); PUT(g, GET(x) + step * (s * u)); ADD(ww, t * t); ADD(cc, e * e););
+    sums[0] = FOLD(ww);
+    sums[1] = FOLD(cc);
+}
+
 FW_CLONES void fw_whiten(size_t n, const double *restrict r, const double *restrict g, double *restrict c,
                          const double *restrict w, double sums[3])
 {

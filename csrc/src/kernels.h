@@ -84,6 +84,12 @@ void fw_kick_drift(size_t n, double kick, const double *c, double step, const do
 void fw_kick_drift_gradient(size_t n, double kick, const double *g, double step, const double *r, double *w, double *x);
 /* c = r*g, which is not kept; w += kick c; sums: w.w, c.c with the new w */
 void fw_kick_gradient(size_t n, double kick, const double *r, const double *g, double *w, double sums[2]);
+/* The end of a step and the beginning of the next in one pass: w += kick c; sums: w.w, c.c with this w; once more
+ * w += kick c; x + step r*w into next. Then with c = r*g, which is not kept, and x + step r*w in the place of g. */
+void fw_link(size_t n, double kick, const double *c, double step, const double *r, double *w, const double *x,
+             double *next, double sums[2]);
+void fw_link_gradient(size_t n, double kick, double step, const double *r, double *w, const double *x, double *g,
+                      double sums[2]);
 /* c = r*g; sums: w.w, w.c, c.c */
 void fw_whiten(size_t n, const double *r, const double *g, double *c, const double *w, double sums[3]);
 /* w += kick c; sums: w.w, w.c */
