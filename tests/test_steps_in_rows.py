@@ -111,14 +111,16 @@ def test_a_row_breaks_where_its_steps_break(act, form):
                     found.append((*walked(engine, x, v, step, steps, **ways), int(breaking.plan.calls)))
                 apart, told, plain = found
                 where = (d, name, call)
+                # at the start there is no kick yet that would make this energy infinite
+                known = name == "leapfrog" and (call, act) != (1, "energy infinite")
                 assert same((told[:6], told[7]), (apart[:6], apart[7])), where
                 assert same((plain[:4], plain[7]), (apart[:4], apart[7])), where
                 status = 2 if act == "outside" and form != "compiled" else ACTS[act]
                 if act == "stop" and form != "compiled":
                     assert apart[0] == ("raised",)
-                elif name == "leapfrog" and (call, act) != (1, "energy infinite"):  # there it is the velocity that is finite
+                elif known:
                     assert apart[0][:2] == ((status, max(call - 2, 0)) if status else (0, steps)), where
-                if status and name == "leapfrog" and (call, act) != (1, "energy infinite"):
+                if status and known:
                     assert breaking.plan.calls == call, where
                     assert same(plain[3], breaking.at), where
 

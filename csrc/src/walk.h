@@ -26,6 +26,7 @@ typedef struct fw_point {
     double ww, wc, cc;           /* w.w, w.c, c.c */
     double whw, whc, chc, hchc;  /* w.H~w, w.hc, c.hc, hc.hc */
     double coarsest;             /* largest |x|/r, for gradient differences */
+    double owed;                 /* between steps of a row: what w still lacks, in units of c */
     double energy;
     double log_jacobian;   /* of the map from the start of the path */
 } fw_point;
@@ -43,9 +44,9 @@ typedef struct fw_motion {
     int (*complete)(struct fw_walk *walk, fw_point *p);
     /* Move p by the signed step; adds to p->log_jacobian, sets p->energy. > 0: the step failed, p is scrap. */
     int (*step)(struct fw_walk *walk, fw_point *p, double step);
-    /* NULL, or the same for steps that follow each other, when only x, value, energy and log_jacobian are asked for in
-     * between: the end of a step and the beginning of the next are one pass. first, last: of the row; the last leaves
-     * what `step` leaves, bit for bit. Before it w is half a step further, and g holds the next x. */
+    /* NULL, or the same for equal steps that follow each other when only x, value, energy and log_jacobian are asked for
+     * in between: the end of a step and the beginning of the next share a pass. first, last: of the row. All are those
+     * of single steps, bit for bit; until the last step has ended the rest of p is the motion's own. */
     int (*step_in_row)(struct fw_walk *walk, fw_point *p, double step, int first, int last);
     /* Whitened momentum (of the full metric) = w + k c: its coefficient k at p. */
     double (*momentum)(const struct fw_walk *walk, const fw_point *p);
