@@ -122,7 +122,8 @@ static int step_surrogate(fw_walk *walk, fw_point *p, double step, int first, in
     if (last)
         fw_kick(d, k, p->c, p->w, sums);
     else
-        fw_kicked_sums(d, p->owed = k, r, p->g, p->w, sums);
+        fw_kicked_sums(d, k, r, p->g, p->w, sums);
+    p->owed = last ? 0.0 : k;
     p->ww = sums[0];
     p->wc = sums[1];
     return finish(walk, p);
