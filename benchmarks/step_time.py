@@ -3,7 +3,8 @@
     python benchmarks/step_time.py            all dimensions, some minutes
     python benchmarks/step_time.py --quick    up to d = 1e4 and shorter repeats, under a minute
 
-Two tables. "Pure step": `fellwalk.integrate` over n steps less the same over 0 steps, divided by n. "All included":
+Two tables. "Pure step": `fellwalk.integrate` over n steps less the same over 0 steps, divided by n, so leapfrog and
+surrogate steps share passes with their neighbours, as on jittered paths (csrc/src/kernels.h). "All included":
 draws of `fellwalk.Chain.advance` on jittered paths of 1..16 steps, divided by the steps made: velocities, energies,
 accept tests, facts and the copies of the draws included. The density is a standard normal, in C and in NumPy; its own
 time, measured alone, is what "net" leaves out.

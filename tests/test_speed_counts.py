@@ -1,6 +1,7 @@
 """The table in csrc/src/kernels.h, of what a step moves, is what the steps do: every kernel call is counted."""
 
 import ctypes
+import functools
 import re
 import subprocess
 from pathlib import Path
@@ -23,7 +24,9 @@ MOVES = {
     "fw_kick2_spread": (4, 2), "fw_product_dot": (3, 0), "fw_scale_by": (2, 1), "fw_product_sums": (5, 0),
     "fw_kick2": (3, 1), "fw_whiten_square": (2, 1), "fw_kick2_drift_coarsest": (5, 2),
     "fw_probe": (3, 1), "fw_whiten_difference": (3, 1),
-    "fw_difference_dot": (4, 0), "fw_difference_sums": (5, 0), "fw_blend": (2, 1),
+    "fw_difference_dot": (4, 0), "fw_difference_sums": (5, 0), "fw_blend": (2, 1), "fw_link_gradient": (4, 2),
+    "fw_link": (4, 2), "fw_dot": (2, 0), "fw_axpy": (2, 1), "fw_drift": (3, 1), "fw_gram2": (2, 0),
+    "fw_whitened_sums": (3, 0), "fw_kicked_sums": (3, 0), "fw_kick_twice_drift": (4, 2),
 }  # fmt: skip
 
 MOTIONS = {
@@ -36,6 +39,18 @@ MOTIONS = {
     "difference, split": (b"lagrangian", 0, 1),
     "difference, semi-explicit": (b"lagrangian", 1, 1),
 }
+
+
+# Those whose steps in a row have a line of their own; for the others it is that of single steps.
+ROWS = {
+    "leapfrog": "leapfrog, in a row",
+    "surrogate, either scheme": "surrogate, in a row",
+    "surrogate, the other": "surrogate, in a row",
+}
+
+
+def sizes(*numbers):
+    return map(ctypes.c_size_t, numbers)
 
 
 def declared():
@@ -67,7 +82,7 @@ def library(tmp_path_factory):
     out = folder / "counts.so"
     subprocess.run([*_build.compiler(), "-shared", "-o", str(out), *objects, "-lm"], check=True)
     loaded = ctypes.CDLL(str(out))
-    loaded.counted.restype = ctypes.c_long
+    loaded.counted.restype = loaded.counted_path.restype = ctypes.c_long
     return loaded
 
 
@@ -80,11 +95,37 @@ def test_the_kernels_counted_are_kernels():
 def test_a_step_moves_what_the_table_says(library, name):
     motion, scheme, curvature = MOTIONS[name]
     steps = 3 if name == "isokinetic" else STEPS  # before it turns against the gradient, where it reads more
-    moved = library.counted(motion, scheme, curvature, ctypes.c_size_t(D), ctypes.c_size_t(steps))
+    moved = library.counted(motion, scheme, curvature, *sizes(D, steps, 1, 0, 0))
     said, least = table()[name if name in table() else "surrogate, either scheme"]
     assert moved == steps * said
     assert least <= said <= least + 1
 
 
+@pytest.mark.parametrize("name", MOTIONS)
+def test_a_step_in_a_row_moves_what_the_table_says(library, name):
+    motion, scheme, curvature = MOTIONS[name]
+    steps = 3 if name == "isokinetic" else STEPS
+    said = table()[ROWS.get(name, name)][0]
+    assert library.counted(motion, scheme, curvature, *sizes(D, 1, 1 + steps, 1, 0)) == steps * said
+
+
+@pytest.mark.parametrize("learned", [1, 2, 4])
+def test_learned_directions_move_what_the_sentence_says(library, learned):
+    said = r"leapfrog step moves (\d+) \+ (\d+) k, in a row (\d+) \+ (\d+) k"
+    single, more, row, more_in_row = map(int, re.search(said, HEADER.read_text(encoding="utf-8")).groups())
+    counted = functools.partial(library.counted, b"leapfrog", 0, 0)
+    assert counted(*sizes(D, STEPS, 1, 0, learned)) == STEPS * (single + more * learned)
+    assert counted(*sizes(D, 1, 1 + STEPS, 1, learned)) == STEPS * (row + more_in_row * learned)
+    surrogate = functools.partial(library.counted, b"lagrangian", 0, 0)
+    assert surrogate(*sizes(D, STEPS, 1, 0, learned)) == surrogate(*sizes(D, 1, 1 + STEPS, 1, learned))
+
+
+@pytest.mark.parametrize("name", ["leapfrog", "surrogate, either scheme"])
+def test_jittered_paths_are_rows(library, name):
+    short, long = (library.counted_path(MOTIONS[name][0], *sizes(D, most)) for most in (4, 12))
+    assert short > 0
+    assert long - short == 4 * table()[ROWS[name]][0]
+
+
 def test_the_table_has_every_motion():
-    assert set(table()) == set(MOTIONS) - {"surrogate, the other"}
+    assert set(table()) == set(MOTIONS) - {"surrogate, the other"} | set(ROWS.values())

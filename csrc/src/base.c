@@ -65,20 +65,20 @@ void fw_base_gradient(const fw_base *base, const double *g, double *c)
 }
 
 /* x += step S w, what the diagonal does already done */
-static void drift_along_directions(const fw_base *base, double step, fw_point *p)
+static void drift_along_directions(const fw_base *base, double step, const double *w, double *x)
 {
     const size_t d = base->d;
     for (size_t j = 0; j < base->k; ++j) {
         const double *e = base->directions + j * d;
-        const double part = (sqrt(base->lambda[j]) - 1.0) * fw_dot(d, e, p->w);
-        fw_drift(d, step * part, base->r, e, p->x);
+        const double part = (sqrt(base->lambda[j]) - 1.0) * fw_dot(d, e, w);
+        fw_drift(d, step * part, base->r, e, x);
     }
 }
 
 void fw_base_kick_drift(const fw_base *base, double kick, double step, fw_point *p)
 {
     fw_kick_drift(base->d, kick, p->c, step, base->r, p->w, p->x);
-    drift_along_directions(base, step, p);
+    drift_along_directions(base, step, p->w, p->x);
 }
 
 void fw_base_kick2_drift(const fw_base *base, double kc, double kh, double step, int spacing, fw_point *p)
@@ -91,8 +91,22 @@ void fw_base_kick2_drift(const fw_base *base, double kc, double kh, double step,
         return;
     }
     p->ww = fw_kick2_drift(base->d, kc, p->c, kh, p->hc, step, base->r, p->w, p->x);
-    drift_along_directions(base, step, p);
+    drift_along_directions(base, step, p->w, p->x);
     if (spacing) p->coarsest = fw_coarsest(base->d, base->r, p->x);
+}
+
+void fw_base_link(const fw_base *base, double kick, double step, fw_point *p)
+{
+    double sums[2];
+    if (base->k == 0) {
+        fw_link_gradient(base->d, kick, step, base->r, p->w, p->x, p->g, sums);
+    } else {
+        fw_base_gradient(base, p->g, p->c);
+        fw_link(base->d, kick, p->c, step, base->r, p->w, p->x, p->g, sums);
+        drift_along_directions(base, step, p->w, p->g);
+    }
+    p->ww = sums[0];
+    p->cc = sums[1];
 }
 
 void fw_base_arrive(const fw_base *base, fw_point *p)

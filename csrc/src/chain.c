@@ -345,8 +345,10 @@ int fw_chain_integrate(fw_chain *chain, double *x, double *v, double step_size, 
     if (status == FW_OK) status = walk->motion->complete(walk, p);
     const double start = p->energy;
     if (status == FW_OK) trace(chain, p, 0, out);
+    const int apart = out->trace_v != NULL; /* a velocity is known where a row of steps ends */
     while (status == FW_OK && out->steps_done < steps) {
-        status = fw_walk_step(walk, p, step_size);
+        const int first = apart || out->steps_done == 0, last = apart || out->steps_done + 1 == steps;
+        status = fw_walk_step_in_row(walk, p, step_size, first, last);
         if (status == FW_OK) trace(chain, p, ++out->steps_done, out);
     }
     out->gradients = walk->gradients - gradients;

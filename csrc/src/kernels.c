@@ -221,6 +221,28 @@ FW_CLONES void fw_kick_gradient(size_t n, double kick, const double *restrict r,
     sums[1] = FOLD(cc);
 }
 
+FW_CLONES void fw_link(size_t n, double kick, const double *restrict c, double step, const double *restrict r,
+                       double *restrict w, const double *restrict x, double *restrict next, double sums[2])
+{
+    SUM(ww);
+    SUM(cc);
+    SWEEP(n, const group e = GET(c); const group t = GET(w) + kick * e; const group u = t + kick * e; PUT(w, u);
+          PUT(next, GET(x) + step * (GET(r) * u)); ADD(ww, t * t); ADD(cc, e * e););
+    sums[0] = FOLD(ww);
+    sums[1] = FOLD(cc);
+}
+
+FW_CLONES void fw_link_gradient(size_t n, double kick, double step, const double *restrict r, double *restrict w,
+                                const double *restrict x, double *restrict g, double sums[2])
+{
+    SUM(ww);
+    SUM(cc);
+    SWEEP(n, const group s = GET(r); const group e = s * GET(g); const group t = GET(w) + kick * e;
+          const group u = t + kick * e; PUT(w, u); PUT(g, GET(x) + step * (s * u)); ADD(ww, t * t); ADD(cc, e * e););
+    sums[0] = FOLD(ww);
+    sums[1] = FOLD(cc);
+}
+
 FW_CLONES void fw_whiten(size_t n, const double *restrict r, const double *restrict g, double *restrict c,
                          const double *restrict w, double sums[3])
 {
@@ -232,6 +254,35 @@ FW_CLONES void fw_whiten(size_t n, const double *restrict r, const double *restr
     sums[0] = FOLD(ww);
     sums[1] = FOLD(wc);
     sums[2] = FOLD(cc);
+}
+
+FW_CLONES void fw_whitened_sums(size_t n, const double *restrict r, const double *restrict g, const double *restrict w,
+                                double sums[3])
+{
+    SUM(ww);
+    SUM(wc);
+    SUM(cc);
+    SWEEP(n, const group e = GET(r) * GET(g); const group t = GET(w); ADD(ww, t * t); ADD(wc, t * e); ADD(cc, e * e););
+    sums[0] = FOLD(ww);
+    sums[1] = FOLD(wc);
+    sums[2] = FOLD(cc);
+}
+
+FW_CLONES void fw_kicked_sums(size_t n, double kick, const double *restrict r, const double *restrict g,
+                              const double *restrict w, double sums[2])
+{
+    SUM(ww);
+    SUM(wc);
+    SWEEP(n, const group e = GET(r) * GET(g); const group t = GET(w) + kick * e; ADD(ww, t * t); ADD(wc, t * e););
+    sums[0] = FOLD(ww);
+    sums[1] = FOLD(wc);
+}
+
+FW_CLONES void fw_kick_twice_drift(size_t n, double first, double kick, const double *restrict g, double step,
+                                   const double *restrict r, double *restrict w, double *restrict x)
+{
+    SWEEP(n, const group s = GET(r); const group e = s * GET(g); const group t = (GET(w) + first * e) + kick * e;
+          PUT(w, t); PUT(x, GET(x) + step * (s * t)););
 }
 
 FW_CLONES void fw_kick(size_t n, double kick, const double *restrict c, double *restrict w, double sums[2])

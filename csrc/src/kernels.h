@@ -4,13 +4,16 @@
  * forbids contraction of a*b+c, so a result has the same bits on every processor and in every function clone.
  *
  * Beyond the caches a step costs what it moves. Vectors of d numbers read + written in one step, the caller's functions
- * apart, without learned directions (each adds 3 to a leapfrog step). A step begins and ends with a whole state (x, w, c,
- * g and, where H is asked, H c; leapfrog does without c), because paths weigh, test and keep states. "Least": then
- * between two calls, or two sums that the next pass needs, each vector is read once and only what has changed is written.
+ * apart, without learned directions. A single step begins and ends with a whole state (x, w, c, g and, where H is asked,
+ * H c; leapfrog does without c), because no-U-turn paths weigh, test and keep states. "In a row", as on jittered paths:
+ * after the first of steps that follow each other and are asked for their energies alone. "Least": then between two
+ * calls, or two sums that the next pass needs, each vector is read once and only what has changed is written.
  *
  *   motion                            passes                                                       moved   least
  *   leapfrog                          kick and drift 6, kick 4                                        10      10
+ *   leapfrog, in a row                kick, kick and drift 6                                           6       6
  *   surrogate, either scheme          kick and drift 6, whiten 4, kick 3                              13      13
+ *   surrogate, in a row               kick, kick and drift 6, whiten 3, kick 3                        12      12
  *   isokinetic                        kick and drift 6, whiten 4, blend 3                             13      13
  *   product, split                    kick and drift 7, whiten 4, H c 4, kick 6, H w 3, kick 3        27      26
  *   product, semi-explicit            S w 3, H w 5, kick and drift 7, whiten 4, H c 4, S w 3,         35      34
@@ -20,7 +23,11 @@
  *   difference, semi-explicit         probe 4, H w 5, kick and drift 7, whiten 3, probe 4, H c 4,     40      39
  *                                     probe 4, H w 5, kick 4
  *
- * The isokinetic motion reads two vectors more in a turn that begins almost against the gradient.
+ * With k learned directions a leapfrog step moves 14 + 11 k, in a row 9 + 11 k; a surrogate step is always a single one.
+ *
+ * The isokinetic motion reads two vectors more in a turn that begins almost against the gradient. Its steps in a row
+ * would move 12, as those of the surrogate do: both need sums of w before they know the next kick. But such a turn reads w
+ * itself, which would have to be made first after all.
  *
  * What is left, one vector each: in the row "product, split" H c as the caller gave it could be kept in the place of H c whitened;
  * in both semi-explicit rows the S w or the probe of the second half could go with H c.
@@ -86,8 +93,20 @@ void fw_kick_drift(size_t n, double kick, const double *c, double step, const do
 void fw_kick_drift_gradient(size_t n, double kick, const double *g, double step, const double *r, double *w, double *x);
 /* c = r*g, which is not kept; w += kick c; sums: w.w, c.c with the new w */
 void fw_kick_gradient(size_t n, double kick, const double *r, const double *g, double *w, double sums[2]);
+/* The end of a step and the beginning of the next in one pass: w += kick c; sums: w.w, c.c with this w; once more
+ * w += kick c; x + step r*w into next. Then with c = r*g, which is not kept, and x + step r*w in the place of g. */
+void fw_link(size_t n, double kick, const double *c, double step, const double *r, double *w, const double *x,
+             double *next, double sums[2]);
+void fw_link_gradient(size_t n, double kick, double step, const double *r, double *w, const double *x, double *g,
+                      double sums[2]);
 /* c = r*g; sums: w.w, w.c, c.c */
 void fw_whiten(size_t n, const double *r, const double *g, double *c, const double *w, double sums[3]);
+/* The sums alone of fw_whiten, and of fw_kick with c = r*g; then with that c, w += first c; w += kick c;
+ * x += step r*w. */
+void fw_whitened_sums(size_t n, const double *r, const double *g, const double *w, double sums[3]);
+void fw_kicked_sums(size_t n, double kick, const double *r, const double *g, const double *w, double sums[2]);
+void fw_kick_twice_drift(size_t n, double first, double kick, const double *g, double step, const double *r, double *w,
+                         double *x);
 /* w += kick c; sums: w.w, w.c */
 void fw_kick(size_t n, double kick, const double *c, double *w, double sums[2]);
 /* sums: w.w, w.c, c.c */

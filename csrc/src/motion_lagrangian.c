@@ -93,18 +93,37 @@ static double log_jacobian(const fw_walk *walk, double rise, double other)
     return (walk->scheme == FW_SEMI_EXPLICIT ? 1.0 : -2.0) * log1p(rise + other + rise * other);
 }
 
-static int step_surrogate(fw_walk *walk, fw_point *p, double step)
+/* Between two steps of a row the last kick is owed, as only its sums are needed, and c is made again where it is used. */
+static int step_surrogate(fw_walk *walk, fw_point *p, double step, int first, int last)
 {
-    double k, leaving, arriving, sums[2];
+    const size_t d = walk->d;
+    const double *r = walk->base.r;
+    double k, leaving, arriving, sums[3];
     int status = half_surrogate(walk, p, step, 1, &k, &leaving);
     if (status != FW_OK) return status;
-    fw_base_kick_drift(&walk->base, k, step, p);
-    status = fw_walk_arrive(walk, p);
+    if (first)
+        fw_base_kick_drift(&walk->base, k, step, p);
+    else
+        fw_kick_twice_drift(d, p->owed, k, p->g, step, r, p->w, p->x);
+    status = fw_evaluate(walk, p->x, &p->value, p->g);
     if (status != FW_OK) return status;
+    if (last) {
+        fw_base_arrive(&walk->base, p);
+    } else {
+        fw_whitened_sums(d, r, p->g, p->w, sums);
+        p->ww = sums[0];
+        p->wc = sums[1];
+        p->cc = sums[2];
+    }
+    if (!isfinite(p->cc)) return FW_GRADIENT_BAD;
     status = half_surrogate(walk, p, step, 0, &k, &arriving);
     if (status != FW_OK) return status;
     p->log_jacobian += log_jacobian(walk, leaving, arriving);
-    fw_kick(walk->d, k, p->c, p->w, sums);
+    if (last)
+        fw_kick(d, k, p->c, p->w, sums);
+    else
+        fw_kicked_sums(d, k, r, p->g, p->w, sums);
+    p->owed = last ? 0.0 : k;
     p->ww = sums[0];
     p->wc = sums[1];
     return finish(walk, p);
@@ -238,7 +257,13 @@ static int complete(fw_walk *walk, fw_point *p)
 
 static int step_either(fw_walk *walk, fw_point *p, double step)
 {
-    return curved(walk) ? step_curved(walk, p, step) : step_surrogate(walk, p, step);
+    return curved(walk) ? step_curved(walk, p, step) : step_surrogate(walk, p, step, 1, 1);
+}
+
+static int step_in_row(fw_walk *walk, fw_point *p, double step, int first, int last)
+{
+    if (curved(walk) || walk->base.k > 0) return step_either(walk, p, step);
+    return step_surrogate(walk, p, step, first, last);
 }
 
 static double momentum(const fw_walk *walk, const fw_point *p) { return walk->beta * p->wc; }
@@ -252,5 +277,6 @@ const fw_motion fw_lagrangian = {
     .refresh = refresh,
     .complete = complete,
     .step = step_either,
+    .step_in_row = step_in_row,
     .momentum = momentum,
 };

@@ -41,14 +41,27 @@ static void arrive(const fw_base *base, double step, fw_point *p)
     p->cc = sums[2];
 }
 
-static int step(fw_walk *walk, fw_point *p, double step)
+/* Between two steps of a row the next position waits in the place of the gradient, which is no longer needed: so x is
+ * where the step ended until the next one begins, and a step that failed is told with its own position. */
+static int step_in_row(fw_walk *walk, fw_point *p, double step, int first, int last)
 {
-    leave(&walk->base, step, p);
+    if (first) {
+        leave(&walk->base, step, p);
+    } else {
+        double *next = p->g;
+        p->g = p->x;
+        p->x = next;
+    }
     const int status = fw_evaluate(walk, p->x, &p->value, p->g);
     if (status != FW_OK) return status;
-    arrive(&walk->base, step, p);
+    if (last)
+        arrive(&walk->base, step, p);
+    else
+        fw_base_link(&walk->base, 0.5 * step, step, p);
     return isfinite(p->cc) ? complete(walk, p) : FW_GRADIENT_BAD;
 }
+
+static int step(fw_walk *walk, fw_point *p, double step) { return step_in_row(walk, p, step, 1, 1); }
 
 static double momentum(const fw_walk *walk, const fw_point *p)
 {
@@ -65,5 +78,6 @@ const fw_motion fw_leapfrog = {
     .refresh = refresh,
     .complete = complete,
     .step = step,
+    .step_in_row = step_in_row,
     .momentum = momentum,
 };

@@ -25,7 +25,7 @@ static int travel(fw_chain *chain, const fw_route *route, fw_facts *facts)
     int status = FW_OK;
     for (size_t i = 0; i < steps; ++i) {
         ++facts->steps;
-        status = fw_walk_step(walk, p, route->step_size);
+        status = fw_walk_step_in_row(walk, p, route->step_size, i == 0, i + 1 == steps);
         if (status != FW_OK) break;
         weight = start - p->energy + p->log_jacobian;
         if (weight < low) low = weight;

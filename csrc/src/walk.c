@@ -103,6 +103,14 @@ int fw_walk_step(fw_walk *walk, fw_point *p, double step)
     return walk->halvings > 0 ? halved_step(walk, p, step) : fw_walk_whole_step(walk, p, step);
 }
 
+int fw_walk_step_in_row(fw_walk *walk, fw_point *p, double step, int first, int last)
+{
+    if (walk->halvings > 0 || !walk->motion->step_in_row) return fw_walk_step(walk, p, step);
+    const int status = walk->motion->step_in_row(walk, p, step, first, last);
+    if (status > 0) fw_walk_failed(walk, p->x);
+    return status;
+}
+
 int fw_walk_begin(fw_walk *walk, fw_point *p, const fw_random *random)
 {
     random->normals(random->state, walk->d, p->w);

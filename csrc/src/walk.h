@@ -26,6 +26,7 @@ typedef struct fw_point {
     double ww, wc, cc;           /* w.w, w.c, c.c */
     double whw, whc, chc, hchc;  /* w.H~w, w.hc, c.hc, hc.hc */
     double coarsest;             /* largest |x|/r, for gradient differences */
+    double owed;                 /* between steps of a row: what w still lacks, in units of c */
     double energy;
     double log_jacobian;   /* of the map from the start of the path */
 } fw_point;
@@ -43,6 +44,10 @@ typedef struct fw_motion {
     int (*complete)(struct fw_walk *walk, fw_point *p);
     /* Move p by the signed step; adds to p->log_jacobian, sets p->energy. > 0: the step failed, p is scrap. */
     int (*step)(struct fw_walk *walk, fw_point *p, double step);
+    /* NULL, or the same for equal steps that follow each other when only x, value, energy and log_jacobian are asked for
+     * in between: the end of a step and the beginning of the next share a pass. first, last: of the row. All are those
+     * of single steps, bit for bit; until the last step has ended the rest of p is the motion's own. */
+    int (*step_in_row)(struct fw_walk *walk, fw_point *p, double step, int first, int last);
     /* Whitened momentum (of the full metric) = w + k c: its coefficient k at p. */
     double (*momentum)(const struct fw_walk *walk, const fw_point *p);
 } fw_motion;
@@ -97,6 +102,8 @@ void fw_base_gradient(const fw_base *base, const double *g, double *c);    /* c 
 void fw_base_kick_drift(const fw_base *base, double kick, double step, fw_point *p);
 /* w += kc c + kh hc, ww; x += step S w; spacing: coarsest of the new x, too */
 void fw_base_kick2_drift(const fw_base *base, double kc, double kh, double step, int spacing, fw_point *p);
+/* With c = S^T g: w += kick c; ww, cc; once more w += kick c; x + step S w in the place of g */
+void fw_base_link(const fw_base *base, double kick, double step, fw_point *p);
 /* c = S^T g; sums of p */
 void fw_base_arrive(const fw_base *base, fw_point *p);
 
@@ -104,9 +111,11 @@ void fw_base_arrive(const fw_base *base, fw_point *p);
 void fw_point_copy(const fw_walk *walk, const fw_point *from, fw_point *to);
 /* From p->x, p->value, p->g: a fresh velocity and everything that belongs to the start of a path. */
 int fw_walk_begin(fw_walk *walk, fw_point *p, const fw_random *random);
-/* A signed step, halved as the settings ask; the paths call only this. */
+/* A signed step, halved as the settings ask; the paths call only this, and the next. */
 int fw_walk_step(fw_walk *walk, fw_point *p, double step);
-/* The same without halving. */
+/* A step of a row of equal ones: p is whole after the last; before, x, value, energy and log_jacobian are told. */
+int fw_walk_step_in_row(fw_walk *walk, fw_point *p, double step, int first, int last);
+/* A step without halving. */
 int fw_walk_whole_step(fw_walk *walk, fw_point *p, double step);
 void fw_walk_failed(fw_walk *walk, const double *x);
 /* Evaluate p->x and make c and the sums. */
