@@ -878,21 +878,6 @@ def arrive(const unsigned char[::1] still not None, double kick, const double[::
             fw_rows_arrive(<size_t>m, <size_t>d, &still[0], kick, &r[0], &g[0, 0], &w[0, 0], &ww[0], &cc[0])
 
 
-# ---- the record ------------------------------------------------------------------------------------------------------
-
-cdef extern from "checksum.h":
-    uint64_t fw_checksum(const unsigned char *data, size_t size, uint64_t seed) nogil
-
-
-def checksum(const unsigned char[::1] data not None, uint64_t seed=0):
-    """XXH64 of bytes, a whole number below 2**64."""
-    cdef uint64_t found
-    cdef const unsigned char *start = &data[0] if data.shape[0] else NULL
-    with nogil:
-        found = fw_checksum(start, <size_t>data.shape[0], seed)
-    return found
-
-
 # ---- bounded parameters ----------------------------------------------------------------------------------------------
 
 cdef class Maps:
