@@ -17,6 +17,15 @@ import time
 from collections.abc import Iterator
 from pathlib import Path
 
+# The protocol is on descriptors 3 and 4. A program of its own arranges that: code between fork and exec (preexec_fn) is
+# not allowed where another test has left JAX.
+ARRANGE = """
+import os, sys
+high = [os.dup2(os.dup(int(fd)), place) for fd, place in zip(sys.argv[1:3], (53, 54))]
+os.dup2(high[0], 3)
+os.dup2(high[1], 4)
+os.execv(sys.argv[3], sys.argv[3:])
+"""
 NAMES = ("chromium", "chromium-browser", "google-chrome", "chrome")
 
 
@@ -34,17 +43,12 @@ class Browser:
         to_child, self.out = os.pipe()
         self.incoming, from_child = os.pipe()
 
-        def arrange() -> None:  # in the child: the protocol is on descriptors 3 and 4
-            low = os.dup(to_child), os.dup(from_child)
-            high = [os.dup2(fd, place) for fd, place in zip(low, (53, 54), strict=True)]
-            os.dup2(high[0], 3)
-            os.dup2(high[1], 4)
-
         self.process = subprocess.Popen(
-            [executable, "--headless=new", "--no-sandbox", "--disable-gpu", "--disable-dev-shm-usage", "--no-first-run",
+            [sys.executable, "-S", "-E", "-c", ARRANGE, str(to_child), str(from_child), executable,
+             "--headless=new", "--no-sandbox", "--disable-gpu", "--disable-dev-shm-usage", "--no-first-run",
              "--disable-background-networking", "--hide-scrollbars", "--force-color-profile=srgb",
              f"--user-data-dir={self.folder}", "--remote-debugging-pipe", "about:blank"],
-            stdout=subprocess.DEVNULL, stderr=subprocess.DEVNULL, preexec_fn=arrange, pass_fds=(3, 4))
+            stdout=subprocess.DEVNULL, stderr=subprocess.DEVNULL, pass_fds=(to_child, from_child))
         os.close(to_child)
         os.close(from_child)
         self.numbers, self.buffer, self.said, self.asked = itertools.count(1), b"", [], []

@@ -2,7 +2,8 @@
 
 ``python -m pytest --hypothesis-profile=long`` asks for the second.
 
-Tests with JAX and of the adapters come last, as they leave it in the process, where nothing may fork any more.
+The files with tests of JAX come last, as they leave it in the process, where nothing may fork any more: tests that do
+so ask for `forks`.
 """
 
 import sys
@@ -16,7 +17,7 @@ settings.load_profile("quick")
 
 
 def pytest_collection_modifyitems(items):
-    items.sort(key=lambda item: item.path.name == "test_adapters.py" or item.name == "test_jax")
+    items.sort(key=lambda item: item.path.name in ("test_adapters.py", "test_examples.py"))
 
 
 @pytest.fixture

@@ -367,6 +367,14 @@ def test_a_short_run_makes_none_and_says_so():
     assert result.draws.tobytes() == plain.draws.tobytes()  # the chains go on as if nothing had been asked
 
 
+def test_chains_that_have_not_come_home_are_not_tried():
+    """A density without a top: its log density rises by one a unit of x[0], for ever."""
+    density = fw.Density(lambda x: (float(x[0]) - 0.5 * float(x[1] ** 2), np.array([1.0, -x[1]])), 2)
+    result = fw.run(density, [0.1, 0.2], keep=400, chains=2, seed=1, progress="off", executor="here")
+    assert "No trial was made, as settling ended far from home in 2 of 2 chains" in result.trial["reasons"][0]
+    assert result.trial["spent"] == 0
+
+
 def test_fewer_candidates_where_the_budget_is_for_fewer():
     found = [len(fw.trial(fw.Density(Stopping(), 3), [0.1, 0.2, 0.3], budget=budget, seed=8).entries)
              for budget in (1000, 2500, 20_000)]

@@ -20,6 +20,7 @@ from fellwalk.record import Record
 from fellwalk.result import Result
 from fellwalk.run_record import ChainResult, end_record, kept_where, record_block
 from fellwalk.settings import Settings
+from fellwalk.settling import settling_remarks
 from fellwalk.trial_play import Play
 from fellwalk.trial_record import record_answers, record_winner, stored_answers
 from fellwalk.trial_result import Trial
@@ -233,8 +234,9 @@ class Driver:
         assert self.terms is not None
         stored = stored_answers(self.record, self.plan["dimension"]) if self.record else []
         settling = [np.concatenate(part.facts["settle"]) for part in self.parts]
+        remarks = settling_remarks(settling, [part.summary for part in self.parts], self.terms.acceptance)
         self.play = Play(self.workers.density, self.states, settling, self.terms, stored,
-                         storing=self.record is not None)
+                         storing=self.record is not None, lost=len(remarks))
         budget = self.play.competition.budget
         self.progress.say(f"the chains have settled; a trial of motions may take {budget:.0f} gradients")
         ready = deque(self.play.begin())

@@ -75,13 +75,13 @@ class Play:
     `begin` and `take` give the numbers of chains whose next block may be made, in any order and side by side; numbers
     begin above those of the run's own chains. What comes out does not depend on that order, nor on where blocks end.
     states: of the leader's settled chains. stored: answers of a trial that was cut off. `unsaved`: answers since, where
-    they are to be stored.
+    they are to be stored. lost: as for `Competition`.
     """
 
     def __init__(self, density: Density, states: Sequence[bytes], settling: Sequence[NDArray[np.void]], terms: Terms,
-                 stored: Iterable[Answer] = (), *, storing: bool = False) -> None:
+                 stored: Iterable[Answer] = (), *, storing: bool = False, lost: int = 0) -> None:
         self.density, self.first = density, len(states)
-        self.competition = Competition(density, leaders_of(density, states, settling), terms)
+        self.competition = Competition(density, leaders_of(density, states, settling), terms, lost)
         self.groups = self.competition.go()
         self.states: dict[int, bytes] = {self.first + c: state for c, state in enumerate(states)}
         self.chains: dict[int, Chain] = {}

@@ -74,13 +74,14 @@ class Leaders:
 class Competition:
     """The rounds of a trial, from settled chains of the leader to those of the winner.
 
+    lost: chains whose settling ended before they had come home; then nothing is tried.
     `go` yields groups of works that may go on side by side, each to its end before the next group begins.
     Where a better candidate takes less for a draw than the leader, a run will be cheaper, and its trial's budget with
     it. After `go`: `winner`, a contender, and `found`, without the chains.
     """
 
-    def __init__(self, density: Density, leaders: Leaders, terms: Terms) -> None:
-        self.density, self.terms = density, terms
+    def __init__(self, density: Density, leaders: Leaders, terms: Terms, lost: int = 0) -> None:
+        self.density, self.terms, self.lost = density, terms, lost
         self.settling, self.per_draw = leaders.gradients, leaders.per_draw
         self.budget = terms.budget_for(leaders.gradients, leaders.per_draw)
         self.parts, self.begun = leaders.parts, leaders.positions
@@ -111,7 +112,7 @@ class Competition:
 
     def go(self) -> Iterator[list[Work[None]]]:
         """All rounds."""
-        if not self.others:
+        if self.lost or not self.others:
             self.found = self._no_trial()
             return
         yield [self._look_for_noise()]
@@ -176,7 +177,8 @@ class Competition:
     def _know_the_leader(self) -> None:
         """From its first draws: the spread of all coordinates, and which of them are judged where there are many."""
         draws = self.leader.stacked()
-        self.spread = np.maximum(draws.var(axis=(0, 1)), 1e-300)
+        with np.errstate(over="ignore", invalid="ignore"):  # a chain may be far out
+            self.spread = np.maximum(draws.var(axis=(0, 1)), 1e-300)
         d = self.density.dimension
         if d > _ALL_UP_TO:
             moved = (np.diff(draws, axis=1) ** 2).mean(axis=(0, 1)) / self.spread
@@ -304,9 +306,16 @@ class Competition:
                      self.budget, self._spent(), self.settling, tuple(self.blocks))
 
     def _no_trial(self) -> Trial:
+        if self.lost:
+            said = (f"No trial was made, as settling ended far from home in {self.lost} of {len(self.parts)} chains: "
+                    f"{LEADER.name} stays.")
+            return self._untried(said)
         needs = math.ceil(2.0 * needed(self.per_draw) / _FOR_TUNING / _ROUNDS[0])
         said = (f"No trial was made: its budget of {self.budget:.0f} gradients is too small to tell a second way of "
                 f"moving from {LEADER.name}, which stays; to tune one takes about {needs}.")
+        return self._untried(said)
+
+    def _untried(self, said: str) -> Trial:
         entry = Entry(LEADER.name, 0.0, 0.0, 0.0, 0.0, "", "", 1.0, 0.0, 0, 0.0, 0, "")
         return Trial((entry,), (said,), False, LEADER.motion, LEADER.path, (), self.budget, 0.0, self.settling)
 

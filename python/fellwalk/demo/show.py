@@ -36,7 +36,7 @@ def show(folder: str = ".") -> int:
           f"The density: {model.dimension} coordinates; at the start its logarithm is {value:.2f} and the\n"
           f"largest gradient {np.abs(gradient).max():.2f}.\n")
     sys.stdout.flush()
-    result = run(model, motion=Leapfrog(halvings=8), acceptance=0.9, keep=14_000, chains=4, seed=23, record=target,
+    result = run(model, motion=Leapfrog(halvings=8), acceptance=0.9, keep=14_000, chains=4, seed=26, record=target,
                  replace=True, progress=True)
     print(f"{result.heading()}\n\n{result.of(hives.natural, names=list(hives.names))}\n\n"
           f"Saved: {target} (draws, facts of every transition, states, settings).\n"
