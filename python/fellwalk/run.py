@@ -75,7 +75,7 @@ def run(
         ``start`` of the density, they are drawn (`fellwalk.starts.free_starts`).
     settle: settling transitions a chain, or "auto": until the scale has stabilised, between stated bounds.
     motion: what moves a point, by default "auto": what a trial (`fellwalk.trial`) finds best, made when the chains have
-        settled, with a budget of 0.15 of what the run would cost. The plan, and so the record and the result, keeps its
+        settled, with a budget of 0.12 of what the run would cost. The plan, and so the record and the result, keeps its
         table; what was drawn during the trial is not kept. Where ``path``, ``settle``, ``step_size``, ``scale``,
         ``rank`` or ``settled`` is given, in more than 20,000 dimensions, and with ``batch=True``, the default is
         `fellwalk.Leapfrog()`, without a trial. product_cost: gradients that a Hessian product counts as in the trial.

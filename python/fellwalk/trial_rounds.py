@@ -22,7 +22,7 @@ from fellwalk.trial_tuning import Tuner, needed, steepness
 
 __all__ = ["Competition", "Leaders", "Terms"]
 
-_SHARE = 0.15  # of what a run costs without its trial, settling and draws
+_SHARE = 0.12  # of what a run costs without its trial, settling and draws
 _CHAINS = 2  # chains of every candidate but the leader, which has all
 _ROUNDS = (0.5, 0.5, 1.0)  # shares of what is left of the budget
 _FOR_TUNING = 0.6  # share of its first allowance that a candidate may take to find its step size
