@@ -78,8 +78,16 @@ __attribute__((always_inline)) static inline void put(double *a, group x, size_t
 #define SUM(s) group s[2] = {{0}}
 #define ADD(s, x) (s)[half_] += (x)
 #define FOLD(s) fold_group((s)[0] + (s)[1])
+#define ROOT(x) root_group(x)
 
 __attribute__((always_inline)) static inline double fold_group(group x) { return (x[0] + x[2]) + (x[1] + x[3]); }
+
+/* sqrt |x| */
+__attribute__((always_inline)) static inline group root_group(group x)
+{
+    for (int j = 0; j < 4; ++j) x[j] = sqrt(fabs(x[j]));
+    return x;
+}
 #else
 typedef double group;
 
@@ -96,6 +104,7 @@ typedef double group;
 #define SUM(s) double s[LANES] = {0}
 #define ADD(s, x) (s)[j] += (x)
 #define FOLD(s) fold(s)
+#define ROOT(x) sqrt(fabs(x))
 #endif
 
 FW_CLONES double fw_dot(size_t n, const double *restrict a, const double *restrict b)
@@ -530,11 +539,8 @@ FW_CLONES void fw_momentum_out(size_t n, const double *delta, const double *z, d
 FW_CLONES void fw_gather(size_t n, double count, const double *restrict a, double *restrict mean, double *restrict roots)
 {
     const double counts = count > 1.0 ? 1.0 : 0.0, share = 1.0 / count;
-    for (size_t i = 0; i < n; ++i) {
-        const double away = a[i] - mean[i];
-        roots[i] += counts * sqrt(fabs(away));
-        mean[i] += away * share;
-    }
+    SWEEP(n, const group m = GET(mean); const group away = GET(a) - m; PUT(roots, GET(roots) + counts * ROOT(away));
+          PUT(mean, m + away * share););
 }
 
 FW_CLONES void fw_gather_moments(size_t n, double count, const double *restrict a, double *restrict mean,
