@@ -23,7 +23,7 @@ from fellwalk.trial_tuning import Tuner, needed, steepness
 __all__ = ["Competition", "Leaders", "Terms"]
 
 _SHARE = 0.12  # of what a run costs without its trial, settling and draws
-_CHAINS = 2  # chains of every candidate but the leader, which has all
+_CHAINS = 2  # chains of every candidate but the plain ways, which have all: they are to be as sure as can be
 _ROUNDS = (0.5, 0.5, 1.0)  # shares of what is left of the budget
 _FOR_TUNING = 0.6  # share of its first allowance that a candidate may take to find its step size
 _MOST_IN_BLOCK = 1000
@@ -202,7 +202,7 @@ class Competition:
         if tuner is None:
             return False
         self.tuned[contender.number] = tuner
-        self._fill(contender, min(_CHAINS, len(self.parts)))
+        self._fill(contender, len(self.parts) if contender in self.plain else min(_CHAINS, len(self.parts)))
         return True
 
     def _tuned(self, contender: Contender, allowance: float) -> Work[Tuner | None]:
