@@ -503,6 +503,9 @@ def test_the_command_makes_a_trial(tmp_path, capsys):
     assert main(["run", f"{model}:density", "--record", record, "--motion", "auto", "--path", "jittered", "--replace"]
                 ) != 0
     assert "finds what path= would fix" in capsys.readouterr().err
+    for more in (["--motion", "auto", "--halvings", "3"], ["--motion", "auto", "--doublings", "4"], ["--bend", "0.3"]):
+        assert main(["run", f"{model}:density", "--record", record, "--replace", *more]) != 0
+        assert f"a trial of motions finds what {more[-2]} would fix" in capsys.readouterr().err
 
 
 # ---- honest limits --------------------------------------------------------------------------------------------------
