@@ -16,7 +16,7 @@ from fellwalk.settled import SettledChain
 from fellwalk.trial_candidates import candidates_for, with_rank
 from fellwalk.trial_play import Play, packed, unpacked
 from fellwalk.trial_result import told_in_words
-from fellwalk.trial_rounds import Terms
+from fellwalk.trial_rounds import Competition, Terms
 from fellwalk.trial_tuning import steepness
 from fellwalk.work import Job, Live, make_block
 
@@ -441,6 +441,40 @@ def test_what_the_density_raises_comes_out():
         fw.trial(fw.Density(function, 3), [0.1, 0.2, 0.3], seed=1)
 
 
+@pytest.mark.parametrize("method", ["_look_for_noise", "winners"])
+def test_what_the_density_raises_between_blocks_stops_the_run_as_in_a_block(tmp_path, monkeypatch, method):
+    """The search for noise and the making of the winner's chains call the density in the run's own thread."""
+    armed = []
+
+    def function(x):
+        if armed:
+            armed.clear()
+            raise ZeroDivisionError("between blocks")
+        return -0.5 * float(x @ x), -x
+
+    owner = Competition if method == "_look_for_noise" else Play
+    called = getattr(owner, method)
+
+    def arming(self):
+        armed.append(1)
+        return called(self)
+
+    density = fw.Density(function, 2, start=[0.3, 0.3])
+    terms = {"keep": 2000, "chains": 2, "seed": 3, "executor": "here", "progress": "off"}
+    whole = fw.run(density, **terms)
+    assert whole.settings["path"]["name"] == "jittered"  # the leader did not win, so the winner's chains are new
+    with monkeypatch.context() as patch:
+        patch.setattr(owner, method, arming)
+        with pytest.raises(ZeroDivisionError, match="between blocks") as caught:
+            fw.run(density, **terms, record=tmp_path / "w.fell")
+    (note,) = caught.value.__notes__
+    assert "raised in the trial of motions, between its blocks; the record" in note
+    assert caught.value.fellwalk_result.ended == fw.load(tmp_path / "w.fell").ended == "an exception"
+    again = fw.resume(tmp_path / "w.fell", density, executor="here", progress="off")
+    assert np.array_equal(again.draws, whole.draws)
+    assert again.plan["trial"] == whole.plan["trial"]
+
+
 def test_where_the_surrogate_is_capped_products_take_its_place_at_their_price():
     """Without directions a bend of 1 caps the acceptance on an equicorrelated normal, the more the longer the paths."""
     target = targets.equicorrelated_normal(20, 0.98)
@@ -477,6 +511,9 @@ def test_the_command_makes_a_trial(tmp_path, capsys):
     assert main(["run", f"{model}:density", "--record", record, "--motion", "auto", "--path", "jittered", "--replace"]
                 ) != 0
     assert "finds what path= would fix" in capsys.readouterr().err
+    for more in (["--motion", "auto", "--halvings", "3"], ["--motion", "auto", "--doublings", "4"], ["--bend", "0.3"]):
+        assert main(["run", f"{model}:density", "--record", record, "--replace", *more]) != 0
+        assert f"a trial of motions finds what {more[-2]} would fix" in capsys.readouterr().err
 
 
 # ---- honest limits --------------------------------------------------------------------------------------------------

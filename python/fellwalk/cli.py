@@ -245,6 +245,12 @@ def _moved(options: argparse.Namespace) -> tuple[Motion | str, Path | None]:
                 None if options.doublings == NoUTurn.doublings else options.doublings)
         motion = "auto" if all(value is None for value in said) else "leapfrog"
     if motion == "auto":
+        usual = {"halvings": 0, "steps": Jittered.steps, "doublings": NoUTurn.doublings, "bend": Lagrangian.bend,
+                 "curvature": "surrogate", "scheme": "split"}
+        for name, value in usual.items():
+            if path is None and getattr(options, name) != value:  # with a path, run says that it is too much
+                raise ArgumentError(f"a trial of motions finds what --{name} would fix; leave it out, or say with "
+                                    "--motion which motion it is for")
         return motion, path
     return _made(MOTIONS[motion], options), path or _made(NoUTurn, options)
 

@@ -2,8 +2,10 @@
 
 from __future__ import annotations
 
+import contextlib
 import time
 from collections import deque
+from collections.abc import Iterator
 from concurrent.futures import Executor, Future
 from dataclasses import replace
 from queue import Empty, SimpleQueue
@@ -11,7 +13,7 @@ from typing import Any
 
 import numpy as np
 
-from fellwalk.errors import Interrupted, WorkerError
+from fellwalk.errors import Interrupted, RecordError, WorkerError
 from fellwalk.facts import FACTS
 from fellwalk.interrupts import Interrupts
 from fellwalk.pools import Workers
@@ -36,6 +38,7 @@ _BLOCK_SECONDS = 0.5
 _BLOCK_SECONDS_A_BYTE, _LONGEST_BLOCK = 7.5e-7, 10.0
 _BLOCK_BYTES = 32_000_000
 _TRIAL_HERE = 0.25  # seconds: a trial that takes less is made in this thread, as handing blocks round would cost more
+_NO_CHAIN = -1  # in the place of a chain's number: the density was called for none
 _COMMIT_SHARE = 20  # commits are grouped so that they take at most one part in so many of the driver's time
 
 
@@ -96,7 +99,8 @@ class Driver:
             elif not self.flying:
                 if self.terms is None or self.play is not None or self._stopping():
                     return
-                self._try()
+                with self._calling():
+                    self._try()
             elif self.interrupts.count > 1 and not self.workers.local:
                 self._write()
                 return
@@ -208,7 +212,8 @@ class Driver:
     def _write(self) -> None:
         whole, self.finished = self.finished, []
         done = [d for d in whole if d.chain < len(self.states)]
-        self._tried([d for d in whole if d.chain >= len(self.states)])
+        with self._calling():
+            self._tried([d for d in whole if d.chain >= len(self.states)])
         full = [d for d in done if len(d.block)]
         if self.record and full:
             begun = time.monotonic()
@@ -228,6 +233,16 @@ class Driver:
                 self.ready.append(d.chain)
 
     # ---- a trial between settling and keeping -------------------------------------------------------------------
+
+    @contextlib.contextmanager
+    def _calling(self) -> Iterator[None]:
+        """Where the trial calls the density between blocks: what that raises ends the run as it would in a block."""
+        try:
+            yield
+        except RecordError:
+            raise
+        except Exception as error:
+            self.errors.append((_NO_CHAIN, "trial", error))
 
     def _try(self) -> None:
         """All chains have settled: begin the trial, or make all of it where that takes no time."""
@@ -309,12 +324,14 @@ class Driver:
             error.add_note(f"fellwalk: the block in hand of chain {chain + 1} is lost; {kept}.")
             return error
         place = f"chain {chain + 1}"
-        if phase == "trial":
+        if chain == _NO_CHAIN:
+            place = "the trial of motions, between its blocks"
+        elif phase == "trial":
             place += ", in the trial of motions"
         elif phase:
             doing = "keeping draws" if phase == "keep" else "settling"
             place += f", {doing}, at transition {self.parts[chain].count(phase) + 1}"
-        others = sorted({number + 1 for number, *_ in errors} - {chain + 1})
+        others = sorted({number + 1 for number, *_ in errors} - {chain + 1, _NO_CHAIN + 1})
         more = f" (and another in chain {', '.join(map(str, others))})" if others else ""
         error.add_note(f"fellwalk: raised in {place}{more}; {kept}.")
         return error
