@@ -16,7 +16,7 @@ from fellwalk.settled import SettledChain
 from fellwalk.trial_candidates import candidates_for, with_rank
 from fellwalk.trial_play import Play, packed, unpacked
 from fellwalk.trial_result import told_in_words
-from fellwalk.trial_rounds import Competition, Terms
+from fellwalk.trial_rounds import Competition, TrialTerms
 from fellwalk.trial_tuning import steepness
 from fellwalk.work import Job, Live, make_block
 
@@ -252,7 +252,7 @@ def settled_on_student():
     return density, [chain.state for chain in chains], settling
 
 
-TERMS = Terms(6, budget=9000)
+TERMS = TrialTerms(6, budget=9000)
 
 
 def test_it_does_not_matter_who_makes_the_blocks_nor_where_they_end(settled_on_student):
@@ -322,6 +322,7 @@ def test_a_run_that_was_cut_off_goes_on_with_the_bits_of_an_undisturbed_one(tmp_
     assert phrase in caught.value.__notes__[0]
     half = fw.load(path)
     assert (half.trial is None) == (where != "keeping")
+    assert ("Stopped early, in its trial of motions" in half.heading()) == (where == "trial")
     function = Stopping()
     on = fw.resume(path, fw.Density(function, 3), executor="here", progress="off")
     assert on.draws.tobytes() == whole.draws.tobytes()
@@ -400,7 +401,7 @@ def test_of_many_coordinates_some_are_judged():
     chains = [fw.Chain(density, np.sqrt(scale) * x, seed=c, settle=30, adapt_scale=False)
               for c, x in enumerate(np.random.default_rng(3).standard_normal((2, d)))]
     settling = [chain.block(30, draws=False).facts for chain in chains]
-    play = Play(density, [chain.state for chain in chains], settling, Terms(4, budget=5000))
+    play = Play(density, [chain.state for chain in chains], settling, TrialTerms(4, budget=5000))
     found, _ = played(play)
     picked = play.competition.picked
     assert 1000 < len(picked) <= 1250
@@ -483,7 +484,7 @@ def test_where_the_surrogate_is_capped_products_take_its_place_at_their_price():
     chains = [fw.Chain(density, x, seed=c, settle="auto", rank=0) for c, x in enumerate(points)]
     settling = [chain.block(10_000, draws=False).facts for chain in chains]
     before = density.gradients, density.products
-    play = Play(density, [chain.state for chain in chains], settling, Terms(4, budget=60_000, product_cost=3.0))
+    play = Play(density, [chain.state for chain in chains], settling, TrialTerms(4, budget=60_000, product_cost=3.0))
     found, _ = played(play)
     names = {entry.name for entry in found.entries}
     assert "lagrangian, bend 1, product" in names

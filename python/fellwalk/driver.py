@@ -26,7 +26,7 @@ from fellwalk.settling import settling_remarks
 from fellwalk.trial_play import Play
 from fellwalk.trial_record import record_answers, record_winner, stored_answers
 from fellwalk.trial_result import Trial
-from fellwalk.trial_rounds import Terms
+from fellwalk.trial_rounds import TrialTerms
 from fellwalk.watch import Watch
 from fellwalk.work import Done, Job
 
@@ -52,7 +52,7 @@ class Driver:
 
     def __init__(self, plan: dict[str, Any], states: list[bytes], parts: list[ChainResult], workers: Workers,
                  record: Record | None, progress: Progress, seconds: float | None, watch: Watch | None = None,
-                 terms: Terms | None = None) -> None:
+                 terms: TrialTerms | None = None) -> None:
         self.watch, self.terms = watch, terms
         self.play: Play | None = None
         self.trial: Trial | None = None

@@ -275,9 +275,15 @@ class Result:
             lines += settling_remarks(self.settling, self.chains, self.settings["acceptance"])
         if not self.finished:
             on = f" Go on with fellwalk.resume({self.path!r}, density)." if self.path else ""
-            lines.append(f"Stopped early: {self.ended or 'not all draws asked for are made'} "
+            where = ", in its trial of motions" if self._in_trial else ""
+            lines.append(f"Stopped early{where}: {self.ended or 'not all draws asked for are made'} "
                          f"({self._shortest} of {self.plan['keep']} draws a chain).{on}")
         return "\n".join(row for line in lines for row in wrap(line))
+
+    @property
+    def _in_trial(self) -> bool:
+        """Have all chains settled, and the trial that was to come has not ended?"""
+        return "terms" in self.plan and self.trial is None and all(chain.get("settled") for chain in self.chains)
 
     def _bend_line(self) -> str:
         if self.settings["motion"]["name"] != "lagrangian" or self.settings["beta"] is not None:

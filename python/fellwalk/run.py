@@ -30,7 +30,7 @@ from fellwalk.settings import Settings
 from fellwalk.settled import Settled
 from fellwalk.starts import Starts, first_states, starting_points
 from fellwalk.trial_result import Trial
-from fellwalk.trial_rounds import Terms
+from fellwalk.trial_rounds import TrialTerms
 from fellwalk.watch import Watch, watch_again, watch_of
 from fellwalk.work import Check
 
@@ -154,14 +154,11 @@ def run(
     if notes:
         plan["notes"] = dict(notes)
     again = settled.positions if starts is None and isinstance(settled, Trial) else None
-    if starts is None and again is None and density.start is None and density.parameters is None:
-        raise ArgumentError("this density has no start of its own; give starts: a point (dimension,) in the support")
     try:
         if again is not None:
             points = again[np.arange(chains) % len(again)]
         else:
-            points = starting_points(density, density.start if starts is None else starts, chains,
-                                     np.random.default_rng([seed, 1]))
+            points = starting_points(density, starts, chains, np.random.default_rng([seed, 1]))
     except (NotWrittenError, StartError):
         if audit:
             glance_at_start(density)
@@ -202,7 +199,7 @@ def _drive(plan: dict[str, Any], states: list[bytes], parts: list[ChainResult], 
     told.say(workers.why)
     terms = None
     if "terms" in plan and not plan.get("trial"):
-        terms = Terms(plan["seed"], plan["settings"]["acceptance"], **plan["terms"])
+        terms = TrialTerms(plan["seed"], plan["settings"]["acceptance"], **plan["terms"])
     return Driver(plan, states, parts, workers, file, told, seconds, watch, terms).go()
 
 

@@ -8,7 +8,7 @@ from numpy.typing import ArrayLike, NDArray
 
 from fellwalk.chain import Chain
 from fellwalk.density import Density, as_vector, brief
-from fellwalk.errors import ShapeError, StartError
+from fellwalk.errors import ArgumentError, ShapeError, StartError
 from fellwalk.parameters import Parameters
 from fellwalk.settings import Settings
 from fellwalk.settled import Settled
@@ -23,14 +23,18 @@ def starting_points(
     density: Density, starts: Starts | None, chains: int, rng: np.random.Generator
 ) -> NDArray[np.float64]:
     """(chains, dimension) starting points, in the coordinates the chains move in, from one point (dimension,) or from
-    one point a chain (chains, dimension).
+    one point a chain (chains, dimension). None: the density's own start, or with parameters drawn ones.
 
     The rule for one point: the first chain starts there; the others are drawn normal around it, with standard
     deviation 1/|gradient| in each coordinate, but at most 1 or the coordinate's own size (near a mode the gradient says
     nothing of the width). The deviations are halved until the log density and gradient are finite and the log density
     is not more than 10 + 2 dimension below the given point's; after 60 halvings, or when nothing is left of them, a
     StartError says so. Points given one a chain are taken as they are.
+    Errors: ArgumentError where there is no start at all; StartError; ShapeError.
     """
+    starts = density.start if starts is None else starts
+    if starts is None and density.parameters is None:
+        raise ArgumentError("this density has no start of its own; give starts: a point (dimension,) in the support")
     if density.parameters is not None:
         starts = free_starts(density, density.parameters, starts, chains, rng)
     try:

@@ -19,7 +19,7 @@ from fellwalk.run_record import ChainResult
 from fellwalk.settings import Settings
 from fellwalk.starts import first_states, starting_points
 from fellwalk.trial_result import Entry, Trial
-from fellwalk.trial_rounds import Terms
+from fellwalk.trial_rounds import TrialTerms
 from fellwalk.work import Check
 
 __all__ = ["Entry", "Trial", "trial"]
@@ -60,10 +60,7 @@ def trial(
     acceptance = real("acceptance", acceptance, 0.0, 0.9999)
     budget = real("budget", budget, 0.0, 1e15)
     product_cost = real("product_cost", product_cost, 0.0, 1e6, include=True)
-    if starts is None and density.start is None and density.parameters is None:
-        raise ArgumentError("this density has no start of its own; give starts: a point (dimension,) in the support")
-    points = starting_points(density, density.start if starts is None else starts, chains,
-                             np.random.default_rng([seed, 1]))
+    points = starting_points(density, starts, chains, np.random.default_rng([seed, 1]))
     settings = Settings(acceptance=acceptance)
     states = first_states(density, settings, points, seed)
     plan = {"settings": settings.to_json(), "names": density.names, "dimension": density.dimension, "chains": chains,
@@ -73,7 +70,7 @@ def trial(
         told = choose_progress(progress, 0, [0] * chains)
         told.say(workers.why)
         driver = Driver(plan, states, [ChainResult() for _ in states], workers, None, told, None,
-                        terms=Terms(seed, acceptance, 0, budget, product_cost))
+                        terms=TrialTerms(seed, acceptance, 0, budget, product_cost))
         driver.go()
     if driver.trial is None:
         raise KeyboardInterrupt

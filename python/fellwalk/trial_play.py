@@ -15,7 +15,7 @@ from fellwalk.density import Density
 from fellwalk.settled import SettledChain
 from fellwalk.trial_candidates import Ask, Work
 from fellwalk.trial_result import Trial
-from fellwalk.trial_rounds import Competition, Leaders, Terms
+from fellwalk.trial_rounds import Competition, Leaders, TrialTerms
 from fellwalk.work import Done, Job, Live
 
 __all__ = ["Answer", "Play", "leaders_of", "packed", "unpacked"]
@@ -78,8 +78,8 @@ class Play:
     they are to be stored. lost: as for `Competition`.
     """
 
-    def __init__(self, density: Density, states: Sequence[bytes], settling: Sequence[NDArray[np.void]], terms: Terms,
-                 stored: Iterable[Answer] = (), *, storing: bool = False, lost: int = 0) -> None:
+    def __init__(self, density: Density, states: Sequence[bytes], settling: Sequence[NDArray[np.void]],
+                 terms: TrialTerms, stored: Iterable[Answer] = (), *, storing: bool = False, lost: int = 0) -> None:
         self.density, self.first = density, len(states)
         self.competition = Competition(density, leaders_of(density, states, settling), terms, lost)
         self.groups = self.competition.go()

@@ -20,7 +20,7 @@ from fellwalk.trial_candidates import LEADER, Ask, Candidate, Contender, Work, c
 from fellwalk.trial_result import Entry, Trial
 from fellwalk.trial_tuning import Tuner, needed, steepness
 
-__all__ = ["Competition", "Leaders", "Terms"]
+__all__ = ["Competition", "Leaders", "TrialTerms"]
 
 _SHARE = 0.12  # of what a run costs without its trial, settling and draws
 _CHAINS = 2  # chains of every candidate but the plain ways, which have all: they are to be as sure as can be
@@ -45,7 +45,7 @@ _EVENLY, _SLOWEST = 1000, 250  # and those in which the leader's first draws mov
 
 
 @dataclass(frozen=True)
-class Terms:
+class TrialTerms:
     """What a trial may cost. draws: those that the run, which makes the trial, is to keep, or 0; budget: in gradients,
     or None: a share of what the run will cost; product_cost: gradients that a Hessian product counts as."""
 
@@ -80,7 +80,7 @@ class Competition:
     it. After `go`: `winner`, a contender, and `found`, without the chains.
     """
 
-    def __init__(self, density: Density, leaders: Leaders, terms: Terms, lost: int = 0) -> None:
+    def __init__(self, density: Density, leaders: Leaders, terms: TrialTerms, lost: int = 0) -> None:
         self.density, self.terms, self.lost = density, terms, lost
         self.settling, self.per_draw = leaders.gradients, leaders.per_draw
         self.budget = terms.budget_for(leaders.gradients, leaders.per_draw)
@@ -301,7 +301,8 @@ class Competition:
         measured = [(c, why) for c, why in self.out if c.candidate.name in self.worths]
         entries += [self._entry(c, why) for c, why in sorted(measured, key=lambda pair: -self._score(pair[0]))]
         entries += [Entry(c.candidate.name, 0.0, 0.0, 0.0, 0.0, "", "", 1.0, 0.0, 0, c.spent, 0, why)
-                    for c, why in self.out if c.candidate.name not in self.worths]
+                    for c, why in sorted(self.out, key=lambda pair: pair[0].number)
+                    if c.candidate.name not in self.worths]
         return Trial(tuple(entries), tuple(self.remarks), told, best.candidate.motion, best.candidate.path, (),
                      self.budget, self._spent(), self.settling, tuple(self.blocks))
 
