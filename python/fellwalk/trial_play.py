@@ -203,12 +203,13 @@ class Play:
 
 
 def packed(answers: Sequence[Answer]) -> bytes:
-    """Answers as arrays in the form of numpy.savez."""
+    """Answers as arrays in the form of numpy.savez; of the states of a chain the last one, from which it goes on."""
+    last = {answer.number: answer for answer in answers}
     arrays: dict[str, NDArray[np.generic]] = {
         "places": np.array([(answer.number, answer.turn) for answer in answers], np.int64).reshape(-1, 2)}
     for i, answer in enumerate(answers):
         arrays |= {f"draws {i}": answer.block.draws, f"facts {i}": answer.block.facts,
-                   f"state {i}": np.frombuffer(answer.state, np.uint8)}
+                   f"state {i}": np.frombuffer(answer.state if last[answer.number] is answer else b"", np.uint8)}
         if answer.block.gradients is not None:
             arrays[f"gradients {i}"] = answer.block.gradients
     out = io.BytesIO()

@@ -26,7 +26,10 @@ _SHARE = 0.12  # of what a run costs without its trial, settling and draws
 _CHAINS = 2  # chains of every candidate but the plain ways, which have all: they are to be as sure as can be
 _ROUNDS = (0.5, 0.5, 1.0)  # shares of what is left of the budget
 _FOR_TUNING = 0.6  # share of its first allowance that a candidate may take to find its step size
-_MOST_IN_BLOCK = 1000
+_MOST_AT_FIRST = 500  # draws a chain in the first round, however large the budget
+_ENOUGH = 1000.0  # effective draws: a standard error of 7%
+_MOST_IN_BLOCK, _BLOCK_BYTES = 1000, 32_000_000
+_SLOPES = 400  # gradients, of which the median that sets beta is taken
 _AT_LEAST = 1.1  # a candidate takes the leader's place only where it is worth so many times as much,
 _ERRORS = 1.28  # and by so many standard errors of the logarithm: chance does that once in ten
 _SHY = 4.0  # standard errors by which a tail visited too rarely disqualifies: chance does it to one tail in 30,000
@@ -124,7 +127,8 @@ class Competition:
             allowance = share * left / len(live)
             if number == 0:
                 yield [self._give(self.leader, allowance, number)]
-                self._know_the_leader()
+                if self.picked is None:
+                    self._know_the_leader()
                 yield [self._give(contender, allowance, number) for contender in live[1:]]
             else:
                 yield [self._give(contender, allowance, number) for contender in live]
@@ -151,7 +155,7 @@ class Competition:
     def _give(self, contender: Contender, allowance: float, number: int) -> Work[None]:
         """Let a candidate draw for about `allowance`; in its first round it pays its tuning from that, and is out where
         that was not enough."""
-        until = contender.spent + allowance
+        until = contender.spent + min(allowance, self._wanted(contender))
         if number > 0 and contender is not self.leader:
             self._correct(contender, number)
         if not contender.chains and not (yield from self._enter(contender, allowance)):
@@ -160,19 +164,30 @@ class Competition:
         contender.rounds = number + 1
         fewest = trial_merit.FEWEST * contender.chains
         first = contender is self.leader and number == 0
-        while contender.spent < until or contender.transitions < fewest:
+        most = _MOST_AT_FIRST * contender.chains if number == 0 else math.inf
+        while (contender.spent < until and contender.transitions < most) or contender.transitions < fewest:
             blocks = yield contender.ask(self._block_size(contender, until), gradients=first)
             for c, block in enumerate(blocks):
                 contender.take(block, c, self._price(block), self.picked)
-                if block.gradients is not None:
+                if block.gradients is not None and sum(map(len, self.gradients)) < _SLOPES:
                     self.gradients.append(block.gradients)
+            if first and self.picked is None and self.density.dimension > _ALL_UP_TO:
+                self._know_the_leader()  # at once, as whole draws take much memory
+
+    def _wanted(self, contender: Contender) -> float:
+        """What more draws may cost until they are worth enough to tell, as far as the last round says."""
+        if contender.candidate.name not in self.worths:
+            return math.inf
+        missing = _ENOUGH / self.worths[contender.candidate.name].effective - 1.0
+        return max(0.0, missing) * contender.drawing
 
     def _block_size(self, contender: Contender, until: float) -> int:
         """Transitions of the next block of each chain: the fewest first, then as many as the rest may pay for."""
         if contender.transitions < trial_merit.FEWEST * contender.chains:
             return trial_merit.FEWEST
         each = contender.drawing / contender.transitions
-        return int(np.clip((until - contender.spent) / (each * contender.chains), 1, _MOST_IN_BLOCK))
+        most = min(_MOST_IN_BLOCK, max(trial_merit.FEWEST, _BLOCK_BYTES // (16 * self.density.dimension)))
+        return int(np.clip((until - contender.spent) / (each * contender.chains), 1, most))
 
     def _know_the_leader(self) -> None:
         """From its first draws: the spread of all coordinates, and which of them are judged where there are many."""
