@@ -37,17 +37,12 @@ from common import (
 )
 from scipy import LowLevelCallable
 
-from fellwalk._core import Engine, Stream
-from fellwalk.settings import Settings
-
 # Vectors read and written in one step: the table in csrc/src/kernels.h, which tests/test_speed_counts.py checks.
-# Last: how many different vectors that are, which decides the memory level they come from. Where steps in a row have a
-# line, the other one is of single steps, as no-U-turn paths make them.
+# Last: how many different vectors that are, which decides the memory level they come from. Steps are those of one path,
+# where leapfrog and surrogate steps are in a row.
 MOVED = {
-    "leapfrog, in a row": (fw.Leapfrog(), 6, 4),
-    "leapfrog": (fw.Leapfrog(), 10, 4),
-    "surrogate, in a row": (fw.Lagrangian(curvature="surrogate"), 12, 4),
-    "surrogate": (fw.Lagrangian(curvature="surrogate"), 13, 5),
+    "leapfrog": (fw.Leapfrog(), 6, 4),
+    "surrogate": (fw.Lagrangian(curvature="surrogate"), 12, 4),
     "product, split": (fw.Lagrangian(curvature="product"), 27, 8),
     "product, semi-explicit": (fw.Lagrangian(curvature="product", scheme="semi-explicit"), 35, 8),
     "difference, split": (fw.Lagrangian(curvature="difference"), 33, 8),
@@ -259,33 +254,18 @@ def step_times(name: str, d: int, seconds: float, repeats: int) -> tuple[np.ndar
         spent["gradients"], spent["products"] = end.gradients, end.products
         return time.thread_time() - begun
 
-    def single() -> float:
-        settings = Settings(motion=motion, path=fw.Jittered(), settle=0, beta=1.0 / d)
-        engine = Engine(density.target(), Stream(np.random.SeedSequence(0)), settings.core())
-        engine.set_base(scale)
-        at, velocity = x.copy(), v.copy()
-        marks = [time.thread_time()]
-        for steps in (0, 1):
-            for _ in range(n):
-                if engine.integrate(at, velocity, 0.05, steps)[0]:
-                    raise RuntimeError("a step failed")
-            marks.append(time.thread_time())
-        nothing, whole = np.diff(marks)
-        return (whole - nothing) / n
-
     def copies(n: int) -> None:
         for i in range(n):
             np.copyto(ring[i % different], ring[i % different - 1])
 
     callback = Callback(target, "standard_normal")
     # Making the chain of a path touches fresh pages: enough steps that their own time stands out.
-    n = max(6 if d > 1_000_000 else 30, rounds_for(go, seconds))
+    n = max(30, rounds_for(go, seconds))
     go(1)
     few = dict(spent)
     go(1 + n)
     calls = {key: (spent[key] - few[key]) / n for key in spent}
-    step = single if f"{name}, in a row" in MOVED else (lambda: (go(1 + n) - go(1)) / n)
-    works = {"step": step, "copy": timer(copies, max(seconds, 1e-9 * d)),
+    works = {"step": lambda: (go(1 + n) - go(1)) / n, "copy": timer(copies, max(seconds, 1e-9 * d)),
              "gradient": timer(callback.gradients, seconds / 2)}
     if calls["products"]:
         works["product"] = timer(callback.products, seconds / 2)
@@ -311,9 +291,9 @@ def traffic(sizes: tuple[int, ...], seconds: float, repeats: int) -> str:
 def growth(sizes: tuple[int, ...], seconds: float, repeats: int) -> str:
     """Net time of a step per element, and over what its bytes take at the bandwidth of that size of vectors."""
     rows = []
-    for name in ("leapfrog, in a row", "leapfrog", "surrogate, in a row", "surrogate"):
+    for name in ("leapfrog", "surrogate"):
         _, vectors, different = MOVED[name]
-        for d in sizes if name.endswith("in a row") else sizes[1:]:  # a single small one is lost in the call around it
+        for d in sizes:
             net, copy = step_times(name, d, seconds, repeats)
             rows.append([name, f"{d:g}", f"{8 * d * different / 2**20:.3g}", f"{1e9 * np.median(net) / d:.2f}",
                          f"{16e-9 * d / np.median(copy):.1f}", f"{8e-9 * d * vectors / np.median(net):.1f}",
@@ -330,9 +310,8 @@ def paths(sizes: tuple[int, ...], repeats: int) -> str:
         density, callback = fw.Density(target.density, d), Callback(target, "standard_normal")
         for motion in (fw.Leapfrog(), fw.Lagrangian(bend=0.5)):
             name = "leapfrog" if motion.name == "leapfrog" else "surrogate"
+            pure, _ = step_times(name, d, 0.05, repeats)
             for path in (fw.Jittered(16), fw.NoUTurn()):
-                row = type(path) is fw.Jittered
-                pure, _ = step_times(f"{name}, in a row" if row else name, d, 0.05, repeats)
                 chain = fw.Chain(density, np.zeros(d) + 0.1, motion=motion, path=path, seed=3, rank=0, beta=0.5 / d,
                                  step_size=0.6 * d**-0.25, scale=np.ones(d), adapt_scale=False)
                 draws, counted = max(3, 3_000_000 // d), {}
@@ -364,7 +343,7 @@ def main() -> None:
     print(f"Python functions\n\n{python_calls(seconds, 2 * repeats + 1)}\n", flush=True)
     if not quick:
         print(f"Memory traffic\n\n{traffic((1_000_000, 10_000_000), seconds, 5)}\n", flush=True)
-    sizes = (100, 1_000, 10_000, 100_000) + (() if quick else (1_000_000, 10_000_000, 30_000_000))
+    sizes = (100, 1_000, 10_000, 100_000) + (() if quick else (1_000_000, 10_000_000))
     print(f"Growth with d\n\n{growth(sizes, seconds, 5)}\n", flush=True)
     print(f"Steps in their paths\n\n{paths((1_000, 100_000), 5)}\n\n{busy()} after.")
 
