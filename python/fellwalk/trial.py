@@ -46,7 +46,8 @@ def trial(
     together, so that a chain that moves well inside a part of the target counts for little. The leapfrog motion, over
     the diagonal alone where that may be as good, stays unless another is worth 1.1 times as much, and by more than 1.28
     standard errors; a candidate is ruled out where it visited a tail too rarely, or where more paths ended in failed
-    steps.
+    steps. Where nothing can be told (chains that do not agree, few effective draws, noise) a plain way stays. Only as
+    many candidates take part as the budget can tune. The winner's step size is corrected by what its chains accept.
 
     starts, chains, seed, acceptance, executor, progress: as in `run`. budget: in gradients; a Hessian product counts as
     product_cost of them. No clock decides anything. Ctrl-C ends it without a result (KeyboardInterrupt); a trial inside
