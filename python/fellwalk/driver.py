@@ -33,9 +33,9 @@ from fellwalk.work import Done, Job
 __all__ = ["Driver"]
 
 _BLOCK_SECONDS = 0.5
-# Unpacking a state, packing and checking it and writing it to a record takes about 2 ns a byte, once a block; a block
+# Unpacking a state, packing and checking it and writing it to a record takes about 15 ns a byte, once a block; a block
 # of this many seconds a byte makes that two parts in a hundred.
-_BLOCK_SECONDS_A_BYTE, _LONGEST_BLOCK = 1e-7, 10.0
+_BLOCK_SECONDS_A_BYTE, _LONGEST_BLOCK = 7.5e-7, 10.0
 _BLOCK_BYTES = 32_000_000
 _TRIAL_HERE = 0.25  # seconds: a trial that takes less is made in this thread, as handing blocks round would cost more
 _NO_CHAIN = -1  # in the place of a chain's number: the density was called for none
