@@ -1,21 +1,11 @@
 /* Counts what the passes of a step move: compiled with every call of a kernel, outside kernels.c, counted by macros that
  * the test writes. The density is a standard normal. */
 #include "fellwalk.h"
+#include "standard_normal.h"
 
 #define EXPORT __attribute__((visibility("default")))
 
 EXPORT long moved;
-
-static int density(size_t d, const double *x, double *value, double *gradient, void *context)
-{
-    (void)context;
-    *value = 0.0;
-    for (size_t i = 0; i < d; ++i) {
-        *value -= 0.5 * x[i] * x[i];
-        gradient[i] = -x[i];
-    }
-    return 0;
-}
 
 static int product(size_t d, const double *x, const double *p, double *out, void *context)
 {
@@ -23,18 +13,6 @@ static int product(size_t d, const double *x, const double *p, double *out, void
     (void)context;
     for (size_t i = 0; i < d; ++i) out[i] = -p[i];
     return 0;
-}
-
-static void normals(void *state, size_t n, double *out)
-{
-    (void)state;
-    for (size_t i = 0; i < n; ++i) out[i] = 1.0;
-}
-
-static double uniform(void *state)
-{
-    (void)state;
-    return 0.5;
 }
 
 static fw_chain *chain_of(const char *motion, int scheme, int curvature, size_t d, size_t most)

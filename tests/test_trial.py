@@ -272,14 +272,16 @@ def test_it_does_not_matter_who_makes_the_blocks_nor_where_they_end(settled_on_s
     assert others == ends
 
 
-@pytest.mark.parametrize("stop", [1, 30, 100])
-def test_a_trial_goes_on_from_its_stored_blocks(settled_on_student, stop):
+@pytest.mark.parametrize(("stop", "most"), [(1, 1000), (30, 1000), (100, 1000), (8, 2), (61, 2)])
+def test_a_trial_goes_on_from_its_stored_blocks(settled_on_student, stop, most):
+    """Also from the middle of a block that was cut into pieces of at most `most` transitions."""
     density, states, settling = settled_on_student
     found, ends = played(Play(density, states, settling, TERMS))
     play = Play(density, states, settling, TERMS, storing=True)
     ready = list(play.begin())
     for _ in range(stop):
-        ready += play.take(make_block(density, play.job(ready.pop(0), 10.0)))
+        job = play.job(ready.pop(0), 10.0)
+        ready += play.take(make_block(density, Job(job.chain, job.state, min(most, job.most), job.gradients)))
     assert len(play.unsaved) == stop
     stored = unpacked(packed(play.unsaved), 10)
     calls = density.gradients

@@ -3,31 +3,9 @@
 #include <string.h>
 
 #include "chain.h"
+#include "standard_normal.h"
 
 #define EXPORT __attribute__((visibility("default")))
-
-static int density(size_t d, const double *x, double *value, double *gradient, void *context)
-{
-    (void)context;
-    *value = 0.0;
-    for (size_t i = 0; i < d; ++i) {
-        *value -= 0.5 * x[i] * x[i];
-        gradient[i] = -x[i];
-    }
-    return 0;
-}
-
-static void normals(void *state, size_t n, double *out)
-{
-    (void)state;
-    for (size_t i = 0; i < n; ++i) out[i] = 1.0;
-}
-
-static double uniform(void *state)
-{
-    (void)state;
-    return 0.5;
-}
 
 typedef struct harness_window {
     size_t d, m, k; /* numbers of a draw, draws, directions of the base metric before */

@@ -239,18 +239,16 @@ def _start(text: str | np.ndarray | None) -> np.ndarray | None:
 def _moved(options: argparse.Namespace) -> tuple[Motion | str, Path | None]:
     """Motion and path. Left out, they are for a trial to find, unless another option says something of them."""
     motion, path = options.motion, None if options.path is None else _made(PATHS[options.path], options)
+    usual = {"halvings": 0, "steps": Jittered.steps, "doublings": NoUTurn.doublings, "bend": Lagrangian.bend,
+             "curvature": "surrogate", "scheme": "split"}
+    typed = [name for name, value in usual.items() if getattr(options, name) != value]
     if motion is None:
-        said = (path, options.step_size, options.halvings or None, None if options.settle == "auto" else options.settle,
-                None if options.steps == Jittered.steps else options.steps,
-                None if options.doublings == NoUTurn.doublings else options.doublings)
-        motion = "auto" if all(value is None for value in said) else "leapfrog"
+        said = path or options.step_size is not None or options.settle != "auto"
+        motion = "leapfrog" if said or {"halvings", "steps", "doublings"}.intersection(typed) else "auto"
     if motion == "auto":
-        usual = {"halvings": 0, "steps": Jittered.steps, "doublings": NoUTurn.doublings, "bend": Lagrangian.bend,
-                 "curvature": "surrogate", "scheme": "split"}
-        for name, value in usual.items():
-            if path is None and getattr(options, name) != value:  # with a path, run says that it is too much
-                raise ArgumentError(f"a trial of motions finds what --{name} would fix; leave it out, or say with "
-                                    "--motion which motion it is for")
+        if typed and path is None:  # with a path, run says that it is too much
+            raise ArgumentError(f"a trial of motions finds what --{typed[0]} would fix; leave it out, or say with "
+                                "--motion which motion it is for")
         return motion, path
     return _made(MOTIONS[motion], options), path or _made(NoUTurn, options)
 

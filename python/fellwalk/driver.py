@@ -255,8 +255,7 @@ class Driver:
         budget = self.play.competition.budget
         self.progress.say(f"the chains have settled; a trial of motions may take {budget:.0f} gradients")
         ready = deque(self.play.begin())
-        took = sum(part.seconds for part in self.parts) / max(1, sum(int(facts["gradients"].sum(dtype=np.int64))
-                                                                     for facts in settling))
+        took = sum(part.seconds for part in self.parts) / max(1.0, self.play.competition.settling)
         if self.workers.local and took * budget < _TRIAL_HERE:
             while ready and not self._stopping():
                 done = self.play.make_here(ready.popleft(), self.workers.live)

@@ -12,11 +12,12 @@ from numpy.typing import NDArray
 
 from fellwalk.chain import Block, Chain, _joined
 from fellwalk.density import Density
+from fellwalk.fresh import Fresh
 from fellwalk.settled import SettledChain
 from fellwalk.trial_candidates import Ask, Work
 from fellwalk.trial_result import Trial
 from fellwalk.trial_rounds import Competition, Leaders, TrialTerms
-from fellwalk.work import Done, Job, Live
+from fellwalk.work import Done, Job, Live, not_begun
 
 __all__ = ["Answer", "Play", "leaders_of", "packed", "unpacked"]
 
@@ -52,11 +53,10 @@ class _Going:
 
 @dataclass(eq=False)
 class _Asked:
-    """One block in the making. begun: does its chain exist?"""
+    """One block in the making."""
 
     going: _Going
     index: int
-    begun: bool
     parts: list[Block] = field(default_factory=list)
 
     @property
@@ -67,6 +67,11 @@ class _Asked:
     def left(self) -> int:
         """Transitions still to be made."""
         return self.ask.most - sum(map(len, self.parts))
+
+    @property
+    def fresh(self) -> Fresh | None:
+        """The chain that is to be made for it, while there is none."""
+        return None if self.parts else self.ask.fresh
 
 
 class Play:
@@ -103,26 +108,21 @@ class Play:
     def job(self, number: int, seconds: float) -> Job:
         """The next block of a chain, to be made anywhere."""
         asked = self.asked[number]
-        ask = asked.ask
-        state = self.states[number] if ask.fresh is None or asked.begun else ask.fresh
-        return Job(number, state, asked.left, ask.gradients, seconds)
+        return Job(number, asked.fresh or self.states[number], asked.left, asked.ask.gradients, seconds)
 
     def make_here(self, number: int, live: Live) -> Done:
         """The next block of a chain, made in this thread by a chain that stays in memory."""
-        ask = self.asked[number].ask
-        error: Exception | None = None
-        try:
-            if ask.fresh is not None:
-                self.chains[number] = ask.fresh.chain(self.density)
-            elif number not in self.chains:
-                self.chains[number] = Chain.from_state(self.density, self.states[number])
-        except Exception as raised:
-            error = raised
-        if error is not None:
-            return Done(number, replace(_joined("keep", [], self.density.dimension), error=error), b"", 0.0, {})
+        asked = self.asked[number]
+        if asked.fresh is not None:
+            try:
+                self.chains[number] = asked.fresh.chain(self.density)
+            except Exception as error:
+                return not_begun(number, self.density, error)
+        elif number not in self.chains:
+            self.chains[number] = Chain.from_state(self.density, self.states[number])
         chain = self.chains[number]
         with live.holding(chain):
-            block = chain.block(ask.most, gradients=ask.gradients)
+            block = chain.block(asked.left, gradients=asked.ask.gradients)
         return Done(number, block, b"", 0.0, {})
 
     def take(self, done: Done) -> list[int]:
@@ -168,7 +168,6 @@ class Play:
         if answer.state:
             self.states[number] = answer.state
         asked = self.asked[number]
-        asked.begun = True
         asked.parts.append(block)
         if asked.left > 0:
             return [number]
@@ -187,7 +186,7 @@ class Play:
             return []
         going.blocks = [None] * len(going.asks)
         numbers = [self._number(ask.slot) for ask in going.asks]
-        self.asked |= {number: _Asked(going, i, False) for i, number in enumerate(numbers)}
+        self.asked |= {number: _Asked(going, i) for i, number in enumerate(numbers)}
         return numbers
 
     def _next_group(self) -> list[int]:

@@ -107,11 +107,16 @@ class Competition:
         self.picked: NDArray[np.int64] | None = None
         self.found: Trial | None = None
 
-    def _affordable(self, most: int) -> int:
-        """How many candidates the first round can tune, and let draw as often as is the least to say something of."""
+    def _budget_of(self, count: int) -> float:
+        """What the first round needs, to tune each of so many and let it draw as often as is the least to say something
+        of."""
         tuning = needed(self.per_draw)
         each = max(tuning / _FOR_TUNING, tuning + trial_merit.FEWEST * _CHAINS * self.per_draw)
-        return int(np.clip(_ROUNDS[0] * self.budget / each - 1.0, 0, most))
+        return count * each / _ROUNDS[0]
+
+    def _affordable(self, most: int) -> int:
+        """How many candidates beside the leader the budget is enough for."""
+        return int(np.clip(self.budget / self._budget_of(1) - 1.0, 0, most))
 
     def go(self) -> Iterator[list[Work[None]]]:
         """All rounds."""
@@ -326,9 +331,9 @@ class Competition:
             said = (f"No trial was made, as settling ended far from home in {self.lost} of {len(self.parts)} chains: "
                     f"{LEADER.name} stays.")
             return self._untried(said)
-        needs = math.ceil(2.0 * needed(self.per_draw) / _FOR_TUNING / _ROUNDS[0])
+        needs = math.ceil(self._budget_of(2))
         said = (f"No trial was made: its budget of {self.budget:.0f} gradients is too small to tell a second way of "
-                f"moving from {LEADER.name}, which stays; to tune one takes about {needs}.")
+                f"moving from {LEADER.name}, which stays; to try one takes about {needs}.")
         return self._untried(said)
 
     def _untried(self, said: str) -> Trial:

@@ -24,7 +24,7 @@ from fellwalk.errors import BusyError, RemoteError, WorkerError
 from fellwalk.fresh import Fresh
 from fellwalk.watch import Moments, Watch, Watching
 
-__all__ = ["Check", "Done", "Job", "Live", "Parcel", "Reply", "make_block", "make_block_elsewhere"]
+__all__ = ["Check", "Done", "Job", "Live", "Parcel", "Reply", "make_block", "make_block_elsewhere", "not_begun"]
 
 
 @dataclass(frozen=True)
@@ -93,6 +93,11 @@ class Live:
                 self.chains.discard(chain)
 
 
+def not_begun(chain: int, density: Density, error: Exception) -> Done:
+    """What comes back where the density raised at the start of a fresh chain."""
+    return Done(chain, replace(_joined("keep", [], density.dimension), error=error), b"", 0.0, {})
+
+
 def make_block(density: Density, job: Job, live: Live | None = None) -> Done:
     """Make the block of a job. Exceptions of the density are carried in the block, after what was finished."""
     live = live or Live()
@@ -102,8 +107,7 @@ def make_block(density: Density, job: Job, live: Live | None = None) -> Done:
     except Exception as error:  # of the density, at the start of a fresh chain
         if not isinstance(job.state, Fresh):
             raise
-        block = replace(_joined("keep", [], density.dimension), error=error)
-        return Done(job.chain, block, b"", time.perf_counter() - begun, {})
+        return not_begun(job.chain, density, error)
     keeping, phase = chain.settled, chain.phase
     watching = None
     if job.watch is not None:
